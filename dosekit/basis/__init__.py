@@ -1,0 +1,1 @@
+"""What everything is computed from: constants, particles, materials and data tables."""

@@ -1,0 +1,1 @@
+"""A beam and what matter does to it: stopping, straggling, scattering, reactions in flight, decay."""

@@ -1,0 +1,1 @@
+"""One dimension: the slowing-down solver, depth curves by component, the library over residual range."""

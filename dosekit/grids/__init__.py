@@ -1,0 +1,1 @@
+"""Where dose is asked for: voxel grids, phantoms, CT series, structures, HU calibration."""

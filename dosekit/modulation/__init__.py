@@ -1,0 +1,1 @@
+"""Choosing the beam: range steps, spot grids, weights, comparison of particles."""

@@ -1,0 +1,1 @@
+"""What leaves the house: figures, tables, report, NetCDF, DICOM, the run record."""

@@ -1,0 +1,1 @@
+"""The study file and the pipeline that runs it."""
