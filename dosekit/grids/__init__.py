@@ -1,1 +1,1 @@
-"""Where dose is asked for: voxel grids, phantoms, CT series, structures, HU calibration."""
+"""Where dose is asked for: voxel grids, phantoms, CT series, structures and HU calibration."""
