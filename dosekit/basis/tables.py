@@ -163,7 +163,9 @@ def parse_table(text: str, *, name: str, required: tuple[str, ...] = REQUIRED_HE
         row = next(csv.reader([line]))
         if len(row) != len(names):
             raise TableError(
-                f"{name}, line {number}: {len(row)} cells", allowed=f"{len(names)} cells", remedy="mend the row"
+                f"{name}, line {number}: {len(row)} cells",
+                allowed=f"{len(names)} cells",
+                remedy="mend the row",
             )
         cells.append([cell.strip() for cell in row])
     columns = {
@@ -184,7 +186,7 @@ def _column(cells: list[str], name: str, column: str, numbers: list[int]) -> NDA
             except ValueError:
                 bad.append(index)
     filled = sum(bool(cell) for cell in cells)
-    if not bad and filled:
+    if not bad:
         infinite = [index for index, cell in enumerate(cells) if cell and not np.isfinite(values[index])]
         if infinite:
             raise TableError(f"{name}, line {numbers[infinite[0]]}: column {column} is not finite")
