@@ -30,9 +30,7 @@ def render(rows: list[dict[str, object]]) -> str:
         if not chosen:
             continue
         parts.append(f"\n## {TITLES.get(kind, kind)}\n\n")
-        parts.append(
-            "| what | source | value | ours | difference | unit | bar |\n|---|---|---:|---:|---:|---|---|\n"
-        )
+        parts.append("| what | source | value | ours | difference | unit | bar |\n|---|---|---:|---:|---:|---|---|\n")
         for row in chosen:
             value, ours = float(row["value"]), float(row["ours"])
             off = f"{100.0 * (ours / value - 1.0):+.2f} %" if value else f"{ours - value:+.3g}"

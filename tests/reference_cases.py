@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from functools import lru_cache
+from functools import cache
 from pathlib import Path
 
 import numpy as np
@@ -10,7 +10,7 @@ import numpy as np
 FOLDER = Path(__file__).parent / "reference"
 
 
-@lru_cache(maxsize=None)
+@cache
 def _table(name: str) -> dict[str, np.ndarray]:
     lines = [line for line in (FOLDER / name).read_text().splitlines() if line and not line.startswith("#")]
     names = lines[0].split(",")

@@ -183,9 +183,7 @@ class Material:
     @cached_property
     def z_over_a(self) -> float:
         """Electrons per unit of molar mass, mol/g."""
-        return math.fsum(
-            w * element(s).atomic_number / element(s).atomic_weight for s, w in self.mass_fractions
-        )
+        return math.fsum(w * element(s).atomic_number / element(s).atomic_weight for s, w in self.mass_fractions)
 
     @cached_property
     def electrons_per_gram(self) -> float:

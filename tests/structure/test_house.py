@@ -61,9 +61,7 @@ def test_a_room_imports_only_from_rooms_above_it(path):
         if parts[0] != "dosekit" or len(parts) < 2 or parts[1] in SHARED:
             continue
         assert parts[1] in ROOMS, f"{path.name}:{line} imports {'.'.join(parts)}"
-        assert ROOMS.index(parts[1]) <= ROOMS.index(room), (
-            f"{path.name}:{line}: {room} imports from {parts[1]}"
-        )
+        assert ROOMS.index(parts[1]) <= ROOMS.index(room), f"{path.name}:{line}: {room} imports from {parts[1]}"
 
 
 @pytest.mark.parametrize(
