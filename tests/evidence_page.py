@@ -34,7 +34,6 @@ def render(rows: list[dict[str, object]]) -> str:
         for row in chosen:
             value, ours = float(row["value"]), float(row["ours"])
             off = f"{100.0 * (ours / value - 1.0):+.2f} %" if value else f"{ours - value:+.3g}"
-            parts.append(
-                f"| {row['what']} | {row['source']} | {value:.5g} | {ours:.5g} | {off} | {row['unit']} | {row['bar']} |\n"
-            )
+            cells = [row["what"], row["source"], f"{value:.5g}", f"{ours:.5g}", off, row["unit"], row["bar"]]
+            parts.append("| " + " | ".join(map(str, cells)) + " |\n")
     return "".join(parts)
