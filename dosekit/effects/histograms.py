@@ -164,7 +164,9 @@ class VolumeHistogram:
                 high = middle
         return float(low)
 
-    def curve(self, points: int = 201, *, maximum_gy: float | None = None) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    def curve(
+        self, points: int = 201, *, maximum_gy: float | None = None
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Give the cumulative curve at evenly spaced doses from zero.
 
         Parameters
@@ -246,9 +248,9 @@ def volume_histogram(
 
     Examples
     --------
-    >>> histogram = volume_histogram([[1.0, 2.0], [3.0, 9.0]], [[1, 1], [0.5, 0]], voxel_cm3=0.008)
+    >>> histogram = volume_histogram([[1.0, 2.0], [4.0, 9.0]], [[1, 1], [0.5, 0]], voxel_cm3=0.008)
     >>> round(histogram.total_volume_cm3, 6), histogram.mean_gy
-    (0.02, 1.8)
+    (0.02, 2.0)
     """
     dose = np.asarray(dose_gy, dtype=np.float64)
     share = np.asarray(coverage, dtype=np.float64)
