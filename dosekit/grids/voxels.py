@@ -479,9 +479,7 @@ class VoxelGrid:
         GridError
             When the lattices differ.
         """
-        steps = [
-            (a - b) / s for a, b, s in zip(self.origin_mm, whole.origin_mm, whole.spacing_mm, strict=True)
-        ]
+        steps = [(a - b) / s for a, b, s in zip(self.origin_mm, whole.origin_mm, whole.spacing_mm, strict=True)]
         same = np.allclose(self.spacing_mm, whole.spacing_mm, rtol=1e-6, atol=0.0)
         if not same or any(abs(step - round(step)) > 1e-3 for step in steps):
             raise GridError(
