@@ -91,7 +91,7 @@ class TargetSection(_Section):
 
 
 class OrganSection(_Section):
-    """An organ at risk and, in a three-dimensional goal, what it may receive (Gy per course, as the goal's quantity)."""
+    """An organ at risk and, in a three-dimensional goal, what it may receive per fraction (Gy, as the goal)."""
 
     structure: str
     maximum_gy: float | None = Field(default=None, ge=0)
