@@ -378,7 +378,7 @@ class VoxelGrid:
 
         per_density = np.array(
             [
-                relative_stopping_power(matter, particle=particle, kinetic_energy_mev=kinetic_energy_mev)
+                relative_stopping_power(matter, particle, kinetic_energy_mev=kinetic_energy_mev)
                 / matter.density_g_cm3
                 for matter in self.materials
             ],
