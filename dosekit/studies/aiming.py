@@ -88,9 +88,8 @@ def aim(frame: BeamFrame, grid: VoxelGrid, target: str, *, spacing_mm: float, ma
     first = np.where(inside, first, first[inside][nearest])
     last = np.where(inside, last, last[inside][nearest])
     rows = np.arange(len(spots))
-    half = 0.5 * _STEP_MM
-    near = np.maximum(depth[rows, first] - half, 0.0)
-    far = depth[rows, last] + half
+    near = np.where(first > 0, depth[rows, first - 1], 0.0)
+    far = depth[rows, last]
     return AimedSpots(spots, near, far, inside)
 
 
@@ -128,7 +127,7 @@ def _trace(
     spots: NDArray[np.float64],
     along: NDArray[np.float64],
 ) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.int64]]:
-    """Return water-equivalent depth at each sample, and the first and last sample in the target (-1: none)."""
+    """Return water-equivalent depth at the far end of each sample, and the first and last sample in the target (-1: none)."""
     from scipy.ndimage import map_coordinates
 
     power = grid.relative_stopping_power()
@@ -144,11 +143,11 @@ def _trace(
         beam[..., 2] = along
         points = frame.to_patient(beam)
         index = np.moveaxis((points - origin) / spacing, -1, 0)[::-1]
-        local = map_coordinates(power, index, order=1, mode="constant", cval=0.0, prefilter=False)
+        local = map_coordinates(power, index, order=1, mode="grid-constant", cval=0.0, prefilter=False)
         step = np.linalg.norm(np.diff(points, axis=1), axis=2)
         step = np.concatenate([step[:, :1], step], axis=1)
-        depth[start : start + len(part)] = np.cumsum(local * step, axis=1) - 0.5 * local * step
-        hit = map_coordinates(coverage, index, order=1, mode="constant", cval=0.0, prefilter=False) >= _EDGE
+        depth[start : start + len(part)] = np.cumsum(local * step, axis=1)
+        hit = map_coordinates(coverage, index, order=1, mode="grid-constant", cval=0.0, prefilter=False) >= _EDGE
         first[start : start + len(part)] = np.where(hit.any(axis=1), hit.argmax(axis=1), -1)
         last[start : start + len(part)] = np.where(hit.any(axis=1), hit.shape[1] - 1 - hit[:, ::-1].argmax(axis=1), -1)
     return depth, first, last
