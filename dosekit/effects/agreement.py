@@ -15,6 +15,7 @@ evaluated grid are never invented: a reference point with no lattice point insid
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -27,7 +28,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["Agreement", "gamma_index", "lattice_offsets"]
+__all__ = ["Agreement", "gamma_index"]
 
 _DIMENSIONS = 3
 
@@ -151,18 +152,20 @@ def gamma_index(
             remedy="lower the threshold or check the maps",
         )
     tolerance = dose_percent / 100.0 * (volume.ravel()[chosen] if local else np.full(chosen.size, top))
-    offsets, squares = lattice_offsets(
-        dimensions,
-        distance_mm=distance_mm,
-        step_mm=distance_mm / 10.0 if step_mm is None else step_mm,
-        largest_gamma=largest_gamma,
-    )
+    step = distance_mm / 10.0 if step_mm is None else float(step_mm)
+    if not step > 0.0:
+        raise InputError(f"a search step of {step} mm", allowed="above 0", remedy="a tenth of the distance tolerance")
+    steps = math.floor(largest_gamma * distance_mm / step + 1e-9)
+    reach = np.array([0] * (_DIMENSIONS - dimensions) + [steps] * dimensions)
+    low, high = _cell_extremes(other)
+    cells, cell_squares = _cells_around(reach * step, other_spacing, distance_mm)
     from dosekit.effects.kernels import search_agreement  # compiled code is loaded only when needed
 
     found = np.empty(chosen.size)
     search_agreement(
         np.ascontiguousarray(volume), origin, spacing, chosen, tolerance,
-        np.ascontiguousarray(other), other_origin, other_spacing, offsets, squares, float(largest_gamma) ** 2, found,
+        np.ascontiguousarray(other), other_origin, other_spacing, low, high,
+        cells, cell_squares, step, reach, float(distance_mm), float(largest_gamma) ** 2, found,
     )  # fmt: skip
     gamma = np.full(reference.size, np.nan)
     gamma[chosen] = found
@@ -177,44 +180,30 @@ def gamma_index(
     )
 
 
-def lattice_offsets(
-    dimensions: int, *, distance_mm: float, step_mm: float, largest_gamma: float
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """List the points of the search lattice, nearest first.
-
-    Parameters
-    ----------
-    dimensions : int
-        1, 2 or 3; unused leading axes stay at zero.
-    distance_mm, step_mm : float
-        Distance tolerance and lattice step in mm.
-    largest_gamma : float
-        Points farther than this many tolerances are left out.
-
-    Returns
-    -------
-    offsets_mm : ndarray, shape (n, 3)
-        Offsets in (z, y, x).
-    squares : ndarray, shape (n,)
-        Squared distance over squared tolerance, ascending.
-    """
-    if not step_mm > 0.0:
-        raise InputError(
-            f"a search step of {step_mm} mm", allowed="above 0 mm", remedy="a tenth of the tolerance is customary"
-        )
-    reach = int(np.floor(largest_gamma * distance_mm / step_mm + 1e-9))
-    line: NDArray[np.float64] = np.arange(-reach, reach + 1) * step_mm
-    axes: list[NDArray[np.float64]] = [np.zeros(1)] * (_DIMENSIONS - dimensions) + [line] * dimensions
-    offsets = _mesh(axes)
-    squares = np.sum(offsets**2, axis=1) / distance_mm**2
-    order = np.lexsort((offsets[:, 2], offsets[:, 1], offsets[:, 0], squares))
-    kept = order[squares[order] <= largest_gamma**2]
-    return np.ascontiguousarray(offsets[kept]), np.ascontiguousarray(squares[kept])
+def _cell_extremes(dose: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Give the smallest and largest corner dose of every cell between neighbouring points."""
+    low = high = dose
+    for axis, length in enumerate(dose.shape):
+        if length > 1:
+            first: list[slice] = [slice(None)] * dose.ndim
+            second = list(first)
+            first[axis], second[axis] = slice(0, -1), slice(1, None)
+            low = np.minimum(low[tuple(first)], low[tuple(second)])
+            high = np.maximum(high[tuple(first)], high[tuple(second)])
+    return np.ascontiguousarray(low), np.ascontiguousarray(high)
 
 
-def _mesh(axes: list[NDArray[np.float64]]) -> NDArray[np.float64]:
-    """Give all combinations of three axes as rows."""
-    return np.stack([part.ravel() for part in np.meshgrid(*axes, indexing="ij")], axis=1)
+def _cells_around(
+    reach_mm: NDArray[np.float64], spacing_mm: NDArray[np.float64], distance_mm: float
+) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """List the cells around the one a point lies in, by their least possible squared distance."""
+    ends = [math.ceil(reach / width) + 1 for reach, width in zip(reach_mm, spacing_mm, strict=True)]
+    lines = [np.arange(-end, end + 1) for end in ends]
+    cells = np.stack([part.ravel() for part in np.meshgrid(*lines, indexing="ij")], axis=1)
+    least = np.maximum(np.abs(cells) - 1, 0) * spacing_mm / distance_mm * (1.0 - 1e-9)
+    squares = np.sum(least**2, axis=1)
+    order = np.lexsort((cells[:, 2], cells[:, 1], cells[:, 0], np.sum(cells**2, axis=1), squares))
+    return np.ascontiguousarray(cells[order]), np.ascontiguousarray(squares[order])
 
 
 def _triple(value: float | Sequence[float], dimensions: int, *, filler: float = 1.0) -> NDArray[np.float64]:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from dosekit.effects.agreement import gamma_index, lattice_offsets
+from dosekit.effects.agreement import gamma_index
 from dosekit.errors import InputError
 
 import naive
@@ -116,15 +116,6 @@ def test_outcome_does_not_depend_on_threads(rng):
     finally:
         numba.set_num_threads(before)
     assert np.array_equal(several, single, equal_nan=True)
-
-
-def test_lattice_is_sorted_and_symmetric():
-    offsets, squares = lattice_offsets(2, distance_mm=3.0, step_mm=1.0, largest_gamma=1.0)
-    assert np.all(np.diff(squares) >= 0.0)
-    assert offsets[0].tolist() == [0.0, 0.0, 0.0]
-    # integer points in a disc of radius 3: 29 (Gauss circle problem)
-    assert len(offsets) == 29
-    np.testing.assert_allclose(offsets.sum(axis=0), 0.0, atol=1e-12)
 
 
 @pytest.mark.parametrize(
