@@ -133,14 +133,17 @@ def structure_style(name: str, *, index: int, target: str | None = None) -> dict
     dict
         Keyword arguments for a line.
     """
-    if target is not None and name.casefold() == target.casefold():
+    if _same(name, target):
         return {"color": INK, "linestyle": "-", "linewidth": 1.6}
-    count = len(STRUCTURE_COLOURS)
     return {
-        "color": STRUCTURE_COLOURS[index % count],
-        "linestyle": STRUCTURE_DASHES[(index // count + index) % len(STRUCTURE_DASHES)],
+        "color": STRUCTURE_COLOURS[index % len(STRUCTURE_COLOURS)],
+        "linestyle": STRUCTURE_DASHES[index % len(STRUCTURE_DASHES)],
         "linewidth": 1.1,
     }
+
+
+def _same(name: str, other: str | None) -> bool:
+    return other is not None and name.casefold() == other.casefold()
 
 
 def _checked(name: str, pair: Histogram) -> tuple[NDArray[np.float64], NDArray[np.float64]]:

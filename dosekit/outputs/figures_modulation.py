@@ -156,7 +156,7 @@ def ridge_profile_figure(
     figure = new_figure(
         COLUMN_MM,
         70.0,
-        alt=f"Cross-section of one ridge of {len(widths)} terraces, pitch {pitch:.1f} mm, height {heights.max():.1f} mm.",
+        alt=f"Section of one ridge of {len(widths)} terraces, pitch {pitch:.1f} mm, height {heights.max():.1f} mm.",
     )
     axes = figure.subplots()
     axes.stairs(profile, edges, fill=True, color="#88CCEE", alpha=0.7)
@@ -235,7 +235,7 @@ def _checked_steps(
     shares = np.asarray(weights, dtype=np.float64)
     if curves.shape != (len(ranges), len(depth)) or ranges.shape != shares.shape:
         raise InputError(
-            f"step doses of shape {curves.shape} for {len(ranges)} ranges, {len(shares)} weights and {len(depth)} depths",
+            f"step doses of shape {curves.shape} for {len(ranges)} ranges, {len(shares)} weights, {len(depth)} depths",
             allowed="one depth dose and one weight for each range",
         )
     if float(shares.sum()) <= 0.0 or np.any(shares < 0.0):

@@ -7,7 +7,6 @@ interrupted run leaves no half-written result under a name that somebody might o
 from __future__ import annotations
 
 import hashlib
-import os
 from contextlib import suppress
 from pathlib import Path
 
@@ -43,7 +42,7 @@ def write_bytes(path: str | Path, data: bytes) -> Path:
     try:
         target.parent.mkdir(parents=True, exist_ok=True)
         partial.write_bytes(data)
-        os.replace(partial, target)
+        partial.replace(target)
     except OSError as problem:
         with suppress(OSError):
             partial.unlink(missing_ok=True)

@@ -22,12 +22,13 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import wraps
 from pathlib import Path
-from typing import TYPE_CHECKING, ParamSpec, TypeVar
+from typing import TYPE_CHECKING, Any, ParamSpec, TypeVar
 
 import matplotlib as mpl
 from matplotlib import patheffects
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
+from matplotlib.layout_engine import ConstrainedLayoutEngine
 
 from dosekit.caution import BANNER, SHORT_CAUTION
 from dosekit.outputs.files import write_bytes
@@ -121,7 +122,7 @@ _SPARE_DASHES: tuple[_Dash, ...] = ((0, (2, 1)), (0, (1, 1)), (0, (6, 1, 1, 1, 1
 STRUCTURE_COLOURS = ("#EE6677", "#66CCEE", "#CCBB44", "#AA3377", "#228833", "#4477AA", "#BBBBBB")
 STRUCTURE_DASHES: tuple[_Dash, ...] = ("-", (0, (5, 1.5)), (0, (2, 1)), (0, (4, 1, 1, 1)))
 
-_SETTINGS: dict[str, object] = {
+_SETTINGS: dict[Any, Any] = {
     "font.family": "sans-serif",
     "font.sans-serif": ["DejaVu Sans"],
     "font.size": 8.0,
@@ -294,7 +295,7 @@ def foot_legend(figure: Figure, source: Axes | tuple[list[Artist], list[str]], *
     taken = (LEGEND_ROW_POINT * rows + 4.0) / height_pt
     legend = figure.legend(handles, labels, loc="lower center", bbox_to_anchor=(0.5, strip), ncols=ncols, borderpad=0.2)
     legend.set_in_layout(False)
-    if engine is not None:
+    if isinstance(engine, ConstrainedLayoutEngine):
         engine.set(rect=(0.0, strip + taken, 1.0, 1.0 - strip - taken))
 
 
