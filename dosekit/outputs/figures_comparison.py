@@ -15,6 +15,7 @@ import numpy as np
 from matplotlib.cm import ScalarMappable
 from matplotlib.colors import Normalize
 from matplotlib.lines import Line2D
+from matplotlib.transforms import Bbox
 from numpy.typing import NDArray
 
 from dosekit.errors import InputError
@@ -157,7 +158,7 @@ def comparison_figure(
         f"LET, {chosen.name} slices, volume histograms and a table of {len(rows)} measures."
     )
     figure = new_figure(PAGE_MM, 62.0 + map_mm + 66.0 + table_mm + 26.0, alt=alt)
-    parts = figure.subfigures(4, 1, height_ratios=(62.0, map_mm + 7.0, 66.0, table_mm + 5.0))
+    parts: Any = figure.subfigures(4, 1, height_ratios=(62.0, map_mm + 7.0, 66.0, table_mm + 5.0))
     depth, let = parts[0].subplots(1, 2)
     _draw_depth(depth, results, target_interval_mm)
     _draw_let(let, results, target_interval_mm)
@@ -278,10 +279,10 @@ def _draw_table(axes: Axes, results: Sequence[ParticleResult], rows: Sequence[st
         colLabels=[str(particle_style(result.particle)["label"]) for result in results],
         cellLoc="right",
         rowLoc="left",
-        bbox=(0.34, 0.0, 0.66, 1.0),
+        bbox=Bbox.from_bounds(0.34, 0.0, 0.66, 1.0),
         edges="horizontal",
     )
-    table.auto_set_font_size(False)  # noqa: FBT003
+    table.auto_set_font_size(False)
     table.set_fontsize(7.0)
     for cell in table.get_celld().values():
         cell.set_linewidth(0.4)
