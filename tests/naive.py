@@ -74,3 +74,23 @@ def gamma(reference, evaluated, spacing, other_spacing, *, distance, percent, lo
         if best is not None:
             result[index] = min(np.sqrt(best), largest)
     return result
+
+
+# ---------------------------------------------------------------- effects: equal effect
+
+
+def photon_dose_of_equal_effect(doses, alphas, betas, *, alpha, beta, fractions):
+    """Photon dose with the effect of a mixed field, found by halving an interval."""
+    linear = sum(a * d / fractions for a, d in zip(alphas, doses, strict=True))
+    root = sum(b**0.5 * d / fractions for b, d in zip(betas, doses, strict=True))
+    effect = linear + root**2
+    low, high = 0.0, 1.0
+    while alpha * high + beta * high**2 < effect:
+        high *= 2.0
+    for _ in range(200):
+        middle = 0.5 * (low + high)
+        if alpha * middle + beta * middle**2 < effect:
+            low = middle
+        else:
+            high = middle
+    return fractions * 0.5 * (low + high)
