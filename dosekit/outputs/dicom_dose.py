@@ -39,30 +39,20 @@ from dosekit.outputs.dicom_objects import (
     reference_item,
     save_object,
 )
-from dosekit.outputs.dicom_reference import derived_uid
+from dosekit.outputs.dicom_reference import derived_uid, plan_uid
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
     from dosekit.outputs.dicom_reference import DicomReference
 
-__all__ = ["dose_integers", "dose_uid", "plan_uid", "structure_set_uid", "write_rt_dose"]
+__all__ = ["dose_integers", "dose_uid", "write_rt_dose"]
 
 LARGEST_INTEGER = 65535
 SMALLEST_SCALING_GY = 1e-300
 """Below this a decimal string and a double disagree; no dose of interest is near it."""
 LARGEST_OBJECT_BYTES = 2**32 - 2
 """A pixel element has a 32 bit length."""
-
-
-def plan_uid(run_hash: str) -> str:
-    """Return the identifier of the RT Ion Plan that a run writes."""
-    return derived_uid(run_hash, "instance", "RT Ion Plan")
-
-
-def structure_set_uid(run_hash: str) -> str:
-    """Return the identifier of the structure set that a run writes."""
-    return derived_uid(run_hash, "instance", "RT Structure Set")
 
 
 def dose_uid(run_hash: str, *, label: str, dose_type: str) -> str:

@@ -29,7 +29,7 @@ from dosekit.errors import DicomError
 if TYPE_CHECKING:
     from pydicom.dataset import Dataset
 
-__all__ = ["CT_IMAGE_CLASS_UID", "DicomReference", "derived_uid", "invented_reference"]
+__all__ = ["CT_IMAGE_CLASS_UID", "DicomReference", "derived_uid", "invented_reference", "plan_uid", "structure_set_uid"]
 
 CT_IMAGE_CLASS_UID = "1.2.840.10008.5.1.4.1.1.2"
 """CT Image Storage (DICOM PS3.6, table A-1)."""
@@ -69,6 +69,16 @@ def derived_uid(run_hash: str, *roles: object) -> str:
     return f"2.25.{UUID(int=number).int}"
 
 
+def plan_uid(run_hash: str) -> str:
+    """Return the identifier of the RT Ion Plan that a run writes."""
+    return derived_uid(run_hash, "instance", "RT Ion Plan")
+
+
+def structure_set_uid(run_hash: str) -> str:
+    """Return the identifier of the structure set that a run writes."""
+    return derived_uid(run_hash, "instance", "RT Structure Set")
+
+
 @dataclass(frozen=True, kw_only=True, repr=False)
 class DicomReference:
     """What DICOM objects written by a run refer to.
@@ -94,7 +104,9 @@ class DicomReference:
     position_reference_indicator : str
         Anatomical landmark, or empty.
     identity_removed : bool
-        True when the identity was replaced.
+        True when the identity was replaced, here or by whoever gave the images away.
+    made_by_run : bool
+        True when the identifiers were made here, so that objects may be written under them.
     """
 
     study_instance_uid: str
@@ -116,6 +128,7 @@ class DicomReference:
     patient_position: str = "HFS"
     position_reference_indicator: str = ""
     identity_removed: bool = False
+    made_by_run: bool = False
 
     def __post_init__(self) -> None:
         """Check what later objects rely on."""
@@ -185,6 +198,10 @@ class DicomReference:
             identity_removed=_tag(first, "PatientIdentityRemoved").upper() == "YES",
         )
 
+    def with_structure_set(self, instance_uid: str | None) -> DicomReference:
+        """Return a copy that refers to another structure set, or to none."""
+        return replace(self, structure_set_instance_uid=instance_uid)
+
     def anonymized(self, run_hash: str) -> DicomReference:
         """Replace every identifier and drop every date, the same way for all objects of a run.
 
@@ -223,6 +240,7 @@ class DicomReference:
             referring_physician_name="",
             position_reference_indicator="",
             identity_removed=True,
+            made_by_run=True,
         )
 
 
@@ -271,6 +289,7 @@ def invented_reference(
         patient_sex="O",
         patient_position=patient_position,
         identity_removed=True,
+        made_by_run=True,
     )
 
 

@@ -12,8 +12,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from dosekit.errors import InputError, OutputError
-from dosekit.outputs.dicom_dose import dose_integers, plan_uid, write_rt_dose
-from dosekit.outputs.dicom_reference import invented_reference
+from dosekit.outputs.dicom_dose import dose_integers, write_rt_dose
+from dosekit.outputs.dicom_reference import invented_reference, plan_uid
 
 from dicom_judges import RESEARCH_ONLY, check_house_rules, judge
 
