@@ -1,0 +1,229 @@
+"""A run in words: the one line on the console and the text summary beside the figures."""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from dosekit.basis.components import COMPONENT_TITLES, STAR_COMPONENTS
+from dosekit.caution import BANNER, CAUTION
+from dosekit.errors import InputError
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from dosekit.outputs.tables import OutputTable
+
+__all__ = ["RunSummary", "console_line", "mean_doses_gy", "star_share", "summary_text"]
+
+_WIDTH = 100
+
+
+@dataclass(frozen=True)
+class RunSummary:
+    """What a reader wants to know first.
+
+    Parameters
+    ----------
+    title : str
+        The study's title.
+    target : str
+        Name of the target.
+    quantity : str
+        What was made flat, e.g. ``"dose"`` or ``"effect-weighted dose"``.
+    flatness_percent : float
+        Largest deviation from the mean inside the target interval.
+    peak_depth_mm : float
+        Water-equivalent depth of the deepest step's peak; with several fields, of the first.
+    peak_to_entrance : float
+        Peak over entrance of the modulated beam.
+    star_share : float
+        Share of the target's dose that comes from stars, 0 to 1.
+    mean_dose_gy : float
+        Mean target dose.
+    beam_time_s : float
+        Time for all fields at the stated rate.
+    component_doses_gy : mapping of str to float
+        Mean target dose of each component.
+    measures : mapping of structure to mapping of str to float
+        Volume measures.
+    energy_balance : mapping of str to float
+        Where the energy went; the unit is in the name.
+    sources, warnings : tuple of str
+        What it rests on, and what was warned of.
+    run_hash : str
+        Hash of the run.
+    unit : str
+        Unit of the dose.
+    """
+
+    title: str
+    target: str
+    quantity: str
+    flatness_percent: float
+    peak_depth_mm: float
+    peak_to_entrance: float
+    star_share: float
+    mean_dose_gy: float
+    beam_time_s: float
+    component_doses_gy: Mapping[str, float] = field(default_factory=dict)
+    measures: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
+    energy_balance: Mapping[str, float] = field(default_factory=dict)
+    sources: tuple[str, ...] = ()
+    warnings: tuple[str, ...] = ()
+    run_hash: str = ""
+    unit: str = "Gy"
+
+
+def console_line(summary: RunSummary) -> str:
+    """Say in one line what is flat, where the peak is, what stars give, and that it is research only.
+
+    Parameters
+    ----------
+    summary : RunSummary
+        The run.
+
+    Returns
+    -------
+    str
+        One line without a newline.
+    """
+    return (
+        f"{summary.quantity} in {summary.target} flat to ±{summary.flatness_percent:.1f} %, "
+        f"peak at {summary.peak_depth_mm:.0f} mm water, "
+        f"{100.0 * summary.star_share:.0f} % of the target dose from stars. {BANNER}"
+    )
+
+
+def mean_doses_gy(dose: xr.Dataset, coverage: ArrayLike, *, variable: str = "dose") -> dict[str, float]:
+    """Return the mean dose of each component in a structure.
+
+    Parameters
+    ----------
+    dose : Dataset
+        ``dose(component, z, y, x)`` in Gy.
+    coverage : array_like, shape (nz, ny, nx)
+        Part of each voxel inside the structure, 0 to 1, on the dose grid.
+    variable : str
+        Name of the variable.
+
+    Returns
+    -------
+    dict of str to float
+        Component to mean dose in Gy.
+    """
+    array = dose[variable].transpose("component", "z", "y", "x")
+    weights = np.asarray(coverage, dtype=np.float64)
+    if weights.shape != array.shape[1:]:
+        raise InputError(f"a coverage of shape {weights.shape} for a dose of shape {array.shape[1:]}")
+    whole = float(weights.sum())
+    if not whole > 0.0:
+        raise InputError("a structure without volume on the dose grid", remedy="use a finer dose grid")
+    inside = weights > 0.0
+    return {
+        str(name): float(np.sum(np.asarray(array.values[i])[inside] * weights[inside], dtype=np.float64)) / whole
+        for i, name in enumerate(array["component"].values)
+    }
+
+
+def star_share(component_doses_gy: Mapping[str, float]) -> float:
+    """Return the share of a dose that comes from stars.
+
+    Parameters
+    ----------
+    component_doses_gy : mapping of str to float
+        Dose of each component.
+
+    Returns
+    -------
+    float
+        0 to 1; 0 without any dose.
+
+    Examples
+    --------
+    >>> star_share({"primary": 1.5, "star_light": 0.4, "star_heavy": 0.1})
+    0.25
+    """
+    whole = sum(component_doses_gy.values())
+    stars = sum(dose for name, dose in component_doses_gy.items() if name in STAR_COMPONENTS)
+    return stars / whole if whole > 0.0 else 0.0
+
+
+def summary_text(summary: RunSummary, *, settings: OutputTable | None = None) -> str:
+    """Write the run down as plain text.
+
+    Parameters
+    ----------
+    summary : RunSummary
+        The run.
+    settings : OutputTable, optional
+        The settings table, printed at the end.
+
+    Returns
+    -------
+    str
+        Text with the caution on top.
+    """
+    unit = summary.unit
+    parts = [
+        _wrapped(CAUTION),
+        _heading(summary.title),
+        _pairs(
+            [
+                (f"{summary.quantity} flat over the target to", f"±{summary.flatness_percent:.1f} %"),
+                ("peak, depth in water", f"{summary.peak_depth_mm:.1f} mm"),
+                ("peak over entrance", f"{summary.peak_to_entrance:.2f}"),
+                (f"mean dose in {summary.target}", f"{summary.mean_dose_gy:.3f} {unit}"),
+                ("share of it from stars", f"{100.0 * summary.star_share:.1f} %"),
+                ("beam time at the stated rate", f"{summary.beam_time_s:.1f} s"),
+                ("run", summary.run_hash[:16] or "not hashed"),
+            ]
+        ),
+    ]
+    if summary.component_doses_gy:
+        whole = sum(summary.component_doses_gy.values()) or 1.0
+        parts += [
+            _heading(f"Mean dose in {summary.target} by component"),
+            _pairs(
+                [
+                    (COMPONENT_TITLES.get(name, name), f"{dose:.4f} {unit}  {100.0 * dose / whole:5.1f} %")
+                    for name, dose in summary.component_doses_gy.items()
+                ]
+            ),
+        ]
+    for structure, values in summary.measures.items():
+        parts += [_heading(structure), _pairs([(name, f"{value:.4g}") for name, value in values.items()])]
+    if summary.energy_balance:
+        parts += [
+            _heading("Energy balance"),
+            _pairs([(name.replace("_", " "), f"{value:.6g}") for name, value in summary.energy_balance.items()]),
+        ]
+    if settings is not None:
+        parts += [_heading("Settings"), settings.text(), f"({settings.units})\n"]
+    parts += [_heading("Warnings"), _list(summary.warnings, empty="none")]
+    parts += [_heading("Sources"), _list(summary.sources, empty="see the run record")]
+    return "\n".join(parts)
+
+
+def _heading(text: str) -> str:
+    return f"\n{text}\n{'=' * len(text)}"
+
+
+def _pairs(pairs: Sequence[tuple[str, str]]) -> str:
+    width = max(len(name) for name, _ in pairs)
+    return "\n".join(f"{name.ljust(width)}  {value}" for name, value in pairs)
+
+
+def _list(lines: Sequence[str], *, empty: str) -> str:
+    return "\n".join(
+        textwrap.fill(line, _WIDTH, initial_indent="- ", subsequent_indent="  ") for line in lines or (empty,)
+    )
+
+
+def _wrapped(text: str) -> str:
+    return textwrap.fill(text, _WIDTH)
