@@ -1,19 +1,15 @@
 """A voxel volume as a DICOM CT series, so that any phantom can be read as if it had been scanned.
 
-CT numbers come from density and composition by the parametrisation of the
-linear attenuation coefficient of Schneider, Pedroni and Lomax, Phys. Med. Biol.
-41 (1996) 111, in the form per mass fraction of Schneider, Bortfeld and Schlegel,
-Phys. Med. Biol. 45 (2000) 459, eq. 8::
+CT numbers come from density and composition by the formula of
+:mod:`dosekit.grids.attenuation` (Schneider, Pedroni and Lomax, Phys. Med. Biol. 41
+(1996) 111)::
 
     HU = 1000 (mu / mu_water - 1)
-    mu / mu_water = rho sum_i (w_i / A_i) (Z_i + k1 Z_i^2.86 + k2 Z_i^4.62) / [the same for water at 1 g/cm3]
 
-with k1 = 1.24e-3 and k2 = 3.06e-5 for one 120 kV scanner (values from memory of
-the 2000 paper).  The same kappas should be given to the calibration that reads
-the series back.  Beam hardening, noise and blur are not modelled.
-
-Validity: tissues and plastics.  Above iron the fit of the photo-electric term
-has no support; such voxels are written with what the formula says.
+It is the one that the calibration of :func:`dosekit.read_ct` rests on: with the same
+scanner coefficients a material that the calibration knows comes back as it was;
+another one (a plastic, a metal) comes back as the tissue with its CT number.
+Beam hardening, noise and blur are not modelled.
 """
 
 from __future__ import annotations
@@ -26,8 +22,8 @@ from warnings import warn
 import numpy as np
 from pydicom.uid import CTImageStorage
 
-from dosekit.basis.materials import element, material
 from dosekit.errors import CalibrationWarning, DicomError, InputError
+from dosekit.grids.attenuation import KAPPA_COHERENT, KAPPA_PHOTO, attenuation_per_density
 from dosekit.outputs.dicom_objects import (
     add_frame_of_reference,
     caution_text,
@@ -36,56 +32,18 @@ from dosekit.outputs.dicom_objects import (
     object_start,
     save_object,
 )
-from dosekit.outputs.dicom_reference import invented_reference
+from dosekit.outputs.dicom_reference import reference_of
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
     from pydicom.dataset import Dataset
 
-    from dosekit.basis.materials import Material
     from dosekit.grids.voxels import VoxelGrid
     from dosekit.outputs.dicom_reference import DicomReference
 
-__all__ = ["attenuation_per_density", "ct_numbers", "write_ct_series"]
+__all__ = ["ct_numbers", "write_ct_series"]
 
-KAPPA_COHERENT = 1.24e-3
-"""K_coh / K_KN of the scanner; Schneider et al. 2000 (memory)."""
-KAPPA_PHOTO = 3.06e-5
-"""K_ph / K_KN of the scanner; Schneider et al. 2000 (memory)."""
 LOWEST_HU, HIGHEST_HU = -1024, 32767
-
-
-def attenuation_per_density(
-    matter: Material, *, kappa_coherent: float = KAPPA_COHERENT, kappa_photo: float = KAPPA_PHOTO
-) -> float:
-    """Return the photon attenuation per density relative to that of water.
-
-    Parameters
-    ----------
-    matter : Material
-        Composition; its density is not used.
-    kappa_coherent, kappa_photo : float
-        Ratios of coherent and photo-electric to Klein-Nishina coefficients of the scanner.
-
-    Returns
-    -------
-    float
-        (mu / rho) / (mu / rho)_water, dimensionless.
-
-    Examples
-    --------
-    >>> attenuation_per_density(material("water"))
-    1.0
-    """
-
-    def per_gram(substance: Material) -> float:
-        total = 0.0
-        for symbol, fraction in substance.mass_fractions:
-            z, a = element(symbol).atomic_number, element(symbol).atomic_weight
-            total += fraction / a * (z + kappa_coherent * z**2.86 + kappa_photo * z**4.62)
-        return total
-
-    return per_gram(matter) / per_gram(material("water"))
 
 
 def ct_numbers(
@@ -173,13 +131,7 @@ def write_ct_series(
     """
     z_mm = grid.centres_mm("z")
     if reference is None:
-        reference = invented_reference(
-            run_hash,
-            name=grid.name or "phantom",
-            image_z_mm=z_mm.tolist(),
-            patient_position=grid.patient_position,
-            frame_of_reference_uid=grid.frame_of_reference_uid,
-        )
+        reference = reference_of(grid.replace(dicom_reference=None), run_hash=run_hash)
     _check_reference(reference, z_mm)
     numbers = ct_numbers(grid) if hu is None else np.asarray(hu)
     if numbers.shape != grid.shape or numbers.min() < -32768 or numbers.max() > HIGHEST_HU:

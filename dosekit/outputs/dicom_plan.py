@@ -174,13 +174,7 @@ def _beam_item(number: int, field: Field) -> Dataset:
     beam = Dataset()
     beam.BeamNumber = str(number)
     beam.BeamName = clip_text(field.name or f"field {number}", "LO")
-    parallel = field.source_distance_mm is None
-    beam.BeamDescription = clip_text(
-        f"{BANNER}. Particle {field.beam.particle}, {field.beam.kinetic_energy_mev:.4g} MeV per particle, "
-        f"weights count particles."
-        + (f" Parallel beam: source distance {PARALLEL_DISTANCE_MM:g} mm stands for infinity." if parallel else ""),
-        "ST",
-    )
+    beam.BeamDescription = clip_text(_description(field), "ST")
     beam.BeamType = "STATIC"
     beam.RadiationType = RADIATION_TYPES.get(str(field.beam.particle), clip_text(str(field.beam.particle), "SH"))
     beam.TreatmentMachineName = "RESEARCH ONLY"
@@ -212,6 +206,21 @@ def _beam_item(number: int, field: Field) -> Dataset:
     beam.NumberOfControlPoints = str(len(points))
     beam.IonControlPointSequence = points
     return beam
+
+
+def _description(field: Field) -> str:
+    """Say in words what the tags cannot."""
+    beam = field.beam
+    words = [
+        f"{BANNER}.",
+        f"Particle {beam.particle}, {beam.kinetic_energy_mev:.5g} MeV per particle; metersets count particles.",
+    ]
+    fixed = getattr(beam, "range_shifter", None)
+    if isinstance(fixed, tuple):
+        words.append(f"{getattr(fixed[0], 'name', fixed[0])}, {fixed[1]:g} mm, is in the beam in every step.")
+    if field.source_distance_mm is None:
+        words.append(f"Parallel beam: source distance {PARALLEL_DISTANCE_MM:g} mm stands for infinity.")
+    return " ".join(words)
 
 
 def _shifter_item() -> Dataset:

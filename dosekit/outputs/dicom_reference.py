@@ -21,15 +21,26 @@ import hashlib
 import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 from uuid import UUID
+from warnings import warn
 
-from dosekit.errors import DicomError
+from dosekit.errors import DicomError, DosekitWarning
 
 if TYPE_CHECKING:
     from pydicom.dataset import Dataset
 
-__all__ = ["CT_IMAGE_CLASS_UID", "DicomReference", "derived_uid", "invented_reference", "plan_uid", "structure_set_uid"]
+    from dosekit.grids.voxels import VoxelGrid
+
+__all__ = [
+    "CT_IMAGE_CLASS_UID",
+    "DicomReference",
+    "derived_uid",
+    "invented_reference",
+    "plan_uid",
+    "reference_of",
+    "structure_set_uid",
+]
 
 CT_IMAGE_CLASS_UID = "1.2.840.10008.5.1.4.1.1.2"
 """CT Image Storage (DICOM PS3.6, table A-1)."""
@@ -164,6 +175,12 @@ class DicomReference:
         ------
         DicomError
             If there is no image, or an image has no identifier or position.
+
+        Warns
+        -----
+        DosekitWarning
+            When an identifier breaks the rules of the standard: no valid object can hold it, so
+            the reference has a hash of it instead.
         """
         headers = list(images)
         if not headers:
@@ -174,16 +191,16 @@ class DicomReference:
             raise DicomError("an image without identifier or position", allowed="CT images") from error
         first = headers[0]
         position = _tag(first, "PatientPosition")
-        frame = _tag(first, "FrameOfReferenceUID")
-        structure_uid = _tag(structure_set, "SOPInstanceUID") if structure_set is not None else ""
+        series = _valid_uid(_tag(first, "SeriesInstanceUID"), "series")
+        structures = "" if structure_set is None else _tag(structure_set, "SOPInstanceUID")
         return cls(
-            study_instance_uid=_tag(first, "StudyInstanceUID"),
-            series_instance_uid=_tag(first, "SeriesInstanceUID"),
-            frame_of_reference_uid=frame or derived_uid(_tag(first, "SeriesInstanceUID"), "frame"),
-            image_instance_uids=tuple(uid for _, uid in placed),
+            study_instance_uid=_valid_uid(_tag(first, "StudyInstanceUID"), "study", series),
+            series_instance_uid=series,
+            frame_of_reference_uid=_valid_uid(_tag(first, "FrameOfReferenceUID"), "frame", series),
+            image_instance_uids=tuple(_valid_uid(uid, "image") for _, uid in placed),
             image_z_mm=tuple(z_mm for z_mm, _ in placed),
             image_class_uid=_tag(first, "SOPClassUID") or CT_IMAGE_CLASS_UID,
-            structure_set_instance_uid=structure_uid or None,
+            structure_set_instance_uid=_valid_uid(structures, "structures") if structures else None,
             patient_name=_tag(first, "PatientName"),
             patient_id=_tag(first, "PatientID"),
             patient_birth_date=_tag(first, "PatientBirthDate"),
@@ -291,6 +308,53 @@ def invented_reference(
         identity_removed=True,
         made_by_run=True,
     )
+
+
+def reference_of(grid: VoxelGrid, *, run_hash: str, anonymous: bool = False) -> DicomReference:
+    """Return what the objects of a run on a volume refer to.
+
+    Parameters
+    ----------
+    grid : VoxelGrid
+        The volume: read from a CT series, or a phantom.
+    run_hash : str
+        Hash of the run record.
+    anonymous : bool
+        Replace the identifiers of a patient.
+
+    Returns
+    -------
+    DicomReference
+        The CT's; invented from the volume's name and slices for a phantom.
+    """
+    found: Any = grid.dicom_reference
+    if found is None:
+        return invented_reference(
+            run_hash,
+            name=grid.name or "phantom",
+            image_z_mm=grid.centres_mm("z").tolist(),
+            patient_position=grid.patient_position,
+            frame_of_reference_uid=grid.frame_of_reference_uid,
+        )
+    reference = (
+        found
+        if isinstance(found, DicomReference)
+        else DicomReference.from_headers(found.images, structure_set=found.structure_set)
+    )
+    return reference.anonymized(run_hash) if anonymous else reference
+
+
+def _valid_uid(uid: str, *roles: str) -> str:
+    """Return an identifier, or a hash of it when it breaks DICOM PS3.5 section 9."""
+    if len(uid) <= 64 and re.fullmatch(r"(0|[1-9]\d*)(\.(0|[1-9]\d*))*", uid):
+        return uid
+    if uid:
+        warn(
+            f"a {roles[0]} identifier of the CT breaks the rules of DICOM; outputs refer to a replacement",
+            DosekitWarning,
+            stacklevel=3,
+        )
+    return derived_uid("replaces", uid, *roles)
 
 
 def _tag(header: Dataset, keyword: str) -> str:

@@ -11,8 +11,9 @@ import SimpleITK as sitk
 
 from dosekit.basis.materials import material
 from dosekit.errors import CalibrationWarning, DicomError, InputError
+from dosekit.grids.attenuation import attenuation_per_density
 from dosekit.grids.voxels import VoxelGrid
-from dosekit.outputs.dicom_ct import attenuation_per_density, ct_numbers, write_ct_series
+from dosekit.outputs.dicom_ct import ct_numbers, write_ct_series
 from dosekit.outputs.dicom_reference import invented_reference
 
 from dicom_judges import RESEARCH_ONLY, check_house_rules, judge
