@@ -1,0 +1,204 @@
+"""What the fold takes from a depth library: rows of water-equivalent depth, columns of range steps.
+
+The library says, for each range step, what a broad beam leaves in water at each depth. Here it becomes
+
+``narrow``  energy and stops of the core, whose width follows each ray's own Fermi-Eyges moments;
+``broad``   everything wider (scattered beam particles, products of reactions, decays, contaminants). Its
+            variance is the core's in water plus the library's extra variance; each quantity is divided between a few
+            fixed widths so that the variance is kept exactly at every depth (a sum of Gaussians);
+``power``   the core's scattering power in water, rad2 per mm, by differential Moliere (Gottschalk 2010).
+
+Depth rows are bin centres; a row of zeros follows the last.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+if TYPE_CHECKING:
+    from dosekit.beams.beam import Beam
+    from dosekit.depths.library import DepthLibrary
+
+__all__ = ["BROAD_TARGETS", "TARGETS", "StepTables", "step_tables"]
+
+TARGETS: tuple[str, ...] = ("primary", "stops", "in_flight", "decay", "contaminant_muon", "contaminant_electron")
+"""What the fold makes in voxels; star components follow from the stops."""
+
+BROAD_TARGETS: dict[str, str] = {
+    "scattered": "primary",
+    "scattered_stops": "stops",
+    "in_flight_charged": "in_flight",
+    "in_flight_neutral": "in_flight",
+    "decay": "decay",
+    "contaminant_muon": "contaminant_muon",
+    "contaminant_electron": "contaminant_electron",
+}
+"""Quantities of the library that are spread by fixed widths, and where they go."""
+
+_MOST_WIDTHS = 5
+_WIDTH_RATIO = 1.5
+_SIGNIFICANT = 1e-4
+_NEGLIGIBLE = 1e-10
+_LOWEST_ENERGY_MEV = 0.5
+
+
+@dataclass(frozen=True, eq=False)
+class StepTables:
+    """Depth tables of one beam's range steps.
+
+    Attributes
+    ----------
+    bin_mm : float
+        Width of a depth row, mm of water.
+    narrow : ndarray
+        Energy (MeV/mm) and stops (1/mm) of the core per particle, shape (rows, K, 2).
+    power : ndarray
+        Scattering power of the core in water, rad2/mm, shape (rows, K).
+    broad : ndarray
+        Energy or stops per part, shape (rows, K, parts).
+    part_sigma_mm : ndarray
+        Width of each part, falling, shape (parts,), mm.
+    part_target : ndarray
+        Index into `TARGETS` of each part.
+    start : ndarray
+        Fermi-Eyges moments A0, A1, A2 of each step behind its range shifter, shape (3, K); rad2, mm rad, mm2.
+    gap_mm : float
+        From the range shifter to the surface, mm.
+    """
+
+    bin_mm: float
+    narrow: NDArray[np.float64]
+    power: NDArray[np.float64]
+    broad: NDArray[np.float64]
+    part_sigma_mm: NDArray[np.float64]
+    part_target: NDArray[np.int64]
+    start: NDArray[np.float64]
+    gap_mm: float
+
+    @property
+    def surface_variance_mm2(self) -> NDArray[np.float64]:
+        """Spread from the range shifter and the gap at the surface, shape (K,), mm2."""
+        a0, a1, a2 = self.start
+        return np.asarray(a2 + 2.0 * a1 * self.gap_mm + a0 * self.gap_mm**2)
+
+
+def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
+    """Turn a depth library into the fold's tables.
+
+    Parameters
+    ----------
+    library : DepthLibrary
+        Depth curves in water for each range step.
+    beam : Beam
+        The beam before the range shifter.
+
+    Returns
+    -------
+    StepTables
+        The tables.
+    """
+    from dosekit.beams.scattering import scattering_power_rad2_mm
+
+    depth = np.asarray(library.depth_mm, dtype=np.float64)
+    bin_mm = float(depth[1] - depth[0])
+    energy = np.maximum(np.asarray(library.kinetic_energy_mev, dtype=np.float64), _LOWEST_ENERGY_MEV)
+    power = scattering_power_rad2_mm(beam.particle, "water", energy, start_energy_mev=beam.kinetic_energy_mev)
+    start = _behind_shifter(library, beam)
+    gap = beam.range_shifter_gap_mm
+    in_water = _variance_in_water(power, start, gap_mm=gap, bin_mm=bin_mm)
+    narrow = np.stack([_clean(library.quantities[key]) for key in ("core", "core_stops")], axis=2)
+    values, sigmas, targets = [], [], []
+    for key, target in BROAD_TARGETS.items():
+        quantity = _clean(library.quantities.get(key, np.zeros_like(energy)))
+        if not quantity.any():
+            continue
+        extra = np.asarray(library.extra_sigma_mm.get(key, np.zeros_like(energy)), dtype=np.float64)
+        variance = np.maximum(in_water + np.nan_to_num(extra) ** 2, 0.0)
+        for sigma, share in _divide(quantity, variance):
+            values.append(quantity * share)
+            sigmas.append(sigma)
+            targets.append(TARGETS.index(target))
+    order = np.argsort(-np.array(sigmas), kind="stable")
+    shape = (*energy.shape, len(order))
+    broad = np.stack([values[n] for n in order], axis=2) if len(order) else np.zeros(shape)
+    return StepTables(
+        bin_mm=bin_mm,
+        narrow=_rows(narrow),
+        power=_rows(power),
+        broad=_rows(broad),
+        part_sigma_mm=np.array([sigmas[n] for n in order], dtype=np.float64),
+        part_target=np.array([targets[n] for n in order], dtype=np.int64),
+        start=start,
+        gap_mm=gap,
+    )
+
+
+def _behind_shifter(library: DepthLibrary, beam: Beam) -> NDArray[np.float64]:
+    """Return the moments that scattering in the range shifter leaves, one column for each step."""
+    from dosekit.beams.scattering import fermi_eyges_moments
+    from dosekit.beams.stopping import relative_stopping_power
+
+    shift = np.asarray(library.shift_mm, dtype=np.float64)
+    shifter = beam.shifter_material
+    medium = "water" if shifter is None else shifter
+    thickness = shift / float(relative_stopping_power(medium, beam.particle)) + beam.fixed_shifter_mm
+    if not thickness.any():
+        return np.zeros((3, len(shift)))
+    moments = fermi_eyges_moments(beam.particle, medium, beam.kinetic_energy_mev, depth_mm=thickness)
+    return np.stack([np.asarray(moment, dtype=np.float64) for moment in moments])
+
+
+def _variance_in_water(
+    power: NDArray[np.float64], start: NDArray[np.float64], *, gap_mm: float, bin_mm: float
+) -> NDArray[np.float64]:
+    """Return the scatter variance gained in water up to each bin centre, shape (K, N), mm2."""
+    a0, a1, a2 = (moment.copy() for moment in start)
+    a2 += gap_mm * (2.0 * a1 + gap_mm * a0)
+    a1 += gap_mm * a0
+    surface = a2.copy()
+    gained = np.empty_like(power)
+    for n in range(power.shape[1]):
+        dl = 0.5 * bin_mm if n == 0 else bin_mm
+        t = power[:, n] if n == 0 else 0.5 * (power[:, n] + power[:, n - 1])
+        a2 = a2 + dl * (2.0 * a1 + dl * (a0 + t * dl / 3.0))
+        a1 = a1 + dl * (a0 + 0.5 * t * dl)
+        a0 = a0 + t * dl
+        gained[:, n] = a2 - surface
+    return gained
+
+
+def _divide(
+    quantity: NDArray[np.float64], variance: NDArray[np.float64]
+) -> list[tuple[float, NDArray[np.float64]]]:
+    """Divide a quantity between fixed widths: pairs of sigma and share, the shares adding to one everywhere."""
+    counts = quantity > _SIGNIFICANT * quantity.max()
+    low, high = float(np.sqrt(variance[counts].min())), float(np.sqrt(variance[counts].max()))
+    low = max(low, 0.05 * high, 1e-3)
+    number = int(np.clip(np.ceil(np.log(max(high / low, 1.0)) / np.log(_WIDTH_RATIO) - 1e-9) + 1, 1, _MOST_WIDTHS))
+    if number == 1:
+        return [(float(np.sqrt(np.average(variance, weights=quantity))), np.ones_like(variance))]
+    rungs = np.linspace(np.sqrt(low), np.sqrt(high), number) ** 2
+    squares = rungs**2
+    g = np.clip(np.searchsorted(squares, variance, side="right") - 1, 0, number - 2)
+    upper = np.clip((variance - squares[g]) / (squares[g + 1] - squares[g]), 0.0, 1.0)
+    return [
+        (float(sigma), np.where(g == n, 1.0 - upper, 0.0) + np.where(g + 1 == n, upper, 0.0))
+        for n, sigma in enumerate(rungs)
+    ]
+
+
+def _clean(quantity: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return a quantity with its negligible ends set to nothing."""
+    values = np.array(quantity, dtype=np.float64)
+    values[np.abs(values) < _NEGLIGIBLE * np.abs(values).max(initial=0.0)] = 0.0
+    return values
+
+
+def _rows(table: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Turn (K, N, ...) into rows of depth (N + 1, K, ...), the last one zero."""
+    rows = np.moveaxis(table, 1, 0)
+    return np.ascontiguousarray(np.concatenate([rows, np.zeros((1, *rows.shape[1:]))]))
