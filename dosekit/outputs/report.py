@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING, Any
 from dosekit.caution import BANNER, CAUTION
 from dosekit.errors import InputError
 from dosekit.outputs.files import write_text
+from dosekit.outputs.tables import spoken
 
 if TYPE_CHECKING:
     from dosekit.outputs.record import RunRecord
@@ -140,6 +141,7 @@ def report_html(
         key_values=_key_values(summary),
         repeat_command=repeat_command,
         draw_table=_draw_table,
+        spoken=spoken,
     )
 
 
@@ -166,7 +168,7 @@ def _key_values(summary: RunSummary) -> list[tuple[str, str]]:
         (f"{summary.quantity} flat over the target to", f"±{summary.flatness_percent:.1f} %"),
         ("peak, depth in water", f"{summary.peak_depth_mm:.0f} mm"),
         ("peak over entrance", f"{summary.peak_to_entrance:.2f}"),
-        (f"mean dose in {summary.target}", f"{summary.mean_dose_gy:.3g} {summary.unit}"),
+        (f"mean dose in {summary.target}", f"{summary.mean_dose_gy:.3f} {summary.unit}"),
         ("share of it from stars", f"{100.0 * summary.star_share:.0f} %"),
         ("beam time at the stated rate", f"{summary.beam_time_s:.0f} s"),
     ]
@@ -187,7 +189,7 @@ def _draw_table(table: OutputTable) -> Any:
         return f"<{tag}{scope}{kind}>{escape(text)}</{tag}>"
 
     head = "".join(
-        f'<th scope="col"{" class=" + chr(34) + "n" + chr(34) if right else ""}>{escape(_spoken(name))}</th>'
+        f'<th scope="col"{" class=" + chr(34) + "n" + chr(34) if right else ""}>{escape(spoken(name))}</th>'
         for name, right in zip(table.columns, numeric, strict=True)
     )
     body = "\n".join(
@@ -201,20 +203,6 @@ def _draw_table(table: OutputTable) -> Any:
         f"<thead><tr>{head}</tr></thead><tbody>\n{body}\n</tbody></table></div>"
     )
     return Markup(page)  # noqa: S704 - every part above is escaped
-
-
-def _spoken(column: str) -> str:
-    for ending, unit in (
-        ("_mm", "mm"),
-        ("_gy", "Gy"),
-        ("_percent", "%"),
-        ("_cm3", "cm³"),
-        ("_s", "s"),
-        ("_1e9", "1e9"),
-    ):
-        if column.endswith(ending):
-            return f"{column.removesuffix(ending).replace('_', ' ')} ({unit})"
-    return column.replace("_", " ")
 
 
 def _png_size(png: bytes) -> tuple[int, int]:

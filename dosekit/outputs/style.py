@@ -431,6 +431,9 @@ def write_figure(figure: Figure, stem: str | Path) -> FigureFiles:
     alt = str(figure.get_label())
     pdf, png = io.BytesIO(), io.BytesIO()
     with own_style():
+        # Laid out once and then held, so that both files, and a second writing, agree to the last bit.
+        figure.draw_without_rendering()
+        figure.set_layout_engine("none")
         figure.savefig(
             pdf,
             format="pdf",

@@ -13,6 +13,7 @@ from numpy.typing import ArrayLike
 from dosekit.basis.components import COMPONENT_TITLES, STAR_COMPONENTS
 from dosekit.caution import BANNER, CAUTION
 from dosekit.errors import InputError
+from dosekit.outputs.tables import spoken
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -201,7 +202,7 @@ def summary_text(summary: RunSummary, *, settings: OutputTable | None = None) ->
     if summary.energy_balance:
         parts += [
             _heading("Energy balance"),
-            _pairs([(name.replace("_", " "), f"{value:.6g}") for name, value in summary.energy_balance.items()]),
+            _pairs([(spoken(name), f"{value:.6g}") for name, value in summary.energy_balance.items()]),
         ]
     if settings is not None:
         parts += [_heading("Settings"), settings.text(), f"({settings.units})\n"]

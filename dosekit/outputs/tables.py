@@ -35,11 +35,23 @@ __all__ = [
     "histogram_table",
     "measures_table",
     "settings_table",
+    "spoken",
     "spots_table",
 ]
 
 PARTICLES_PER_UNIT = 1e9
 _DIGITS = 7
+_UNIT_ENDINGS = {
+    "_per_mm": "1/mm",
+    "_mev_mm": "MeV/mm",
+    "_mm": "mm",
+    "_gy": "Gy",
+    "_mev": "MeV",
+    "_percent": "%",
+    "_cm3": "cm³",
+    "_1e9": "1e9",
+    "_s": "s",
+}
 Cell = str | float | int
 
 
@@ -393,6 +405,30 @@ def measures_table(
         rows=tuple((key, *(float(row.get(name, float("nan"))) for name in names)) for key, row in measures.items()),
         sources=tuple(sources),
     )
+
+
+def spoken(column: str) -> str:
+    """Return a column's name as a reader would say it, with its unit in brackets.
+
+    Parameters
+    ----------
+    column : str
+        A name that carries its unit.
+
+    Returns
+    -------
+    str
+        The printed name.
+
+    Examples
+    --------
+    >>> spoken("residual_range_mm")
+    'residual range (mm)'
+    """
+    for ending, unit in _UNIT_ENDINGS.items():
+        if column.endswith(ending):
+            return f"{column.removesuffix(ending).replace('_', ' ')} ({unit})"
+    return column.replace("_", " ")
 
 
 def _one_line(text: str) -> str:
