@@ -124,7 +124,9 @@ def _shares(medium: Material, law: str, hydrogen: bool) -> tuple[tuple[str, floa
     first = hydrogen_share(medium)
     if not hydrogen and first < 1.0:
         first = 0.0
-    parts = {symbol: medium.atoms_per_gram(symbol) * weight(symbol) for symbol, _ in medium.mass_fractions if symbol != "H"}
+    parts = {
+        symbol: medium.atoms_per_gram(symbol) * weight(symbol) for symbol, _ in medium.mass_fractions if symbol != "H"
+    }
     total = math.fsum(parts.values())
     shares = {symbol: (1.0 - first) * part / total for symbol, part in parts.items()}
     if medium.fraction("H") > 0.0:

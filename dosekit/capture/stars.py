@@ -189,9 +189,7 @@ def _star(symbol: str, yields: str) -> Star:
     return built
 
 
-def star_energy_mev(
-    medium: Material | str, yields: str = "evaluated", *, star_scale: float = 1.0
-) -> dict[str, float]:
+def star_energy_mev(medium: Material | str, yields: str = "evaluated", *, star_scale: float = 1.0) -> dict[str, float]:
     """Return the energy per stopped pion by component in a material.
 
     Parameters
