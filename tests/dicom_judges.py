@@ -30,6 +30,18 @@ def judge(path, *, radiotherapy=True):
     assert complaints(path, radiotherapy=radiotherapy) == []
 
 
+def consistency_complaints(paths):
+    """Return what dcentvfy says about files that should belong together.
+
+    It takes the study that a structure set refers to for a missing object; that line is left out.
+    """
+    return [
+        line
+        for line in _lines("dcentvfy", *paths)
+        if line.startswith("Error") and "Missing SOPInstanceUID that was referenced" not in line
+    ]
+
+
 def check_house_rules(path):
     """Fail if an object breaks the rules of this project; return the object."""
     head = pydicom.dcmread(path)

@@ -207,7 +207,11 @@ def _add_patient_and_study(head: Dataset, reference: DicomReference) -> None:
     head.ReferringPhysicianName = clip_text(reference.referring_physician_name, "PN")
     if reference.identity_removed:
         head.PatientIdentityRemoved = "YES"
-        head.DeidentificationMethod = "identifiers invented or replaced by hashes; dates removed"
+        head.DeidentificationMethod = (
+            "identifiers invented or replaced by hashes; dates removed"
+            if reference.made_by_run
+            else "as the images that are referred to say"
+        )
 
 
 def add_frame_of_reference(head: Dataset, reference: DicomReference) -> None:

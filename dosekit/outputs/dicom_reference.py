@@ -23,7 +23,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 from uuid import UUID
-from warnings import warn
+from warnings import catch_warnings, simplefilter, warn
 
 from dosekit.errors import DicomError, DosekitWarning
 
@@ -358,6 +358,13 @@ def _valid_uid(uid: str, *roles: str) -> str:
 
 
 def _tag(header: Dataset, keyword: str) -> str:
-    """Return a header value as plain text, empty when absent."""
-    value = header.get(keyword, None)
-    return "" if value is None else str(value).strip()
+    """Return a header value as plain text, empty when absent or damaged."""
+    from pydicom import config
+
+    with catch_warnings(), config.disable_value_validation():
+        simplefilter("ignore")  # such a warning would show the value
+        try:
+            value = header.get(keyword, None)
+        except (ValueError, TypeError, LookupError, AttributeError, NotImplementedError):
+            return ""
+        return "" if value is None else str(value).strip()

@@ -15,7 +15,9 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
+from pydicom.dataelem import RawDataElement
 from pydicom.dataset import Dataset
+from pydicom.tag import Tag
 from pydicom.uid import UID, RTStructureSetStorage
 
 from dosekit.caution import BANNER
@@ -206,5 +208,9 @@ def _contour_item(outline: NDArray[np.float64], z_mm: float) -> Dataset:
     item = Dataset()
     item.ContourGeometricType = "CLOSED_PLANAR"
     item.NumberOfContourPoints = str(len(outline))
-    item.ContourData = texts
+    data = "\\".join(texts).encode("ascii")
+    data += b" " * (len(data) % 2)
+    tag = Tag("ContourData")  # encoded here, which saves an object for each number
+    item[tag] = RawDataElement(tag, "DS", len(data), data, 0, is_implicit_VR=False, is_little_endian=True)
+    item.set_original_encoding(False, True, "iso8859")
     return item
