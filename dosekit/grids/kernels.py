@@ -1,4 +1,4 @@
-"""Compiled kernels of the room: resampling by overlap.
+"""Compiled kernels of the room: resampling by overlap, filling of contours, HU to matter.
 
 Readable twins live in ``tests/naive.py``.
 """
@@ -13,7 +13,7 @@ from numba import njit
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-__all__ = ["overlap_density", "overlap_material"]
+__all__ = ["look_up_matter", "overlap_density", "overlap_material", "renumber", "scan_edges"]
 
 
 @njit(cache=True, error_model="numpy", nogil=True)
@@ -111,3 +111,124 @@ def _beats(tally: NDArray[np.float64], which: int, best: int) -> bool:
     """Say whether one material has the larger share, ties going to the lower index."""
     gain = tally[which] - tally[best]
     return bool(gain > 1e-12 or (gain > -1e-12 and which < best))
+
+
+@njit(cache=True, error_model="numpy", nogil=True)
+def scan_edges(
+    edges: NDArray[np.float64], rays: int, coverage: NDArray[np.float64], centres: NDArray[np.bool_]
+) -> None:
+    """Fill closed polygons by the even-odd rule on one slice.
+
+    Parameters
+    ----------
+    edges : ndarray
+        Edges of all polygons [edge, 4]: x1, y1, x2, y2 in pixels, pixel centres at whole numbers.
+    rays : int
+        Scan lines per pixel row; along a line the covered length is exact.
+    coverage : ndarray
+        Covered share of each pixel [y, x], overwritten.
+    centres : ndarray
+        Whether the centre of each pixel is inside [y, x], overwritten.
+    """
+    rows, columns = coverage.shape
+    crossings = np.empty(len(edges), dtype=np.float64)
+    for row in range(rows):
+        coverage[row, :] = 0.0
+        centres[row, :] = False
+        count = _cross(edges, float(row), crossings)
+        for pair in range(0, count - 1, 2):
+            first = max(0, int(np.ceil(max(crossings[pair], -1.0))))
+            last = min(columns - 1.0, np.ceil(crossings[pair + 1]) - 1.0)
+            for column in range(first, int(last) + 1):
+                centres[row, column] = True
+        for ray in range(rays):
+            count = _cross(edges, row - 0.5 + (ray + 0.5) / rays, crossings)
+            for pair in range(0, count - 1, 2):
+                low = max(crossings[pair] + 0.5, 0.0)
+                high = min(crossings[pair + 1] + 0.5, float(columns))
+                if high <= low:
+                    continue
+                for column in range(int(low), min(int(high), columns - 1) + 1):
+                    length = min(high, column + 1.0) - max(low, float(column))
+                    if length > 0.0:
+                        coverage[row, column] += length / rays
+
+
+@njit(cache=True, error_model="numpy", nogil=True)
+def _cross(edges: NDArray[np.float64], y: float, crossings: NDArray[np.float64]) -> int:
+    """Collect where edges cross a line of constant y, sorted; an edge owns its lower end."""
+    count = 0
+    for number in range(len(edges)):
+        y1, y2 = edges[number, 1], edges[number, 3]
+        if (y1 <= y) != (y2 <= y):
+            x1 = edges[number, 0]
+            crossings[count] = x1 + (y - y1) * (edges[number, 2] - x1) / (y2 - y1)
+            count += 1
+    crossings[:count].sort()
+    return count
+
+
+@njit(cache=True, error_model="numpy", nogil=True)
+def look_up_matter(
+    hu: NDArray[np.int32],
+    padding: NDArray[np.bool_],
+    density_of: NDArray[np.float32],
+    bin_of: NDArray[np.uint16],
+    limits: tuple[int, int, int, int, int],
+    density: NDArray[np.float32],
+    index: NDArray[np.uint16],
+    seen: NDArray[np.int64],
+) -> tuple[int, int]:
+    """Look up density and composition of voxels by whole HU.
+
+    Parameters
+    ----------
+    hu : ndarray
+        HU, one dimension, whole numbers.
+    padding : ndarray
+        Voxels that are air whatever their HU; empty when there are none.
+    density_of, bin_of : ndarray
+        Tables over whole HU from the first limit to the second.
+    limits : tuple of int
+        First and last HU of the tables; HU of air, below which everything is air; HU below and above which a voxel
+        lies beyond the calibration.
+    density, index : ndarray
+        Overwritten.
+    seen : ndarray
+        Voxels per composition, added to.
+
+    Returns
+    -------
+    tuple of int
+        How many voxels lie below and above the calibration.
+    """
+    bottom, top, air, lowest, highest = limits
+    below = above = 0
+    for voxel in range(hu.size):
+        value = max(int(hu[voxel]), air)
+        if padding.size > 0 and padding[voxel]:
+            value = air
+        if value > highest:
+            above += 1
+        if value < lowest:
+            below += 1
+        where = min(max(value, bottom), top) - bottom
+        density[voxel] = density_of[where]
+        index[voxel] = bin_of[where]
+        seen[bin_of[where]] += 1
+    return below, above
+
+
+@njit(cache=True, error_model="numpy", nogil=True)
+def renumber(index: NDArray[np.uint16], numbers: NDArray[np.uint16]) -> None:
+    """Replace each index (one dimension) by the number that stands for it.
+
+    Parameters
+    ----------
+    index : ndarray
+        Indices, overwritten.
+    numbers : ndarray
+        New index of each old one.
+    """
+    for voxel in range(index.size):
+        index[voxel] = numbers[index[voxel]]

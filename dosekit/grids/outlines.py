@@ -55,14 +55,20 @@ def outline_from_density(
     """
     from scipy import ndimage
 
-    dense = np.asarray(density_g_cm3) > threshold_g_cm3
+    outline = np.zeros(np.shape(density_g_cm3), dtype=bool)
+    whole = np.asarray(density_g_cm3) > threshold_g_cm3
+    box = tuple(
+        slice(int(found[0]), int(found[-1]) + 1) if found.size else slice(0, 0)
+        for found in (np.flatnonzero(whole.any(axis=others)) for others in ((1, 2), (0, 2), (0, 1)))
+    )
+    dense = whole[box]
     kept = dense
     if opening_voxels > 0:
         disc = _disc(opening_voxels)
         kept = ndimage.binary_erosion(dense, disc[np.newaxis])
     labels, count = ndimage.label(kept)
     if count == 0:
-        return np.zeros(dense.shape, dtype=bool)
+        return outline
     sizes = np.bincount(labels.ravel())
     sizes[0] = 0
     body: NDArray[np.bool_] = labels == int(sizes.argmax())
@@ -71,8 +77,8 @@ def outline_from_density(
     if fill_slices:
         for plane in range(body.shape[0]):
             body[plane] = ndimage.binary_fill_holes(body[plane])
-    filled: NDArray[np.bool_] = ndimage.binary_fill_holes(body)
-    return filled
+    outline[box] = ndimage.binary_fill_holes(body)
+    return outline
 
 
 def _disc(radius: int) -> NDArray[np.bool_]:

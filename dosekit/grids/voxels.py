@@ -29,6 +29,7 @@ ROLES = ("target", "organ_at_risk", "body", "other")
 
 _BODY_NAMES = ("body", "external", "outline", "skin", "patient")
 _BYTES_PER_VOXEL = 6.0  # density float32 and material uint16
+_BRIDGE_MM = 4.0  # half the width of what may join a couch to the body in a slice
 _AXES = {"x": 0, "y": 1, "z": 2}
 
 
@@ -92,6 +93,7 @@ class VoxelGrid:
     source: dict[str, Any] = field(default_factory=dict, repr=False)
     dicom_reference: object | None = field(default=None, repr=False)
     hu: NDArray[np.int16] | None = field(default=None, repr=False)
+    _found_body: NDArray[np.bool_] | None = field(default=None, init=False, repr=False)
 
     def __post_init__(self) -> None:
         """Check the parts and make the arrays read-only."""
@@ -348,15 +350,25 @@ class VoxelGrid:
         Returns
         -------
         ndarray
-            Mask [z, y, x], bool.
+            Mask [z, y, x], bool, read-only.
         """
+        if self._found_body is None:
+            mask = self._find_body()
+            mask.setflags(write=False)
+            object.__setattr__(self, "_found_body", mask)
+        assert self._found_body is not None
+        return self._found_body
+
+    def _find_body(self) -> NDArray[np.bool_]:
+        """Take the body from a structure or from density."""
         named = [name for name, role in self.roles.items() if role == "body" and name in self.structures]
         named += [name for name in self.structures if name.strip().lower() in _BODY_NAMES]
         if named:
             return np.asarray(self.structures[named[0]] >= 0.5)
         from dosekit.grids.outlines import outline_from_density
 
-        return outline_from_density(self.density_g_cm3)
+        bridge = 0 if self.hu is None else round(_BRIDGE_MM / min(self.spacing_mm[:2]))  # a scan may show its couch
+        return outline_from_density(self.density_g_cm3, opening_voxels=min(bridge, 8))
 
     # ------------------------------------------------------------------ matter
     def relative_stopping_power(self, particle: str = "pi-", kinetic_energy_mev: float = 60.0) -> NDArray[np.float32]:
@@ -378,8 +390,7 @@ class VoxelGrid:
 
         per_density = np.array(
             [
-                relative_stopping_power(matter, particle, kinetic_energy_mev=kinetic_energy_mev)
-                / matter.density_g_cm3
+                relative_stopping_power(matter, particle, kinetic_energy_mev=kinetic_energy_mev) / matter.density_g_cm3
                 for matter in self.materials
             ],
             dtype=np.float32,
