@@ -70,6 +70,7 @@ class Field:
     source_distance_mm: float | None = None
 
     def __post_init__(self) -> None:
+        """Check the parts and make the arrays read-only."""
         spots = np.atleast_2d(np.array(self.spots_mm, dtype=np.float64))
         shift = np.atleast_1d(np.array(self.shift_mm, dtype=np.float64))
         if spots.ndim != 2 or spots.shape[1] != 2 or not np.all(np.isfinite(spots)):
@@ -148,7 +149,9 @@ class Field:
         raise InputError(f"field {self.name!r}: {found}", allowed=allowed, remedy="correct the field")
 
 
-def spot_lattice(half_width_mm: ArrayLike, spacing_mm: float, *, centre_mm: ArrayLike = (0.0, 0.0)) -> NDArray[np.float64]:
+def spot_lattice(
+    half_width_mm: ArrayLike, spacing_mm: float, *, centre_mm: ArrayLike = (0.0, 0.0)
+) -> NDArray[np.float64]:
     """Return spots on a square lattice that fills a rectangle, symmetric about its centre.
 
     Parameters

@@ -1,8 +1,8 @@
 """Dose of fields in a volume, every part of it apart.
 
-Each field is followed on its own lattice (:mod:`dosekit.maps.pencils`), which gives the dose of the beam particles and of
-what they make in flight, and where they stop. The stops of negative pions are then carried through the anatomy as stars
-(:mod:`dosekit.maps.stars`). Other particles that stop make no stars.
+Each field is followed on its own lattice (:mod:`dosekit.maps.pencils`), which gives the dose of the beam particles
+and of what they make in flight, and where they stop. The stops of negative pions are then carried through the anatomy
+as stars (:mod:`dosekit.maps.stars`). Other particles that stop make no stars.
 
 Dose to the medium is the energy in a voxel over its mass. Dose to water is what a small piece of water there would
 receive: the medium's dose times the ratio of mass stopping powers, water to medium, at one energy.
@@ -35,7 +35,7 @@ if TYPE_CHECKING:
     from dosekit.depths.library import DepthLibrary
     from dosekit.grids.voxels import VoxelGrid
 
-__all__ = ["DOSE_TO", "fold", "library_of", "pencils_of"]
+__all__ = ["DOSE_TO", "dose_per_energy", "fields_of", "fold", "library_of", "pencils_of"]
 
 DOSE_TO: tuple[str, ...] = ("medium", "water")
 """What dose is absorbed in."""
@@ -93,7 +93,7 @@ def fold(
     GeometryWarning
         When a field misses the volume or starts inside it.
     """
-    several = _fields(fields)
+    several = fields_of(fields)
     if dose_to not in DOSE_TO:
         raise UnknownNameError("dose_to", dose_to, DOSE_TO)
     voxels = int(np.prod(grid.shape))
@@ -121,7 +121,7 @@ def fold(
 
         voxel_mm3 = float(np.prod(grid.spacing_mm))
         energies = carry_stars(star_stops * voxel_mm3, grid, yields=yields, star_scale=star_scale)
-        per_energy = _dose_per_energy(grid, matter_of(grid, several[0].beam.particle), dose_to=dose_to)
+        per_energy = dose_per_energy(grid, matter_of(grid, several[0].beam.particle), dose_to=dose_to)
         for name, energy in energies.items():
             np.multiply(energy, per_energy, out=dose[COMPONENTS.index(name)], casting="same_kind")
     stops = star_stops + other_stops
@@ -130,7 +130,12 @@ def fold(
         lattice = target
         dose, stops = _onto(target, grid, dose, stops, dose_to=dose_to)
     return _dataset(
-        lattice, dose, stops, several, components=components, attributes={"yields": yields, "star_scale": star_scale, "dose_to": dose_to}
+        lattice,
+        dose,
+        stops,
+        several,
+        components=components,
+        attributes={"yields": yields, "star_scale": star_scale, "dose_to": dose_to},
     )
 
 
@@ -190,14 +195,12 @@ def _library(beam: Beam, shift_mm: tuple[float, ...], yields: str) -> DepthLibra
     if beam.fixed_shifter_mm:
         from dosekit.beams.ranges import residual_energy_mev
 
-        left = residual_energy_mev(
-            beam.particle, beam.shifter_material, beam.kinetic_energy_mev, beam.fixed_shifter_mm
-        )
+        left = residual_energy_mev(beam.particle, beam.shifter_material, beam.kinetic_energy_mev, beam.fixed_shifter_mm)
         reach = float(csda_range_mm(beam.particle, "water", float(left)))
     return depth_library(beam, reach - np.array(shift_mm), mode="shifter", yields=yields)
 
 
-def _fields(fields: Field | Iterable[Field]) -> Sequence[Field]:
+def fields_of(fields: Field | Iterable[Field]) -> Sequence[Field]:
     """Return a list of fields with different names."""
     several = [fields] if isinstance(fields, Field) else list(fields)
     if not several or not all(isinstance(field, Field) for field in several):
@@ -220,7 +223,7 @@ def _factors(matter: Matter, *, dose_to: str) -> NDArray[np.float64]:
     return factor
 
 
-def _dose_per_energy(grid: VoxelGrid, matter: Matter, *, dose_to: str) -> NDArray[np.float32]:
+def dose_per_energy(grid: VoxelGrid, matter: Matter, *, dose_to: str) -> NDArray[np.float32]:
     """Return the dose that 1 MeV gives in each voxel, Gy."""
     mass_g = grid.density_g_cm3 * np.float32(np.prod(grid.spacing_mm) * 1e-3)
     out = np.zeros(grid.shape, dtype=np.float32)

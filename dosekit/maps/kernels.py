@@ -200,6 +200,254 @@ def _split(variance, inverse_width_step, ladder):  # type: ignore[no-untyped-def
     return g, min(max(share, 0.0), 1.0)
 
 
+@njit(error_model="numpy", cache=True)
+def _fill_row(  # type: ignore[no-untyped-def]
+    j, r, gap, fluence, wet, local, slant, inverse_bin, power, narrow, state, reference, growth, ladder,
+    inverse_width_step, broad, column, share_u, source, touched, gathered,
+):  # fmt: skip
+    """Take one row of rays to plane j and share out what they leave there: widths of the core, coarse columns."""
+    steps = power.shape[1]
+    last = power.shape[0] - 1
+    parts = broad.shape[2]
+    total = np.zeros(parts)
+    touched[r, :] = 0
+    source[:, :, r, :] = 0.0
+    gathered[r] = 0.0
+    for c in range(wet.shape[2]):
+        depth = wet[j, r, c]
+        before = wet[j - 1, r, c] if j > 0 else 0.0
+        _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, last)
+        i, f = _row(depth, inverse_bin, last)
+        total[:] = 0.0
+        some = False
+        for k in range(steps):
+            number = fluence[r, c, k] * slant[r, c]
+            if number == 0.0:
+                continue
+            some = True
+            low = (1.0 - f) * number
+            high = f * number
+            for b in range(parts):
+                total[b] += low * broad[i, k, b] + high * broad[i + 1, k, b]
+            energy = low * narrow[i, k, 0] + high * narrow[i + 1, k, 0]
+            stops = low * narrow[i, k, 1] + high * narrow[i + 1, k, 1]
+            if energy == 0.0 and stops == 0.0:
+                continue
+            g, share = _split(state[r, c, 2, k] - reference[k] * growth, inverse_width_step, ladder)
+            source[g, 0, r, c] += (1.0 - share) * energy
+            source[g, 1, r, c] += (1.0 - share) * stops
+            touched[r, g] = 1
+            if share > 0.0:
+                source[g + 1, 0, r, c] += share * energy
+                source[g + 1, 1, r, c] += share * stops
+                touched[r, g + 1] = 1
+        if some:
+            n = column[c] - column[0]
+            for b in range(parts):
+                gathered[r, n, b] += (1.0 - share_u[c]) * total[b]
+                gathered[r, n + 1, b] += share_u[c] * total[b]
+
+
+@njit(error_model="numpy", cache=True)
+def _touch_row(  # type: ignore[no-untyped-def]
+    j, r, gap, wet, local, slant, inverse_bin, power, narrow, state, reference, growth, ladder, inverse_width_step,
+    touched,
+):  # fmt: skip
+    """Take one row of rays to plane j and note which widths they use."""
+    last = power.shape[0] - 1
+    touched[r, :] = 0
+    for c in range(wet.shape[2]):
+        depth = wet[j, r, c]
+        before = wet[j - 1, r, c] if j > 0 else 0.0
+        _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, last)
+        i, f = _row(depth, inverse_bin, last)
+        for k in range(power.shape[1]):
+            energy = (1.0 - f) * narrow[i, k, 0] + f * narrow[i + 1, k, 0]
+            stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
+            if energy == 0.0 and stops == 0.0:
+                continue
+            g, share = _split(state[r, c, 2, k] - reference[k] * growth, inverse_width_step, ladder)
+            touched[r, g] = 1
+            if share > 0.0:
+                touched[r, g + 1] = 1
+
+
+@njit(error_model="numpy", cache=True)
+def _list_rungs(touched, rungs):  # type: ignore[no-untyped-def]
+    """Write down the widths that any row uses; return how many."""
+    used = 0
+    for g in range(touched.shape[1]):
+        for r in range(touched.shape[0]):
+            if touched[r, g]:
+                rungs[used] = g
+                used += 1
+                break
+    return used
+
+
+@njit(error_model="numpy", cache=True)
+def _spread_along_u(source, taps, reach, first_column, across):  # type: ignore[no-untyped-def]
+    """Spread one row of rays along u: across[part, column] from source[part, ray]."""
+    parts, nu = source.shape
+    columns = across.shape[1]
+    for part in range(parts):
+        across[part, :] = 0.0
+        for t in range(-reach, reach + 1):
+            tap = taps[abs(t)]
+            shift = first_column + t
+            for c in range(max(0, -shift), min(nu, columns - shift)):
+                across[part, shift + c] += tap * source[part, c]
+
+
+@njit(error_model="numpy", cache=True)
+def _gather_along_u(across, taps, reach, first_column, source):  # type: ignore[no-untyped-def]
+    """Transpose of `_spread_along_u`."""
+    parts, nu = source.shape
+    columns = across.shape[1]
+    for part in range(parts):
+        source[part, :] = 0.0
+        for t in range(-reach, reach + 1):
+            tap = taps[abs(t)]
+            shift = first_column + t
+            for c in range(max(0, -shift), min(nu, columns - shift)):
+                source[part, c] += tap * across[part, shift + c]
+
+
+@njit(error_model="numpy", cache=True)
+def _spread_along_v(row, across, taps, radius, rungs, used, touched, first_row, per_area, line, out):  # type: ignore[no-untyped-def]
+    """Collect one row of a plane from the rows of rays, over all widths."""
+    nv = touched.shape[0]
+    columns = line.size
+    for part in range(2):
+        line[:] = 0.0
+        for n in range(used):
+            g = rungs[n]
+            reach = radius[g]
+            for r in range(max(0, row - first_row - reach), min(nv, row - first_row + reach + 1)):
+                if touched[r, g] == 0:
+                    continue
+                tap = taps[g, abs(row - first_row - r)]
+                for c in range(columns):
+                    line[c] += tap * across[g, part, r, c]
+        for c in range(columns):
+            out[c, part] = line[c] * per_area
+
+
+@njit(error_model="numpy", cache=True)
+def _gather_along_v(g, r, plane, taps, reach, first_row, per_area, across):  # type: ignore[no-untyped-def]
+    """Transpose of `_spread_along_v` for one width and row of rays."""
+    rows, columns = plane.shape[0], plane.shape[1]
+    for part in range(2):
+        across[g, part, r, :] = 0.0
+        for row in range(max(0, first_row + r - reach), min(rows, first_row + r + reach + 1)):
+            tap = taps[abs(row - first_row - r)] * per_area
+            for c in range(columns):
+                across[g, part, r, c] += tap * plane[row, c, part]
+
+
+@njit(error_model="numpy", cache=True)
+def _coarse_along_u(row, gathered, coarse_row, share_v, taps, reach, first_column, source, across):  # type: ignore[no-untyped-def]
+    """Add rows of rays into one coarse row and spread it along u."""
+    active, parts = source.shape
+    source[:] = 0.0
+    across[:] = 0.0
+    for r in range(coarse_row.size):
+        here = coarse_row[r] - coarse_row[0]
+        if here == row:
+            share = 1.0 - share_v[r]
+        elif here + 1 == row:
+            share = share_v[r]
+        else:
+            continue
+        for n in range(active):
+            for b in range(parts):
+                source[n, b] += share * gathered[r, n, b]
+    for column in range(across.shape[0]):
+        for n in range(active):
+            offset = abs(column - first_column - n)
+            for b in range(reach[offset]):
+                across[column, b] += taps[offset, b] * source[n, b]
+
+
+@njit(error_model="numpy", cache=True)
+def _coarse_along_v(row, across, taps, reach, first_row, component, per_area, cell, out):  # type: ignore[no-untyped-def]
+    """Collect one coarse row from the coarse rows of rays and add the parts of each component."""
+    active, columns, parts = across.shape
+    for column in range(columns):
+        cell[:] = 0.0
+        for n in range(active):
+            offset = abs(row - first_row - n)
+            for b in range(reach[offset]):
+                cell[b] += taps[offset, b] * across[n, column, b]
+        for m in range(out.shape[1]):
+            out[column, m] = 0.0
+        for b in range(parts):
+            out[column, component[b]] += cell[b] * per_area
+
+
+@njit(error_model="numpy", cache=True)
+def _coarse_transposed(n, plane, taps_u, taps_v, reach, first_row, first_column, component, per_area, across, source):  # type: ignore[no-untyped-def]
+    """Transpose of both coarse spreads for one coarse row of rays."""
+    rows, columns = plane.shape[0], plane.shape[1]
+    active, parts = source.shape
+    cell = np.zeros(parts)
+    for column in range(columns):
+        cell[:] = 0.0
+        for row in range(rows):
+            offset = abs(row - first_row - n)
+            for b in range(reach[offset]):
+                cell[b] += taps_v[offset, b] * plane[row, column, component[b]]
+        for b in range(parts):
+            across[column, b] = cell[b] * per_area
+    for m in range(active):
+        cell[:] = 0.0
+        for column in range(columns):
+            offset = abs(column - first_column - m)
+            for b in range(reach[offset]):
+                cell[b] += taps_u[offset, b] * across[column, b]
+        for b in range(parts):
+            source[m, b] = cell[b]
+
+
+@njit(error_model="numpy", cache=True)
+def _read_row(  # type: ignore[no-untyped-def]
+    j, r, wet, slant, inverse_bin, power, narrow, state, reference, growth, ladder, inverse_width_step, broad,
+    column, share_u, row, share_v, source, coarse, fluence,
+):  # fmt: skip
+    """Transpose of `_fill_row`: what each particle on a row of rays is worth at plane j."""
+    last = power.shape[0] - 1
+    parts = broad.shape[2]
+    total = np.zeros(parts)
+    n = row[r] - row[0]
+    for c in range(wet.shape[2]):
+        m = column[c] - column[0]
+        for b in range(parts):
+            total[b] = (1.0 - share_v[r]) * (
+                (1.0 - share_u[c]) * coarse[n, m, b] + share_u[c] * coarse[n, m + 1, b]
+            ) + share_v[r] * ((1.0 - share_u[c]) * coarse[n + 1, m, b] + share_u[c] * coarse[n + 1, m + 1, b])
+        i, f = _row(wet[j, r, c], inverse_bin, last)
+        for k in range(power.shape[1]):
+            value = 0.0
+            for b in range(parts):
+                value += total[b] * ((1.0 - f) * broad[i, k, b] + f * broad[i + 1, k, b])
+            energy = (1.0 - f) * narrow[i, k, 0] + f * narrow[i + 1, k, 0]
+            stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
+            if energy != 0.0 or stops != 0.0:
+                g, share = _split(state[r, c, 2, k] - reference[k] * growth, inverse_width_step, ladder)
+                value += (1.0 - share) * (energy * source[g, 0, r, c] + stops * source[g, 1, r, c])
+                if share > 0.0:
+                    value += share * (energy * source[g + 1, 0, r, c] + stops * source[g + 1, 1, r, c])
+            fluence[r, c, k] += value * slant[r, c]
+
+
+@njit(error_model="numpy", cache=True)
+def _begin(start, state):  # type: ignore[no-untyped-def]
+    """Set the moments of every ray to those at the start."""
+    for r in range(state.shape[0]):
+        for c in range(state.shape[1]):
+            state[r, c] = start
+
+
 @njit(parallel=True, error_model="numpy", cache=True)
 def spread(  # type: ignore[no-untyped-def]
     fluence, wet, local, slant, w, inverse_bin, power, narrow, start, ahead, reference, growth, ladder,
@@ -209,138 +457,48 @@ def spread(  # type: ignore[no-untyped-def]
 ):  # fmt: skip
     """Fold the fluence on rays into maps on the planes: fine_map[j, v, u, 2] and coarse_map[j, v, u, component]."""
     nw, nv, nu = wet.shape
-    steps = power.shape[1]
-    last = power.shape[0] - 1
-    rungs = ladder.size
-    rows, columns = fine_map.shape[1], fine_map.shape[2]
-    coarse_rows, coarse_columns, components = coarse_map.shape[1], coarse_map.shape[2], coarse_map.shape[3]
+    columns, coarse_columns = fine_map.shape[2], coarse_map.shape[2]
     parts = broad.shape[2]
     active_rows = coarse_row[nv - 1] - coarse_row[0] + 2
     active_columns = coarse_column[nu - 1] - coarse_column[0] + 2
-    row0, column0 = coarse_row[0], coarse_column[0]
-    state = np.empty((nv, nu, 3, steps))
-    for r in prange(nv):
-        for c in range(nu):
-            for a in range(3):
-                for k in range(steps):
-                    state[r, c, a, k] = start[a, k]
-    source = np.zeros((rungs, 2, nv, nu))
-    across = np.zeros((rungs, 2, nv, columns))
-    touched = np.zeros((nv, rungs), dtype=np.uint8)
+    state = np.empty((nv, nu, 3, power.shape[1]))
+    _begin(start, state)
+    source = np.zeros((ladder.size, 2, nv, nu))
+    across = np.zeros((ladder.size, 2, nv, columns))
+    touched = np.zeros((nv, ladder.size), dtype=np.uint8)
+    rungs = np.zeros(ladder.size, dtype=np.int64)
     gathered = np.zeros((nv, active_columns, parts))
     coarse_source = np.zeros((active_rows, active_columns, parts))
     coarse_across = np.zeros((active_rows, coarse_columns, parts))
-    list_of_rungs = np.zeros(rungs, dtype=np.int64)
     for j in range(nw):
         gap = ahead if j == 0 else w[j] - w[j - 1]
+        n = kernel_of_plane[j]
         for r in prange(nv):
-            total = np.zeros(parts)
-            touched[r, :] = 0
-            source[:, :, r, :] = 0.0
-            gathered[r] = 0.0
-            for c in range(nu):
-                depth = wet[j, r, c]
-                before = wet[j - 1, r, c] if j > 0 else 0.0
-                _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, last)
-                i, f = _row(depth, inverse_bin, last)
-                total[:] = 0.0
-                some = False
-                for k in range(steps):
-                    number = fluence[r, c, k] * slant[r, c]
-                    if number == 0.0:
-                        continue
-                    some = True
-                    low = (1.0 - f) * number
-                    high = f * number
-                    for b in range(parts):
-                        total[b] += low * broad[i, k, b] + high * broad[i + 1, k, b]
-                    energy = low * narrow[i, k, 0] + high * narrow[i + 1, k, 0]
-                    stops = low * narrow[i, k, 1] + high * narrow[i + 1, k, 1]
-                    if energy == 0.0 and stops == 0.0:
-                        continue
-                    g, share = _split(state[r, c, 2, k] - reference[k] * growth[j], inverse_width_step, ladder)
-                    source[g, 0, r, c] += (1.0 - share) * energy
-                    source[g, 1, r, c] += (1.0 - share) * stops
-                    touched[r, g] = 1
-                    if share > 0.0:
-                        source[g + 1, 0, r, c] += share * energy
-                        source[g + 1, 1, r, c] += share * stops
-                        touched[r, g + 1] = 1
-                if some:
-                    n = coarse_column[c] - column0
-                    share_u = coarse_share_u[c]
-                    for b in range(parts):
-                        gathered[r, n, b] += (1.0 - share_u) * total[b]
-                        gathered[r, n + 1, b] += share_u * total[b]
-        kernel = kernel_of_plane[j]
-        used = 0
-        for g in range(rungs):
-            for r in range(nv):
-                if touched[r, g]:
-                    list_of_rungs[used] = g
-                    used += 1
-                    break
+            _fill_row(
+                j, r, gap, fluence, wet, local, slant, inverse_bin, power, narrow, state, reference, growth[j],
+                ladder, inverse_width_step, broad, coarse_column, coarse_share_u, source, touched, gathered,
+            )  # fmt: skip
+        used = _list_rungs(touched, rungs)
         for task in prange(used * nv):
-            g = list_of_rungs[task // nv]
+            g = rungs[task // nv]
             r = task % nv
-            reach = radius[kernel, g]
-            for part in range(2):
-                across[g, part, r, :] = 0.0
-                if touched[r, g] == 0:
-                    continue
-                for t in range(-reach, reach + 1):
-                    tap = taps_u[kernel, g, abs(t)]
-                    low_c = max(0, -(first_column + t))
-                    high_c = min(nu, columns - (first_column + t))
-                    for c in range(low_c, high_c):
-                        across[g, part, r, first_column + c + t] += tap * source[g, part, r, c]
-        for row in prange(rows):
-            line = np.zeros(columns)
-            for part in range(2):
-                line[:] = 0.0
-                for n in range(used):
-                    g = list_of_rungs[n]
-                    reach = radius[kernel, g]
-                    for r in range(max(0, row - first_row - reach), min(nv, row - first_row + reach + 1)):
-                        if touched[r, g] == 0:
-                            continue
-                        tap = taps_v[kernel, g, abs(row - first_row - r)]
-                        for c in range(columns):
-                            line[c] += tap * across[g, part, r, c]
-                for c in range(columns):
-                    fine_map[j, row, c, part] = line[c] * per_area[j]
-        # the broad parts, on the coarse lattice
+            if touched[r, g]:
+                _spread_along_u(source[g, :, r], taps_u[n, g], radius[n, g], first_column, across[g, :, r])
+        for row in prange(fine_map.shape[1]):
+            _spread_along_v(
+                row, across, taps_v[n], radius[n], rungs, used, touched, first_row, per_area[j], np.empty(columns),
+                fine_map[j, row],
+            )  # fmt: skip
         for row in prange(active_rows):
-            coarse_source[row] = 0.0
-            coarse_across[row] = 0.0
-            for r in range(nv):
-                here = coarse_row[r] - row0
-                if here == row:
-                    share = 1.0 - coarse_share_v[r]
-                elif here + 1 == row:
-                    share = coarse_share_v[r]
-                else:
-                    continue
-                for n in range(active_columns):
-                    for b in range(parts):
-                        coarse_source[row, n, b] += share * gathered[r, n, b]
-            for column in range(coarse_columns):
-                for n in range(active_columns):
-                    offset = abs(column - coarse_first_column - n)
-                    for b in range(broad_reach[kernel, offset]):
-                        coarse_across[row, column, b] += broad_taps_u[kernel, offset, b] * coarse_source[row, n, b]
-        for row in prange(coarse_rows):
-            cell = np.zeros(parts)
-            for column in range(coarse_columns):
-                cell[:] = 0.0
-                for n in range(active_rows):
-                    offset = abs(row - coarse_first_row - n)
-                    for b in range(broad_reach[kernel, offset]):
-                        cell[b] += broad_taps_v[kernel, offset, b] * coarse_across[n, column, b]
-                for m in range(components):
-                    coarse_map[j, row, column, m] = 0.0
-                for b in range(parts):
-                    coarse_map[j, row, column, broad_component[b]] += cell[b] * coarse_per_area[j]
+            _coarse_along_u(
+                row, gathered, coarse_row, coarse_share_v, broad_taps_u[n], broad_reach[n], coarse_first_column,
+                coarse_source[row], coarse_across[row],
+            )  # fmt: skip
+        for row in prange(coarse_map.shape[1]):
+            _coarse_along_v(
+                row, coarse_across, broad_taps_v[n], broad_reach[n], coarse_first_row, broad_component,
+                coarse_per_area[j], np.empty(parts), coarse_map[j, row],
+            )  # fmt: skip
 
 
 @njit(parallel=True, error_model="numpy", cache=True)
@@ -352,120 +510,45 @@ def spread_transposed(  # type: ignore[no-untyped-def]
 ):  # fmt: skip
     """Transpose of `spread`: maps on the planes to fluence on rays."""
     nw, nv, nu = wet.shape
-    steps = power.shape[1]
-    last = power.shape[0] - 1
-    rungs = ladder.size
-    rows, columns = fine_map.shape[1], fine_map.shape[2]
-    coarse_rows, coarse_columns = coarse_map.shape[1], coarse_map.shape[2]
+    columns, coarse_columns = fine_map.shape[2], coarse_map.shape[2]
     parts = broad.shape[2]
     active_rows = coarse_row[nv - 1] - coarse_row[0] + 2
     active_columns = coarse_column[nu - 1] - coarse_column[0] + 2
-    row0, column0 = coarse_row[0], coarse_column[0]
-    state = np.empty((nv, nu, 3, steps))
-    for r in prange(nv):
-        for c in range(nu):
-            for a in range(3):
-                for k in range(steps):
-                    state[r, c, a, k] = start[a, k]
-            for k in range(steps):
-                fluence[r, c, k] = 0.0
-    source = np.zeros((rungs, 2, nv, nu))
-    across = np.zeros((rungs, 2, nv, columns))
-    touched = np.zeros((nv, rungs), dtype=np.uint8)
+    state = np.empty((nv, nu, 3, power.shape[1]))
+    _begin(start, state)
+    fluence[:] = 0.0
+    source = np.zeros((ladder.size, 2, nv, nu))
+    across = np.zeros((ladder.size, 2, nv, columns))
+    touched = np.zeros((nv, ladder.size), dtype=np.uint8)
+    rungs = np.zeros(ladder.size, dtype=np.int64)
     coarse_source = np.zeros((active_rows, active_columns, parts))
     coarse_across = np.zeros((active_rows, coarse_columns, parts))
-    list_of_rungs = np.zeros(rungs, dtype=np.int64)
     for j in range(nw):
         gap = ahead if j == 0 else w[j] - w[j - 1]
+        n = kernel_of_plane[j]
         for r in prange(nv):
-            touched[r, :] = 0
-            for c in range(nu):
-                depth = wet[j, r, c]
-                before = wet[j - 1, r, c] if j > 0 else 0.0
-                _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, last)
-                i, f = _row(depth, inverse_bin, last)
-                for k in range(steps):
-                    energy = (1.0 - f) * narrow[i, k, 0] + f * narrow[i + 1, k, 0]
-                    stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
-                    if energy == 0.0 and stops == 0.0:
-                        continue
-                    g, share = _split(state[r, c, 2, k] - reference[k] * growth[j], inverse_width_step, ladder)
-                    touched[r, g] = 1
-                    if share > 0.0:
-                        touched[r, g + 1] = 1
-        kernel = kernel_of_plane[j]
-        used = 0
-        for g in range(rungs):
-            for r in range(nv):
-                if touched[r, g]:
-                    list_of_rungs[used] = g
-                    used += 1
-                    break
+            _touch_row(
+                j, r, gap, wet, local, slant, inverse_bin, power, narrow, state, reference, growth[j], ladder,
+                inverse_width_step, touched,
+            )  # fmt: skip
+        used = _list_rungs(touched, rungs)
         for task in prange(used * nv):
-            g = list_of_rungs[task // nv]
+            g = rungs[task // nv]
             r = task % nv
-            if touched[r, g] == 0:
-                continue
-            reach = radius[kernel, g]
-            for part in range(2):
-                across[g, part, r, :] = 0.0
-                for row in range(max(0, first_row + r - reach), min(rows, first_row + r + reach + 1)):
-                    tap = taps_v[kernel, g, abs(row - first_row - r)] * per_area[j]
-                    for c in range(columns):
-                        across[g, part, r, c] += tap * fine_map[j, row, c, part]
-                source[g, part, r, :] = 0.0
-                for t in range(-reach, reach + 1):
-                    tap = taps_u[kernel, g, abs(t)]
-                    low_c = max(0, -(first_column + t))
-                    high_c = min(nu, columns - (first_column + t))
-                    for c in range(low_c, high_c):
-                        source[g, part, r, c] += tap * across[g, part, r, first_column + c + t]
-        for n in prange(active_rows):
-            cell = np.zeros(parts)
-            for column in range(coarse_columns):
-                cell[:] = 0.0
-                for row in range(coarse_rows):
-                    offset = abs(row - coarse_first_row - n)
-                    for b in range(broad_reach[kernel, offset]):
-                        cell[b] += (
-                            broad_taps_v[kernel, offset, b] * coarse_map[j, row, column, broad_component[b]]
-                        )
-                for b in range(parts):
-                    coarse_across[n, column, b] = cell[b] * coarse_per_area[j]
-            for m in range(active_columns):
-                cell[:] = 0.0
-                for column in range(coarse_columns):
-                    offset = abs(column - coarse_first_column - m)
-                    for b in range(broad_reach[kernel, offset]):
-                        cell[b] += broad_taps_u[kernel, offset, b] * coarse_across[n, column, b]
-                for b in range(parts):
-                    coarse_source[n, m, b] = cell[b]
+            if touched[r, g]:
+                _gather_along_v(g, r, fine_map[j], taps_v[n, g], radius[n, g], first_row, per_area[j], across)
+                _gather_along_u(across[g, :, r], taps_u[n, g], radius[n, g], first_column, source[g, :, r])
+        for row in prange(active_rows):
+            _coarse_transposed(
+                row, coarse_map[j], broad_taps_u[n], broad_taps_v[n], broad_reach[n], coarse_first_row,
+                coarse_first_column, broad_component, coarse_per_area[j], coarse_across[row], coarse_source[row],
+            )  # fmt: skip
         for r in prange(nv):
-            total = np.zeros(parts)
-            n = coarse_row[r] - row0
-            share_v = coarse_share_v[r]
-            for c in range(nu):
-                m = coarse_column[c] - column0
-                share_u = coarse_share_u[c]
-                for b in range(parts):
-                    total[b] = (1.0 - share_v) * (
-                        (1.0 - share_u) * coarse_source[n, m, b] + share_u * coarse_source[n, m + 1, b]
-                    ) + share_v * (
-                        (1.0 - share_u) * coarse_source[n + 1, m, b] + share_u * coarse_source[n + 1, m + 1, b]
-                    )
-                i, f = _row(wet[j, r, c], inverse_bin, last)
-                for k in range(steps):
-                    value = 0.0
-                    for b in range(parts):
-                        value += total[b] * ((1.0 - f) * broad[i, k, b] + f * broad[i + 1, k, b])
-                    energy = (1.0 - f) * narrow[i, k, 0] + f * narrow[i + 1, k, 0]
-                    stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
-                    if energy != 0.0 or stops != 0.0:
-                        g, share = _split(state[r, c, 2, k] - reference[k] * growth[j], inverse_width_step, ladder)
-                        value += (1.0 - share) * (energy * source[g, 0, r, c] + stops * source[g, 1, r, c])
-                        if share > 0.0:
-                            value += share * (energy * source[g + 1, 0, r, c] + stops * source[g + 1, 1, r, c])
-                    fluence[r, c, k] += value * slant[r, c]
+            _read_row(
+                j, r, wet, slant, inverse_bin, power, narrow, state, reference, growth[j], ladder,
+                inverse_width_step, broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, source,
+                coarse_source, fluence,
+            )  # fmt: skip
 
 
 @njit(inline="always", error_model="numpy")
@@ -473,7 +556,7 @@ def _corner(value, first, inverse_step, count):  # type: ignore[no-untyped-def]
     """Return the node below a position, the share of the node above, and whether it lies on the lattice."""
     place = (value - first) * inverse_step
     i = int(np.floor(place))
-    return i, place - i, 0 <= i and i + 1 < count
+    return i, place - i, i >= 0 and i + 1 < count
 
 
 @njit(parallel=True, error_model="numpy", cache=True)

@@ -240,9 +240,7 @@ class FieldPencils:
         layers = max(int(np.ceil(thickness / self.matter.spacing_mm[2])), 1)
         starts = np.arange(0, nz + layers, layers, dtype=np.int64) * (ny * nx)
         slabs = np.searchsorted(voxels, starts)
-        kernels.deposit_transposed(
-            slabs, voxels, places, *self._voxel_arguments(fine, coarse, rows), factor, values
-        )
+        kernels.deposit_transposed(slabs, voxels, places, *self._voxel_arguments(fine, coarse, rows), factor, values)
         return fine, coarse
 
     def _empty_maps(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -310,7 +308,9 @@ class FieldPencils:
         return ((z[:, None, None] * ny + y[:, None]) * nx + x).reshape(-1)
 
 
-def field_pencils(field: Field, matter: Matter, library: DepthLibrary, *, patient_position: str = "HFS") -> FieldPencils:
+def field_pencils(
+    field: Field, matter: Matter, library: DepthLibrary, *, patient_position: str = "HFS"
+) -> FieldPencils:
     """Make a field ready to be folded.
 
     Parameters
@@ -505,9 +505,7 @@ def _air_variance(optics: tuple[float, float, float], distance_mm: NDArray[np.fl
     return sigma**2 + 2.0 * correlation * sigma * angle * distance_mm + (angle * distance_mm) ** 2
 
 
-def _widest(
-    rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, reference: NDArray[np.float64]
-) -> float:
+def _widest(rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, reference: NDArray[np.float64]) -> float:
     """Return the largest scatter variance behind the surface, from every second ray, with room for the others."""
     from dosekit.maps import kernels
 

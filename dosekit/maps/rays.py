@@ -1,9 +1,9 @@
 """Rays of a field: where they run, and how much matter lies on them.
 
 A field is followed on its own lattice: rays through the nodes (u, v) of the plane of the isocentre, and planes across
-the beam at positions w (see :mod:`dosekit.maps.frames`). Rays lie closer than the spots are wide, so that a spot is split into
-rays and the edge of a bone inside a spot divides it. Where a lattice axis is parallel to an axis of the voxels, the
-nodes are laid on voxel centres.
+the beam at positions w (see :mod:`dosekit.maps.frames`). Rays lie closer than the spots are wide, so that a spot is
+split into rays and the edge of a bone inside a spot divides it. Where a lattice axis is parallel to an axis of the
+voxels, the nodes are laid on voxel centres.
 
 Along each ray the relative stopping power and the scattering power are sampled by linear interpolation between voxel
 centres at several points for each plane, and summed to the water-equivalent path.

@@ -1,7 +1,7 @@
 """Dose on another lattice: what overlaps is shared by volume, so that energy is kept.
 
-A box of the new lattice takes from every voxel the part of it that lies inside. Energy, mass and stops are added this way and
-the dose is energy over mass; dose to water, which belongs to no mass, is averaged over volume.
+A box of the new lattice takes from every voxel the part of it that lies inside. Energy, mass and stops are added this
+way and the dose is energy over mass; dose to water, which belongs to no mass, is averaged over volume.
 """
 
 from __future__ import annotations
@@ -45,6 +45,7 @@ class DoseGrid:
     shape: tuple[int, int, int]
 
     def __post_init__(self) -> None:
+        """Refuse a lattice that makes no sense."""
         fine = len(self.origin_mm) == len(self.spacing_mm) == len(self.shape) == 3
         fine = fine and bool(np.all(np.isfinite([*self.origin_mm, *self.spacing_mm])))
         if not fine or min(self.spacing_mm) <= 0.0 or min(self.shape) < 1:

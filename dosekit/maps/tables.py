@@ -43,6 +43,7 @@ _MOST_WIDTHS = 5
 _WIDTH_RATIO = 1.5
 _SIGNIFICANT = 1e-4
 _NEGLIGIBLE = 1e-10
+_GONE = 1e-3
 _LOWEST_ENERGY_MEV = 0.5
 
 
@@ -107,6 +108,8 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     bin_mm = float(depth[1] - depth[0])
     energy = np.maximum(np.asarray(library.kinetic_energy_mev, dtype=np.float64), _LOWEST_ENERGY_MEV)
     power = scattering_power_rad2_mm(beam.particle, "water", energy, start_energy_mev=beam.kinetic_energy_mev)
+    core = np.asarray(library.quantities["core"], dtype=np.float64)
+    power[core < _GONE * core.max(axis=1, keepdims=True)] = 0.0  # nothing is left to scatter
     start = _behind_shifter(library, beam)
     gap = beam.range_shifter_gap_mm
     in_water = _variance_in_water(power, start, gap_mm=gap, bin_mm=bin_mm)
@@ -171,9 +174,7 @@ def _variance_in_water(
     return gained
 
 
-def _divide(
-    quantity: NDArray[np.float64], variance: NDArray[np.float64]
-) -> list[tuple[float, NDArray[np.float64]]]:
+def _divide(quantity: NDArray[np.float64], variance: NDArray[np.float64]) -> list[tuple[float, NDArray[np.float64]]]:
     """Divide a quantity between fixed widths: pairs of sigma and share, the shares adding to one everywhere."""
     counts = quantity > _SIGNIFICANT * quantity.max()
     low, high = float(np.sqrt(variance[counts].min())), float(np.sqrt(variance[counts].max()))

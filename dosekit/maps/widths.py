@@ -41,7 +41,9 @@ def width_ladder(widest_mm: float) -> tuple[NDArray[np.float64], float]:
     return (step * np.arange(count)) ** 2, float(step)
 
 
-def gaussian_taps(variance: NDArray[np.float64], *, largest: int | None = None) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+def gaussian_taps(
+    variance: NDArray[np.float64], *, largest: int | None = None
+) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
     """Return one-sided taps of Gaussians on a unit lattice.
 
     Parameters

@@ -57,7 +57,12 @@ def test_rays_of_a_fan_meet_in_the_source():
 
 
 @pytest.mark.parametrize(
-    "wrong", [{"gantry_deg": np.nan}, {"gantry_deg": 0, "source_distance_mm": 0.0}, {"gantry_deg": 0, "patient_position": "XYZ"}]
+    "wrong",
+    [
+        {"gantry_deg": np.nan},
+        {"gantry_deg": 0, "source_distance_mm": 0.0},
+        {"gantry_deg": 0, "patient_position": "XYZ"},
+    ],
 )
 def test_nonsense_is_refused(wrong):
     with pytest.raises(InputError):
