@@ -1,0 +1,148 @@
+"""Which coarse grid do scattered particles and products use, and how do its scores come back to fine bins?
+
+The coarse grid counts water-equivalent depth (depth itself where the medium is uniform) in steps of the residual-range
+step h, 1/80 of the range. Scores go back through a monotone cubic of their running sum, so that nothing is lost.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.interpolate import PchipInterpolator
+
+from dosekit.basis.materials import Material, material
+from dosekit.beams.ranges import range_table
+
+__all__ = ["CoarseGrid", "coarse_grid"]
+
+_STEPS_MM = (0.25, 0.5, 0.75, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 8.0, 10.0, 15.0, 20.0, 30.0)
+
+
+@dataclass(frozen=True)
+class CoarseGrid:
+    """Even cells of water-equivalent depth.
+
+    Attributes
+    ----------
+    reference : Material
+        Material in which residual range and depth are counted.
+    materials : tuple of Material
+        Different materials of the stack.
+    step_mm : float
+        Step of residual range, mm of the reference.
+    cells : int
+        Number of cells.
+    stuff : ndarray of int, shape (cells,)
+        Material of each cell.
+    cell_of_bin : ndarray of int, shape (bins,)
+        Cell of each fine bin.
+    place_of_edge : ndarray, shape (bins + 1,)
+        Fine edges in units of cells.
+    factor : ndarray, shape (cells,)
+        Length in the reference per length in the cell's material.
+    """
+
+    reference: Material
+    materials: tuple[Material, ...]
+    step_mm: float
+    cells: int
+    stuff: NDArray[np.int64] = field(repr=False)
+    cell_of_bin: NDArray[np.int64] = field(repr=False)
+    place_of_edge: NDArray[np.float64] = field(repr=False)
+    factor: NDArray[np.float64] = field(repr=False)
+
+    def to_bins(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Share out values summed per cell to fine bins.
+
+        Parameters
+        ----------
+        values : ndarray, shape (cells,)
+            Amounts per cell.
+
+        Returns
+        -------
+        ndarray, shape (bins,)
+            Amounts per fine bin; the sum is kept.
+        """
+        if not np.any(values):
+            return np.zeros(len(self.place_of_edge) - 1)
+        total = np.concatenate([[0.0], np.cumsum(values)])
+        running = PchipInterpolator(np.arange(self.cells + 1.0), total)(self.place_of_edge)
+        return np.asarray(np.diff(running))
+
+    def to_cells(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Sum fine bins into cells, sharing bins between cells by overlap.
+
+        Parameters
+        ----------
+        values : ndarray, shape (bins,)
+            Amounts per fine bin.
+
+        Returns
+        -------
+        ndarray, shape (cells,)
+            Amounts per cell; the sum is kept.
+        """
+        running = np.concatenate([[0.0], np.cumsum(values)])
+        return np.asarray(np.diff(np.interp(np.arange(self.cells + 1.0), self.place_of_edge, running)))
+
+
+def coarse_grid(
+    species: str,
+    energy_mev: float,
+    *,
+    layers: tuple[tuple[Material, float], ...],
+    edges_mm: NDArray[np.float64],
+    layer: NDArray[np.int64],
+    step_mm: float | None = None,
+) -> CoarseGrid:
+    """Return the coarse grid for a stack.
+
+    Parameters
+    ----------
+    species : str
+        Beam particle.
+    energy_mev : float
+        Kinetic energy at the surface, MeV.
+    layers : tuple of (Material, float)
+        Materials and thicknesses, mm.
+    edges_mm : ndarray
+        Fine edges.
+    layer : ndarray of int
+        Layer of each fine bin.
+    step_mm : float, optional
+        Step; by default near 1/80 of the range in the reference.
+
+    Returns
+    -------
+    CoarseGrid
+        The grid.
+    """
+    materials = tuple(dict.fromkeys(stuff for stuff, _ in layers))
+    reference = materials[0] if len(materials) == 1 else material("water")
+    reach = float(range_table(species, reference).range_mm(energy_mev))
+    if step_mm is None:
+        step_mm = min(_STEPS_MM, key=lambda step: abs(np.log(step / (reach / 80.0))))
+    probe = 0.5 * energy_mev
+    base = range_table(species, reference).stopping_mev_mm(probe)
+    ratio = np.array([float(range_table(species, stuff).stopping_mev_mm(probe) / base) for stuff, _ in layers])
+    equivalent = np.concatenate([[0.0], np.cumsum(np.diff(edges_mm) * ratio[layer])])
+    cells = max(int(round(equivalent[-1] / step_mm)), 2)
+    place = equivalent / equivalent[-1] * cells
+    borders = np.array([thickness for _, thickness in layers]) * ratio
+    border_place = np.cumsum(borders) / equivalent[-1] * cells
+    layer_of_cell = np.minimum(np.searchsorted(border_place, np.arange(cells) + 0.5), len(layers) - 1)
+    index = np.array([materials.index(stuff) for stuff, _ in layers])
+    middle = 0.5 * (place[1:] + place[:-1])
+    return CoarseGrid(
+        reference,
+        materials,
+        float(step_mm),
+        cells,
+        index[layer_of_cell].astype(np.int64),
+        np.clip(middle.astype(np.int64), 0, cells - 1),
+        place,
+        ratio[layer_of_cell],
+    )

@@ -1,0 +1,297 @@
+"""Compiled loops of the one-dimensional transport.
+
+A population is kept by residual range and direction cosine. Each step takes all of it down by one node of residual range
+and along its direction by the same length. For each direction the population lives in a frame that moves with it, so that
+nothing is smeared by the stepping; only sources and scores are shared between the two nearest cells of depth.
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numba import njit
+
+__all__ = ["gather_products", "march", "score_events", "stream_photons"]
+
+
+@njit(cache=True, error_model="numpy")
+def score_events(number, energy, cell, parts, node_energy, group_energy, by_node, by_group):  # type: ignore[no-untyped-def]
+    """Sort events of classes (q, i) into cells of depth, energy nodes and energy groups.
+
+    parts (3, q, i) are the shares of elastic, reaction and decay in `number`; by_node (2, cells, nodes) takes elastic and
+    reaction, by_group (2, cells, groups) reaction and decay. Weights linear in energy keep number and energy.
+    """
+    nodes = len(node_energy)
+    groups = len(group_energy)
+    for q in range(number.shape[0]):
+        for i in range(number.shape[1]):
+            n = number[q, i]
+            if n < 1e-14:
+                continue
+            t = energy[q, i]
+            u = cell[i]
+            lo = np.searchsorted(node_energy, t) - 1
+            if lo < 0:
+                lo = 0
+            if lo > nodes - 2:
+                lo = nodes - 2
+            w = (t - node_energy[lo]) / (node_energy[lo + 1] - node_energy[lo])
+            for which in range(2):
+                m = n * parts[which, q, i]
+                by_node[which, u, lo] += m * (1.0 - w)
+                by_node[which, u, lo + 1] += m * w
+            g = np.searchsorted(group_energy, t) - 1
+            if g < 0:
+                g = 0
+            if g > groups - 2:
+                g = groups - 2
+            v = (t - group_energy[g]) / (group_energy[g + 1] - group_energy[g])
+            v = min(max(v, 0.0), 1.0)
+            for which in range(2):
+                m = n * parts[which + 1, q, i]
+                by_group[which, u, g] += m * (1.0 - v)
+                by_group[which, u, g + 1] += m * v
+
+
+@njit(cache=True, error_model="numpy")
+def gather_products(events, stuff, spread, angular, out):  # type: ignore[no-untyped-def]
+    """Add products of events to the sources of a species.
+
+    events (cells, groups), stuff (cells) material number, spread (materials, groups, nodes) particles per event by node,
+    angular (materials, groups, directions) shares by direction, out (nodes, cells, directions).
+    """
+    cells, groups = events.shape
+    nodes = spread.shape[2]
+    directions = angular.shape[2]
+    for u in range(cells):
+        m = stuff[u]
+        for g in range(groups):
+            n = events[u, g]
+            if n < 1e-15:
+                continue
+            for k in range(nodes):
+                a = n * spread[m, g, k]
+                if a == 0.0:
+                    continue
+                for j in range(directions):
+                    out[k, u, j] += a * angular[m, g, j]
+
+
+@njit(cache=True, error_model="numpy")
+def march(  # type: ignore[no-untyped-def]
+    source,
+    cosine,
+    step_mm,
+    node_energy,
+    let,
+    stuff,
+    chance,
+    parts,
+    elastic_to,
+    reemit,
+    turn_elastic,
+    turn_reemit,
+    turn,
+    radiated,
+    group_low,
+    group_weight,
+    deposit,
+    let_weighted,
+    stops,
+    counts,
+    reactions,
+    decays,
+    forward,
+    escaped,
+    bremsstrahlung,
+):
+    """Carry a population down in residual range, with events and angular diffusion.
+
+    source (nodes, cells, directions) is used up and changed. node_energy (nodes); let (materials, nodes) keV/um on the way
+    down from a node; stuff (cells); chance (materials, nodes) of an event on the way down from a node; parts
+    (materials, nodes, 3) elastic, reaction, decay; elastic_to (materials, nodes) energy after elastic scattering; reemit
+    (materials, nodes, nodes) particles of the same kind per reaction; turn_* (materials, nodes, directions, directions);
+    turn (nodes, directions, directions) angular diffusion per step or of length 0; radiated (nodes) share of the loss that
+    is bremsstrahlung. Scores: deposit, let_weighted, stops, counts (3, cells) of events, reactions and decays (cells, groups),
+    forward (2, cells) sum of cosine times events, escaped (4): energy and number through the front and the back,
+    bremsstrahlung (cells, directions). Returns the energy that elastic scattering gave to nuclei, by cell.
+    """
+    nodes, cells, directions = source.shape
+    width = cells + 2 * nodes + 6
+    shift = nodes + 3
+    state = np.zeros((directions, width))
+    recoil = np.zeros(cells)
+    happened = np.zeros((2, cells, directions))
+    moved = np.zeros((cells, directions))
+    events = chance.shape[1] > 0
+    diffuse = turn.shape[0] > 0
+    for k in range(nodes - 1, -1, -1):
+        step = nodes - 1 - k
+        # sources at this node enter the moving frames
+        for j in range(directions):
+            for u in range(cells):
+                n = source[k, u, j]
+                if n != 0.0:
+                    c = u + shift - step * cosine[j]
+                    low = int(math.floor(c))
+                    w = c - low
+                    state[j, low] += n * (1.0 - w)
+                    state[j, low + 1] += n * w
+        if k == 0:
+            break
+        loss = node_energy[k] - node_energy[k - 1]
+        brems = radiated[k] if radiated.shape[0] > 0 else 0.0
+        if events:
+            happened[:] = 0.0
+        any_event = False
+        for j in range(directions):
+            for c in range(width):
+                n = state[j, c]
+                if n < 1e-16:
+                    continue
+                x = c - shift + step * cosine[j]
+                middle = x + 0.5 * cosine[j]
+                end = x + cosine[j]
+                low = int(math.floor(middle))
+                w = middle - low
+                first = min(max(low, 0), cells - 1)
+                second = min(max(low + 1, 0), cells - 1)
+                m = stuff[first if w < 0.5 else second]
+                if events:
+                    hit = n * chance[m, k]
+                    if hit > 0.0:
+                        any_event = True
+                        n -= hit
+                        for which in range(2):
+                            happened[which, first, j] += hit * parts[m, k, which] * (1.0 - w)
+                            happened[which, second, j] += hit * parts[m, k, which] * w
+                        lost = hit * parts[m, k, 2]
+                        counts[2, first] += lost * (1.0 - w)
+                        counts[2, second] += lost * w
+                        g = group_low[k]
+                        decays[first, g] += lost * (1.0 - group_weight[k]) * (1.0 - w)
+                        decays[second, g] += lost * (1.0 - group_weight[k]) * w
+                        decays[first, g + 1] += lost * group_weight[k] * (1.0 - w)
+                        decays[second, g + 1] += lost * group_weight[k] * w
+                        forward[1, first] += lost * cosine[j] * (1.0 - w)
+                        forward[1, second] += lost * cosine[j] * w
+                given = n * loss * (1.0 - brems)
+                deposit[first] += given * (1.0 - w)
+                deposit[second] += given * w
+                let_weighted[first] += given * let[m, k] * (1.0 - w)
+                let_weighted[second] += given * let[m, k] * w
+                if brems > 0.0:
+                    bremsstrahlung[first, j] += n * loss * brems * (1.0 - w)
+                    bremsstrahlung[second, j] += n * loss * brems * w
+                if end < -0.5:
+                    escaped[0] += n * node_energy[k - 1]
+                    escaped[1] += n
+                    state[j, c] = 0.0
+                elif end > cells - 0.5:
+                    escaped[2] += n * node_energy[k - 1]
+                    escaped[3] += n
+                    state[j, c] = 0.0
+                else:
+                    state[j, c] = n
+        if any_event:
+            for u in range(cells):
+                m = stuff[u]
+                for j in range(directions):
+                    n = happened[0, u, j]
+                    if n > 0.0:
+                        counts[0, u] += n
+                        after = elastic_to[m, k]
+                        recoil[u] += n * (node_energy[k] - after)
+                        if after > node_energy[k - 1]:
+                            deposit[u] += n * (after - node_energy[k - 1])
+                            let_weighted[u] += n * (after - node_energy[k - 1]) * let[m, k]
+                            after = node_energy[k - 1]
+                        low = k - 1
+                        while low > 0 and node_energy[low] > after:
+                            low -= 1
+                        if low == k - 1:
+                            low = max(k - 2, 0)
+                        w = 0.0
+                        if k > 1:
+                            w = (after - node_energy[low]) / (node_energy[low + 1] - node_energy[low])
+                        for i in range(directions):
+                            a = n * turn_elastic[m, k, j, i]
+                            source[low, u, i] += a * (1.0 - w)
+                            if k > 1:
+                                source[low + 1, u, i] += a * w
+                    n = happened[1, u, j]
+                    if n > 0.0:
+                        counts[1, u] += n
+                        g = group_low[k]
+                        reactions[u, g] += n * (1.0 - group_weight[k])
+                        reactions[u, g + 1] += n * group_weight[k]
+                        forward[0, u] += n * cosine[j]
+                        for low in range(k):
+                            a = n * reemit[m, k, low]
+                            if a > 1e-16:
+                                for i in range(directions):
+                                    source[low, u, i] += a * turn_reemit[m, k, j, i]
+        if diffuse:
+            moved[:] = 0.0
+            for j in range(directions):
+                stay = turn[k, j, j]
+                for c in range(width):
+                    n = state[j, c]
+                    if n < 1e-16:
+                        continue
+                    state[j, c] = n * stay
+                    x = c - shift + (step + 1) * cosine[j]
+                    low = int(math.floor(x))
+                    w = x - low
+                    first = min(max(low, 0), cells - 1)
+                    second = min(max(low + 1, 0), cells - 1)
+                    for i in range(directions):
+                        if i != j:
+                            a = n * turn[k, j, i]
+                            moved[first, i] += a * (1.0 - w)
+                            moved[second, i] += a * w
+            for u in range(cells):
+                for i in range(directions):
+                    if moved[u, i] != 0.0:
+                        source[k - 1, u, i] += moved[u, i]
+    step = nodes - 1
+    for j in range(directions):
+        for c in range(width):
+            n = state[j, c]
+            if n > 0.0:
+                x = c - shift + step * cosine[j]
+                low = int(math.floor(x))
+                w = x - low
+                first = min(max(low, 0), cells - 1)
+                second = min(max(low + 1, 0), cells - 1)
+                stops[first] += n * (1.0 - w)
+                stops[second] += n * w
+    return recoil
+
+
+@njit(cache=True, error_model="numpy")
+def stream_photons(source, cosine, attenuation, deposit, escaped):  # type: ignore[no-untyped-def]
+    """Carry photon energy along its direction with exponential absorption.
+
+    source (cells, directions) MeV; attenuation (cells) absorbed per cell at normal incidence; deposit (cells);
+    escaped (2) through the front and the back.
+    """
+    cells, directions = source.shape
+    for j in range(directions):
+        mu = cosine[j]
+        flow = 0.0
+        if mu > 0.0:
+            for u in range(cells):
+                lost = -math.expm1(-attenuation[u] / mu)
+                half = -math.expm1(-0.5 * attenuation[u] / mu)
+                deposit[u] += flow * lost + source[u, j] * half
+                flow = flow * (1.0 - lost) + source[u, j] * (1.0 - half)
+            escaped[1] += flow
+        else:
+            for u in range(cells - 1, -1, -1):
+                lost = -math.expm1(attenuation[u] / mu)
+                half = -math.expm1(0.5 * attenuation[u] / mu)
+                deposit[u] += flow * lost + source[u, j] * half
+                flow = flow * (1.0 - lost) + source[u, j] * (1.0 - half)
+            escaped[0] += flow

@@ -1,0 +1,372 @@
+"""What does one species of a beam do in a stack of layers? All parts together, before stars.
+
+1. the beam until its first nuclear scattering (:mod:`dosekit.depths.core`), 2. particles of the same kind that come out of
+elastic and inelastic collisions, all generations, 3. charged and neutral products of reactions in flight, 4. muons and
+electrons from decays in flight and at rest. Everything per particle at depth 0, in fine bins.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+from dosekit.basis.materials import Material
+from dosekit.basis.particles import kinetic_energy_mev, particle
+from dosekit.beams.decay import MICHEL_MEAN_ENERGY_MEV, MUON_ENERGY_AT_REST_MEV
+from dosekit.beams.reactions import CHANNELS, reactions
+from dosekit.depths.angles import COSINES
+from dosekit.depths.coarse import CoarseGrid, coarse_grid
+from dosekit.depths.core import Core, solve_core
+from dosekit.depths.kernels import gather_products, march, score_events
+from dosekit.depths.muons import muon_capture_share, muon_capture_products
+from dosekit.depths.products import (
+    Carried,
+    carry_electrons,
+    charged_products,
+    decay_muons,
+    michel_electrons,
+    neutral_products,
+)
+from dosekit.depths.tables import GROUP_ENERGY_MEV, SpeciesTable, node_spread, species_table
+
+__all__ = ["Solution", "solve"]
+
+_PION_REST = 139.57039
+_MUON_REST = 105.6583755
+_ELECTRON_REST = 0.51099895
+
+
+@dataclass(frozen=True)
+class Solution:
+    """What one species does, per particle at depth 0.
+
+    Attributes
+    ----------
+    species : str
+        Beam particle.
+    core : Core
+        The beam before its first nuclear scattering.
+    grid : CoarseGrid
+        The coarse grid of everything else.
+    deposit : dict of str to ndarray, shape (bins,)
+        Energy per bin, MeV: core, scattered, in_flight_charged, in_flight_neutral, decay, capture_light, capture_heavy,
+        capture_neutron, capture_photon (muon capture only).
+    let : dict of str to ndarray, shape (bins,)
+        Energy-averaged LET of the same parts, keV/um.
+    stops : dict of str to ndarray, shape (bins,)
+        Particles brought to rest: core, scattered.
+    channels : dict of str to ndarray, shape (bins,)
+        Reactions by channel, all generations, and ``decay`` (in flight).
+    decays_at_rest : ndarray, shape (bins,)
+        Decays of stopped particles.
+    ledger : dict of str to float
+        Energy, MeV: in, escaped, neutrino, binding, electron_rest and, for negative pions, star (rest energy given to
+        captures).
+    """
+
+    species: str
+    core: Core
+    grid: CoarseGrid
+    deposit: dict[str, NDArray[np.float64]] = field(repr=False)
+    let: dict[str, NDArray[np.float64]] = field(repr=False)
+    stops: dict[str, NDArray[np.float64]] = field(repr=False)
+    channels: dict[str, NDArray[np.float64]] = field(repr=False)
+    decays_at_rest: NDArray[np.float64] = field(repr=False)
+    ledger: dict[str, float] = field(repr=False)
+
+
+def solve(
+    species: str,
+    momentum: float,
+    *,
+    spread: float,
+    layers: tuple[tuple[Material, float], ...],
+    bin_mm: float,
+    yields: str,
+    nuclear: bool = True,
+    decays: bool = True,
+) -> Solution:
+    """Follow one species through a stack.
+
+    Parameters
+    ----------
+    species : str
+        pi-, pi+, mu-, mu+, proton, e- or e+.
+    momentum : float
+        Mean momentum, MeV/c.
+    spread : float
+        Standard deviation of momentum over mean.
+    layers : tuple of (Material, float)
+        Materials and thicknesses, mm.
+    bin_mm : float
+        Bin, mm.
+    yields : str
+        Yield set.
+    nuclear, decays : bool
+        Whether reactions and decay happen.
+
+    Returns
+    -------
+    Solution
+        The result; the most recent ones are kept.
+    """
+    return _solve(species, float(momentum), float(spread), layers, float(bin_mm), yields, nuclear, decays)
+
+
+@lru_cache(maxsize=24)
+def _solve(
+    species: str,
+    momentum: float,
+    spread: float,
+    layers: tuple[tuple[Material, float], ...],
+    bin_mm: float,
+    yields: str,
+    nuclear: bool,
+    decays: bool,
+) -> Solution:
+    """Put the parts together."""
+    if species in ("e-", "e+"):
+        return _electrons(species, momentum, spread, layers, bin_mm, yields)
+    core = solve_core(
+        species, momentum, spread=spread, layers=layers, bin_mm=bin_mm, yields=yields, nuclear=nuclear, decays=decays
+    )
+    energy = float(kinetic_energy_mev(species, momentum))
+    grid = coarse_grid(species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer)
+    top = float(np.max(core.event_energy, initial=energy))
+    scattered = _Scattered(species, core, grid, top, yields, nuclear=nuclear, decays=decays)
+    parts: dict[str, Carried] = {"scattered": scattered.carried}
+    charged = charged_products(species, scattered.core_reactions, grid, yields=yields)
+    charged.add(charged_products(species, scattered.later_reactions, grid, yields=yields, isotropic=True))
+    charged.deposit += scattered.recoil
+    charged.let_weighted += scattered.recoil * 100.0
+    parts["in_flight_charged"] = charged
+    reacted = scattered.core_reactions + scattered.later_reactions
+    neutral, emitted = neutral_products(species, reacted, grid, yields=yields)
+    parts["decay"], rest = _decays(species, core, grid, scattered)
+
+    to_bins = grid.to_bins
+    deposit = {"core": core.deposit, **{name: to_bins(part.deposit) for name, part in parts.items()}}
+    deposit["in_flight_neutral"] = to_bins(neutral)
+    weighted = {"core": core.let_weighted, **{name: to_bins(part.let_weighted) for name, part in parts.items()}}
+    weighted["in_flight_neutral"] = 15.0 * deposit["in_flight_neutral"]
+    for name, (amount, let) in rest.capture.items():
+        deposit[name] = to_bins(amount)
+        weighted[name] = let * deposit[name]
+    let = {name: weighted[name] / np.where(deposit[name] > 1e-15, deposit[name], 1.0) for name in deposit}
+    channels = {name: core.channels[name].copy() for name in (*CHANNELS, "decay")}
+    _add_later(channels, scattered, grid, species, yields)
+
+    rest_energy = particle(species).mass_mev if species != "proton" else 0.0
+    stars = float(np.sum(core.stops) + np.sum(scattered.carried.stops)) * _PION_REST if species == "pi-" else 0.0
+    out = scattered.carried.escaped
+    escaped = core.energy_out + float(core.number[-1]) * rest_energy + float(out[0] + out[2] + (out[1] + out[3]) * rest_energy)
+    escaped += float(charged.escaped[0] + charged.escaped[2]) + float(sum(np.sum(v) for v in emitted.values()) - np.sum(neutral))
+    ledger = {
+        "in": core.energy_in + rest_energy,
+        "escaped": escaped + rest.escaped,
+        "neutrino": rest.neutrino,
+        "binding": _binding(species, reacted, grid, yields) + rest.binding,
+        "electron_rest": rest.electron_rest,
+        "star": stars,
+    }
+    return Solution(
+        species, core, grid, deposit, let, {"core": core.stops, "scattered": to_bins(scattered.carried.stops)}, channels,
+        to_bins(rest.at_rest), ledger,
+    )  # fmt: skip
+
+
+class _Scattered:
+    """Beam particles after their first nuclear scattering, all generations."""
+
+    def __init__(
+        self, species: str, core: Core, grid: CoarseGrid, top: float, yields: str, *, nuclear: bool, decays: bool
+    ) -> None:
+        groups = len(GROUP_ENERGY_MEV)
+        from dosekit.beams.ranges import range_table
+
+        reach = float(range_table(species, grid.reference).range_mm(top))
+        nodes = 8 * (int(np.ceil(reach / grid.step_mm / 8.0)) + 1)
+        table = species_table(
+            species, grid.reference, grid.materials, step_mm=grid.step_mm, nodes=nodes, yields=yields, nuclear=nuclear, decays=decays
+        )
+        by_node = np.zeros((2, grid.cells, nodes))
+        by_group = np.zeros((2, grid.cells, groups))
+        score_events(
+            core.events, core.event_energy, grid.cell_of_bin, core.event_parts, table.energy, GROUP_ENERGY_MEV, by_node, by_group
+        )
+        source = np.zeros((nodes, grid.cells, len(COSINES)))
+        self.recoil = np.zeros(grid.cells)
+        self.carried = Carried(grid.cells)
+        self.core_reactions, self.core_decays = by_group[0], by_group[1]
+        self.later_reactions, self.later_decays = np.zeros((grid.cells, groups)), np.zeros((grid.cells, groups))
+        self.counts = np.zeros((3, grid.cells))
+        self.forward = np.zeros((2, grid.cells))
+        if nuclear and np.any(by_node > 0.0):
+            spread = np.stack([node_spread(row[:, None], table.energy) for row in table.elastic_to])
+            gather_products(by_node[0], grid.stuff, spread, table.start_elastic, source)
+            gather_products(by_node[1], grid.stuff, table.reemit, table.start_reemit, source)
+            loss = table.energy[None, :] - table.elastic_to
+            self.recoil += np.sum(by_node[0] * loss[grid.stuff], axis=1)
+            self.recoil += self._run(table, grid, source)
+
+    def _run(self, table: SpeciesTable, grid: CoarseGrid, source: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Carry all generations."""
+        result: NDArray[np.float64] = march(
+            source, COSINES, grid.step_mm, table.energy, table.let, grid.stuff, table.chance, table.parts, table.elastic_to,
+            table.reemit, table.turn_elastic, table.turn_reemit, np.zeros((0, 0, 0)), np.zeros(0), table.group_low,
+            table.group_weight, self.carried.deposit, self.carried.let_weighted, self.carried.stops, self.counts,
+            self.later_reactions, self.later_decays, self.forward, self.carried.escaped, np.zeros((0, 0)),
+        )  # fmt: skip
+        return result
+
+
+@dataclass
+class _Rest:
+    """What happens to particles at rest and to neutrinos, by cell and in sum."""
+
+    at_rest: NDArray[np.float64]
+    capture: dict[str, tuple[NDArray[np.float64], float]]
+    neutrino: float = 0.0
+    escaped: float = 0.0
+    binding: float = 0.0
+    electron_rest: float = 0.0
+
+
+def _decays(species: str, core: Core, grid: CoarseGrid, scattered: _Scattered) -> tuple[Carried, _Rest]:
+    """Follow muons and electrons from decays in flight and at rest."""
+    total = Carried(grid.cells)
+    rest = _Rest(np.zeros(grid.cells), {})
+    if species == "proton":
+        return total, rest
+    positive = species in ("pi+", "mu+")
+    muon = "mu+" if positive else "mu-"
+    stopped = grid.to_cells(core.stops) + scattered.carried.stops
+    muons = np.zeros(grid.cells)
+    electrons = np.zeros(grid.cells)
+    if species in ("pi-", "pi+"):
+        for decays, isotropic in ((scattered.core_decays, False), (scattered.later_decays, True)):
+            flown = decay_muons(muon, decays, grid, isotropic=isotropic)
+            total.add(flown)
+            muons += flown.stops
+            count = np.sum(decays, axis=0)
+            pion = float(np.sum(count * (GROUP_ENERGY_MEV + _PION_REST)))
+            gone = float(flown.escaped[0] + flown.escaped[2] + (flown.escaped[1] + flown.escaped[3]) * _MUON_REST)
+            rest.escaped += gone
+            rest.neutrino += pion * (1.0 - (MUON_ENERGY_AT_REST_MEV + _MUON_REST) / _PION_REST)
+        if positive:
+            rest.at_rest = stopped.copy()
+            total.deposit += stopped * MUON_ENERGY_AT_REST_MEV
+            total.let_weighted += stopped * MUON_ENERGY_AT_REST_MEV * 1.5
+            rest.neutrino += float(np.sum(stopped)) * (_PION_REST - MUON_ENERGY_AT_REST_MEV - _MUON_REST)
+            muons += stopped
+    else:
+        muons += stopped
+        # muons that decay in flight: their electron starts where they are, boost neglected
+        flying = np.sum(scattered.core_decays + scattered.later_decays, axis=1)
+        count = np.sum(scattered.core_decays + scattered.later_decays, axis=0)
+        rest.neutrino += float(np.sum(count * GROUP_ENERGY_MEV))
+        electrons += flying
+    caught = np.zeros(grid.cells)
+    if not positive:
+        share = np.array([muon_capture_share(stuff) for stuff in grid.materials])[grid.stuff]
+        caught = muons * share
+        products = muon_capture_products(caught, grid)
+        rest.capture.update(products.deposit)
+        rest.neutrino += products.neutrino
+        rest.escaped += products.escaped
+        rest.binding += products.binding
+    electrons += muons - caught
+    if not species.startswith("pi"):
+        rest.at_rest = muons - caught
+    run, photons = michel_electrons(electrons, grid, positron=positive)
+    total.add(run)
+    gone_number = float(run.escaped[1] + run.escaped[3])
+    number = float(np.sum(electrons))
+    rest.escaped += photons + float(run.escaped[0] + run.escaped[2]) + gone_number * _ELECTRON_REST
+    rest.electron_rest += (number - gone_number) * _ELECTRON_REST
+    rest.neutrino += number * (_MUON_REST - MICHEL_MEAN_ENERGY_MEV - _ELECTRON_REST)
+    return total, rest
+
+
+def _binding(species: str, reacted: NDArray[np.float64], grid: CoarseGrid, yields: str) -> float:
+    """Return the energy bound in reactions, MeV."""
+    total = 0.0
+    for index, stuff in enumerate(grid.materials):
+        table = reactions(species, stuff, yields=yields)
+        here = np.sum(reacted[grid.stuff == index], axis=0)
+        total += float(np.sum(here * table.at(table.binding_mev, GROUP_ENERGY_MEV)))
+    return total
+
+
+def _add_later(
+    channels: dict[str, NDArray[np.float64]], scattered: _Scattered, grid: CoarseGrid, species: str, yields: str
+) -> None:
+    """Add events of scattered particles, split by channel at their energy groups."""
+    channels["elastic"] += grid.to_bins(scattered.counts[0])
+    channels["decay"] += grid.to_bins(scattered.counts[2])
+    split = {name: np.zeros(grid.cells) for name in CHANNELS[:3]}
+    for index, stuff in enumerate(grid.materials):
+        table = reactions(species, stuff, yields=yields)
+        rows = {name: table.at(table.per_mm[name], GROUP_ENERGY_MEV) for name in split}
+        total = np.maximum(sum(rows.values()), 1e-30)
+        here = grid.stuff == index
+        for name, row in rows.items():
+            split[name][here] = scattered.later_reactions[here] @ (row / total)
+    for name, values in split.items():
+        channels[name] += grid.to_bins(values)
+
+
+def _electrons(
+    species: str,
+    momentum: float,
+    spread: float,
+    layers: tuple[tuple[Material, float], ...],
+    bin_mm: float,
+    yields: str,
+) -> Solution:
+    """Follow an electron beam: no unscattered part, only the coarse transport."""
+    silent = solve_core(
+        "mu-", momentum, spread=0.0, layers=layers, bin_mm=bin_mm, yields=yields, nuclear=False, decays=False, detour=False
+    )
+    energy = float(kinetic_energy_mev(species, momentum))
+    total_mm = float(silent.edges_mm[-1])
+    step = max(total_mm / 120.0, 1.0)
+    grid = coarse_grid(species, energy, layers=layers, edges_mm=silent.edges_mm, layer=silent.layer, step_mm=step)
+    z = np.linspace(-2.0, 2.0, 9) if spread > 0.0 else np.zeros(1)
+    weight = np.exp(-0.5 * z**2)
+    energies = kinetic_energy_mev(species, momentum * np.maximum(1.0 + spread * z, 0.05))
+    number = np.zeros(grid.cells)
+    number[0] = 1.0
+    angular = np.zeros(len(COSINES))
+    angular[-1] = 1.0
+    run, photons = carry_electrons(
+        (np.asarray(energies), weight / np.sum(weight)), number, angular, grid, positron=species == "e+"
+    )
+    bins = len(silent.layer)
+    empty = np.zeros(bins)
+    mean = float(np.sum(energies * weight) / np.sum(weight))
+    core = Core(
+        silent.edges_mm, silent.layer, empty, empty, empty, {name: empty for name in (*CHANNELS, "decay")},
+        np.zeros(bins + 1), np.zeros(bins + 1), np.zeros((1, bins)), np.zeros((1, bins)), np.zeros((3, 1, bins)),
+        np.zeros(bins + 1), mean, 0.0,
+    )  # fmt: skip
+    deposit = {"core": empty, "scattered": grid.to_bins(run.deposit)}
+    weighted = grid.to_bins(run.let_weighted)
+    let = {"core": empty, "scattered": weighted / np.where(deposit["scattered"] > 1e-15, deposit["scattered"], 1.0)}
+    ledger = {
+        "in": mean,
+        "escaped": photons + float(run.escaped[0] + run.escaped[2]),
+        "neutrino": 0.0,
+        "binding": 0.0,
+        "electron_rest": 0.0,
+        "star": 0.0,
+    }
+    for name in ("in_flight_charged", "in_flight_neutral", "decay"):
+        deposit[name], let[name] = empty, empty
+    return Solution(
+        species, core, grid, deposit, let, {"core": empty, "scattered": grid.to_bins(run.stops)},
+        {name: empty for name in (*CHANNELS, "decay")}, empty, ledger,
+    )  # fmt: skip
