@@ -10,6 +10,7 @@ depend on the library at all.
 from __future__ import annotations
 
 import hashlib
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -83,7 +84,8 @@ def write_dataset(
         prepared.to_netcdf(partial, engine="h5netcdf", format="NETCDF4", encoding=encoding)
         partial.replace(target)
     except OSError as problem:
-        partial.unlink(missing_ok=True)
+        with suppress(OSError):
+            partial.unlink(missing_ok=True)
         raise OutputError(
             f"{target.name} could not be written ({problem.strerror or type(problem).__name__})",
             remedy="check that the output folder exists, has space and may be written",
