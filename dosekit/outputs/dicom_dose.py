@@ -19,6 +19,7 @@ model weighted it.
 from __future__ import annotations
 
 import os
+from collections.abc import Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -29,6 +30,7 @@ from pydicom.uid import RTDoseStorage, RTIonPlanStorage
 
 from dosekit.caution import BANNER
 from dosekit.errors import InputError, SizeError
+from dosekit.outputs.dicom_histograms import add_histograms
 from dosekit.outputs.dicom_objects import (
     add_frame_of_reference,
     caution_text,
@@ -44,6 +46,7 @@ from dosekit.outputs.dicom_reference import derived_uid, plan_uid
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
+    from dosekit.effects.histograms import VolumeHistogram
     from dosekit.outputs.dicom_reference import DicomReference
 
 __all__ = ["dose_integers", "dose_uid", "write_rt_dose"]
@@ -124,6 +127,7 @@ def write_rt_dose(
     comment: str = "",
     beam_number: int | None = None,
     plan_instance_uid: str | None = None,
+    histograms: Mapping[int, VolumeHistogram] | None = None,
     instance_number: int = 1,
     created: str = "",
 ) -> Path:
@@ -153,6 +157,8 @@ def write_rt_dose(
         Number of the field in the RT Ion Plan; needed for ``summation="BEAM"``.
     plan_instance_uid : str, optional
         RT Ion Plan to refer to; that of the run when not given.
+    histograms : mapping of int to VolumeHistogram, optional
+        Dose-volume histograms by number of the structure in the structure set.
     instance_number : int
         Instance number in the series.
     created : str
@@ -216,6 +222,7 @@ def write_rt_dose(
         head.ReferencedImageSequence = [
             reference_item(reference.image_class_uid, uid) for uid in reference.image_instance_uids
         ]
+    add_histograms(head, histograms or {}, reference=reference, dose_type=dose_type)
     return save_object(head, path)
 
 

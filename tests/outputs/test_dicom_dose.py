@@ -11,9 +11,10 @@ import SimpleITK as sitk
 from hypothesis import given
 from hypothesis import strategies as st
 
+from dosekit.effects.histograms import volume_histogram
 from dosekit.errors import InputError, OutputError
 from dosekit.outputs.dicom_dose import dose_integers, write_rt_dose
-from dosekit.outputs.dicom_reference import invented_reference, plan_uid
+from dosekit.outputs.dicom_reference import invented_reference, plan_uid, structure_set_uid
 
 from dicom_judges import RESEARCH_ONLY, check_house_rules, judge
 
@@ -33,8 +34,8 @@ def dose(rng):
 
 def write(folder, dose, *, position="HFS", **options):
     reference = invented_reference(RUN, image_z_mm=Z_MM, patient_position=position)
-    axes = {"x_mm": X_MM, "y_mm": Y_MM, "z_mm": Z_MM}
-    return write_rt_dose(folder / "dose.dcm", dose, reference=reference, run_hash=RUN, **{**axes, **options})
+    usual = {"x_mm": X_MM, "y_mm": Y_MM, "z_mm": Z_MM, "reference": reference, "run_hash": RUN}
+    return write_rt_dose(folder / "dose.dcm", dose, **{**usual, **options})
 
 
 @pytest.mark.parametrize("position", ["HFS", "HFP", "FFS", "FFP"])
@@ -123,6 +124,32 @@ def test_references_and_wording(tmp_path, dose):
     assert head.DoseComment.startswith(RESEARCH_ONLY)
     assert RESEARCH_ONLY in head.ImageComments
     assert "total of two fields" in head.ImageComments
+
+
+@pytest.mark.parametrize("scale", [1.0, 0.0])
+def test_histograms_go_with_the_dose(tmp_path, dose, scale):
+    dose = dose * scale
+    coverage = {1: np.ones(dose.shape), 4: (np.arange(dose.size) % 3 == 0).reshape(dose.shape) * 0.5}
+    found = {number: volume_histogram(dose, part, voxel_cm3=0.02) for number, part in coverage.items()}
+    reference = invented_reference(RUN, image_z_mm=Z_MM).with_structure_set(structure_set_uid(RUN))
+    path = write(tmp_path, dose, reference=reference, histograms=found)
+    judge(path)
+    head = check_house_rules(path)
+    assert head.ReferencedStructureSetSequence[0].ReferencedSOPInstanceUID == structure_set_uid(RUN)
+    assert [item.DVHReferencedROISequence[0].ReferencedROINumber for item in head.DVHSequence] == [1, 4]
+    for item, part in zip(head.DVHSequence, coverage.values(), strict=True):
+        pairs = np.array(list(map(float, item.DVHData))).reshape(-1, 2)
+        assert len(pairs) == item.DVHNumberOfBins
+        begins = np.concatenate([[0.0], np.cumsum(pairs[:-1, 0])])
+        for begin, volume in list(zip(begins, pairs[:, 1], strict=True))[::37]:
+            assert volume == pytest.approx(part[dose >= begin - 1e-12].sum() * 0.02, abs=1e-9)
+        assert float(item.DVHMeanDose) == pytest.approx(np.average(dose, weights=part), rel=1e-9)
+
+
+def test_histograms_without_a_structure_set_are_refused(tmp_path, dose):
+    with pytest.raises(InputError, match="histograms"):
+        write(tmp_path, dose, histograms={1: volume_histogram(dose, np.ones(dose.shape))})
+    assert list(tmp_path.iterdir()) == []
 
 
 def test_same_run_same_bytes_other_run_other_identifier(tmp_path, dose):

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pydicom
 import pytest
@@ -17,7 +19,7 @@ from dosekit.outputs.dicom_plan import write_ion_plan
 from dosekit.outputs.dicom_reference import reference_of, structure_set_uid
 from dosekit.outputs.dicom_structures import write_structure_set
 
-from dicom_judges import check_house_rules, consistency_complaints, judge
+from dicom_judges import all_text, check_house_rules, consistency_complaints, judge
 
 RUN = "6f" * 32
 QUICK = ("small_block",)
@@ -109,3 +111,34 @@ def test_the_consistency_judge_would_complain(tmp_path):
     stray.SOPInstanceUID = stray.file_meta.MediaStorageSOPInstanceUID = "2.25.77"
     stray.save_as(tmp_path / "stray.dcm")
     assert consistency_complaints([*images, tmp_path / "stray.dcm"]) != []
+
+
+def test_a_planted_identity_goes_from_images_to_objects_and_nowhere_else(tmp_path):
+    """The source CT carries an identity; what is read from it does not show it, objects refer to it."""
+    grid = phantom("small_block")
+    planted = {
+        "patient_name": "Planted^Quux",
+        "patient_id": "PLANTED-77",
+        "patient_birth_date": "19010203",
+        "study_id": "STPLANTED",
+        "accession_number": "ACPLANTED",
+        "referring_physician_name": "Refplanted^Doc",
+    }
+    (tmp_path / "ct").mkdir()
+    source = replace(reference_of(grid, run_hash="source"), identity_removed=False, **planted)
+    write_ct_series(tmp_path / "ct", grid, run_hash="source", reference=source)
+    back = read_ct(tmp_path / "ct")
+    shown = f"{back!r} {back} {back.name} {back.source} {back.dicom_reference!r}".lower()
+    assert "planted" not in shown
+    assert "quux" not in shown
+    assert source.study_instance_uid not in shown
+
+    ones = np.ones(back.shape, np.float32)
+    for anonymous in (False, True):
+        reference = reference_of(back, run_hash=RUN, anonymous=anonymous)
+        axes = {f"{axis}_mm": back.centres_mm(axis) for axis in "xyz"}
+        path = write_rt_dose(tmp_path / "rd.dcm", ones, reference=reference, run_hash=RUN, **axes)
+        judge(path)
+        text = all_text(path)
+        for value in (*planted.values(), source.study_instance_uid, source.frame_of_reference_uid):
+            assert (value in text) is not anonymous
