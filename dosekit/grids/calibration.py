@@ -19,9 +19,10 @@ from __future__ import annotations
 import csv
 import io
 import math
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from collections.abc import Sequence
+from dataclasses import dataclass, field
 from functools import cached_property
+from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 from warnings import warn
@@ -29,19 +30,16 @@ from warnings import warn
 import numpy as np
 
 from dosekit.basis.materials import Material, material, mixture
-from dosekit.errors import CalibrationError, CalibrationWarning, DosekitError, GridError
+from dosekit.errors import CalibrationError, CalibrationWarning, DosekitError
 from dosekit.grids.attenuation import KAPPA_COHERENT, KAPPA_PHOTO, hounsfield_units
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
-    from dosekit.grids.voxels import VoxelGrid
-
 __all__ = [
     "AIR_HU",
     "Calibration",
     "CalibrationCurve",
-    "override_structures",
     "read_calibration",
     "stoichiometric_calibration",
 ]
@@ -135,14 +133,14 @@ class Calibration:
             raise CalibrationError(
                 f"HU {hu}", allowed=f"finite, {_HU_RANGE[0]:g} to {_HU_RANGE[1]:g}", remedy="correct the table"
             )
-        if any(b <= a for a, b in zip(hu, hu[1:], strict=False)):
+        if any(b <= a for a, b in pairwise(hu)):
             raise CalibrationError(
                 f"HU in the order {', '.join(f'{v:g}' for v in hu)}",
                 allowed="strictly increasing HU",
                 remedy="sort the rows and remove doubled HU",
             )
         densities = [tissue.density_g_cm3 for tissue in self.tissues]
-        if any(b < a for a, b in zip(densities, densities[1:], strict=False)):
+        if any(b < a for a, b in pairwise(densities)):
             raise CalibrationError(
                 f"densities {', '.join(f'{v:g}' for v in densities)} g/cm3",
                 allowed="densities that do not fall as HU rise",
@@ -206,7 +204,7 @@ class Calibration:
     def compositions(self) -> tuple[Material, ...]:
         """Tissue of each bin, taken at its middle."""
         edges = self.bins_hu
-        return tuple(self.tissue(0.5 * (a + b)) for a, b in zip(edges[:-1], edges[1:], strict=True))
+        return tuple(self.tissue(0.5 * (a + b)) for a, b in pairwise(edges))
 
     def matter(
         self, hu: NDArray[Any], *, padding: NDArray[np.bool_] | None = None
@@ -430,62 +428,10 @@ def _row(line: str, columns: int, where: str, usual: Calibration) -> tuple[float
         ) from None
     if not (math.isfinite(units) and math.isfinite(density) and 1e-6 <= density <= 25.0):
         raise CalibrationError(
-            f"{where}: HU {units:g} and density {density:g} g/cm3", allowed="finite HU and a density of 1e-6 to 25 g/cm3",
+            f"{where}: HU {units:g} and density {density:g} g/cm3",
+            allowed="finite HU and a density of 1e-6 to 25 g/cm3",
             remedy="correct the row",
-        )  # fmt: skip
+        )
     if columns == 3 and cells[2]:
         return units, material(cells[2], density_g_cm3=density)
     return units, usual.tissue(units).replace(name=f"table at {units:g} HU", density_g_cm3=density)
-
-
-def override_structures(
-    grid: VoxelGrid, overrides: Mapping[str, str | Material | tuple[str | Material, float]]
-) -> VoxelGrid:
-    """Return a volume with the matter of some structures replaced (an implant, a cavity).
-
-    Parameters
-    ----------
-    grid : VoxelGrid
-        The volume.
-    overrides : mapping
-        Name of a structure to a material by name, a material, or a pair of either and a density in g/cm3. Voxels
-        covered by half or more are replaced; later entries win.
-
-    Returns
-    -------
-    VoxelGrid
-        The changed volume.
-
-    Raises
-    ------
-    UnknownNameError
-        When there is no such structure or material.
-    GridError
-        When an override is neither of the above.
-    """
-    density = np.array(grid.density_g_cm3)
-    index = np.array(grid.material_index)
-    materials = list(grid.materials)
-    for name, wanted in overrides.items():
-        if isinstance(wanted, tuple) and len(wanted) == 2:
-            stuff = material(wanted[0], density_g_cm3=float(wanted[1]))
-        elif isinstance(wanted, str | Material):
-            stuff = material(wanted)
-        else:
-            raise GridError(
-                f"override {name!r} = {wanted!r}", allowed="a material, or a pair of material and density",
-                remedy="correct it",
-            )  # fmt: skip
-        inside = grid.structure(name) >= 0.5
-        if stuff not in materials:
-            materials.append(stuff)
-        density[inside] = stuff.density_g_cm3
-        index[inside] = materials.index(stuff)
-    said = {name: str(getattr(wanted, "name", wanted)) for name, wanted in overrides.items()}
-    return replace(
-        grid,
-        density_g_cm3=density,
-        material_index=index,
-        materials=tuple(materials),
-        source={**grid.source, "overrides": said},
-    )

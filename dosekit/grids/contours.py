@@ -143,10 +143,10 @@ def _section(
         return result
     right = int(np.searchsorted(positions, z))
     if 0 < right < len(planes) and positions[right] - positions[right - 1] <= GAP * usual:
-        low, high = planes[right - 1], planes[right]
-        share = (high.z - z) / (high.z - low.z)
-        blend = share * _distance(low.coverage, lattice) + (1 - share) * _distance(high.coverage, lattice)
-        return np.clip(blend + 0.5, 0.0, 1.0)
+        before, after = planes[right - 1], planes[right]
+        share = (after.z - z) / (after.z - before.z)
+        blend = share * _distance(before.coverage, lattice) + (1 - share) * _distance(after.coverage, lattice)
+        return np.asarray(np.clip(blend + 0.5, 0.0, 1.0))
     for end, sign in ((right - 1, 1.0), (right, -1.0)):  # beyond the plane below, before the plane above
         if 0 <= end < len(planes):
             reach = usual / 2 - (sign * (z - positions[end]) - step / 2)

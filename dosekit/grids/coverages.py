@@ -12,12 +12,13 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from dosekit.errors import GridError
+from dosekit.errors import GridError, UnknownNameError
+from dosekit.grids.lattice import OnLattice, triple
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-__all__ = ["BoxedCoverage", "Coverages"]
+__all__ = ["BoxedCoverage", "Coverages", "WithStructures"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -157,6 +158,153 @@ class Coverages(Mapping[str, "NDArray[np.float32]"]):
             The box and its values.
         """
         return self._boxes[name]
+
+
+class WithStructures(OnLattice):
+    """Something on a lattice that has structures.
+
+    Attributes
+    ----------
+    structures : Coverages
+        Name to coverage.
+    roles : mapping
+        Name to what the structure is for.
+    """
+
+    structures: Mapping[str, NDArray[np.float32]]
+    roles: Mapping[str, str]
+
+    def structure_name(self, name: str) -> str:
+        """Return the exact name of a structure, found without regard to case.
+
+        Parameters
+        ----------
+        name : str
+            The name as the user writes it.
+
+        Returns
+        -------
+        str
+            The name as the volume has it.
+
+        Raises
+        ------
+        UnknownNameError
+            When there is no such structure, or several differ by case only; the nearest name is suggested.
+        """
+        if name in self.structures:
+            return name
+        matches = [known for known in self.structures if known.strip().lower() == name.strip().lower()]
+        if len(matches) != 1:
+            raise UnknownNameError("structure", name, self.structures)
+        return matches[0]
+
+    def structure(self, name: str) -> NDArray[np.float32]:
+        """Return the coverage of a structure, found without regard to case.
+
+        Parameters
+        ----------
+        name : str
+            The name of the structure.
+
+        Returns
+        -------
+        ndarray
+            Coverage 0..1 [z, y, x], float32.
+        """
+        return self.structures[self.structure_name(name)]
+
+    def role(self, name: str) -> str:
+        """Return what a structure is for, as `voxels.ROLES` lists them.
+
+        Parameters
+        ----------
+        name : str
+            The name of the structure.
+
+        Returns
+        -------
+        str
+            The role; ``"other"`` when none was given.
+        """
+        return self.roles.get(self.structure_name(name), "other")
+
+    def volume_cm3(self, name: str) -> float:
+        """Return the volume of a structure, cm3.
+
+        Parameters
+        ----------
+        name : str
+            The name of the structure.
+
+        Returns
+        -------
+        float
+            Sum of coverage times voxel volume.
+        """
+        box = self._boxed(name)
+        return float(box.values.sum(dtype=np.float64)) * self.voxel_volume_mm3 * 1e-3
+
+    def centroid_mm(self, name: str) -> tuple[float, float, float]:
+        """Return the centre of a structure, weighted by coverage.
+
+        Parameters
+        ----------
+        name : str
+            The name of the structure.
+
+        Returns
+        -------
+        tuple of float
+            (x, y, z), mm.
+
+        Raises
+        ------
+        GridError
+            When the structure covers no voxel.
+        """
+        box = self._boxed(name)
+        weights = box.values.astype(np.float64)
+        total = float(weights.sum())
+        if total <= 0.0:
+            raise GridError(
+                f"structure {name!r} covers no voxel of the volume",
+                allowed="a structure inside the volume",
+                remedy="check the structure, or use a finer spacing",
+            )
+        z, y, x = (
+            float((weights.sum(axis=tuple(other for other in range(3) if other != axis)) * positions).sum()) / total
+            for axis, positions in enumerate(
+                self.centres_mm(letter)[part] for letter, part in zip("zyx", box.slices, strict=True)
+            )
+        )
+        return x, y, z
+
+    def bounds_mm(self, name: str) -> tuple[tuple[float, float, float], tuple[float, float, float]]:
+        """Return the box of voxels around a structure.
+
+        Parameters
+        ----------
+        name : str
+            The name of the structure.
+
+        Returns
+        -------
+        tuple
+            Lower and upper corner (x, y, z), mm.
+        """
+        box = self._boxed(name)
+        if 0 in box.values.shape:
+            self.centroid_mm(name)  # raises
+        lower = tuple(self.edges_mm(a)[s.start] for a, s in zip("xyz", box.slices[::-1], strict=True))
+        upper = tuple(self.edges_mm(a)[s.stop] for a, s in zip("xyz", box.slices[::-1], strict=True))
+        return triple(lower, "corner"), triple(upper, "corner")
+
+    def _boxed(self, name: str) -> BoxedCoverage:
+        """Return a structure as it is stored."""
+        structures = self.structures
+        assert isinstance(structures, Coverages)
+        return structures.boxed(self.structure_name(name))
 
 
 def _check_box(name: str, box: BoxedCoverage, shape: tuple[int, int, int]) -> None:

@@ -22,13 +22,13 @@ from dosekit.errors import GeometryError, GeometryWarning
 from dosekit.grids.calibration import (
     AIR_HU,
     Calibration,
-    override_structures,
     stoichiometric_calibration,
 )
 from dosekit.grids.ct_geometry import JITTER_SHARE, SKEW_LIMIT_MM, Stack, choose_series, sort_stack
 from dosekit.grids.ct_pixels import read_pixels
 from dosekit.grids.dicom_files import DicomHeaders, list_files, quiet_decoder, read_headers, text_of
 from dosekit.grids.memory import check_memory
+from dosekit.grids.overrides import override_structures
 from dosekit.grids.voxels import VoxelGrid
 
 if TYPE_CHECKING:
@@ -382,4 +382,4 @@ def _whole(hu: NDArray[Any]) -> NDArray[np.int16]:
         return hu
     limits = np.iinfo(np.int16)
     rounded = hu if hu.dtype.kind == "i" else np.rint(hu)
-    return np.clip(rounded, limits.min, limits.max).astype(np.int16)
+    return np.asarray(np.clip(rounded, limits.min, limits.max), dtype=np.int16)

@@ -211,6 +211,11 @@ def choose_series(headers: Sequence[Header], series: str | int | None = None) ->
     )
 
 
+def _number(group: Sequence[Header]) -> str:
+    """Return the series number of a group."""
+    return text_of(group[0].dataset, "SeriesNumber", name=group[0].name)
+
+
 def sort_stack(headers: Sequence[Header]) -> Stack:
     """Sort the slices of a series along their normal and check that they belong together.
 

@@ -302,7 +302,7 @@ def read_file(path: Path, *, pixels: bool) -> Dataset | None:
                 little = bool(bare.original_encoding[1])
                 bare.file_meta.TransferSyntaxUID = _syntax(explicit=explicit, little=little)
             return bare
-    except Exception:  # noqa: BLE001, S110 - whatever it is, it is not DICOM; decided below
+    except Exception:  # noqa: S110 - whatever it is, it is not DICOM; decided below
         pass
     if claims:
         raise DicomError(
@@ -324,14 +324,14 @@ def _syntax(*, explicit: bool, little: bool) -> Any:
 
 def _check_deflated(path: Path) -> None:
     """Refuse a deflated file that would unfold beyond reason."""
-    from pydicom.filereader import read_preamble
-    from pydicom.filereader import _read_file_meta_info as read_meta  # noqa: PLC2701
+    from pydicom.filereader import read_file_meta_info
 
+    meta = read_file_meta_info(path)
+    if str(meta.get("TransferSyntaxUID", "")) != _DEFLATED:
+        return
+    begin = 144 + int(meta.get("FileMetaInformationGroupLength", 0))
     with path.open("rb") as stream:
-        read_preamble(stream, force=False)
-        meta = read_meta(stream)
-        if str(meta.get("TransferSyntaxUID", "")) != _DEFLATED:
-            return
+        stream.seek(begin)
         unfolder = zlib.decompressobj(-zlib.MAX_WBITS)
         length = 0
         while chunk := stream.read(1 << 16):

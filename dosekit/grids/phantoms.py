@@ -2,7 +2,8 @@
 
 A phantom is drawn solid by solid. Where a solid covers a share *c* of a voxel, the density becomes
 ``(1 - c) * old + c * new`` and the composition that of the solid once *c* reaches one half; a structure takes the
-largest coverage among its solids and is cut only by later ones that say so. Slabs and boxes on voxel edges are therefore exact.
+largest coverage among its solids and is cut only by later ones that say so. Slabs and boxes on voxel edges are
+therefore exact.
 """
 
 from __future__ import annotations

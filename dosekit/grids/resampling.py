@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
@@ -75,7 +76,7 @@ def resample_grid(grid: VoxelGrid, spacing_mm: tuple[float, float, float]) -> Vo
     from dosekit.grids.kernels import overlap_density, overlap_material
 
     counts = [grid.shape[2 - a] * grid.spacing_mm[a] / spacing_mm[a] for a in range(3)]
-    wanted = np.prod([max(1.0, float(np.ceil(n - 1e-6))) for n in counts])
+    wanted = math.prod(max(1.0, float(np.ceil(n - 1e-6))) for n in counts)
     check_memory(wanted * 12.0, what=f"a volume of {wanted:.3g} voxels")
     axes = [overlap_shares(grid.shape[2 - a], grid.spacing_mm[a], spacing_mm[a]) for a in (2, 1, 0)]
     first = (axes[0][0], axes[1][0], axes[2][0])

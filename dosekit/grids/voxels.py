@@ -14,7 +14,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from dosekit.errors import GridError, UnknownNameError
-from dosekit.grids.coverages import BoxedCoverage, Coverages
+from dosekit.grids.coverages import Coverages, WithStructures
+from dosekit.grids.lattice import triple
 from dosekit.grids.memory import check_memory
 
 if TYPE_CHECKING:
@@ -30,11 +31,10 @@ ROLES = ("target", "organ_at_risk", "body", "other")
 _BODY_NAMES = ("body", "external", "outline", "skin", "patient")
 _BYTES_PER_VOXEL = 6.0  # density float32 and material uint16
 _BRIDGE_MM = 4.0  # half the width of what may join a couch to the body in a slice
-_AXES = {"x": 0, "y": 1, "z": 2}
 
 
 @dataclass(frozen=True, eq=False)
-class VoxelGrid:
+class VoxelGrid(WithStructures):
     """A volume of voxels with density, material and structures.
 
     Parameters
@@ -98,8 +98,8 @@ class VoxelGrid:
     def __post_init__(self) -> None:
         """Check the parts and make the arrays read-only."""
         _set = object.__setattr__
-        _set(self, "origin_mm", _triple(self.origin_mm, "origin"))
-        _set(self, "spacing_mm", _triple(self.spacing_mm, "spacing"))
+        _set(self, "origin_mm", triple(self.origin_mm, "origin"))
+        _set(self, "spacing_mm", triple(self.spacing_mm, "spacing"))
         if min(self.spacing_mm) <= 0.0:
             raise GridError(
                 f"voxel spacing {self.spacing_mm} mm", allowed="three values above 0", remedy="correct the spacing"
@@ -139,207 +139,11 @@ class VoxelGrid:
                 raise GridError(f"HU of shape {hu.shape}", allowed=f"shape {density.shape}", remedy="correct the HU")
             _set(self, "hu", hu)
 
-    # ------------------------------------------------------------------ geometry
     @property
     def shape(self) -> tuple[int, int, int]:
         """Return the number of voxels (z, y, x)."""
         z, y, x = self.density_g_cm3.shape
         return int(z), int(y), int(x)
-
-    @property
-    def voxel_volume_mm3(self) -> float:
-        """Return the volume of one voxel, mm3."""
-        return self.spacing_mm[0] * self.spacing_mm[1] * self.spacing_mm[2]
-
-    @property
-    def lower_mm(self) -> tuple[float, float, float]:
-        """Return the lower corner of the volume (x, y, z), mm; voxels are counted in full."""
-        x, y, z = (o - 0.5 * s for o, s in zip(self.origin_mm, self.spacing_mm, strict=True))
-        return x, y, z
-
-    @property
-    def upper_mm(self) -> tuple[float, float, float]:
-        """Return the upper corner of the volume (x, y, z), mm."""
-        counts = self.shape[::-1]
-        x, y, z = (o + (n - 0.5) * s for o, n, s in zip(self.origin_mm, counts, self.spacing_mm, strict=True))
-        return x, y, z
-
-    def centres_mm(self, axis: str) -> NDArray[np.float64]:
-        """Return the voxel centres along an axis.
-
-        Parameters
-        ----------
-        axis : {"x", "y", "z"}
-            The patient axis.
-
-        Returns
-        -------
-        ndarray
-            Positions, mm, increasing.
-        """
-        which = _axis(axis)
-        return self.origin_mm[which] + self.spacing_mm[which] * np.arange(self.shape[2 - which], dtype=float)
-
-    def edges_mm(self, axis: str) -> NDArray[np.float64]:
-        """Return the voxel edges along an axis.
-
-        Parameters
-        ----------
-        axis : {"x", "y", "z"}
-            The patient axis.
-
-        Returns
-        -------
-        ndarray
-            One position more than there are voxels, mm, increasing.
-        """
-        which = _axis(axis)
-        return self.origin_mm[which] + self.spacing_mm[which] * (np.arange(self.shape[2 - which] + 1) - 0.5)
-
-    def same_geometry(self, other: VoxelGrid, *, tolerance_mm: float = 1e-4) -> bool:
-        """Say whether two volumes lie on the same lattice.
-
-        Parameters
-        ----------
-        other : VoxelGrid
-            The volume to compare with.
-        tolerance_mm : float
-            Largest distance between matching corners, mm.
-
-        Returns
-        -------
-        bool
-            True when every voxel of one lies on the same voxel of the other.
-        """
-        corners = zip(self.lower_mm + self.upper_mm, other.lower_mm + other.upper_mm, strict=True)
-        return self.shape == other.shape and all(abs(a - b) <= tolerance_mm for a, b in corners)
-
-    # ------------------------------------------------------------------ structures
-    def structure_name(self, name: str) -> str:
-        """Return the exact name of a structure, found without regard to case.
-
-        Parameters
-        ----------
-        name : str
-            The name as the user writes it.
-
-        Returns
-        -------
-        str
-            The name as the volume has it.
-
-        Raises
-        ------
-        UnknownNameError
-            When there is no such structure, or several differ by case only; the nearest name is suggested.
-        """
-        if name in self.structures:
-            return name
-        matches = [known for known in self.structures if known.strip().lower() == name.strip().lower()]
-        if len(matches) != 1:
-            raise UnknownNameError("structure", name, self.structures)
-        return matches[0]
-
-    def structure(self, name: str) -> NDArray[np.float32]:
-        """Return the coverage of a structure, found without regard to case.
-
-        Parameters
-        ----------
-        name : str
-            The name of the structure.
-
-        Returns
-        -------
-        ndarray
-            Coverage 0..1 [z, y, x], float32.
-        """
-        return self.structures[self.structure_name(name)]
-
-    def role(self, name: str) -> str:
-        """Return what a structure is for, one of `ROLES`.
-
-        Parameters
-        ----------
-        name : str
-            The name of the structure.
-
-        Returns
-        -------
-        str
-            The role; ``"other"`` when none was given.
-        """
-        return self.roles.get(self.structure_name(name), "other")
-
-    def volume_cm3(self, name: str) -> float:
-        """Return the volume of a structure, cm3.
-
-        Parameters
-        ----------
-        name : str
-            The name of the structure.
-
-        Returns
-        -------
-        float
-            Sum of coverage times voxel volume.
-        """
-        box = self._boxed(name)
-        return float(box.values.sum(dtype=np.float64)) * self.voxel_volume_mm3 * 1e-3
-
-    def centroid_mm(self, name: str) -> tuple[float, float, float]:
-        """Return the centre of a structure, weighted by coverage.
-
-        Parameters
-        ----------
-        name : str
-            The name of the structure.
-
-        Returns
-        -------
-        tuple of float
-            (x, y, z), mm.
-
-        Raises
-        ------
-        GridError
-            When the structure covers no voxel.
-        """
-        box = self._boxed(name)
-        weights = box.values.astype(np.float64)
-        total = float(weights.sum())
-        if total <= 0.0:
-            raise GridError(
-                f"structure {name!r} covers no voxel of the volume",
-                allowed="a structure inside the volume",
-                remedy="check the structure, or use a finer spacing",
-            )
-        z, y, x = (
-            float((weights.sum(axis=tuple(other for other in range(3) if other != axis)) * positions).sum()) / total
-            for axis, positions in enumerate(
-                self.centres_mm(letter)[part] for letter, part in zip("zyx", box.slices, strict=True)
-            )
-        )
-        return x, y, z
-
-    def bounds_mm(self, name: str) -> tuple[tuple[float, float, float], tuple[float, float, float]]:
-        """Return the box of voxels around a structure.
-
-        Parameters
-        ----------
-        name : str
-            The name of the structure.
-
-        Returns
-        -------
-        tuple
-            Lower and upper corner (x, y, z), mm.
-        """
-        box = self._boxed(name)
-        if 0 in box.values.shape:
-            self.centroid_mm(name)  # raises
-        lower = tuple(self.edges_mm(a)[s.start] for a, s in zip("xyz", box.slices[::-1], strict=True))
-        upper = tuple(self.edges_mm(a)[s.stop] for a, s in zip("xyz", box.slices[::-1], strict=True))
-        return _triple(lower, "corner"), _triple(upper, "corner")
 
     def body(self) -> NDArray[np.bool_]:
         """Return the mask of the body.
@@ -398,30 +202,6 @@ class VoxelGrid:
         return per_density[self.material_index] * self.density_g_cm3
 
     # ------------------------------------------------------------------ other lattices
-    def index_box(
-        self, lower_mm: Sequence[float], upper_mm: Sequence[float]
-    ) -> tuple[tuple[int, int, int], tuple[int, int, int]]:
-        """Return which voxels have their centres in a box.
-
-        Parameters
-        ----------
-        lower_mm, upper_mm : sequence of float
-            Corners of the box (x, y, z), mm.
-
-        Returns
-        -------
-        tuple
-            First voxel (z, y, x), and one past the last (z, y, x), both inside the volume.
-        """
-        first, last = [], []
-        for axis in (2, 1, 0):
-            count = self.shape[2 - axis]
-            low = (lower_mm[axis] - self.origin_mm[axis]) / self.spacing_mm[axis]
-            high = (upper_mm[axis] - self.origin_mm[axis]) / self.spacing_mm[axis]
-            first.append(int(np.clip(np.ceil(low - 1e-6), 0, count)))
-            last.append(int(np.clip(np.floor(high + 1e-6) + 1, 0, count)))
-        return (first[0], first[1], first[2]), (last[0], last[1], last[2])
-
     def crop(
         self,
         lower_mm: Sequence[float] | None = None,
@@ -472,34 +252,6 @@ class VoxelGrid:
             hu=None if self.hu is None else np.ascontiguousarray(self.hu[part]),
         )
 
-    def offset_in(self, whole: VoxelGrid) -> tuple[int, int, int]:
-        """Return where this volume lies on the lattice of another.
-
-        Parameters
-        ----------
-        whole : VoxelGrid
-            A volume on the same lattice, e.g. the one this was cropped from.
-
-        Returns
-        -------
-        tuple of int
-            Index (z, y, x) of this volume's first voxel in the other.
-
-        Raises
-        ------
-        GridError
-            When the lattices differ.
-        """
-        steps = [(a - b) / s for a, b, s in zip(self.origin_mm, whole.origin_mm, whole.spacing_mm, strict=True)]
-        same = np.allclose(self.spacing_mm, whole.spacing_mm, rtol=1e-6, atol=0.0)
-        if not same or any(abs(step - round(step)) > 1e-3 for step in steps):
-            raise GridError(
-                "two volumes on different lattices",
-                allowed="volumes with the same spacing and whole steps between them",
-                remedy="resample one of them",
-            )
-        return round(steps[2]), round(steps[1]), round(steps[0])
-
     def resample(self, spacing_mm: float | Sequence[float]) -> VoxelGrid:
         """Return the volume on a lattice of another spacing, with the same lower corner.
 
@@ -524,7 +276,7 @@ class VoxelGrid:
         """
         from dosekit.grids.resampling import resample_grid
 
-        new = _triple([spacing_mm] * 3 if isinstance(spacing_mm, int | float) else spacing_mm, "spacing")
+        new = triple([spacing_mm] * 3 if isinstance(spacing_mm, int | float) else spacing_mm, "spacing")
         if min(new) <= 0.0:
             raise GridError(f"a spacing of {new} mm", allowed="values above 0", remedy="correct the spacing")
         return resample_grid(self, new)
@@ -593,7 +345,7 @@ class VoxelGrid:
         """
         from dosekit.grids.shapes import Ellipsoid, coverage_of
 
-        sphere = Ellipsoid(centre_mm=_triple(centre_mm, "centre"), radii_mm=(float(radius_mm),) * 3)
+        sphere = Ellipsoid(centre_mm=triple(centre_mm, "centre"), radii_mm=(float(radius_mm),) * 3)
         box = coverage_of(sphere, origin_mm=self.origin_mm, spacing_mm=self.spacing_mm, shape=self.shape)
         if not box.values.size or float(box.values.max()) <= 0.0:
             raise GridError(
@@ -604,12 +356,6 @@ class VoxelGrid:
         structures: dict[str, Any] = {known: self._boxed(known) for known in self.structures}
         structures[name] = box
         return replace(self, structures=structures, roles={**self.roles, name: role})
-
-    def _boxed(self, name: str) -> BoxedCoverage:
-        """Return a structure as it is stored."""
-        structures = self.structures
-        assert isinstance(structures, Coverages)
-        return structures.boxed(self.structure_name(name))
 
 
 def check_volume(shape: Sequence[int], *, what: str, bytes_per_voxel: float = 2 * _BYTES_PER_VOXEL) -> None:
@@ -633,25 +379,6 @@ def check_volume(shape: Sequence[int], *, what: str, bytes_per_voxel: float = 2 
     for count in shape:
         voxels *= float(count)
     check_memory(voxels * bytes_per_voxel, what=f"{what} of {' x '.join(str(n) for n in shape)} voxels")
-
-
-def _axis(letter: str) -> int:
-    """Return the index of an axis by its letter."""
-    try:
-        return _AXES[letter]
-    except KeyError:
-        raise UnknownNameError("axis", letter, _AXES) from None
-
-
-def _triple(values: Sequence[float], what: str) -> tuple[float, float, float]:
-    """Return three finite numbers, or say what is wrong."""
-    try:
-        x, y, z = (float(v) for v in values)
-    except (TypeError, ValueError):
-        raise GridError(f"{what} {values!r}", allowed="three numbers (x, y, z), mm", remedy="correct it") from None
-    if not all(np.isfinite((x, y, z))):
-        raise GridError(f"{what} {values!r}", allowed="three finite numbers, mm", remedy="correct it")
-    return x, y, z
 
 
 def _frozen(array: NDArray[Any], dtype: Any) -> NDArray[Any]:
