@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import hashlib
 from contextlib import suppress
-from contextlib import suppress
 from pathlib import Path
 
 from dosekit.errors import OutputError
@@ -46,7 +45,6 @@ def write_bytes(path: str | Path, data: bytes) -> Path:
         partial.replace(target)
     except OSError as problem:
         with suppress(OSError):
-            with suppress(OSError):
             partial.unlink(missing_ok=True)
         raise OutputError(
             f"{target.name} could not be written ({problem.strerror or type(problem).__name__})",
