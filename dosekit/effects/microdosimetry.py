@@ -36,7 +36,7 @@ from dosekit.errors import InputError
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
-    from dosekit.effects.tissues import Tissue
+    from dosekit.effects.tissues import Tissue, TissueMap
 
 __all__ = [
     "DOMAIN_RADIUS_UM",
@@ -161,14 +161,14 @@ def domain_energy_gy(lineal_energy_kev_um: ArrayLike, *, radius_um: float = DOMA
     return np.asarray(_GY_UM2_PER_KEV_UM * np.asarray(lineal_energy_kev_um, dtype=np.float64) / (np.pi * radius_um**2))
 
 
-def saturated_alpha(let_kev_um: ArrayLike, *, tissue: Tissue) -> NDArray[np.float64]:
+def saturated_alpha(let_kev_um: ArrayLike, *, tissue: Tissue | TissueMap) -> NDArray[np.float64]:
     """Give the linear constant of a tissue for tracks of a LET.
 
     Parameters
     ----------
     let_kev_um : array_like
         Dose-averaged LET in keV/um.
-    tissue : Tissue
+    tissue : Tissue or TissueMap
         Constants for photons.
 
     Returns

@@ -43,7 +43,7 @@ import numpy as np
 from dosekit.basis.components import COMPONENTS
 from dosekit.effects.microdosimetry import saturated_alpha
 from dosekit.effects.rbe import component_factors, proton_model_names, quality_factor, rbe_extremes
-from dosekit.effects.tissues import Tissue, tissue
+from dosekit.effects.tissues import Tissue, TissueMap, tissue
 from dosekit.errors import InputError, UnknownNameError, ValidityWarning
 
 if TYPE_CHECKING:
@@ -79,8 +79,8 @@ class EffectModel:
     ----------
     name : str
         One of `effect_model_names`.
-    tissue : Tissue
-        Photon constants.
+    tissue : Tissue or TissueMap
+        Photon constants; a map has the shape of the doses.
     factors : mapping of str to float
         Changes to the constant factors; only for ``constant``.
     beam_particle : str
@@ -88,7 +88,7 @@ class EffectModel:
     """
 
     name: str = "constant"
-    tissue: Tissue = field(default_factory=lambda: tissue("tumour"))
+    tissue: Tissue | TissueMap = field(default_factory=lambda: tissue("tumour"))
     factors: Mapping[str, float] = field(default_factory=dict)
     beam_particle: str = "pi-"
 
@@ -165,7 +165,7 @@ class EffectModel:
             factor = quality_factor(let)
         elif self.name == "microdosimetric" or component in _DENSE:
             alpha = saturated_alpha(let, tissue=self.tissue)
-            return alpha, np.full_like(alpha, root_x)
+            return alpha, np.broadcast_to(root_x, alpha.shape)
         else:
             largest, smallest = rbe_extremes(self.name, let, alpha_beta_gy=self.tissue.alpha_beta_gy)
             return largest * alpha_x, smallest * root_x
@@ -231,14 +231,16 @@ def effect_sums(
     return linear, root
 
 
-def weighted_dose_gy(linear: ArrayLike, root: ArrayLike, *, tissue: Tissue, fractions: int = 1) -> NDArray[np.float64]:
+def weighted_dose_gy(
+    linear: ArrayLike, root: ArrayLike, *, tissue: Tissue | TissueMap, fractions: int = 1
+) -> NDArray[np.float64]:
     """Turn the sums ``A`` and ``B`` into the photon dose of equal effect.
 
     Parameters
     ----------
     linear, root : array_like
         ``A`` and ``B`` over all fractions.
-    tissue : Tissue
+    tissue : Tissue or TissueMap
         Photon constants.
     fractions : int
         Number of equal fractions.
@@ -256,7 +258,7 @@ def weighted_dose_gy(linear: ArrayLike, root: ArrayLike, *, tissue: Tissue, frac
 
 
 def weighted_dose_slopes(
-    linear: ArrayLike, root: ArrayLike, *, tissue: Tissue, fractions: int = 1
+    linear: ArrayLike, root: ArrayLike, *, tissue: Tissue | TissueMap, fractions: int = 1
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Give the slopes of the effect-weighted dose with respect to ``A`` and ``B``.
 
@@ -264,7 +266,7 @@ def weighted_dose_slopes(
     ----------
     linear, root : array_like
         ``A`` and ``B`` over all fractions.
-    tissue : Tissue
+    tissue : Tissue or TissueMap
         Photon constants.
     fractions : int
         Number of equal fractions.

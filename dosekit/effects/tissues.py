@@ -10,11 +10,17 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass
 from functools import cache
+from typing import TYPE_CHECKING
+
+import numpy as np
 
 from dosekit.basis.tables import read_table
 from dosekit.errors import InputError, UnknownNameError
 
-__all__ = ["Tissue", "tissue", "tissue_names", "tissue_of_structure"]
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+__all__ = ["Tissue", "TissueMap", "tissue", "tissue_names", "tissue_of_structure"]
 
 _FALLBACK = "late responding"
 
@@ -49,6 +55,30 @@ class Tissue:
     def beta_per_gy2(self) -> float:
         """Quadratic constant, 1/Gy^2."""
         return self.alpha_per_gy / self.alpha_beta_gy
+
+
+@dataclass(frozen=True, eq=False)
+class TissueMap:
+    """Linear-quadratic constants per voxel, for volumes with several tissues.
+
+    Parameters
+    ----------
+    alpha_per_gy, alpha_beta_gy : ndarray
+        Linear constant (1/Gy) and ratio (Gy) of each voxel, equal shapes.
+    """
+
+    alpha_per_gy: NDArray[np.float64]
+    alpha_beta_gy: NDArray[np.float64]
+
+    def __post_init__(self) -> None:
+        """Refuse constants that are not positive."""
+        if not (np.all(self.alpha_per_gy > 0.0) and np.all(self.alpha_beta_gy > 0.0)):
+            raise InputError("alpha or alpha/beta not above 0", allowed="above 0", remedy="check the tissue map")
+
+    @property
+    def beta_per_gy2(self) -> NDArray[np.float64]:
+        """Quadratic constant of each voxel, 1/Gy^2."""
+        return np.asarray(self.alpha_per_gy / self.alpha_beta_gy)
 
 
 @cache
