@@ -103,7 +103,7 @@ def write_ion_plan(
     Raises
     ------
     InputError
-        If there is no field, or a field has no positive weight.
+        If there is no field, weights are not numbers or negative, or all fields give nothing.
     OutputError
         If the file cannot be written.
     """
@@ -111,6 +111,8 @@ def write_ion_plan(
         raise InputError(
             f"{len(fields)} fields in {fractions} fractions", allowed="one field or more, one fraction or more"
         )
+    if not any(_particles(field).any() for field in fields):
+        raise InputError("fields that give nothing", allowed="at least one weight above nought")
     head = object_start(
         RTIonPlanStorage,
         plan_uid(run_hash),
@@ -170,7 +172,7 @@ def _setup_item(reference: DicomReference) -> Dataset:
 def _beam_item(number: int, field: Field) -> Dataset:
     """Return one field."""
     particles = _particles(field)
-    steps = [step for step in range(particles.shape[1]) if particles[:, step].any()]
+    steps = [step for step in range(particles.shape[1]) if particles[:, step].any()] or [0]
     beam = Dataset()
     beam.BeamNumber = str(number)
     beam.BeamName = clip_text(field.name or f"field {number}", "LO")
@@ -195,6 +197,7 @@ def _beam_item(number: int, field: Field) -> Dataset:
     cumulative = 0.0
     for step in steps:
         lit = np.flatnonzero(particles[:, step])
+        lit = lit if lit.size else np.arange(1)  # a field that gives nothing still needs a pair of control points
         for start in range(0, len(lit), MOST_SPOTS):
             chosen = lit[start : start + MOST_SPOTS]
             weights = particles[chosen, step]
@@ -284,8 +287,8 @@ def _particles(field: Field) -> NDArray[np.float64]:
             f"field {field.name!r} with weights of shape {weights.shape}",
             allowed=f"({len(spots)}, {len(shifts)}), the numbers of spots and steps",
         )
-    if not np.all(np.isfinite(weights)) or weights.min(initial=0.0) < 0.0 or not weights.sum() > 0.0:
-        raise InputError(f"weights of field {field.name!r}", allowed="finite, not negative, at least one above nought")
+    if not np.all(np.isfinite(weights)) or weights.size == 0 or weights.min() < 0.0:
+        raise InputError(f"weights of field {field.name!r}", allowed="finite and not negative, at least one")
     return weights * PARTICLES_PER_WEIGHT
 
 

@@ -204,7 +204,7 @@ def _contour_item(outline: NDArray[np.float64], z_mm: float) -> Dataset:
         if sum(map(len, texts)) + len(texts) <= LONGEST_CONTOUR_BYTES:
             break
         outline = thinned(outline, tolerance_mm=tolerance_mm)
-        tolerance_mm *= 1.5
+        tolerance_mm *= 2.0
     item = Dataset()
     item.ContourGeometricType = "CLOSED_PLANAR"
     item.NumberOfContourPoints = str(len(outline))

@@ -140,7 +140,6 @@ def test_same_run_same_bytes(tmp_path):
 @pytest.mark.parametrize(
     "field",
     [
-        setting(weights=np.zeros((7, 4))),
         setting(weights=np.full((7, 4), np.nan)),
         setting(weights=-np.ones((7, 4))),
         setting(weights=np.ones((4, 7))),
@@ -150,6 +149,16 @@ def test_weights_that_cannot_be_are_refused(tmp_path, field):
     with pytest.raises(InputError, match="left"):
         write(tmp_path, [field])
     assert list(tmp_path.iterdir()) == []
+
+
+def test_a_field_that_gives_nothing_is_kept(tmp_path):
+    path = write(tmp_path, [setting(), setting("right", weights=np.zeros((7, 4)))])
+    judge(path)
+    head = pydicom.dcmread(path)
+    assert [float(beam.FinalCumulativeMetersetWeight) > 0.0 for beam in head.IonBeamSequence] == [True, False]
+    assert head.IonBeamSequence[1].NumberOfControlPoints == 2
+    with pytest.raises(InputError, match="give nothing"):
+        write(tmp_path, [setting(weights=np.zeros((7, 4)))])
 
 
 def test_no_field_is_refused(tmp_path):
