@@ -24,11 +24,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from dosekit.errors import SettingsWarning
+from dosekit.errors import InputError, SettingsWarning
 
 if TYPE_CHECKING:
-    from numpy.typing import NDArray
+    from collections.abc import Mapping
 
+    from numpy.typing import ArrayLike, NDArray
+
+    from dosekit.effects.mixed_field import EffectModel
     from dosekit.effects.tissues import Tissue
 
 __all__ = ["SMOOTHING", "EffectCurves", "FlatteningProblem", "weighted_curve"]
@@ -56,6 +59,41 @@ class EffectCurves:
     linear: NDArray[np.float64]
     root: NDArray[np.float64]
     tissue: Tissue
+
+    @classmethod
+    def from_components(
+        cls, dose: Mapping[str, ArrayLike], model: EffectModel, let_kev_um: Mapping[str, ArrayLike] | None = None
+    ) -> EffectCurves:
+        """Make effect curves from depth doses by component.
+
+        Parameters
+        ----------
+        dose : mapping of str to array_like, shape (k, n)
+            Depth dose of each step per unit weight, by component.
+        model : EffectModel
+            Effect model with one tissue.
+        let_kev_um : mapping of str to array_like, optional
+            Dose-averaged LET by component, numbers or shape (k, n), keV/um.
+
+        Returns
+        -------
+        EffectCurves
+            Sums of alpha and of sqrt(beta) times dose.
+
+        Examples
+        --------
+        >>> from dosekit.effects.mixed_field import EffectModel
+        >>> curves = EffectCurves.from_components({"primary": [[1.0, 2.0]]}, EffectModel("physical"))
+        >>> curves.linear.round(3).tolist()
+        [[0.3, 0.6]]
+        """
+        from dosekit.effects.mixed_field import effect_sums
+        from dosekit.effects.tissues import Tissue
+
+        if not isinstance(model.tissue, Tissue):
+            raise InputError("a tissue map for depth curves", allowed="one tissue", remedy="choose a tissue by name")
+        linear, root = effect_sums(dose, model.constants(let_kev_um))
+        return cls(linear, root, model.tissue)
 
 
 @dataclass(frozen=True)
