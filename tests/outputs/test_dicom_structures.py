@@ -167,6 +167,7 @@ def test_thinning_stays_within_its_tolerance():
     assert np.hypot(*middles.T).min() >= 49.9
 
 
+@pytest.mark.slow
 def test_a_long_outline_is_thinned_until_it_fits(tmp_path, rng):
     grid = volume((1, 190, 190), (0.51, 0.53, 2.0))
     rough = np.zeros(grid.shape, np.float32)
