@@ -222,7 +222,9 @@ def read_hu(
     headers, strange = read_headers(files, progress=_share(progress, 0, 1))
     with quiet_decoder():
         stack = sort_stack(choose_series(headers, series))
-        tilted, uneven = _judge(stack, resample)
+        first = stack.headers[0]
+        tilt_said = text_of(first.dataset, "GantryDetectorTilt", name=first.name)
+    tilted, uneven = _judge(stack, resample, tilt_said)
     values, padding = read_pixels(stack, progress=_share(progress, 1, 2))
     with quiet_decoder():
         names = DicomHeaders.from_headers(stack.headers)
@@ -260,7 +262,7 @@ def _share(progress: Progress | None, part: int, parts: int) -> Progress | None:
     return tell
 
 
-def _judge(stack: Stack, resample: bool | str) -> tuple[bool, bool]:
+def _judge(stack: Stack, resample: bool | str, tilt_said: str) -> tuple[bool, bool]:
     """Refuse geometry that cannot be used as it is, or say what is to be resampled."""
     skewed = stack.skew_mm() > SKEW_LIMIT_MM
     if skewed and resample not in {True, "tilt"}:
@@ -282,14 +284,13 @@ def _judge(stack: Stack, resample: bool | str) -> tuple[bool, bool]:
         )
     for reason in [f"tilt of {stack.tilt_deg:.1f} degrees"] * skewed + [unevenness] * bool(unevenness):
         warn(f"the CT was resampled linearly: {reason}", GeometryWarning, stacklevel=4)
-    said = text_of(stack.headers[0].dataset, "GantryDetectorTilt", name=stack.headers[0].name)
     try:
-        tilt_said = abs(float(said or 0.0))
+        tilt = abs(float(tilt_said or 0.0))
     except ValueError:
-        tilt_said = 0.0
-    if 0.5 < tilt_said < 45.0 and stack.tilt_deg <= _TILT_SEEN_DEG and not skewed:
+        tilt = 0.0
+    if 0.5 < tilt < 45.0 and stack.tilt_deg <= _TILT_SEEN_DEG and not skewed:
         warn(
-            f"the header names a gantry tilt of {tilt_said:.1f} degrees, the positions of the slices show none; "
+            f"the header names a gantry tilt of {tilt:.1f} degrees, the positions of the slices show none; "
             "the positions are used",
             GeometryWarning,
             stacklevel=4,

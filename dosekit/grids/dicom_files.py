@@ -324,14 +324,15 @@ def _syntax(*, explicit: bool, little: bool) -> Any:
 
 def _check_deflated(path: Path) -> None:
     """Refuse a deflated file that would unfold beyond reason."""
-    from pydicom.filereader import read_file_meta_info
+    from pydicom.filereader import read_dataset
 
-    meta = read_file_meta_info(path)
-    if str(meta.get("TransferSyntaxUID", "")) != _DEFLATED:
-        return
-    begin = 144 + int(meta.get("FileMetaInformationGroupLength", 0))
     with path.open("rb") as stream:
-        stream.seek(begin)
+        stream.seek(132)
+        meta = read_dataset(
+            stream, is_implicit_VR=False, is_little_endian=True, stop_when=lambda tag, _vr, _length: tag.group != 2
+        )
+        if str(meta.get("TransferSyntaxUID", "")) != _DEFLATED:
+            return
         unfolder = zlib.decompressobj(-zlib.MAX_WBITS)
         length = 0
         while chunk := stream.read(1 << 16):
