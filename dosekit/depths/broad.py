@@ -1,8 +1,8 @@
 """Where do neutrons and high-energy photons from reactions in flight leave their energy?
 
 Both reach decimetres; in one dimension their energy is spread by a plane kernel, a mixture over source energies of kernels
-about a plane of emission, pushed forward by the mean cosine g of the emission: the half-spaces ahead and behind share as
-1/2 + 3 g / 4 and 1/2 - 3 g / 4 (emission 1 + 3 g mu).
+about a plane of emission, pushed forward by the mean cosine g of the emission (emission 1 + 3 g mu). For photons the
+half-spaces ahead and behind share as 1/2 + 3 g / 4 and 1/2 - 3 g / 4.
 """
 
 from __future__ import annotations
@@ -13,41 +13,66 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosekit.basis.materials import Material
+from dosekit.capture.products import planar_neutron_kernel
 
 __all__ = ["convolve_planes", "neutron_plane_kernel", "photon_plane_kernel"]
 
 _PHOTON_ABSORPTION_CM2_G = 0.0165
+_NEUTRON_NODES_MEV = (2.0, 5.0, 10.0, 20.0, 35.0, 55.0, 80.0, 118.0)
 
 
 @lru_cache(maxsize=256)
 def neutron_plane_kernel(
-    medium: Material, energy_mev: float, *, bin_mm: float, half_length_mm: float
+    medium: Material, energies_mev: tuple[float, ...], *, bin_mm: float, half_length_mm: float, mean_cosine: float = 0.0
 ) -> NDArray[np.float64]:
-    """Return the share of a neutron's energy left per bin about a plane of isotropic emission.
+    """Return the share of the energy of neutrons left per bin about a plane of emission.
+
+    The kernels of :func:`dosekit.capture.products.planar_neutron_kernel` in water, stretched by density and averaged with
+    the energies as weights.
 
     Parameters
     ----------
     medium : Material
-        Medium.
-    energy_mev : float
-        Neutron energy, MeV.
+        Medium; its density counts.
+    energies_mev : tuple of float
+        Equally likely neutron energies, MeV; rounded to the nodes of the kernels.
     bin_mm : float
         Bin, mm.
     half_length_mm : float
-        Half length, mm.
+        Half length, mm; kernels end at 1 m of water.
+    mean_cosine : float
+        Mean cosine of emission.
 
     Returns
     -------
     ndarray, odd length
         Share of the energy per bin; the centre is the plane.
     """
-    half = int(round(half_length_mm / bin_mm))
-    z = bin_mm * (np.arange(2 * half + 2) - half - 0.5)
-    length = (25.0 + 2.0 * min(energy_mev, 80.0)) / medium.density_g_cm3
-    cumulative = np.where(z > 0.0, 1.0 - 0.5 * np.exp(-np.abs(z) / length), 0.5 * np.exp(-np.abs(z) / length))
-    kernel = 0.8 * np.diff(cumulative)
+    density = medium.density_g_cm3
+    half = min(half_length_mm * density, 1000.0)
+    bias = round(float(np.clip(mean_cosine, -0.33, 0.33)), 1)
+    nodes = np.array(_NEUTRON_NODES_MEV)
+    weight = np.zeros(len(nodes))
+    for energy in energies_mev:
+        place = float(np.interp(energy, nodes, np.arange(len(nodes))))
+        low = min(int(place), len(nodes) - 2)
+        weight[low] += energy * (1.0 - place + low)
+        weight[low + 1] += energy * (place - low)
+    weight /= max(float(np.sum(weight)), 1e-12)
+    kernel = sum(
+        share * _neutron_node(energy, bias, bin_mm * density, half)
+        for energy, share in zip(_NEUTRON_NODES_MEV, weight, strict=True)
+        if share > 0.0
+    )
+    kernel = np.asarray(kernel)
     kernel.setflags(write=False)
     return kernel
+
+
+@lru_cache(maxsize=256)
+def _neutron_node(energy_mev: float, mean_cosine: float, bin_mm: float, half_length_mm: float) -> NDArray[np.float64]:
+    """Return a kernel at a node energy."""
+    return planar_neutron_kernel(energy_mev, mean_cosine, bin_mm=bin_mm, half_length_mm=half_length_mm)
 
 
 @lru_cache(maxsize=64)

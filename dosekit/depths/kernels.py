@@ -105,6 +105,7 @@ def march(  # type: ignore[no-untyped-def]
     forward,
     escaped,
     bremsstrahlung,
+    sideways,
 ):
     """Carry a population down in residual range, with events and angular diffusion.
 
@@ -113,7 +114,8 @@ def march(  # type: ignore[no-untyped-def]
     (materials, nodes, 3) elastic, reaction, decay; elastic_to (materials, nodes) energy after elastic scattering; reemit
     (materials, nodes, nodes) particles of the same kind per reaction; turn_* (materials, nodes, directions, directions);
     turn (nodes, directions, directions) angular diffusion per step or of length 0; radiated (nodes) share of the loss that
-    is bremsstrahlung. Scores: deposit, let_weighted, stops, counts (3, cells) of events, reactions and decays (cells, groups),
+    is bremsstrahlung. Sideways displacement (variance of one axis since emission) is carried along as a sum over particles;
+    sideways (cells) receives it times the deposit. Scores: deposit, let_weighted, stops, counts (3, cells) of events, reactions and decays (cells, groups),
     forward (2, cells) sum of cosine times events, escaped (4): energy and number through the front and the back,
     bremsstrahlung (cells, directions). Returns the energy that elastic scattering gave to nuclei, by cell.
     """
@@ -121,6 +123,8 @@ def march(  # type: ignore[no-untyped-def]
     width = cells + 2 * nodes + 6
     shift = nodes + 3
     state = np.zeros((directions, width))
+    way = np.zeros((directions, width))
+    aside = np.zeros((directions, width))
     recoil = np.zeros(cells)
     happened = np.zeros((2, cells, directions))
     moved = np.zeros((cells, directions))
@@ -150,6 +154,11 @@ def march(  # type: ignore[no-untyped-def]
                 n = state[j, c]
                 if n < 1e-16:
                     continue
+                tilt = 1.0 - cosine[j] * cosine[j]
+                half_way = aside[j, c] + tilt * (0.5 * step_mm * way[j, c] + n * 0.125 * step_mm * step_mm)
+                per_particle = half_way / n
+                aside[j, c] += tilt * (step_mm * way[j, c] + n * 0.5 * step_mm * step_mm)
+                way[j, c] += n * step_mm
                 x = c - shift + step * cosine[j]
                 middle = x + 0.5 * cosine[j]
                 end = x + cosine[j]
@@ -163,6 +172,9 @@ def march(  # type: ignore[no-untyped-def]
                     if hit > 0.0:
                         any_event = True
                         n -= hit
+                        left = 1.0 - chance[m, k]
+                        way[j, c] *= left
+                        aside[j, c] *= left
                         for which in range(2):
                             happened[which, first, j] += hit * parts[m, k, which] * (1.0 - w)
                             happened[which, second, j] += hit * parts[m, k, which] * w
@@ -181,6 +193,8 @@ def march(  # type: ignore[no-untyped-def]
                 deposit[second] += given * w
                 let_weighted[first] += given * let[m, k] * (1.0 - w)
                 let_weighted[second] += given * let[m, k] * w
+                sideways[first] += given * per_particle * (1.0 - w)
+                sideways[second] += given * per_particle * w
                 if brems > 0.0:
                     bremsstrahlung[first, j] += n * loss * brems * (1.0 - w)
                     bremsstrahlung[second, j] += n * loss * brems * w
@@ -188,10 +202,14 @@ def march(  # type: ignore[no-untyped-def]
                     escaped[0] += n * node_energy[k - 1]
                     escaped[1] += n
                     state[j, c] = 0.0
+                    way[j, c] = 0.0
+                    aside[j, c] = 0.0
                 elif end > cells - 0.5:
                     escaped[2] += n * node_energy[k - 1]
                     escaped[3] += n
                     state[j, c] = 0.0
+                    way[j, c] = 0.0
+                    aside[j, c] = 0.0
                 else:
                     state[j, c] = n
         if any_event:
@@ -241,6 +259,8 @@ def march(  # type: ignore[no-untyped-def]
                     if n < 1e-16:
                         continue
                     state[j, c] = n * stay
+                    way[j, c] *= stay
+                    aside[j, c] *= stay
                     x = c - shift + (step + 1) * cosine[j]
                     low = int(math.floor(x))
                     w = x - low

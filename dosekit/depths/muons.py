@@ -99,7 +99,7 @@ def muon_capture_products(caught: NDArray[np.float64], grid: CoarseGrid) -> Muon
     number = float(np.sum(caught))
     half = grid.step_mm * (grid.cells + 1)
     neutron = convolve_planes(
-        caught * _NEUTRON, neutron_plane_kernel(grid.reference, 5.0, bin_mm=grid.step_mm, half_length_mm=half)
+        caught * _NEUTRON, neutron_plane_kernel(grid.reference, (2.0, 5.0, 12.0), bin_mm=grid.step_mm, half_length_mm=half)
     )
     photon = convolve_planes(
         caught * _PHOTON, photon_plane_kernel(grid.reference, bin_mm=grid.step_mm, half_length_mm=half)

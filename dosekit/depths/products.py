@@ -22,7 +22,7 @@ from dosekit.depths.angles import COSINES, WEIGHTS, diffusion_matrices
 from dosekit.depths.broad import convolve_planes, neutron_plane_kernel, photon_plane_kernel
 from dosekit.depths.coarse import CoarseGrid
 from dosekit.depths.kernels import gather_products, march, stream_photons
-from dosekit.depths.tables import GROUP_ENERGY_MEV, node_spread, product_spread
+from dosekit.depths.tables import GROUP_ENERGY_MEV, beta_samples, node_spread, product_spread
 
 __all__ = [
     "Carried",
@@ -52,6 +52,7 @@ class Carried:
         self.let_weighted = np.zeros(cells)
         self.stops = np.zeros(cells)
         self.escaped = np.zeros(4)
+        self.sideways = np.zeros(cells)
 
     def add(self, other: Carried) -> None:
         """Add the scores of another population.
@@ -65,6 +66,7 @@ class Carried:
         self.let_weighted += other.let_weighted
         self.stops += other.stops
         self.escaped += other.escaped
+        self.sideways += other.sideways
 
 
 def carry(
@@ -111,7 +113,7 @@ def _march(
         np.zeros((0, 0, 3)), _NO_EVENTS, np.zeros((0, 0, 0)), np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0, 0)), turn, radiated,
         np.zeros(nodes, dtype=np.int64), np.zeros(nodes), scores.deposit, scores.let_weighted, scores.stops,
         np.zeros((3, grid.cells)), np.zeros((grid.cells, 2)), np.zeros((grid.cells, 2)), np.zeros((2, grid.cells)),
-        scores.escaped, brems,
+        scores.escaped, brems, scores.sideways,
     )  # fmt: skip
 
 
@@ -242,12 +244,26 @@ def neutral_products(
         middle = float(np.sum(events @ GROUP_ENERGY_MEV) / np.sum(events))
         forward = float(table.at(table.mean_cosine[species], middle))
         if species == "neutron":
-            energy = float(table.at(table.rms_energy_mev[species], middle))
-            kernel = neutron_plane_kernel(base, round(energy / 5.0) * 5.0, bin_mm=grid.step_mm, half_length_mm=half)
+            energies = _neutron_energies(projectile, grid.materials[0], yields, float(round(middle / 20.0) * 20.0))
+            kernel = neutron_plane_kernel(
+                base, energies, bin_mm=grid.step_mm, half_length_mm=half, mean_cosine=forward
+            )
+            deposit += convolve_planes(source, kernel)
         else:
             kernel = photon_plane_kernel(base, bin_mm=grid.step_mm, half_length_mm=half)
-        deposit += convolve_planes(source, kernel, forward=forward)
+            deposit += convolve_planes(source, kernel, forward=forward)
     return deposit, emitted
+
+
+@lru_cache(maxsize=256)
+def _neutron_energies(projectile: str, stuff: Material, yields: str, middle_mev: float) -> tuple[float, ...]:
+    """Return equally likely neutron energies of reactions at a projectile energy, MeV."""
+    table = reactions(projectile, stuff, yields=yields)
+    at = np.array([max(middle_mev, 5.0)])
+    mean = table.at(table.mean_energy_mev["neutron"], at)
+    rms = table.at(table.rms_energy_mev["neutron"], at)
+    top = at + (130.0 if projectile.startswith("pi") else 0.0)
+    return tuple(float(value) for value in beta_samples(mean, rms, top, samples=12)[0])
 
 
 @lru_cache(maxsize=64)

@@ -62,6 +62,9 @@ class Solution:
         Reactions by channel, all generations, and ``decay`` (in flight).
     decays_at_rest : ndarray, shape (bins,)
         Decays of stopped particles.
+    extra_sigma_mm : dict of str to ndarray, shape (bins,)
+        Standard deviation of one transverse axis since the particle left the beam, mm: scattered, in_flight_charged,
+        decay.
     ledger : dict of str to float
         Energy, MeV: in, escaped, neutrino, binding, electron_rest and, for negative pions, star (rest energy given to
         captures).
@@ -76,6 +79,7 @@ class Solution:
     channels: dict[str, NDArray[np.float64]] = field(repr=False)
     decays_at_rest: NDArray[np.float64] = field(repr=False)
     ledger: dict[str, float] = field(repr=False)
+    extra_sigma_mm: dict[str, NDArray[np.float64]] = field(repr=False)
 
 
 def solve(
@@ -174,8 +178,18 @@ def _solve(
     }
     return Solution(
         species, core, grid, deposit, let, {"core": core.stops, "scattered": to_bins(scattered.carried.stops)}, channels,
-        to_bins(rest.at_rest), ledger,
+        to_bins(rest.at_rest), ledger, {name: _width(part, grid) for name, part in parts.items()},
     )  # fmt: skip
+
+
+def _width(part: Carried, grid: CoarseGrid) -> NDArray[np.float64]:
+    """Return the standard deviation of one transverse axis in fine bins, mm."""
+    variance = part.sideways / np.where(part.deposit > 1e-15, part.deposit, 1.0)
+    known = np.flatnonzero(part.deposit > 1e-9 * max(float(np.max(part.deposit)), 1e-300))
+    if len(known) == 0:
+        return np.zeros(len(grid.place_of_edge) - 1)
+    middle = 0.5 * (grid.place_of_edge[1:] + grid.place_of_edge[:-1]) - 0.5
+    return np.asarray(np.sqrt(np.maximum(np.interp(middle, known, variance[known]), 0.0)))
 
 
 class _Scattered:
@@ -219,6 +233,7 @@ class _Scattered:
             table.reemit, table.turn_elastic, table.turn_reemit, np.zeros((0, 0, 0)), np.zeros(0), table.group_low,
             table.group_weight, self.carried.deposit, self.carried.let_weighted, self.carried.stops, self.counts,
             self.later_reactions, self.later_decays, self.forward, self.carried.escaped, np.zeros((0, 0)),
+            self.carried.sideways,
         )  # fmt: skip
         return result
 
@@ -368,5 +383,5 @@ def _electrons(
         deposit[name], let[name] = empty, empty
     return Solution(
         species, core, grid, deposit, let, {"core": empty, "scattered": grid.to_bins(run.stops)},
-        {name: empty for name in (*CHANNELS, "decay")}, empty, ledger,
+        {name: empty for name in (*CHANNELS, "decay")}, empty, ledger, {"scattered": _width(run, grid)},
     )  # fmt: skip
