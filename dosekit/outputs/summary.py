@@ -38,7 +38,13 @@ class RunSummary:
     quantity : str
         What was made flat, e.g. ``"dose"`` or ``"effect-weighted dose"``.
     flatness_percent : float
-        Largest deviation from the mean inside the target interval.
+        Largest deviation from the mean along the interval below, the worst of all fields.
+    flat_field : str
+        The field it was found in.
+    flat_from_mm, flat_to_mm : float
+        The interval it was judged over (water-equivalent depth): the target's less one step at each end.
+    target_d98_percent, target_d2_percent : float
+        Dose that 98 % and 2 % of the target receive, in % of the prescription.
     peak_depth_mm : float
         Water-equivalent depth of the deepest step's peak; with several fields, of the first.
     peak_to_entrance : float
@@ -79,6 +85,11 @@ class RunSummary:
     warnings: tuple[str, ...] = ()
     run_hash: str = ""
     unit: str = "Gy"
+    flat_field: str = ""
+    flat_from_mm: float = float("nan")
+    flat_to_mm: float = float("nan")
+    target_d98_percent: float = float("nan")
+    target_d2_percent: float = float("nan")
 
 
 def console_line(summary: RunSummary) -> str:
@@ -94,8 +105,14 @@ def console_line(summary: RunSummary) -> str:
     str
         One line without a newline.
     """
+    where = ""
+    if np.isfinite(summary.flat_from_mm):
+        where = f" from {summary.flat_from_mm:.0f} to {summary.flat_to_mm:.0f} mm water (field '{summary.flat_field}')"
+    spread = ""
+    if np.isfinite(summary.target_d98_percent):
+        spread = f"D98 {summary.target_d98_percent:.0f} % and D2 {summary.target_d2_percent:.0f} % in {summary.target}, "
     return (
-        f"{summary.quantity} in {summary.target} flat to ±{summary.flatness_percent:.1f} %, "
+        f"{summary.quantity} flat to ±{summary.flatness_percent:.1f} %{where}, {spread}"
         f"peak at {summary.peak_depth_mm:.0f} mm water, "
         f"{100.0 * summary.star_share:.0f} % of the target dose from stars. {BANNER}"
     )

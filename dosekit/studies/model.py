@@ -25,6 +25,7 @@ __all__ = [
     "MachineSection",
     "OrganSection",
     "OutputsSection",
+    "RobustSection",
     "SphereSection",
     "StarsSection",
     "Study",
@@ -139,6 +140,14 @@ class FieldSection(_Section):
     beam: BeamSection | None = None
 
 
+class RobustSection(_Section):
+    """Errors that weights found in three dimensions should stand: of range and of position."""
+
+    range_percent: float = Field(default=3.0, ge=0, le=20)
+    position_mm: float = Field(default=3.0, ge=0, le=20)
+    join: Literal["worst", "expectation"] = "worst"
+
+
 class GoalSection(_Section):
     """What the settings are to reach."""
 
@@ -147,6 +156,9 @@ class GoalSection(_Section):
     quantity: Literal["physical", "effect"] = "physical"
     weights: Literal["range_steps", "each_field", "all_fields"] = "range_steps"
     iterations: int = Field(default=60, ge=1, le=2000)
+    surround_mm: float = Field(default=10.0, ge=0, le=100)
+    surround_weight: float = Field(default=0.2, ge=0, le=100)
+    robust: RobustSection | None = None
 
 
 class EffectSection(_Section):
@@ -178,7 +190,7 @@ class OutputsSection(_Section):
     dose_to: Literal["medium", "water"] = "medium"
     figures: bool = True
     dicom: bool = True
-    dicom_volume: bool = False
+    dicom_volume: bool = True
     secondary_capture: bool = False
     anonymize: bool = False
     report: bool = True

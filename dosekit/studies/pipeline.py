@@ -1,0 +1,352 @@
+"""Run a whole study: volume, fields, range steps, weights, fold, effect, measures, outputs.
+
+:func:`compute` does everything in memory; :func:`run` writes the folder as well.
+"""
+
+from __future__ import annotations
+
+import warnings
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from dosekit.basis.components import COMPONENTS, STAR_COMPONENTS
+from dosekit.errors import DosekitWarning, ReachError, StudyError
+from dosekit.studies.model import Study, read_study
+from dosekit.studies.planning import PlannedField, effect_model_of, plan_field
+from dosekit.studies.result import Result
+from dosekit.studies.volume import input_files, load_volume
+from dosekit.studies.weighing import search_weights
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from dosekit.effects.histograms import VolumeHistogram
+    from dosekit.grids.voxels import VoxelGrid
+    from dosekit.outputs.record import InputFile
+    from dosekit.outputs.summary import RunSummary
+
+__all__ = ["SOURCES", "compute", "run"]
+
+Progress = Callable[[str, float], None]
+
+SOURCES: tuple[str, ...] = (
+    "ICRU Report 90 (2016) and ICRU Report 49 (1993): mean excitation energies and stopping",
+    "Bohr 1915 with relativistic correction: straggling",
+    "Gottschalk, Med. Phys. 37 (2010) 352: scattering power",
+    "Barashenkov, JINR P2-90-158 (1990): pion cross sections",
+    "Madey et al., Phys. Rev. C 25 (1982) 3050: neutrons from stopped pions",
+    "evaluated star set, closed to 139.57 MeV; not a measurement (see its table)",
+    "Ahnesjo, Med. Phys. 16 (1989) 577: collapsed cones",
+    "IEC 61217 (2011): angles",
+    "ICRU Report 83 (2010): volume measures",
+)
+
+
+def run(
+    study: str | Path,
+    out: str | Path,
+    *,
+    anonymize: bool | None = None,
+    progress: Progress | None = None,
+) -> Result:
+    """Run a study and write its folder of results, complete or not at all.
+
+    Parameters
+    ----------
+    study : str or Path
+        The study file.
+    out : str or Path
+        Folder for the results; must not exist, be empty, or hold an earlier run as it was left.
+    anonymize : bool, optional
+        Replace patient identifiers in DICOM objects; as the study says if not given.
+    progress : callable, optional
+        Told what is being done and how far it is, 0 to 1.
+
+    Returns
+    -------
+    Result
+        All that was found.
+
+    Raises
+    ------
+    InputError
+        If the study or what it names cannot be used.
+    OutputError
+        If the results cannot be written.
+    """
+    from dosekit.outputs.folder import output_folder
+    from dosekit.studies.writing import write_results
+
+    said, text = read_study(study)
+    if anonymize is not None:
+        said = said.model_copy(update={"outputs": said.outputs.model_copy(update={"anonymize": anonymize})})
+    with output_folder(out) as folder:
+        result = compute(said, base=Path(study).resolve().parent, progress=progress)
+        write_results(result, folder, study_text=text, progress=progress)
+    return result
+
+
+def compute(study: Study, *, base: str | Path = ".", progress: Progress | None = None) -> Result:
+    """Do everything a study asks for, in memory.
+
+    Parameters
+    ----------
+    study : Study
+        The validated study.
+    base : str or Path
+        Folder that paths in the study are relative to.
+    progress : callable, optional
+        Told what is being done.
+
+    Returns
+    -------
+    Result
+        All that was found.
+    """
+    tell = progress or (lambda what, fraction: None)  # noqa: ARG005
+    with warnings.catch_warnings(record=True) as caught:
+        warnings.simplefilter("ignore")
+        warnings.simplefilter("always", DosekitWarning)
+        result = _compute(study, Path(base), tell)
+    told = tuple(dict.fromkeys(str(item.message) for item in caught if issubclass(item.category, DosekitWarning)))
+    for item in caught:
+        warnings.warn_explicit(item.message, item.category, item.filename, item.lineno)
+    return replace(result, warnings=told, summary=replace(result.summary, warnings=told))
+
+
+def _compute(study: Study, base: Path, tell: Progress) -> Result:
+    """Compute, with warnings being collected outside."""
+    tell("volume", 0.0)
+    grid, target = load_volume(study, base, progress=tell)
+    inputs = _hashed_inputs(study, base)
+    tell("volume", 1.0)
+    planned = [plan_field(study, section, grid, target, progress=tell) for section in study.field]
+    shares = 1.0 / len(planned)
+    planned = [replace(plan, field=plan.field.replace(weights=plan.field.weights * shares)) for plan in planned]
+    searches: tuple[Any, ...] = ()
+    if study.goal.weights != "range_steps":
+        planned, searches = search_weights(study, grid, target, planned, progress=tell)
+    per_field, total = _folded(study, grid, planned, tell)
+    coverage = grid.structure(target)
+    model = effect_model_of(study, planned[0].field.beam.particle)
+    scale = _prescription_scale(study, total, coverage, model)
+    planned = [replace(plan, field=plan.field.replace(weights=plan.field.weights * scale)) for plan in planned]
+    per_field = {name: _scaled(dataset, scale) for name, dataset in per_field.items()}
+    total = _scaled(total, scale)
+    tell("effect and measures", 0.0)
+    effect = _effect_dose(study, total, model)
+    physical = np.asarray(total["dose"].sum("component", dtype=np.float64), dtype=np.float32)
+    names = _structures(study, grid, target)
+    histograms = _histograms(grid, physical, names)
+    effect_histograms = _histograms(grid, effect, names)
+    tell("effect and measures", 1.0)
+    run_hash = _run_hash(study, inputs)
+    summary, line = _summary(study, grid, target, planned, total, histograms, effect_histograms, run_hash)
+    return Result(
+        study=study,
+        grid=grid,
+        target=target,
+        planned=tuple(planned),
+        per_field=per_field,
+        dose=total,
+        effect_dose_gy=effect,
+        histograms=histograms,
+        effect_histograms=effect_histograms,
+        summary=summary,
+        inputs=inputs,
+        run_hash=run_hash,
+        line=line,
+        scale=scale,
+        searches=searches,
+    )
+
+
+def _folded(
+    study: Study, grid: VoxelGrid, planned: Sequence[PlannedField], tell: Progress
+) -> tuple[dict[str, xr.Dataset], xr.Dataset]:
+    """Fold each field and add them up."""
+    from dosekit.maps.fold import fold
+
+    per_field: dict[str, xr.Dataset] = {}
+    for count, plan in enumerate(planned):
+        tell("fold", count / len(planned))
+        per_field[plan.field.name] = fold(
+            plan.field,
+            grid,
+            yields=study.stars.yields,
+            star_scale=study.stars.scale,
+            dose_to=study.outputs.dose_to,
+            libraries={plan.field.name: plan.library},
+        )
+    tell("fold", 1.0)
+    first, *rest = per_field.values()
+    total = first.copy(deep=True)
+    for dataset in rest:
+        for name in total.data_vars:
+            total[name].values += dataset[name].values
+    total.attrs["fields"] = ", ".join(per_field)
+    total.attrs["particles"] = float(sum(plan.field.particles for plan in planned))
+    return per_field, total
+
+
+def _scaled(dataset: xr.Dataset, scale: float) -> xr.Dataset:
+    """Return dose and stops multiplied by one number."""
+    changed = dataset.copy(deep=True)
+    for name in changed.data_vars:
+        changed[name].values *= np.float32(scale)
+    changed.attrs["particles"] = float(dataset.attrs.get("particles", 0.0)) * scale
+    return changed
+
+
+def _mean(values: NDArray[Any], coverage: NDArray[Any]) -> float:
+    """Return the mean over a structure."""
+    inside = coverage > 0.0
+    return float(np.average(np.asarray(values)[inside].astype(np.float64), weights=coverage[inside]))
+
+
+def _prescription_scale(study: Study, total: xr.Dataset, coverage: NDArray[Any], model: Any) -> float:
+    """Return the factor that brings the mean target dose to the prescription."""
+    inside = coverage > 0.0
+    weights = coverage[inside].astype(np.float64)
+    parts = {name: total["dose"].values[row][inside].astype(np.float64) for row, name in enumerate(COMPONENTS)}
+    factor = 1.0
+    for _ in range(40):
+        scaled = {name: factor * part for name, part in parts.items()}
+        if study.goal.quantity == "effect":
+            values = model.weighted_dose_gy(scaled, fractions=study.goal.fractions)
+        else:
+            values = np.sum(list(scaled.values()), axis=0)
+        mean = float(np.average(values, weights=weights))
+        if not mean > 0.0:
+            raise ReachError("the fields give no dose in the target", remedy="check angles, isocentre and momentum")
+        if abs(mean / study.goal.dose_gy - 1.0) < 1e-9:
+            break
+        factor *= study.goal.dose_gy / mean
+    return factor
+
+
+def _effect_dose(study: Study, total: xr.Dataset, model: Any) -> NDArray[np.float32]:
+    """Return the effect-weighted dose per fraction."""
+    if model.needs_let:
+        raise StudyError(
+            f"effect model {study.effect.model!r} needs maps of LET",
+            allowed="'constant' or 'physical' in a study file",
+            remedy="set effect.model = 'constant'; other models are there in Python (dosekit.effects)",
+        )
+    parts = {name: total["dose"].values[row] for row, name in enumerate(COMPONENTS)}
+    return np.asarray(model.weighted_dose_gy(parts, fractions=study.goal.fractions), dtype=np.float32)
+
+
+def _structures(study: Study, grid: VoxelGrid, target: str) -> list[str]:
+    """Return the structures to report on: target, organs of the study, then the phantom's or CT's own."""
+    named = [target, *(grid.structure_name(organ.structure) for organ in study.organ)]
+    others = [name for name in grid.structures if grid.role(name) in ("organ_at_risk", "body")]
+    return list(dict.fromkeys([*named, *others]))
+
+
+def _histograms(grid: VoxelGrid, dose_gy: NDArray[Any], names: Sequence[str]) -> dict[str, VolumeHistogram]:
+    """Return volume histograms of structures that have a volume in the grid."""
+    from dosekit.effects.histograms import volume_histogram
+
+    voxel_cm3 = float(np.prod(grid.spacing_mm)) * 1e-3
+    found: dict[str, VolumeHistogram] = {}
+    for name in names:
+        coverage = grid.structure(name)
+        if coverage.any():
+            found[name] = volume_histogram(dose_gy, coverage, voxel_cm3=voxel_cm3)
+    return found
+
+
+def _hashed_inputs(study: Study, base: Path) -> tuple[InputFile, ...]:
+    """Hash what the study reads."""
+    from dosekit.outputs.record import hash_inputs
+
+    said = study.volume
+    roles: list[tuple[str, list[Path]]] = []
+    for role, key in (
+        ("phantom", "phantom"),
+        ("ct", "ct"),
+        ("structures", "structures"),
+        ("calibration", "calibration"),
+    ):
+        if getattr(said, key) is not None:
+            only = said.model_copy(
+                update={other: None for other in ("phantom", "ct", "structures", "calibration") if other != key}
+            )
+            roles.append((role, input_files(study.model_copy(update={"volume": only}), base)))
+    return tuple(hash_inputs(role, files) for role, files in roles)
+
+
+def _run_hash(study: Study, inputs: Sequence[InputFile]) -> str:
+    """Hash the study without paths, its inputs and the version."""
+    from dosekit.outputs.record import run_hash
+
+    plain = study.model_dump(mode="json")
+    for key in ("phantom", "ct", "structures", "calibration"):
+        plain["volume"][key] = plain["volume"][key] is not None
+    return run_hash(plain, inputs=inputs)
+
+
+def _summary(
+    study: Study,
+    grid: VoxelGrid,
+    target: str,
+    planned: Sequence[PlannedField],
+    total: xr.Dataset,
+    histograms: Mapping[str, VolumeHistogram],
+    effect_histograms: Mapping[str, VolumeHistogram],
+    run_hash: str,
+) -> tuple[RunSummary, str]:
+    """Say what a reader wants to know first."""
+    from dosekit.outputs.marks import curve_marks
+    from dosekit.outputs.summary import RunSummary, console_line, mean_doses_gy, star_share
+
+    effective = study.goal.quantity == "effect"
+    parts = mean_doses_gy(total, grid.structure(target))
+    share = star_share(parts)
+    first = planned[0]
+    deepest = curve_marks(first.library.depth_mm, first.curves_gy[int(np.argmax(first.residual_range_mm))])
+    worst = max(planned, key=lambda plan: plan.settings.flatness)
+    chosen = (effect_histograms if effective else histograms)[target]
+    d98, d2 = chosen.dose_at_volume_gy(98.0), chosen.dose_at_volume_gy(2.0)
+    seconds = sum(plan.field.particles for plan in planned) / study.machine.particles_per_s
+    summary = RunSummary(
+        title=study.title,
+        target=target,
+        quantity="effect-weighted dose" if effective else "physical dose",
+        flatness_percent=100.0 * worst.settings.flatness,
+        flat_from_mm=worst.settings.measures.judged_mm[0],
+        flat_to_mm=worst.settings.measures.judged_mm[1],
+        flat_field=worst.field.name,
+        target_d98_percent=100.0 * d98 / study.goal.dose_gy,
+        target_d2_percent=100.0 * d2 / study.goal.dose_gy,
+        peak_depth_mm=deepest.peak_depth_mm,
+        peak_to_entrance=first.settings.measures.peak_to_entrance,
+        star_share=share,
+        mean_dose_gy=chosen.mean_gy,
+        beam_time_s=seconds,
+        component_doses_gy=parts,
+        measures={name: histogram.measures() for name, histogram in histograms.items()},
+        energy_balance=_energy_balance(total, grid),
+        sources=SOURCES,
+        run_hash=run_hash,
+    )
+    return summary, console_line(summary)
+
+
+def _energy_balance(total: xr.Dataset, grid: VoxelGrid) -> dict[str, float]:
+    """Return the energy deposited inside the volume by component, J, and what stars deposited of what they had."""
+    mass_kg = grid.density_g_cm3.astype(np.float64) * float(np.prod(grid.spacing_mm)) * 1e-6
+    inside = {
+        name: float(np.sum(total["dose"].values[row] * mass_kg, dtype=np.float64))
+        for row, name in enumerate(COMPONENTS)
+    }
+    balance = {f"{name}_inside_j": value for name, value in inside.items()}
+    balance["stars_inside_j"] = sum(inside[name] for name in STAR_COMPONENTS)
+    balance["total_inside_j"] = sum(inside.values())
+    return balance
