@@ -94,3 +94,70 @@ def photon_dose_of_equal_effect(doses, alphas, betas, *, alpha, beta, fractions)
         else:
             high = middle
     return fractions * 0.5 * (low + high)
+
+
+# ---------------------------------------------------------------- grids: contours and lattices
+
+
+def even_odd_mask(polygons, origin, spacing, shape):
+    """Which pixel centres lie inside polygons (x, y) by counting the edges to their left; shape is (rows, columns)."""
+    import numpy as np
+
+    mask = np.zeros(shape, dtype=bool)
+    for row, column in np.ndindex(*shape):
+        x, y = origin[0] + column * spacing[0], origin[1] + row * spacing[1]
+        crossings = 0
+        for polygon in polygons:
+            for (x1, y1), (x2, y2) in zip(polygon, [*polygon[1:], polygon[0]], strict=True):
+                if (y1 <= y) != (y2 <= y) and x1 + (y - y1) * (x2 - x1) / (y2 - y1) <= x:
+                    crossings += 1
+        mask[row, column] = crossings % 2 == 1
+    return mask
+
+
+def averaged_by_overlap(values, spacing, new_spacing):
+    """Average a volume over larger or smaller voxels with the same lower corner; what hangs over counts as nothing."""
+    import numpy as np
+
+    counts = [
+        max(1, int(np.ceil(n * s / t - 1e-6))) for n, s, t in zip(values.shape, spacing, new_spacing, strict=True)
+    ]
+    result = np.zeros(counts)
+    for new in np.ndindex(*counts):
+        for old in np.ndindex(*values.shape):
+            share = 1.0
+            for a in range(3):
+                low = max(new[a] * new_spacing[a], old[a] * spacing[a])
+                high = min((new[a] + 1) * new_spacing[a], (old[a] + 1) * spacing[a])
+                share *= max(0.0, high - low) / new_spacing[a]
+            result[new] += share * values[old]
+    return result
+
+
+def largest_share(index, spacing, new_spacing, count):
+    """Material with the largest share of each new voxel, the lowest number among equals."""
+    import numpy as np
+
+    shares = [averaged_by_overlap((index == number).astype(float), spacing, new_spacing) for number in range(count)]
+    return np.argmax(np.round(shares, 9), axis=0)
+
+
+def share_inside(inside, origin, spacing, shape, rays):
+    """Share of each voxel [z, y, x] where inside(x, y, z) holds, by trying rays ** 3 points in each voxel."""
+    import numpy as np
+
+    result = np.zeros(shape)
+    steps = (np.arange(rays) + 0.5) / rays - 0.5
+    for z, y, x in np.ndindex(*shape):
+        found = 0
+        for a in steps:
+            for b in steps:
+                for c in steps:
+                    point = (
+                        origin[0] + (x + c) * spacing[0],
+                        origin[1] + (y + b) * spacing[1],
+                        origin[2] + (z + a) * spacing[2],
+                    )
+                    found += bool(inside(*point))
+        result[z, y, x] = found / rays**3
+    return result
