@@ -188,7 +188,7 @@ def comparison_figure(
         bar = parts[1].colorbar(ScalarMappable(norm, dose_colours()), ax=list(panels), shrink=0.9, pad=0.012, aspect=22)
         bar.set_label(f"% of {prescribed_gy:.3g} {unit}")
     histogram_axes = parts[2].subplots()
-    _draw_histograms(histogram_axes, results, target=target, label=f"{quantity} ({unit})")
+    _draw_histograms(histogram_axes, results, target=target, order=list(grid.structures), label=f"{quantity} ({unit})")
     letter_panel(histogram_axes, next(letters), "volume histograms")
     _draw_table(parts[3].subplots(), results, rows)
     foot_legend(figure, depth, ncols=4)
@@ -245,17 +245,19 @@ def _shade(axes: Axes, interval_mm: tuple[float, float] | None, *, label: str = 
         axes.axvspan(*interval_mm, color="#DDCC77", alpha=0.35, linewidth=0.0, label=label)
 
 
-def _draw_histograms(axes: Axes, results: Sequence[ParticleResult], *, target: str, label: str) -> None:
+def _draw_histograms(
+    axes: Axes, results: Sequence[ParticleResult], *, target: str, order: Sequence[str], label: str
+) -> None:
     names = list(dict.fromkeys(name for result in results for name in result.histograms))
     for i, result in enumerate(results):
         if result.histograms:
             ordered = {name: result.histograms[name] for name in names if name in result.histograms}
             dash = particle_style(result.particle, index=i)["linestyle"]
-            draw_histograms(axes, ordered, target=target, dash=dash, labels=False)
-    handles = [
-        Line2D([], [], **structure_style(name, index=k, target=target) | {"linestyle": "-", "label": name})  # type: ignore[arg-type]
-        for k, name in enumerate(names)
-    ]
+            draw_histograms(axes, ordered, target=target, order=order, dash=dash, labels=False)
+    handles = []
+    for name in names:
+        solid: dict[str, Any] = structure_style(name, index=_place(name, order), target=target) | {"linestyle": "-"}
+        handles.append(Line2D([], [], label=name, **solid))
     handles += [
         Line2D([], [], color=INK, linewidth=1.0, linestyle=style["linestyle"], label=str(style["label"]))
         for style in (_line(result, i) for i, result in enumerate(results) if result.histograms)
@@ -264,6 +266,10 @@ def _draw_histograms(axes: Axes, results: Sequence[ParticleResult], *, target: s
     axes.set_ylabel("volume receiving at least this (%)")
     if handles:
         axes.legend(handles=handles, loc="upper left", bbox_to_anchor=(1.01, 1.0))
+
+
+def _place(name: str, order: Sequence[str]) -> int:
+    return list(order).index(name) if name in order else len(order)
 
 
 def _draw_table(axes: Axes, results: Sequence[ParticleResult], rows: Sequence[str]) -> None:

@@ -34,6 +34,7 @@ __all__ = ["depth_curve_figure", "let_figure"]
 
 _SMALLEST_SHOWN = 1e-4
 _LOG_DECADES = 4.0
+_LAYER_HEADROOM = 1.4
 
 
 @styled
@@ -69,6 +70,8 @@ def depth_curve_figure(curve: xr.Dataset, *, title: str = "", quantity: str = "e
     _draw_stack(stacked, depth_mm, parts, total)
     _draw_marks(stacked, marks, right_mm=float(depth_mm[-1]))
     _draw_lines(logged, depth_mm, parts, total)
+    _draw_layers(stacked, curve, depth_mm, named=True)
+    _draw_layers(logged, curve, depth_mm, named=False)
     for axes in (stacked, logged):
         axes.set_xlabel("depth (mm)")
         axes.set_xlim(0.0, float(depth_mm[-1]))
@@ -176,6 +179,37 @@ def _draw_lines(
     axes.set_ylim(top * 10.0**-_LOG_DECADES, 2.0 * top)
 
 
+def _draw_layers(axes: Axes, curve: xr.Dataset, depth_mm: NDArray[np.float64], *, named: bool) -> None:
+    """Rule off the layers of a stack, where the curve knows them, and name them."""
+    if "layer" not in curve.coords:
+        return
+    names = [str(name) for name in curve["layer"].values]
+    starts = [0, *(i for i in range(1, len(names)) if names[i] != names[i - 1]), len(names)]
+    if len(starts) < 3:
+        return
+    half = 0.5 * float(depth_mm[1] - depth_mm[0])
+    edges = [float(depth_mm[i]) - half for i in starts[:-1]] + [float(depth_mm[-1]) + half]
+    for edge in edges[1:-1]:
+        axes.axvline(edge, color=RULE, linewidth=0.5, gid="layer edge")
+    if named:
+        # Room for the names above everything that is drawn.
+        axes.set_ylim(0.0, _LAYER_HEADROOM * axes.get_ylim()[1])
+        for start, low, high in zip(starts[:-1], edges[:-1], edges[1:], strict=True):
+            axes.annotate(
+                names[start].replace("_", " "),
+                (0.5 * (low + high), 1.0),
+                xycoords=("data", "axes fraction"),
+                xytext=(0, -2),
+                textcoords="offset points",
+                ha="center",
+                va="top",
+                rotation=90.0,
+                fontsize=6.0,
+                path_effects=halo(),
+                gid="layer",
+            )
+
+
 def _draw_marks(axes: Axes, marks: CurveMarks, *, right_mm: float) -> None:
     axes.plot([marks.peak_depth_mm], [marks.peak], marker="o", color=INK, linestyle="none", markersize=3.0)
     note = f"peak {marks.peak_depth_mm:.0f} mm\npeak / entrance {marks.peak_to_entrance:.2f}"
@@ -191,7 +225,7 @@ def _draw_marks(axes: Axes, marks: CurveMarks, *, right_mm: float) -> None:
         path_effects=halo(),
     )
     if np.isfinite(marks.distal_80_mm):
-        axes.axvline(marks.distal_80_mm, ymax=0.8 / 1.22, color=RULE, linewidth=0.6, linestyle=(0, (2, 2)))
+        axes.vlines(marks.distal_80_mm, 0.0, 0.8 * marks.peak, color=RULE, linewidth=0.6, linestyle=(0, (2, 2)))
         axes.annotate(
             f"80 % at {marks.distal_80_mm:.0f} mm",
             (marks.distal_80_mm, 0.8 * marks.peak),

@@ -19,7 +19,7 @@ from dosekit.outputs.style import (
 )
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Mapping, Sequence
 
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
@@ -27,7 +27,10 @@ if TYPE_CHECKING:
 __all__ = ["Histogram", "draw_histograms", "histogram_figure", "structure_style"]
 
 Histogram = tuple[ArrayLike, ArrayLike]
-"""(dose in Gy, increasing; fraction of the volume that receives at least this dose, 1 to 0)."""
+"""(dose in Gy, increasing; fraction of the volume that receives at least this dose, 1 to 0).
+
+`dosekit.effects.histograms.VolumeHistogram.curve` gives such a pair.
+"""
 
 
 @styled
@@ -35,6 +38,7 @@ def histogram_figure(
     histograms: Mapping[str, Histogram],
     *,
     target: str | None = None,
+    order: Sequence[str] | None = None,
     prescribed_gy: float | None = None,
     quantity: str = "dose",
     unit: str = "Gy",
@@ -48,6 +52,8 @@ def histogram_figure(
         One pair for each structure.
     target : str, optional
         Structure drawn in black and heavier.
+    order : sequence of str, optional
+        All structures of the volume, so that each keeps the colour it has in slices.
     prescribed_gy : float, optional
         Dose marked with a rule.
     quantity, unit : str
@@ -69,7 +75,7 @@ def histogram_figure(
         alt=f"Volume histograms of {quantity} for {', '.join(checked)}" + (f", {title}." if title else "."),
     )
     axes = figure.subplots()
-    draw_histograms(axes, checked, target=target)
+    draw_histograms(axes, checked, target=target, order=order)
     if prescribed_gy is not None:
         axes.axvline(prescribed_gy, color=RULE, linewidth=0.7, linestyle=(0, (2, 2)), label="prescribed")
     axes.set_xlabel(f"{quantity} ({unit})")
@@ -85,6 +91,7 @@ def draw_histograms(
     histograms: Mapping[str, Histogram],
     *,
     target: str | None = None,
+    order: Sequence[str] | None = None,
     dash: object = None,
     labels: bool = True,
 ) -> None:
@@ -98,15 +105,19 @@ def draw_histograms(
         One pair for each structure.
     target : str, optional
         Structure drawn in black and heavier.
+    order : sequence of str, optional
+        All structures of the volume, so that each keeps the colour it has in slices.
     dash : object, optional
         One dash pattern for all lines, instead of one for each structure.
     labels : bool
         Whether lines enter a legend.
     """
     top = 0.0
-    for i, (name, pair) in enumerate(histograms.items()):
+    places = list(order) if order is not None else list(histograms)
+    for name, pair in histograms.items():
         dose_gy, fraction = _checked(name, pair)
-        style = structure_style(name, index=i, target=target)
+        place = places.index(name) if name in places else len(places)
+        style = structure_style(name, index=place, target=target)
         if dash is not None:
             style["linestyle"] = dash
         axes.plot(dose_gy, 100.0 * fraction, **style | {"label": name if labels else "_nolegend_"})  # type: ignore[arg-type]

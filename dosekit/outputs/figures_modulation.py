@@ -19,6 +19,7 @@ __all__ = ["convergence_figure", "range_steps_figure", "ridge_profile_figure"]
 
 _STEP_COLOUR = "#88CCEE"
 _SUM_COLOUR = "#332288"
+_FLAT_COLOUR = "#882255"
 _TARGET_COLOUR = "#DDCC77"
 
 
@@ -32,6 +33,7 @@ def range_steps_figure(
     weights: ArrayLike,
     flatness: float,
     flat_interval_mm: tuple[float, float] | None = None,
+    flat_dose: ArrayLike | None = None,
     quantity: str = "dose",
     title: str = "",
 ) -> Figure:
@@ -51,6 +53,8 @@ def range_steps_figure(
         Largest deviation from the mean inside the flat interval, as a fraction.
     flat_interval_mm : (float, float), optional
         Where the flatness was judged, if it is less than the whole interval.
+    flat_dose : array_like, shape (n,), optional
+        The curve that is flat, if it is not the sum of the steps (effect-weighted dose); drawn beside the sum.
     quantity : str
         What is flat, e.g. ``"dose"`` or ``"effect-weighted dose"``.
     title : str
@@ -85,7 +89,19 @@ def range_steps_figure(
     for k in np.flatnonzero(shares > 0.0):
         main.plot(depth, 100.0 * weighted[k] / mean, color=_STEP_COLOUR, linewidth=0.6)
     main.plot([], [], color=_STEP_COLOUR, linewidth=0.8, label="range step, weighted")
-    main.plot(depth, 100.0 * total / mean, color=_SUM_COLOUR, linewidth=1.4, label="sum of the steps")
+    highest = 100.0 * float(total.max()) / mean
+    if flat_dose is None:
+        main.plot(depth, 100.0 * total / mean, color=_SUM_COLOUR, linewidth=1.4, label="sum of the steps")
+    else:
+        flat = np.asarray(flat_dose, dtype=np.float64)
+        if flat.shape != depth.shape:
+            raise InputError(f"{flat.shape} values of {quantity} for {len(depth)} depths")
+        flat = 100.0 * flat / float(flat[inside].mean())
+        main.plot(
+            depth, 100.0 * total / mean, color=_SUM_COLOUR, linewidth=1.0, linestyle=(0, (5, 1.5)), label="dose, sum"
+        )
+        main.plot(depth, flat, color=_FLAT_COLOUR, linewidth=1.4, label=quantity)
+        highest = max(highest, float(flat.max()))
     main.hlines(
         [100.0 * (1.0 - flatness), 100.0 * (1.0 + flatness)],
         low,
@@ -96,7 +112,7 @@ def range_steps_figure(
         label="flatness band",
     )
     main.set_xlim(float(max(0.0, depth[0])), float(depth[-1]))
-    main.set_ylim(0.0, 1.25 * 100.0 * float(total.max()) / mean)
+    main.set_ylim(0.0, 1.25 * highest)
     main.annotate(
         f"flat to ±{100 * flatness:.1f} %\n{low:.0f} to {high:.0f} mm",
         (0.5 * (low + high), 100.0 * (1.0 + flatness)),
@@ -108,7 +124,7 @@ def range_steps_figure(
         path_effects=halo(),
     )
     main.set_xlabel("water-equivalent depth (mm)")
-    main.set_ylabel(f"{quantity} (% of the interval's mean)")
+    main.set_ylabel(f"{quantity} (% of the interval's mean)" if flat_dose is None else "% of the interval's mean")
     percent = 100.0 * shares / shares.sum()
     gap = float(np.min(np.diff(np.sort(ranges)))) if len(ranges) > 1 else 5.0
     bars.bar(ranges, percent, width=0.8 * max(gap, 0.1), color=_SUM_COLOUR, linewidth=0.0)
@@ -116,7 +132,7 @@ def range_steps_figure(
     bars.set_ylabel("share of the particles (%)")
     letter_panel(main, "a", title)
     letter_panel(bars, "b", f"{used} steps in use")
-    foot_legend(figure, main, ncols=4)
+    foot_legend(figure, main, ncols=5 if flat_dose is not None else 4)
     return figure
 
 

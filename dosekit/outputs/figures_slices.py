@@ -136,7 +136,7 @@ def slices_figure(
         if level <= _WASH_TOP_PERCENT:
             bar.ax.axhline(level, color="white", linewidth=0.7)
     if names:
-        foot_legend(figure, outline_legend(names, target=target), ncols=min(5, len(names)))
+        foot_legend(figure, outline_legend(grid, names, target=target), ncols=min(5, len(names)))
     return figure
 
 
@@ -294,7 +294,7 @@ def draw_slice(
     )
     for name in structures:
         coverage = _coverage(grid, name, chosen, point_mm)
-        _outline(axes, coverage, name=name, index=list(structures).index(name), target=target)
+        _outline(axes, coverage, name=name, index=_place(grid, name), target=target)
     _isodoses(axes, percent, isodose_percent)
     box = box_mm or shown_box_mm(grid)
     axes.set_aspect("equal")
@@ -322,13 +322,17 @@ def dose_colours() -> Colormap:
     return ListedColormap(colormaps["plasma"](np.linspace(0.1, 1.0, 256)), name="dose")
 
 
-def outline_legend(names: Sequence[str], *, target: str | None = None) -> tuple[list[Artist], list[str]]:
+def outline_legend(
+    grid: VoxelGrid, names: Sequence[str], *, target: str | None = None
+) -> tuple[list[Artist], list[str]]:
     """Return legend handles and labels of structure outlines.
 
     Parameters
     ----------
+    grid : VoxelGrid
+        The anatomy; a structure's place in it decides its colour.
     names : sequence of str
-        Structures in the order drawn.
+        Structures to list.
     target : str, optional
         The target.
 
@@ -337,8 +341,12 @@ def outline_legend(names: Sequence[str], *, target: str | None = None) -> tuple[
     (list, list)
         Handles and labels.
     """
-    handles: list[Artist] = [Line2D([], [], **_outline_style(name, i, target)) for i, name in enumerate(names)]
+    handles: list[Artist] = [Line2D([], [], **_outline_style(name, _place(grid, name), target)) for name in names]
     return handles, list(names)
+
+
+def _place(grid: VoxelGrid, name: str) -> int:
+    return list(grid.structures).index(name)
 
 
 def _outline_style(name: str, index: int, target: str | None) -> dict[str, Any]:

@@ -215,7 +215,10 @@ def test_depth_figure_draws_each_component_and_the_sum(curve, figures):
     stacked, logged = panels(figures["depth"])
     total = curve["energy"].sum("component").values
     np.testing.assert_allclose(stacked.lines[0].get_ydata(), total)
-    assert len(stacked.collections) == len(COMPONENTS)
+    areas = [c for c in stacked.collections if c.get_label() in style.COMPONENT_LABELS.values()]
+    assert len(areas) == len(COMPONENTS)
+    # The areas lie on each other: the last one's top is the sum.
+    assert max(path.vertices[:, 1].max() for path in areas[-1].get_paths()) == pytest.approx(total.max())
     assert len(logged.lines) == len(COMPONENTS) + 1
     labels = [line.get_label() for line in logged.lines]
     assert labels == ["total", *style.COMPONENT_LABELS.values()]
@@ -231,6 +234,18 @@ def test_depth_figure_leaves_out_only_empty_components(curve):
     _, logged = panels(depth_curve_figure(thin))
     assert len(logged.lines) == len(COMPONENTS)
     assert style.COMPONENT_LABELS["decay"] not in [line.get_label() for line in logged.lines]
+
+
+def test_layers_are_ruled_off_and_named_where_the_curve_knows_them(curve):
+    names = ["muscle_skeletal"] * 40 + ["water"] * (curve.sizes["depth"] - 40)
+    figure = depth_curve_figure(curve.assign_coords(layer=("depth", names)))
+    for axes in panels(figure):
+        edges = [line for line in axes.lines if line.get_gid() == "layer edge"]
+        assert [float(edge.get_xdata()[0]) for edge in edges] == [40.0]
+    assert [text.get_text() for text in panels(figure)[0].texts if text.get_gid() == "layer"] == [
+        "muscle skeletal",
+        "water",
+    ]
 
 
 def test_let_of_the_whole_dose_is_the_dose_weighted_mean(curve, figures):
@@ -252,6 +267,17 @@ def test_step_figure_draws_only_the_steps_in_use_scaled_to_the_interval():
     assert len(bars.patches) == 3
     assert sum(patch.get_height() for patch in bars.patches) == pytest.approx(100.0)
     assert any("±3.1 %" in text for text in all_text(figure))
+
+
+def test_step_figure_draws_what_is_flat_beside_the_dose_when_they_differ():
+    depth = np.arange(0.5, 100.0)
+    flat = np.where(depth < 62.0, 3.0, 0.1)
+    main, _ = panels(steps_figure(quantity="effect-weighted dose", flat_dose=flat))
+    line = next(line for line in main.lines if line.get_label() == "effect-weighted dose")
+    np.testing.assert_allclose(line.get_ydata()[depth < 62.0], 100.0)
+    assert any(line.get_label() == "dose, sum" for line in main.lines)
+    with pytest.raises(InputError, match="effect-weighted dose"):
+        steps_figure(quantity="effect-weighted dose", flat_dose=flat[:-1])
 
 
 @pytest.mark.parametrize("weights", [[0.0, 0.0, 0.0], [1.0, -1.0, 2.0], [1.0, 2.0]])
@@ -357,6 +383,15 @@ def test_component_slices_have_one_panel_for_each_component_with_its_maximum(fig
         assert style.COMPONENT_LABELS[name] in title
         top = 100.0 * float(dose["dose"].sel(component=name).max()) / 2.0
         assert f"{top:.2g} %" in title
+
+
+def test_a_structure_keeps_its_colour_from_slices_to_histograms(dose, anatomy):
+    figure = slices_figure(dose, anatomy, point_mm=anatomy.centroid_mm("cord"))
+    outline = next(
+        c for axes in panels(figure) for c in axes.collections if c.get_gid() == "outline cord"
+    ).get_edgecolor()[0]
+    axes = panels(histogram_figure({"cord": HISTOGRAMS["cord"]}, order=list(anatomy.structures)))[0]
+    np.testing.assert_allclose(mpl.colors.to_rgba(axes.lines[0].get_color()), outline)
 
 
 def test_slices_refuse_a_dose_of_nothing_and_a_point_outside(dose, anatomy):
