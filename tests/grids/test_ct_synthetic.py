@@ -42,9 +42,7 @@ def test_geometry_equals_an_independent_reader(tmp_path, place):
     ours = read_hu(tmp_path)
     for index in [(0, 0, 0), (6, 0, 0), (0, 5, 0), (0, 0, 4), (2, 3, 1)]:
         point = image.TransformIndexToPhysicalPoint(index)
-        x, y, z = (
-            round((p - o) / s) for p, o, s in zip(point, ours.origin_mm, ours.spacing_mm, strict=True)
-        )
+        x, y, z = (round((p - o) / s) for p, o, s in zip(point, ours.origin_mm, ours.spacing_mm, strict=True))
         back = np.array(ours.origin_mm) + np.array([x, y, z]) * np.array(ours.spacing_mm)
         assert back == pytest.approx(point, abs=1e-4)
         assert ours.hu[z, y, x] == image.GetPixel(index)
@@ -172,9 +170,7 @@ def tilted(folder, angle_deg, *, count=8, field=None):
             + np.arange(columns)[None, :, None] * pixel * np.array([1.0, 0, 0])
         )
         hu = field(points)
-        ds = slice_dataset(
-            hu, position=start, orientation=(1, 0, 0, *down), spacing=(pixel, pixel), number=k + 1
-        )
+        ds = slice_dataset(hu, position=start, orientation=(1, 0, 0, *down), spacing=(pixel, pixel), number=k + 1)
         save(ds, folder / f"{k}.dcm")
 
 
