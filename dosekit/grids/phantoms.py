@@ -141,7 +141,8 @@ def build_phantom(said: PhantomFile, *, spacing_mm: float | Sequence[float] | No
         drawn = coverage_of(solid.shape, origin_mm=origin, spacing_mm=spacing, shape=shape)
         if solid.material is not None and drawn.values.size:
             part = density[drawn.slices]
-            part += drawn.values * (np.float32(solid.material.density_g_cm3) - part)
+            new = np.float32(solid.material.density_g_cm3)
+            part[...] = np.where(drawn.values >= 1.0, new, part + drawn.values * (new - part))
             index[drawn.slices][drawn.values >= 0.5] = _index_of(solid.material, materials)
         for name in solid.cut_from:
             structures[name] = _without(structures[name], drawn, shape)
