@@ -39,10 +39,8 @@ def prepare_matter(density, index, rsp_per_density, scatter_ratio, rsp, scatter)
 
 @njit(inline="always", error_model="numpy")
 def _sample(rsp, scatter, fx, fy, fz):  # type: ignore[no-untyped-def]
-    """Interpolate two volumes at index position; the outer half voxel is flat, beyond is nothing."""
+    """Interpolate two volumes at an index position inside; the outer half voxel is flat."""
     nz, ny, nx = rsp.shape
-    if fx < -0.5 or fy < -0.5 or fz < -0.5 or fx > nx - 0.5 or fy > ny - 0.5 or fz > nz - 0.5:
-        return 0.0, 0.0
     fx = min(max(fx, 0.0), nx - 1.0)
     fy = min(max(fy, 0.0), ny - 1.0)
     fz = min(max(fz, 0.0), nz - 1.0)
@@ -88,6 +86,15 @@ def trace_rays(rsp, scatter, origin, spacing, base, axes, inverse_source, u, v, 
                 step[a] = slope / spacing[a]
                 length += slope * slope
             length = np.sqrt(length)
+            enter, leave = -np.inf, np.inf  # where the ray runs inside the volume
+            for a in range(3):
+                low, high = -0.5, rsp.shape[2 - a] - 0.5
+                if step[a] == 0.0:
+                    if start[a] < low or start[a] > high:
+                        leave = -np.inf
+                else:
+                    one, other = (low - start[a]) / step[a], (high - start[a]) / step[a]
+                    enter, leave = max(enter, min(one, other)), min(leave, max(one, other))
             path = 0.0
             for j in range(nw):
                 stretch = lead if j == 0 else w[j] - w[j - 1]
@@ -95,15 +102,19 @@ def trace_rays(rsp, scatter, origin, spacing, base, axes, inverse_source, u, v, 
                 sum_a = 0.0
                 sum_b = 0.0
                 for s in range(samples):
-                    at = begin + stretch * (s + 0.5) / samples
+                    low = max(begin + stretch * s / samples, enter)
+                    high = min(begin + stretch * (s + 1) / samples, leave)
+                    if high <= low:
+                        continue
+                    at = 0.5 * (low + high)
                     a, b = _sample(
                         rsp, scatter, start[0] + at * step[0], start[1] + at * step[1], start[2] + at * step[2]
                     )
-                    sum_a += a
-                    sum_b += b
-                path += sum_a / samples * stretch * length
+                    sum_a += a * (high - low)
+                    sum_b += b * (high - low)
+                path += sum_a * length
                 wet[j, r, c] = path
-                local[j, r, c] = sum_b / samples
+                local[j, r, c] = sum_b / stretch if stretch > 0.0 else 0.0
 
 
 @njit(inline="always", error_model="numpy")
@@ -559,9 +570,25 @@ def _corner(value, first, inverse_step, count):  # type: ignore[no-untyped-def]
     return i, place - i, i >= 0 and i + 1 < count
 
 
+@njit(inline="always", error_model="numpy")
+def _three(value, first, inverse_step, count, on_nodes, weights):  # type: ignore[no-untyped-def]
+    """Fill the weights of the quadratic B-spline about the nearest node; return the node below and if it fits.
+
+    The weights add to one and their variance is a quarter at any place. A position on a node may take it alone.
+    """
+    place = (value - first) * inverse_step
+    i = int(np.floor(place + 0.5))
+    t = place - i
+    if on_nodes:
+        weights[0], weights[1], weights[2] = 0.0, 1.0, 0.0
+    else:
+        weights[0], weights[1], weights[2] = 0.5 * (0.5 - t) ** 2, 0.75 - t * t, 0.5 * (0.5 + t) ** 2
+    return i - 1, i >= 1 and i + 1 < count
+
+
 @njit(parallel=True, error_model="numpy", cache=True)
 def deposit(  # type: ignore[no-untyped-def]
-    voxels, places, shape, origin, spacing, base, axes, inverse_source, sub, w0, inverse_dw,
+    voxels, places, shape, origin, spacing, base, axes, inverse_source, sub, on_nodes, w0, inverse_dw,
     u0, v0, inverse_h, fine_map, coarse_u0, coarse_v0, coarse_inverse_h, coarse_map, fine_target, coarse_target,
     index, rsp, factor, out,
 ):  # fmt: skip
@@ -576,6 +603,7 @@ def deposit(  # type: ignore[no-untyped-def]
     chunk = 4096
     for piece in prange((voxels.size + chunk - 1) // chunk):
         value = np.zeros(parts + components)
+        weights_u, weights_v = np.empty(3), np.empty(3)
         for n in range(piece * chunk, min((piece + 1) * chunk, voxels.size)):
             flat = voxels[n]
             ix = flat % nx
@@ -596,16 +624,20 @@ def deposit(  # type: ignore[no-untyped-def]
                         shrink = 1.0 / (1.0 + w * inverse_source)
                         u = (axes[0, 0] * px + axes[0, 1] * py + axes[0, 2] * pz) * shrink
                         v = (axes[1, 0] * px + axes[1, 1] * py + axes[1, 2] * pz) * shrink
-                        k, fu, inside_u = _corner(u, u0, inverse_h, fine_map.shape[2])
-                        i, fv, inside_v = _corner(v, v0, inverse_h, fine_map.shape[1])
+                        k, inside_u = _three(u, u0, inverse_h, fine_map.shape[2], on_nodes, weights_u)
+                        i, inside_v = _three(v, v0, inverse_h, fine_map.shape[1], on_nodes, weights_v)
                         if inside_u and inside_v:
                             some = True
                             for dj in range(2):
-                                ww = fw if dj else 1.0 - fw
-                                for di in range(2):
-                                    wv = ww * (fv if di else 1.0 - fv)
-                                    for dk in range(2):
-                                        weight = wv * (fu if dk else 1.0 - fu) * share
+                                ww = (fw if dj else 1.0 - fw) * share
+                                for di in range(3):
+                                    wv = ww * weights_v[di]
+                                    if wv == 0.0:
+                                        continue
+                                    for dk in range(3):
+                                        weight = wv * weights_u[dk]
+                                        if weight == 0.0:
+                                            continue
                                         for m in range(parts):
                                             value[m] += weight * fine_map[j + dj, i + di, k + dk, m]
                         k, fu, inside_u = _corner(u, coarse_u0, coarse_inverse_h, coarse_map.shape[2])
@@ -632,7 +664,7 @@ def deposit(  # type: ignore[no-untyped-def]
 
 @njit(parallel=True, error_model="numpy", cache=True)
 def deposit_transposed(  # type: ignore[no-untyped-def]
-    slabs, voxels, places, shape, origin, spacing, base, axes, inverse_source, sub, w0, inverse_dw,
+    slabs, voxels, places, shape, origin, spacing, base, axes, inverse_source, sub, on_nodes, w0, inverse_dw,
     u0, v0, inverse_h, fine_map, coarse_u0, coarse_v0, coarse_inverse_h, coarse_map, fine_target, coarse_target,
     index, rsp, factor, out,
 ):  # fmt: skip
@@ -650,6 +682,7 @@ def deposit_transposed(  # type: ignore[no-untyped-def]
         for half in prange((count - colour + 1) // 2):
             slab = 2 * half + colour
             value = np.zeros(parts + components)
+            weights_u, weights_v = np.empty(3), np.empty(3)
             for n in range(slabs[slab], slabs[slab + 1]):
                 flat = voxels[n]
                 place = places[n]
@@ -679,15 +712,19 @@ def deposit_transposed(  # type: ignore[no-untyped-def]
                             shrink = 1.0 / (1.0 + w * inverse_source)
                             u = (axes[0, 0] * px + axes[0, 1] * py + axes[0, 2] * pz) * shrink
                             v = (axes[1, 0] * px + axes[1, 1] * py + axes[1, 2] * pz) * shrink
-                            k, fu, inside_u = _corner(u, u0, inverse_h, fine_map.shape[2])
-                            i, fv, inside_v = _corner(v, v0, inverse_h, fine_map.shape[1])
+                            k, inside_u = _three(u, u0, inverse_h, fine_map.shape[2], on_nodes, weights_u)
+                            i, inside_v = _three(v, v0, inverse_h, fine_map.shape[1], on_nodes, weights_v)
                             if inside_u and inside_v:
                                 for dj in range(2):
                                     ww = fw if dj else 1.0 - fw
-                                    for di in range(2):
-                                        wv = ww * (fv if di else 1.0 - fv)
-                                        for dk in range(2):
-                                            weight = wv * (fu if dk else 1.0 - fu)
+                                    for di in range(3):
+                                        wv = ww * weights_v[di]
+                                        if wv == 0.0:
+                                            continue
+                                        for dk in range(3):
+                                            weight = wv * weights_u[dk]
+                                            if weight == 0.0:
+                                                continue
                                             for m in range(parts):
                                                 fine_map[j + dj, i + di, k + dk, m] += weight * value[m]
                             k, fu, inside_u = _corner(u, coarse_u0, coarse_inverse_h, coarse_map.shape[2])

@@ -37,7 +37,8 @@ BODY_RSP = 0.05
 """Relative stopping power above which a ray counts as having met something."""
 
 _COARSEST_MM = 8.0
-_INTERPOLATION_VARIANCE = 1.0 / 6.0  # mean variance that linear interpolation adds, squared lattice steps
+_LINEAR_VARIANCE = 1.0 / 6.0  # mean variance that linear interpolation adds, squared lattice steps
+_SPLINE_VARIANCE = 1.0 / 4.0  # variance that interpolation by a quadratic B-spline adds, anywhere
 _SIGNIFICANT = 1e-4
 
 
@@ -255,11 +256,13 @@ class FieldPencils:
     ) -> tuple[Any, ...]:
         """Return what the voxel kernels need to know about both lattices."""
         frame, matter = self.planes.frame, self.matter
-        per_axis = np.ceil(matter.spacing_mm / (1.25 * self.fine.spacing_mm) - 1e-9)
-        turned = np.count_nonzero(np.abs(frame.rotation) > 1e-12) > 3 or frame.source_distance_mm is not None
-        sub = np.maximum(per_axis, 1).astype(np.int64)
-        if not turned and all(self.planes.aligned):
-            sub = np.where(matter.spacing_mm <= 2.0 + 1e-9, 1, sub)
+        on_nodes = self.planes.on_nodes
+        apart = self.fine.spacing_mm if on_nodes else 1.25 * self.fine.spacing_mm
+        sub = np.maximum(np.ceil(matter.spacing_mm / apart - 1e-9), 1).astype(np.int64)
+        if on_nodes:  # along the beam, planes lie so as well
+            along = int(np.argmax(np.abs(frame.rotation[2])))
+            step = float(self.planes.w_mm[1] - self.planes.w_mm[0])
+            sub[along] = max(1, round(float(matter.spacing_mm[along]) / step))
         w = self.planes.w_mm
         return (
             np.array(matter.shape),
@@ -269,6 +272,7 @@ class FieldPencils:
             frame.rotation,
             0.0 if frame.source_distance_mm is None else 1.0 / frame.source_distance_mm,
             sub,
+            on_nodes,
             float(w[0]),
             1.0 / float(w[1] - w[0]),
             float(self.fine.u_mm[0]),
@@ -362,7 +366,7 @@ def field_pencils(
     entry = (in_air / magnified**2)[:, behind].min(axis=1)  # smallest in-air variance behind the surface, per axis
     growth = (magnified / float(frame.magnification(surface))) ** 2
     spacing = planes.spacing_mm
-    blur = np.array([0.0 if fits else _INTERPOLATION_VARIANCE * spacing**2 for fits in planes.aligned])
+    blur = np.full(2, 0.0 if planes.on_nodes else _SPLINE_VARIANCE * spacing**2)
     at_surface = shift_variance / float(frame.magnification(surface)) ** 2
     sigma = np.sqrt(np.maximum(entry[:, None] + at_surface - blur[:, None], 0.0))
     nodes = [_spot_nodes(field, planes, axis, sigma[axis]) for axis in range(2)]
@@ -566,7 +570,7 @@ def _broad_taps(
     for axis in range(2):
         variance = (part_sigma[None, :] ** 2 + extra[axis][:, None]) / (scale[:, None] * factor**2)
         # spreading rays over coarse nodes and interpolating between them add a sixth each
-        made, reach = gaussian_taps(np.maximum(variance - 2.0 * _INTERPOLATION_VARIANCE, 0.0), largest=longest)
+        made, reach = gaussian_taps(np.maximum(variance - 2.0 * _LINEAR_VARIANCE, 0.0), largest=longest)
         taps.append(np.ascontiguousarray(_padded(made, longest + 1).transpose(0, 2, 1)))
         reaches.append(reach)
     reach = np.maximum(reaches[0], reaches[1])

@@ -3,7 +3,7 @@
 A field is followed on its own lattice: rays through the nodes (u, v) of the plane of the isocentre, and planes across
 the beam at positions w (see :mod:`dosekit.maps.frames`). Rays lie closer than the spots are wide, so that a spot is
 split into rays and the edge of a bone inside a spot divides it. Where a lattice axis is parallel to an axis of the
-voxels, the nodes are laid on voxel centres.
+voxels, the nodes are laid on the points at which voxels are sampled.
 
 Along each ray the relative stopping power and the scattering power are sampled by linear interpolation between voxel
 centres at several points for each plane, and summed to the water-equivalent path.
@@ -98,8 +98,8 @@ class Planes:
         Distance between rays in the plane of the isocentre, mm.
     u_phase_mm, v_phase_mm : float
         Rays lie at the phase plus whole multiples of the spacing.
-    aligned : tuple of bool
-        Whether rays run through voxel centres, along u and v.
+    on_nodes : bool
+        Whether every point at which a voxel is sampled lies on a ray.
     w_mm : ndarray
         Positions of the planes, mm.
     lead_mm : float
@@ -112,7 +112,7 @@ class Planes:
     spacing_mm: float
     u_phase_mm: float
     v_phase_mm: float
-    aligned: tuple[bool, bool]
+    on_nodes: bool
     w_mm: NDArray[np.float64]
     lead_mm: float
     starts_inside: bool
@@ -291,6 +291,7 @@ def plane_lattice(frame: BeamFrame, matter: Matter, *, spot_sigma_mm: float) -> 
         phase = 0.0
         if fits and parallel is not None:
             distance = axes[axis, parallel] * (matter.origin_mm[parallel] - frame.isocentre_mm[parallel])
+            distance += 0.5 * spacing * (round(multiple) % 2 == 0)  # rays at the points that sample the voxel
             phase = float(distance - spacing * np.round(distance / spacing))
         phases.append(phase)
         aligned.append(bool(fits))
@@ -299,7 +300,7 @@ def plane_lattice(frame: BeamFrame, matter: Matter, *, spot_sigma_mm: float) -> 
         spacing_mm=float(spacing),
         u_phase_mm=phases[0],
         v_phase_mm=phases[1],
-        aligned=(aligned[0], aligned[1]),
+        on_nodes=all(aligned),
         w_mm=w,
         lead_mm=0.0,
         starts_inside=starts_inside,
