@@ -1,0 +1,207 @@
+"""Compiled sweeps of exponentials along the straight lines of one direction, forward and transposed.
+
+A direction crosses the voxels plane by plane along its main axis (array axis 0 here). Seen from one plane, the line that
+starts at ray (r, q) lies in voxel (r + shift_j, q + shift_i), with shifts rounded to whole voxels, so that in every
+plane each voxel belongs to exactly one line: rays never share a voxel, no energy is made or lost, and rows of rays
+can run at the same time in any order with the same result.
+
+In a voxel of optical thickness a, with h = (e^a - 1)/a to sixth order and T = 1 / (1 + a h), a mode that enters with s and is emitted
+evenly with e leaves s (1 - T) + e (1 - h T) there and goes on with (s + h e) T.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit, prange
+
+_C3, _C4, _C5, _C6 = 1.0 / 6.0, 1.0 / 24.0, 1.0 / 120.0, 1.0 / 720.0
+
+__all__ = ["source_ranges", "sweep", "sweep_transposed"]
+
+
+@njit(cache=True, error_model="numpy")
+def source_ranges(values):  # type: ignore[no-untyped-def]
+    """Return the first and one past the last non-zero element of every row."""
+    nk, nj, ni = values.shape
+    first = np.full((nk, nj), ni, dtype=np.int64)
+    last = np.zeros((nk, nj), dtype=np.int64)
+    for k in range(nk):
+        for j in range(nj):
+            for i in range(ni):
+                if values[k, j, i] != 0.0:
+                    if first[k, j] == ni:
+                        first[k, j] = i
+                    last[k, j] = i + 1
+    return first, last
+
+
+@njit(cache=True, error_model="numpy")
+def _step_shining(thick, b, here, bright, given):  # type: ignore[no-untyped-def]
+    """Pass one row of voxels that emit."""
+    for q in range(len(thick)):
+        a = b * thick[q]
+        h = 1.0 + a * (0.5 + a * (_C3 + a * (_C4 + a * (_C5 + a * _C6))))
+        s = here[q]
+        e = bright[q]
+        going = (s + h * e) / (1.0 + a * h)
+        given[q] += s + e - going
+        here[q] = going
+
+
+@njit(cache=True, error_model="numpy")
+def _step_dark(thick, b, here, given):  # type: ignore[no-untyped-def]
+    """Pass one row of voxels that emit nothing."""
+    for q in range(len(thick)):
+        a = b * thick[q]
+        h = 1.0 + a * (0.5 + a * (_C3 + a * (_C4 + a * (_C5 + a * _C6))))
+        s = here[q]
+        going = s / (1.0 + a * h)
+        given[q] += s - going
+        here[q] = going
+
+
+@njit(cache=True, error_model="numpy")
+def _step_back(thick, b, here, asked, weight, worth):  # type: ignore[no-untyped-def]
+    """Pass one row of voxels backwards."""
+    for q in range(len(thick)):
+        a = b * thick[q]
+        h = 1.0 + a * (0.5 + a * (_C3 + a * (_C4 + a * (_C5 + a * _C6))))
+        y = asked[q]
+        s = here[q]
+        passed = 1.0 / (1.0 + a * h)
+        worth[q] = weight * (y + (s - y) * h * passed)
+        here[q] = y + (s - y) * passed
+
+
+@njit(cache=True, parallel=True, error_model="numpy")
+def sweep(  # type: ignore[no-untyped-def]
+    stops, material, energies, sources, scale, rates, slope_j, slope_i, down, step_mm, weight, first, last, out
+):
+    """Carry all modes along one direction and add what they leave to ``out``.
+
+    ``energies[material, mode]`` times ``stops`` is emitted, or ``sources[mode]`` if there is any.
+    """
+    nk, nj, ni = scale.shape
+    modes = len(rates)
+    middle = nk // 2
+    low_j = min(int(np.rint(slope_j * (0 - middle))), int(np.rint(slope_j * (nk - 1 - middle))))
+    high_j = max(int(np.rint(slope_j * (0 - middle))), int(np.rint(slope_j * (nk - 1 - middle))))
+    low_i = min(int(np.rint(slope_i * (0 - middle))), int(np.rint(slope_i * (nk - 1 - middle))))
+    high_i = max(int(np.rint(slope_i * (0 - middle))), int(np.rint(slope_i * (nk - 1 - middle))))
+    width = ni + high_i - low_i
+    rows = nj + high_j - low_j
+    by_material = sources.shape[0] == 0
+    for row in prange(rows):
+        state = np.zeros((modes, width))
+        left = np.empty(ni)
+        emitted = np.empty(ni)
+        start = width
+        stop = 0
+        for turn in range(nk):
+            k = nk - 1 - turn if down else turn
+            j = row - high_j + int(np.rint(slope_j * (k - middle)))
+            if j < 0 or j >= nj:
+                continue
+            offset = high_i - int(np.rint(slope_i * (k - middle)))
+            if last[k, j] > 0:
+                start = min(start, first[k, j] + offset)
+                stop = max(stop, last[k, j] + offset)
+            begin = max(start, offset)
+            end = min(stop, offset + ni)
+            count = end - begin
+            if count <= 0:
+                continue
+            i0 = begin - offset
+            shining = last[k, j] > 0
+            thick = scale[k, j, i0 : i0 + count]
+            given = left[:count]
+            bright = emitted[:count]
+            given[:] = 0.0
+            for m in range(modes):
+                b = rates[m] * step_mm
+                here = state[m, begin:end]
+                if shining:
+                    if by_material:
+                        many = stops[k, j, i0 : i0 + count]
+                        kind = material[k, j, i0 : i0 + count]
+                        for q in range(count):
+                            bright[q] = weight * many[q] * energies[kind[q], m]
+                    else:
+                        light = sources[m, k, j, i0 : i0 + count]
+                        for q in range(count):
+                            bright[q] = weight * light[q]
+                    _step_shining(thick, b, here, bright, given)
+                else:
+                    _step_dark(thick, b, here, given)
+            target = out[k, j, i0 : i0 + count]
+            for q in range(count):
+                target[q] += given[q]
+
+
+@njit(cache=True, parallel=True, error_model="numpy")
+def sweep_transposed(  # type: ignore[no-untyped-def]
+    wanted,
+    material,
+    energies,
+    by_mode,
+    scale,
+    rates,
+    slope_j,
+    slope_i,
+    down,
+    step_mm,
+    weight,
+    first,
+    last,
+    out,
+    out_modes,
+):
+    """Carry values back along one direction: the exact transpose of `sweep`.
+
+    ``wanted`` is what each voxel's energy counts. The result per stop is added to ``out`` (through ``energies``), or per mode
+    to ``out_modes`` if ``by_mode``.
+    """
+    nk, nj, ni = scale.shape
+    modes = len(rates)
+    middle = nk // 2
+    low_j = min(int(np.rint(slope_j * (0 - middle))), int(np.rint(slope_j * (nk - 1 - middle))))
+    high_j = max(int(np.rint(slope_j * (0 - middle))), int(np.rint(slope_j * (nk - 1 - middle))))
+    low_i = min(int(np.rint(slope_i * (0 - middle))), int(np.rint(slope_i * (nk - 1 - middle))))
+    high_i = max(int(np.rint(slope_i * (0 - middle))), int(np.rint(slope_i * (nk - 1 - middle))))
+    width = ni + high_i - low_i
+    rows = nj + high_j - low_j
+    for row in prange(rows):
+        state = np.zeros((modes, width))
+        value = np.empty(ni)
+        start = width
+        stop = 0
+        for turn in range(nk):
+            k = turn if down else nk - 1 - turn
+            j = row - high_j + int(np.rint(slope_j * (k - middle)))
+            if j < 0 or j >= nj:
+                continue
+            offset = high_i - int(np.rint(slope_i * (k - middle)))
+            if last[k, j] > 0:
+                start = min(start, first[k, j] + offset)
+                stop = max(stop, last[k, j] + offset)
+            begin = max(start, offset)
+            end = min(stop, offset + ni)
+            count = end - begin
+            if count <= 0:
+                continue
+            i0 = begin - offset
+            thick = scale[k, j, i0 : i0 + count]
+            asked = wanted[k, j, i0 : i0 + count]
+            worth = value[:count]
+            for m in range(modes):
+                b = rates[m] * step_mm
+                _step_back(thick, b, state[m, begin:end], asked, weight, worth)
+                if by_mode:
+                    goal = out_modes[m, k, j, i0 : i0 + count]
+                    for q in range(count):
+                        goal[q] += worth[q]
+                else:
+                    goal = out[k, j, i0 : i0 + count]
+                    kind = material[k, j, i0 : i0 + count]
+                    for q in range(count):
+                        goal[q] += worth[q] * energies[kind[q], m]
