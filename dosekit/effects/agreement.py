@@ -4,13 +4,15 @@ For every reference point ``r`` with dose ``D``::
 
     gamma(r) = min over r' of sqrt( |r' - r|^2 / distance^2 + (D'(r') - D(r))^2 / tolerance^2 )
 
-Source: Low, Harms, Mutic & Purdy, Med. Phys. 25 (1998) 656, equations 3-5.  A point passes with ``gamma <= 1``.
-The dose tolerance is a percentage of one dose (global) or of the local reference dose (local).  The evaluated map is
-interpolated linearly on every axis at a lattice of points around ``r``; the lattice step is one tenth of the distance
-tolerance unless stated, which bounds the overestimate of gamma by half a lattice step over the distance tolerance.
+Source: Low, Harms, Mutic & Purdy, Med. Phys. 25 (1998) 656, equations 3-5.  A point passes with ``gamma <=
+1``. The dose tolerance is a percentage of one dose (global) or of the local reference dose (local).  The
+evaluated map is interpolated linearly on every axis at a lattice of points around ``r``; the lattice step
+is one tenth of the distance tolerance unless stated, which bounds the overestimate of gamma by half a
+lattice step over the distance tolerance.
 
-Validity: maps on evenly spaced grids with axes along each other; one, two or three dimensions.  Points outside the
-evaluated grid are never invented: a reference point with no lattice point inside it gets no index (NaN).
+Validity: maps on evenly spaced grids with axes along each other; one, two or three dimensions.  Points
+outside the evaluated grid are never invented: a reference point with no lattice point inside it gets no
+index (NaN).
 """
 
 from __future__ import annotations

@@ -429,7 +429,8 @@ def outside_field_dose(
     Returns
     -------
     dict
-        ``level_gy``, ``volume_cm3`` of the outside region, ``mean_gy``, ``maximum_gy`` (0 when no voxel is outside).
+        ``level_gy``, ``volume_cm3`` of the outside region, ``mean_gy``, ``maximum_gy`` (0 when no voxel is
+        outside).
 
     Examples
     --------

@@ -61,12 +61,13 @@ def search_agreement(
 ) -> None:
     """Write the smallest combined deviation of every chosen reference point into `out`.
 
-    `reference`, `evaluated`: doses [z, y, x].  Origins and spacings: (z, y, x) in mm.  `chosen`: flat indices of
-    reference points.  `dose_tolerance`: per chosen point, Gy.  `cell_low`, `cell_high`: smallest and largest corner
-    dose of every evaluated cell.  `cell_steps` (n, 3): cells around a point, ascending in `cell_squares`, their
-    least possible squared distance over squared tolerance.  `step`: lattice step in mm, at most `reach` (per axis)
-    steps away.  `limit_square`: largest squared index kept.  A cell is entered only when its distance and its
-    range of doses allow an index below the best so far; this changes no result.
+    `reference`, `evaluated`: doses [z, y, x].  Origins and spacings: (z, y, x) in mm.  `chosen`: flat
+    indices of reference points.  `dose_tolerance`: per chosen point, Gy.  `cell_low`, `cell_high`: smallest
+    and largest corner dose of every evaluated cell.  `cell_steps` (n, 3): cells around a point, ascending
+    in `cell_squares`, their least possible squared distance over squared tolerance.  `step`: lattice step
+    in mm, at most `reach` (per axis) steps away.  `limit_square`: largest squared index kept.  A cell is
+    entered only when its distance and its range of doses allow an index below the best so far; this changes
+    no result.
     """
     ny, nx = reference.shape[1], reference.shape[2]
     cz, cy, cx = cell_low.shape

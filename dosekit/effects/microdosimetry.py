@@ -1,8 +1,8 @@
 """How effective are densely ionising star products?  A saturation-corrected microdosimetric form.
 
-In a spherical site of diameter ``d`` crossed by straight tracks of constant LET ``L`` the lineal energy ``y`` has
-the triangular density ``f(y) = 2 y / (1.5 L)^2`` for ``0 < y < 1.5 L`` (mean ``L``, dose mean ``9 L / 8``).  Very dense
-tracks waste dose; the saturation-corrected mean is::
+In a spherical site of diameter ``d`` crossed by straight tracks of constant LET ``L`` the lineal energy
+``y`` has the triangular density ``f(y) = 2 y / (1.5 L)^2`` for ``0 < y < 1.5 L`` (mean ``L``, dose mean ``9
+L / 8``).  Very dense tracks waste dose; the saturation-corrected mean is::
 
     y* = y0^2 integral (1 - exp(-y^2 / y0^2)) f(y) dy / integral y f(y) dy
        = (y0^2 / L) (1 - (1 - exp(-a^2)) / a^2),        a = 1.5 L / y0        (triangular density)
@@ -14,14 +14,14 @@ and the linear constant of a tissue rises with the saturation-corrected specific
 
 ``z*_x`` belongs to the reference photons, so that photons have an RBE of 1.
 
-Sources: lineal energy of a sphere: ICRU Report 36 (1983), memory.  Saturation correction: Powers, Lyman & Tobias
-(1968), as used by Kase et al., Radiat. Res. 166 (2006) 629, eq. 4, with y0 = 150 keV/um and domain radius 0.42 um
-(values of that paper for one salivary-gland cell line, memory).  Linear constant: Hawkins, Radiat. Res. 140 (1994) 366
-and Int. J. Radiat. Biol. 69 (1996) 739.  Reference photons: dose-mean lineal energy 2 keV/um of cobalt-60 (ICRU 36,
-memory).
+Sources: lineal energy of a sphere: ICRU Report 36 (1983), memory.  Saturation correction: Powers, Lyman &
+Tobias (1968), as used by Kase et al., Radiat. Res. 166 (2006) 629, eq. 4, with y0 = 150 keV/um and domain
+radius 0.42 um (values of that paper for one salivary-gland cell line, memory).  Linear constant: Hawkins,
+Radiat. Res. 140 (1994) 366 and Int. J. Radiat. Biol. 69 (1996) 739.  Reference photons: dose-mean lineal
+energy 2 keV/um of cobalt-60 (ICRU 36, memory).
 
-Validity: ions up to about 450 keV/um, alpha/beta 1 to 30 Gy.  Both constants come from one cell line and are used for
-all tissues; a component with a wide spread of LET is represented by its dose mean.
+Validity: ions up to about 450 keV/um, alpha/beta 1 to 30 Gy.  Both constants come from one cell line and
+are used for all tissues; a component with a wide spread of LET is represented by its dose mean.
 """
 
 from __future__ import annotations

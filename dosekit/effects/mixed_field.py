@@ -1,35 +1,36 @@
 """What is the effect of several kinds of radiation given together?
 
-Components with doses ``D_c`` and constants ``alpha_c``, ``beta_c`` given in one fraction act as one radiation with
-dose-averaged ``alpha`` and ``sqrt(beta)``::
+Components with doses ``D_c`` and constants ``alpha_c``, ``beta_c`` given in one fraction act as one
+radiation with dose-averaged ``alpha`` and ``sqrt(beta)``::
 
     E = A + B^2,      A = sum of alpha_c D_c,      B = sum of sqrt(beta_c) D_c
 
-Source: Zaider & Rossi, Radiat. Res. 83 (1980) 732.  The photon dose of equal effect, given in as many fractions, is the
-effect-weighted dose ``X`` per fraction::
+Source: Zaider & Rossi, Radiat. Res. 83 (1980) 732.  The photon dose of equal effect, given in as many
+fractions, is the effect-weighted dose ``X`` per fraction::
 
     alpha_x X + beta_x X^2 = E    =>    X = 2 E / (alpha_x + sqrt(alpha_x^2 + 4 beta_x E))
 
-``A`` and ``B`` are linear in the particles, so an optimiser needs two linear maps and the slopes ``dX/dA = s`` and
-``dX/dB = 2 B s`` with ``s = 1 / (alpha_x + 2 beta_x X)``.
+``A`` and ``B`` are linear in the particles, so an optimiser needs two linear maps and the slopes ``dX/dA =
+s`` and ``dX/dB = 2 B s`` with ``s = 1 / (alpha_x + 2 beta_x X)``.
 
 Models by name
 --------------
 ``constant``
-    one factor ``f_c`` for each component: alpha_c = f_c alpha_x and sqrt(beta_c) = f_c sqrt(beta_x), so that ``X`` is
-    exactly the sum of ``f_c D_c`` at any dose.
+    one factor ``f_c`` for each component: alpha_c = f_c alpha_x and sqrt(beta_c) = f_c sqrt(beta_x), so
+    that ``X`` is exactly the sum of ``f_c D_c`` at any dose.
 ``physical``
     all factors 1.
 ``icrp60``
     factors Q(L): dose equivalent of radiation protection, no treatment effect.
 ``carabe``, ``wedenberg``, ``mcnamara``, ``rorvik_linear``
-    the proton model for `primary`, `star_light` and `contaminant_muon`, the microdosimetric form for `in_flight`,
-    `star_heavy` and `star_neutron` (they hold helium ions and recoils, far beyond the proton data), photons' constants
-    for `star_photon`, `decay` and `contaminant_electron`.
+    the proton model for `primary`, `star_light` and `contaminant_muon`, the microdosimetric form for
+    `in_flight`, `star_heavy` and `star_neutron` (they hold helium ions and recoils, far beyond the proton
+    data), photons' constants for `star_photon`, `decay` and `contaminant_electron`.
 ``microdosimetric``
     the microdosimetric form for all of these but the last three.
 
-Validity: each model's own; the proton models extrapolate wherever they are applied to pions and their products.
+Validity: each model's own; the proton models extrapolate wherever they are applied to pions and their
+products.
 """
 
 from __future__ import annotations

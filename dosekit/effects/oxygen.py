@@ -1,10 +1,12 @@
 """How much more dose does a tissue short of oxygen need?
 
-Sensitivity relative to no oxygen at a partial pressure ``p`` (Alper & Howard-Flanders, Nature 178 (1956) 978)::
+Sensitivity relative to no oxygen at a partial pressure ``p`` (Alper & Howard-Flanders, Nature 178 (1956)
+978)::
 
     S(p) = (m p + K) / (p + K)
 
-The oxygen enhancement ratio of a pressure is the dose there over the dose at full oxygen for the same effect::
+The oxygen enhancement ratio of a pressure is the dose there over the dose at full oxygen for the same
+effect::
 
     OER(p) = m / S(p) = m (p + K) / (m p + K)
 
@@ -12,8 +14,8 @@ The oxygen enhancement ratio of a pressure is the dose there over the dose at fu
 
     m(L) = 1 + (m0 - 1) / (1 + (L / L0)^3)
 
-with m0 = 3 and K = 3 mmHg (Alper & Howard-Flanders; common values) and L0 = 94 keV/um (cube root of 8.27e5, that paper,
-memory).  In a mixed field each component's effect-weighted dose counts ``1 / OER_c``, hence
+with m0 = 3 and K = 3 mmHg (Alper & Howard-Flanders; common values) and L0 = 94 keV/um (cube root of 8.27e5,
+that paper, memory).  In a mixed field each component's effect-weighted dose counts ``1 / OER_c``, hence
 ``OER = sum X_c / sum (X_c / OER_c)``.
 
 Validity: acute hypoxia in cell culture, 0 to 160 mmHg, LET up to about 500 keV/um; a warning beyond.

@@ -6,9 +6,9 @@ Proton models with ``ab`` for alpha/beta and ``L`` for the dose-averaged LET::
     RBE_min = q0 + q1 f(ab) L                (square root of the ratio of the betas)
     RBE(D)  = (sqrt(ab^2 + 4 ab D RBE_max + 4 D^2 RBE_min^2) - ab) / (2 D)
 
-``carabe``: Carabe et al., Phys. Med. Biol. 57 (2012) 1159, f = 1/ab; ``wedenberg``: Wedenberg et al., Acta Oncol. 52
-(2013) 580, q1 = 0; ``mcnamara``: McNamara et al., Phys. Med. Biol. 60 (2015) 8399, f = sqrt(ab); ``rorvik_linear``:
-Rorvik et al., Med. Phys. 44 (2017) 2583, q1 = 0.  The constants lie in `rbe_models.csv`.
+``carabe``: Carabe et al., Phys. Med. Biol. 57 (2012) 1159, f = 1/ab; ``wedenberg``: Wedenberg et al., Acta
+Oncol. 52 (2013) 580, q1 = 0; ``mcnamara``: McNamara et al., Phys. Med. Biol. 60 (2015) 8399, f = sqrt(ab);
+``rorvik_linear``: Rorvik et al., Med. Phys. 44 (2017) 2583, q1 = 0.  The constants lie in `rbe_models.csv`.
 
 Quality factor of radiation protection, ICRP Publication 60 (1991), Table A-1::
 
@@ -16,9 +16,9 @@ Quality factor of radiation protection, ICRP Publication 60 (1991), Table A-1::
 
 Constant factors, one for each component of the dose, follow the historic practice.
 
-Validity: the proton models were fitted to cell survival in proton beams (see `effect_validity.csv`).  Any use for
-pions or for star products is an extrapolation; a use outside the spans of LET, alpha/beta or dose warns.  ``Q`` serves
-radiation protection (stochastic effects at low dose), not the effect of a treatment.
+Validity: the proton models were fitted to cell survival in proton beams (see `effect_validity.csv`).  Any
+use for pions or for star products is an extrapolation; a use outside the spans of LET, alpha/beta or dose
+warns.  ``Q`` serves radiation protection (stochastic effects at low dose), not the effect of a treatment.
 """
 
 from __future__ import annotations

@@ -1,8 +1,9 @@
 """How sensitive is a tissue?  Linear-quadratic constants of the reference radiation by tissue and structure name.
 
-Survival after a dose ``D`` of photons: ``exp(-(alpha D + beta D^2))``.  The table `data/tissues.csv` holds ``alpha``
-and ``alpha/beta`` of a few tissues; its status is common practice, not measurement.  A structure takes the tissue whose
-keyword its name contains (the longest keyword wins); a name that matches none takes `late responding`.
+Survival after a dose ``D`` of photons: ``exp(-(alpha D + beta D^2))``.  The table `data/tissues.csv` holds
+``alpha`` and ``alpha/beta`` of a few tissues; its status is common practice, not measurement.  A structure
+takes the tissue whose keyword its name contains (the longest keyword wins); a name that matches none takes
+`late responding`.
 """
 
 from __future__ import annotations

@@ -1,11 +1,12 @@
 """What can a machine do, and what does it have to do to give a set of range steps?
 
-`DeviceLimits` says what a range modulator can set.  `ridge_profile` turns weights into the widths of the terraces of a
-ridge filter; `dwell_program` into times at a stated rate.  Pions decay on their way, so a rate counted upstream is
-larger than the rate at the surface by ``exp(path / (beta gamma c tau))`` (decay length: `dosekit.beams.decay`).
+`DeviceLimits` says what a range modulator can set.  `ridge_profile` turns weights into the widths of the
+terraces of a ridge filter; `dwell_program` into times at a stated rate.  Pions decay on their way, so a
+rate counted upstream is larger than the rate at the surface by ``exp(path / (beta gamma c tau))`` (decay
+length: `dosekit.beams.decay`).
 
-What it does not do: scattering in the modulator is the business of the depth library; edges of ridges, beam growth
-between filter and patient and dead time between steps are left out.
+What it does not do: scattering in the modulator is the business of the depth library; edges of ridges, beam
+growth between filter and patient and dead time between steps are left out.
 """
 
 from __future__ import annotations

@@ -5,15 +5,15 @@ The depth dose of step ``k`` per unit weight is row ``k`` of a matrix ``M``.  We
     sum over bins in the interval of (sum_k w_k M_k(z) - D(z))^2 / D_mean^2
         + s^2 n sum_k (w_{k-1} - 2 w_k + w_{k+1})^2 / w_mean^2
 
-with wanted dose ``D`` (one number, or a profile), ``n`` bins and smoothing ``s``.  Solved by non-negative least squares
-(Lawson & Hanson, Solving Least Squares Problems, 1974) with columns scaled to equal length, and
-repeated twice with the curvature of the last answer as the wanted one (iterated regularisation: what the dose does
-determine loses its bias, what it does not stays smooth).
+with wanted dose ``D`` (one number, or a profile), ``n`` bins and smoothing ``s``.  Solved by non-negative
+least squares (Lawson & Hanson, Solving Least Squares Problems, 1974) with columns scaled to equal length,
+and repeated twice with the curvature of the last answer as the wanted one (iterated regularisation: what
+the dose does determine loses its bias, what it does not stays smooth).
 
 Effect-weighted dose ``X`` depends on the weights through two linear sums ``A`` and ``B``
-(`dosekit.effects.mixed_field`).  It is flattened by repeating the linear problem with ``X`` replaced by its tangent at
-the last weights, halving the change while the sum of squares grows.  Stopping rule: the largest change of
-``X / D_mean`` inside the interval below 1e-5, or 40 rounds (a warning).
+(`dosekit.effects.mixed_field`).  It is flattened by repeating the linear problem with ``X`` replaced by its
+tangent at the last weights, halving the change while the sum of squares grows.  Stopping rule: the largest
+change of ``X / D_mean`` inside the interval below 1e-5, or 40 rounds (a warning).
 """
 
 from __future__ import annotations

@@ -1,8 +1,8 @@
 """How good is a depth curve that should be flat over an interval?
 
-Flatness is the largest deviation from the mean inside an interval, as a fraction of the mean.  Distal fall is the depth
-difference from 80 to 20 percent of that mean behind the interval (linear interpolation between bins).  Entrance is the
-first bin; the peak-to-entrance ratio is the largest value over the entrance.
+Flatness is the largest deviation from the mean inside an interval, as a fraction of the mean.  Distal fall
+is the depth difference from 80 to 20 percent of that mean behind the interval (linear interpolation between
+bins).  Entrance is the first bin; the peak-to-entrance ratio is the largest value over the entrance.
 """
 
 from __future__ import annotations
@@ -33,7 +33,8 @@ class ProfileMeasures:
     judged_mm : (float, float)
         Interval that was judged, mm.
     distal_fall_mm : float
-        Depth from 80 to 20 percent of the mean behind the interval, mm; NaN when the curve does not fall that far.
+        Depth from 80 to 20 percent of the mean behind the interval, mm; NaN when the curve does not fall
+        that far.
     entrance_share : float
         First bin over the mean.
     peak_to_entrance : float

@@ -1,8 +1,8 @@
 """Where does a field put its spots to cover a target?
 
-The target is seen along the field: every point of it is brought to the plane of the isocentre, straight for a parallel
-beam, towards the source otherwise.  Spots lie on a lattice through the isocentre (square, or hexagonal with rows 0.866
-spacings apart), wherever the target's shadow is no farther than the margin.
+The target is seen along the field: every point of it is brought to the plane of the isocentre, straight for
+a parallel beam, towards the source otherwise.  Spots lie on a lattice through the isocentre (square, or
+hexagonal with rows 0.866 spacings apart), wherever the target's shadow is no farther than the margin.
 
 What it does not do: it knows nothing of what lies before the target; ranges and weights are chosen elsewhere.
 """
@@ -85,7 +85,8 @@ def spots_over_shadow(
     margin_mm : float
         Spots up to this far from the shadow are kept, mm.
     point_mm : float
-        Width of the square that each point stands for (a voxel), mm; half its diagonal is added to the margin.
+        Width of the square that each point stands for (a voxel), mm; half its diagonal is added to the
+        margin.
     pattern : str
         ``square`` or ``hexagonal``.
 

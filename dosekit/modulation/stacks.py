@@ -1,8 +1,8 @@
 """Which range steps does a beam need to fill an interval of depth?  From beam and interval to settings, in one call.
 
-A depth library gives the curves of candidate residual ranges, `dosekit.modulation.steps` their weights.  The deepest
-candidate is chosen so that its peak lies at the far end.  Weights are broad-field fluences in 1e9 particles of the
-main species per cm2; one MeV/mm per particle then means 1.602 Gy in water.
+A depth library gives the curves of candidate residual ranges, `dosekit.modulation.steps` their weights.
+The deepest candidate is chosen so that its peak lies at the far end.  Weights are broad-field fluences in
+1e9 particles of the main species per cm2; one MeV/mm per particle then means 1.602 Gy in water.
 """
 
 from __future__ import annotations

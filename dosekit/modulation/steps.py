@@ -2,10 +2,12 @@
 
 The mathematics is in `dosekit.modulation.flattening`.
 
-Device limits: ranges nearer than the smallest step are passed over from the deepest up; while the lightest step has
-less than the smallest share, or steps are too many, the lightest is dropped and the rest solved again.
+Device limits: ranges nearer than the smallest step are passed over from the deepest up; while the lightest
+step has less than the smallest share, or steps are too many, the lightest is dropped and the rest solved
+again.
 
-Flatness is judged over the interval less one step at each end.  Validity: broad fields (lateral equilibrium) in water.
+Flatness is judged over the interval less one step at each end.  Validity: broad fields (lateral
+equilibrium) in water.
 """
 
 from __future__ import annotations
@@ -209,8 +211,9 @@ def range_steps(
 
     Examples
     --------
-    >>> settings = range_steps([[1.0, 1.0, 4.0, 0.0], [1.0, 3.0, 0.0, 0.0]], [5.0, 15.0, 25.0, 35.0], (10.0, 30.0),
-    ...     residual_range_mm=[25.0, 15.0], dose_gy=2.0, smoothing=0.0)
+    >>> curves = [[1.0, 1.0, 4.0, 0.0], [1.0, 3.0, 0.0, 0.0]]
+    >>> settings = range_steps(curves, [5.0, 15.0, 25.0, 35.0], (10.0, 30.0),
+    ...                        residual_range_mm=[25.0, 15.0], dose_gy=2.0, smoothing=0.0)
     >>> settings.weights.round(6).tolist(), settings.dose.round(6).tolist()
     ([0.5, 0.5], [1.0, 2.0, 2.0, 0.0])
     """
