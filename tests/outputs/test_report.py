@@ -238,3 +238,20 @@ def test_mean_doses_weigh_by_coverage(dose, anatomy):
         mean_doses_gy(dose, np.zeros(anatomy.shape))
     with pytest.raises(InputError, match="shape"):
         mean_doses_gy(dose, np.ones((2, 2, 2)))
+
+
+def test_no_identity_in_report_summary_or_tables(dose, anatomy, picture):
+    """What is drawn from a grid whose DICOM reference and source name a patient does not name the patient."""
+    doses = {name: mean_doses_gy(dose, anatomy.structure(name)) for name in anatomy.structures}
+    table = component_table(doses)
+    whole = summary(component_doses_gy=doses["Target"], target=anatomy.structure_name("target"))
+    texts = [
+        table.csv(run_hash="a"),
+        summary_text(whole, settings=table),
+        report_html(whole, record(), figures=[picture], tables=[("Components", table)]),
+    ]
+    assert "PLANTED" in repr(anatomy.source) + repr(anatomy.dicom_reference)
+    for text in texts:
+        assert "Target" in text
+        assert "PLANTED" not in text
+    assert "PLANTED" not in console_line(whole)
