@@ -18,7 +18,7 @@ from warnings import warn
 
 import numpy as np
 
-from dosekit.errors import GeometryError, GeometryWarning
+from dosekit.errors import GeometryError, GeometryWarning, SeriesError
 from dosekit.grids.calibration import (
     AIR_HU,
     Calibration,
@@ -224,6 +224,7 @@ def read_hu(
         stack = sort_stack(choose_series(headers, series))
         first = stack.headers[0]
         tilt_said = text_of(first.dataset, "GantryDetectorTilt", name=first.name)
+    _refuse_lookalikes(stack, strange)
     tilted, uneven = _judge(stack, resample, tilt_said)
     values, padding = read_pixels(stack, progress=_share(progress, 1, 2))
     with quiet_decoder():
@@ -249,6 +250,20 @@ def read_hu(
             "files that are not DICOM": len(strange),
         },
     )
+
+
+def _refuse_lookalikes(stack: Stack, strange: Sequence[Path]) -> None:
+    """Refuse files that are no DICOM but look like a slice of this series: the volume would end early unseen."""
+    sizes = sorted(header.path.stat().st_size for header in stack.headers)
+    usual = sizes[len(sizes) // 2]
+    endings = {header.path.suffix.lower() for header in stack.headers}
+    for path in strange:
+        if path.suffix.lower() in endings and (path.stat().st_size == 0 or 0.5 < path.stat().st_size / usual < 2.0):
+            raise SeriesError(
+                f"{path.name} is no DICOM file but has the ending and size of a slice of this series (or is empty)",
+                allowed="undamaged slices",
+                remedy="get the file again, or move it elsewhere if it is something else",
+            )
 
 
 def _share(progress: Progress | None, part: int, parts: int) -> Progress | None:

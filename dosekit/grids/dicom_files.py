@@ -7,6 +7,7 @@ cannot be read is an error, because a slice may be hiding in it.
 
 from __future__ import annotations
 
+import io
 import logging
 import re
 import warnings
@@ -43,7 +44,7 @@ STRUCTURE_STORAGE = "1.2.840.10008.5.1.4.1.1.481.3"
 """RT Structure Set Storage (DICOM PS3.6)."""
 
 _DEFLATED = "1.2.840.10008.1.2.1.99"
-_LARGEST_FILE_BYTES = 600_000_000
+_LARGEST_FILE_BYTES = 128_000_000
 _MOST_FILES = 20_000
 _THREADS = 2
 _IDENTITY = (
@@ -276,24 +277,29 @@ def read_file(path: Path, *, pixels: bool) -> Dataset | None:
     """
     import pydicom
 
+    claims = path.suffix.lower() in {".dcm", ".dicom", ".ima"}
     with guarded(path.name):
-        if path.stat().st_size > _LARGEST_FILE_BYTES:
-            raise DicomError(
-                f"{path.name} has {path.stat().st_size / 1e6:.0f} MB",
-                allowed=f"files up to {_LARGEST_FILE_BYTES / 1e6:.0f} MB, one slice each",
-                remedy="give a series of single slices",
-            )
         with path.open("rb") as stream:
             start = stream.read(132)
-        marked = start[128:132] == b"DICM"
+            marked = start[128:132] == b"DICM"
+            length = path.stat().st_size
+            if length > _LARGEST_FILE_BYTES:
+                if not (marked or claims):
+                    return None
+                raise DicomError(
+                    f"{path.name} has {length / 1e6:.0f} MB",
+                    allowed=f"files up to {_LARGEST_FILE_BYTES / 1e6:.0f} MB, one slice each",
+                    remedy="give a series of single slices",
+                )
+            # Read at one stroke: a damaged length then ends at the end of the bytes and takes no memory.
+            raw = start + stream.read()
         if marked:
-            _check_deflated(path)
-            dataset: Dataset = pydicom.dcmread(path, stop_before_pixels=not pixels)
+            _check_deflated(raw, path.name)
+            dataset: Dataset = pydicom.dcmread(io.BytesIO(raw), stop_before_pixels=not pixels)
             dataset.get("Modality")
             return dataset
-    claims = path.suffix.lower() in {".dcm", ".dicom", ".ima"}
     try:
-        bare: Dataset = pydicom.dcmread(path, stop_before_pixels=not pixels, force=True)
+        bare: Dataset = pydicom.dcmread(io.BytesIO(raw), stop_before_pixels=not pixels, force=True)
         known = "SOPClassUID" in bare and "Modality" in bare
         if known:
             bare.ensure_file_meta()
@@ -322,30 +328,30 @@ def _syntax(*, explicit: bool, little: bool) -> Any:
     return ExplicitVRLittleEndian if explicit else ImplicitVRLittleEndian
 
 
-def _check_deflated(path: Path) -> None:
+def _check_deflated(raw: bytes, name: str) -> None:
     """Refuse a deflated file that would unfold beyond reason."""
+    if _DEFLATED.encode("ascii") not in raw[:65536]:
+        return
     from pydicom.filereader import read_dataset
 
-    with path.open("rb") as stream:
-        stream.seek(132)
-        meta = read_dataset(
-            stream, is_implicit_VR=False, is_little_endian=True, stop_when=lambda tag, _vr, _length: tag.group != 2
-        )
-        if str(meta.get("TransferSyntaxUID", "")) != _DEFLATED:
-            return
-        unfolder = zlib.decompressobj(-zlib.MAX_WBITS)
-        length = 0
-        while chunk := stream.read(1 << 16):
-            piece = chunk
-            while piece:
-                length += len(unfolder.decompress(piece, 1 << 22))
-                piece = unfolder.unconsumed_tail
-                if length > _LARGEST_FILE_BYTES // 4:
-                    raise DicomError(
-                        f"{path.name} unfolds to more than {_LARGEST_FILE_BYTES / 4e6:.0f} MB",
-                        allowed="one slice per file",
-                        remedy="the file is damaged; get it again",
-                    )
+    stream = io.BytesIO(raw)
+    stream.seek(132)
+    meta = read_dataset(
+        stream, is_implicit_VR=False, is_little_endian=True, stop_when=lambda tag, _vr, _length: tag.group != 2
+    )
+    if str(meta.get("TransferSyntaxUID", "")) != _DEFLATED:
+        return
+    unfolder = zlib.decompressobj(-zlib.MAX_WBITS)
+    length, piece = 0, raw[stream.tell() :]
+    while piece:
+        length += len(unfolder.decompress(piece, 1 << 22))
+        piece = unfolder.unconsumed_tail
+        if length > _LARGEST_FILE_BYTES:
+            raise DicomError(
+                f"{name} unfolds to more than {_LARGEST_FILE_BYTES / 1e6:.0f} MB",
+                allowed="one slice per file",
+                remedy="the file is damaged; get it again",
+            )
 
 
 def in_threads(

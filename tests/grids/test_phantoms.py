@@ -130,7 +130,13 @@ def test_a_solid_can_be_cut_from_earlier_structures():
     said = small(
         shape=[
             {"kind": "box", "lower_mm": [-8, -8, -8], "upper_mm": [8, 8, 8], "structure": "shell"},
-            {"kind": "box", "lower_mm": [-4, -4, -4], "upper_mm": [4, 4, 4], "structure": "core", "cut_from": ["shell"]},
+            {
+                "kind": "box",
+                "lower_mm": [-4, -4, -4],
+                "upper_mm": [4, 4, 4],
+                "structure": "core",
+                "cut_from": ["shell"],
+            },
         ]
     )
     grid = build_phantom(parse_phantom(said))
