@@ -188,15 +188,12 @@ def pencils_of(
 
 @lru_cache(maxsize=16)
 def _library(beam: Beam, shift_mm: tuple[float, ...], yields: str) -> DepthLibrary:
-    from dosekit.beams.ranges import csda_range_mm
-    from dosekit.depths.library import depth_library
+    from dosekit.beams.stopping import relative_stopping_power
+    from dosekit.depths.library import depth_library, mean_projected_range_mm
 
-    reach = float(csda_range_mm(beam.particle, "water", beam.kinetic_energy_mev))
-    if beam.fixed_shifter_mm:
-        from dosekit.beams.ranges import residual_energy_mev
-
-        left = residual_energy_mev(beam.particle, beam.shifter_material, beam.kinetic_energy_mev, beam.fixed_shifter_mm)
-        reach = float(csda_range_mm(beam.particle, "water", float(left)))
+    reach = mean_projected_range_mm(beam.particle, beam.momentum_mev_c)
+    if beam.fixed_shifter_mm and beam.shifter_material is not None:
+        reach -= beam.fixed_shifter_mm * float(relative_stopping_power(beam.shifter_material, beam.particle))
     return depth_library(beam, reach - np.array(shift_mm), mode="shifter", yields=yields)
 
 

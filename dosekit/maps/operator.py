@@ -9,6 +9,7 @@ Nothing of the size voxels x weights is kept.
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -246,9 +247,12 @@ class FoldOperator(LinearOperator):  # type: ignore[misc]
         if stars and stops.any():
             from dosekit.maps.stars import carry_stars
 
-            energies = carry_stars(
-                stops.reshape(self.grid.shape), self.grid, yields=self.yields, star_scale=self.star_scale
-            )
+            carry = partial(carry_stars, grid=self.grid, yields=self.yields, star_scale=self.star_scale)
+            volume = stops.reshape(self.grid.shape)
+            energies = carry(np.maximum(volume, 0.0))
+            if stops.min() < 0.0:  # weights of any sign: the difference of two numbers of stops
+                less = carry(np.maximum(-volume, 0.0))
+                energies = {name: energy - less[name] for name, energy in energies.items()}
             for name, energy in energies.items():
                 doses[name] = np.asarray(energy, dtype=np.float64).reshape(-1)[self.voxels] * self._star_factor
         for name in COMPONENTS:

@@ -119,7 +119,8 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
         quantity = _clean(library.quantities.get(key, np.zeros_like(energy)))
         if not quantity.any():
             continue
-        extra = np.asarray(library.extra_sigma_mm.get(key, np.zeros_like(energy)), dtype=np.float64)
+        widths = library.extra_sigma_mm
+        extra = np.asarray(widths.get(key, widths.get(key.removesuffix("_stops"), 0.0 * energy)), dtype=np.float64)
         variance = np.maximum(in_water + np.nan_to_num(extra) ** 2, 0.0)
         for sigma, share in _divide(quantity, variance):
             values.append(quantity * share)
