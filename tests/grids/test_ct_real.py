@@ -6,6 +6,7 @@ import warnings
 
 import numpy as np
 import pytest
+
 from dosekit.errors import GeometryError, GeometryWarning
 from dosekit.grids.ct import read_ct, read_hu
 from dosekit.grids.structure_sets import read_outlines

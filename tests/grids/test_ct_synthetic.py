@@ -6,6 +6,7 @@ import numpy as np
 import pydicom
 import pytest
 from ct_series import SERIES, odd_volume, save, slice_dataset, write_series
+
 from dosekit.errors import (
     CalibrationWarning,
     DicomError,
@@ -123,9 +124,9 @@ def test_padding_value_at_tissue_hu_is_air_at_the_border_only(tmp_path):
 def test_small_jitter_is_tolerated_and_large_is_not(tmp_path):
     volume = odd_volume()
     even = 2.0 * np.arange(5)
-    write_series(tmp_path / "small", volume, z=even + [0, 0.03, -0.03, 0.02, 0])
+    write_series(tmp_path / "small", volume, z=even + np.array([0, 0.03, -0.03, 0.02, 0]))
     assert read_hu(tmp_path / "small").spacing_mm[2] == pytest.approx(2.0)
-    write_series(tmp_path / "large", volume, z=even + [0, 0.2, -0.1, 0.2, 0])
+    write_series(tmp_path / "large", volume, z=even + np.array([0, 0.2, -0.1, 0.2, 0]))
     with pytest.raises(GeometryError, match=r"uneven slice spacing: 1\.7"):
         read_hu(tmp_path / "large")
 
@@ -250,7 +251,7 @@ def test_other_modalities_are_named(tmp_path):
     for k, ds in enumerate(write_series(tmp_path, odd_volume(), shuffle=False)):
         ds.Modality = "MR"
         save(ds, tmp_path / f"{k:04d}.dcm")
-    with pytest.raises(SeriesError, match="no CT slices.*5 x MR"):
+    with pytest.raises(SeriesError, match=r"no CT slices.*5 x MR"):
         read_hu(tmp_path)
 
 
@@ -319,7 +320,7 @@ def test_hu_beyond_the_table_are_clamped_and_counted(tmp_path):
 
 
 def test_the_couch_goes_on_request(tmp_path):
-    z, y, x = np.indices((4, 60, 60))
+    _, y, x = np.indices((4, 60, 60))
     volume = np.full((4, 60, 60), -1000, dtype=np.int16)
     body = (x - 30) ** 2 + (y - 25) ** 2 < 18**2
     volume[body] = 40

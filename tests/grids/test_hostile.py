@@ -11,14 +11,15 @@ import numpy as np
 import pydicom
 import pytest
 from ct_series import FRAME, odd_volume, rectangle, save, slice_dataset, structure_dataset, write_series
-from dosekit.errors import DicomError, DosekitWarning, InputError, SizeError
-from dosekit.grids.ct import read_ct
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from pydicom.dataelem import RawDataElement
 from pydicom.dataset import Dataset
 from pydicom.sequence import Sequence
 from pydicom.tag import Tag
+
+from dosekit.errors import DicomError, DosekitWarning, InputError, SizeError
+from dosekit.grids.ct import read_ct
 
 NZ = 4
 SLICE = "0001.dcm"
@@ -427,15 +428,18 @@ def crossing(ds):
     second.ContourData = ["1", "1", "0", "6", "1", "0", "6", "6", "0", "1", "6", "0"]
 
 
+def other_frame(ds):
+    for roi in ds.StructureSetROISequence:
+        roi.ReferencedFrameOfReferenceUID = "2.25.6"
+
+
 STRUCTURES = {
     "set cut short": lambda path: path.write_bytes(path.read_bytes()[:700]),
     "set cut in a contour": lambda path: path.write_bytes(path.read_bytes()[:-700]),
     "set of noise": lambda path: path.write_bytes(np.random.default_rng(5).bytes(500)),
     "set empty": lambda path: path.write_bytes(b""),
     "set is a plan": in_set(lambda ds: setattr(ds, "Modality", "RTPLAN")),
-    "set of another frame": in_set(
-        lambda ds: [setattr(r, "ReferencedFrameOfReferenceUID", "2.25.6") for r in ds.StructureSetROISequence]
-    ),  # fmt: skip  # noqa: E501
+    "set of another frame": in_set(other_frame),
     "no structures": in_set(lambda ds: delattr(ds, "StructureSetROISequence")),
     "no contours": in_set(no_contours),
     "contours not numbers": contour_value(b"0\\0\\x\\1\\1\\0\\2\\0\\0 "),

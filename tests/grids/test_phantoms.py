@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
 from dosekit.errors import GridError, InputError, MaterialError, SizeError, UnknownNameError
 from dosekit.grids.phantom_file import parse_phantom
 from dosekit.grids.phantoms import build_phantom, phantom, phantom_folder, phantom_names
 from dosekit.grids.shapes import Box, Cylinder, Ellipsoid, Slab, coverage_of
-from hypothesis import given, settings
-from hypothesis import strategies as st
+
 from naive import share_inside
 
 
@@ -201,7 +203,7 @@ def test_what_a_file_may_not_say(said, message):
 
 def test_structures_must_lie_in_the_volume():
     said = shaped(kind="ellipsoid", centre_mm=[500, 0, 0], radius_mm=3, structure="far")
-    with pytest.raises(GridError, match="'far'.*outside the volume"):
+    with pytest.raises(GridError, match=r"'far'.*outside the volume"):
         build_phantom(parse_phantom(said))
 
 
@@ -219,7 +221,7 @@ def test_files_of_ones_own(tmp_path):
     assert phantom(file).shape == (10, 10, 10)
     assert phantom(str(file), spacing_mm=(1, 2, 3)).shape == (4, 5, 10)
     file.write_text("name = [")
-    with pytest.raises(GridError, match="own.toml is not valid TOML"):
+    with pytest.raises(GridError, match=r"own\.toml is not valid TOML"):
         phantom(file)
     file.write_bytes(b"\xff\xfe\x00")
     with pytest.raises(GridError, match="not valid TOML"):

@@ -5,9 +5,11 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from ct_series import rectangle, save, structure_dataset, write_series
+
 from dosekit.errors import GeometryWarning, StructureError, UnknownNameError
 from dosekit.grids.contours import Contour, Lattice, covered_voxels
 from dosekit.grids.ct import read_ct
+
 from naive import even_odd_mask
 
 NZ, NY, NX = 6, 30, 40
@@ -190,7 +192,7 @@ def test_contours_outside_the_ct(scan):
 
 
 def test_crossing_contours_are_refused(scan):
-    with pytest.raises(StructureError, match="two contours of 'x'.*cross each other"):
+    with pytest.raises(StructureError, match=r"two contours of 'x'.*cross each other"):
         laid(scan, {"x": [rectangle(2, 2, 12, 12, 2), rectangle(7, 7, 20, 20, 2)]})
     bow = [(2, 2, 2), (20, 20, 2), (20, 2, 2), (2, 20, 2)]
     with pytest.raises(StructureError, match="crosses itself"):
@@ -203,7 +205,7 @@ def test_touching_contours_are_not_crossing(scan):
 
 
 def test_slanted_contours_are_refused(scan):
-    with pytest.raises(StructureError, match="spans 4.0 mm in z"):
+    with pytest.raises(StructureError, match=r"spans 4\.0 mm in z"):
         laid(scan, {"x": [[(2, 2, 2), (9, 2, 2), (9, 9, 6)]]})
 
 

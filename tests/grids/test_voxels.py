@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+
 from dosekit.basis.materials import material
 from dosekit.beams.stopping import relative_stopping_power
 from dosekit.errors import GridError, SizeError, UnknownNameError
 from dosekit.grids.coverages import BoxedCoverage, Coverages
 from dosekit.grids.outlines import outline_from_density
 from dosekit.grids.voxels import VoxelGrid
+
 from naive import averaged_by_overlap, largest_share
 
 MATTER = (material("water"), material("bone_cortical"), material("lung_tissue"))
