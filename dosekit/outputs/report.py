@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING, Any
 from dosekit.caution import BANNER, CAUTION
 from dosekit.errors import InputError
 from dosekit.outputs.files import write_text
+from dosekit.outputs.summary import key_lines
 from dosekit.outputs.tables import spoken
 
 if TYPE_CHECKING:
@@ -138,7 +139,7 @@ def report_html(
         figures=list(figures),
         tables=list(tables),
         contents=contents,
-        key_values=_key_values(summary),
+        key_values=key_lines(summary),
         repeat_command=repeat_command,
         draw_table=_draw_table,
         spoken=spoken,
@@ -161,17 +162,6 @@ def write_report(path: str | Path, html: str) -> Path:
         The file.
     """
     return write_text(path, html)
-
-
-def _key_values(summary: RunSummary) -> list[tuple[str, str]]:
-    return [
-        (f"{summary.quantity} flat over the target to", f"±{summary.flatness_percent:.1f} %"),
-        ("peak, depth in water", f"{summary.peak_depth_mm:.0f} mm"),
-        ("peak over entrance", f"{summary.peak_to_entrance:.2f}"),
-        (f"mean dose in {summary.target}", f"{summary.mean_dose_gy:.3f} {summary.unit}"),
-        ("share of it from stars", f"{100.0 * summary.star_share:.0f} %"),
-        ("beam time at the stated rate", f"{summary.beam_time_s:.0f} s"),
-    ]
 
 
 def _draw_table(table: OutputTable) -> Any:

@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 
     from dosekit.outputs.tables import OutputTable
 
-__all__ = ["RunSummary", "console_line", "mean_doses_gy", "star_share", "summary_text"]
+__all__ = ["RunSummary", "console_line", "key_lines", "mean_doses_gy", "star_share", "summary_text"]
 
 _WIDTH = 100
 
@@ -110,12 +110,45 @@ def console_line(summary: RunSummary) -> str:
         where = f" from {summary.flat_from_mm:.0f} to {summary.flat_to_mm:.0f} mm water (field '{summary.flat_field}')"
     spread = ""
     if np.isfinite(summary.target_d98_percent):
-        spread = f"D98 {summary.target_d98_percent:.0f} % and D2 {summary.target_d2_percent:.0f} % in {summary.target}, "
+        spread = (
+            f"D98 {summary.target_d98_percent:.0f} % and D2 {summary.target_d2_percent:.0f} % in {summary.target}, "
+        )
     return (
         f"{summary.quantity} flat to ±{summary.flatness_percent:.1f} %{where}, {spread}"
         f"peak at {summary.peak_depth_mm:.0f} mm water, "
         f"{100.0 * summary.star_share:.0f} % of the target dose from stars. {BANNER}"
     )
+
+
+def key_lines(summary: RunSummary) -> list[tuple[str, str]]:
+    """Return the numbers that a reader wants first, each with what it is and where it was judged.
+
+    Parameters
+    ----------
+    summary : RunSummary
+        The run.
+
+    Returns
+    -------
+    list of (str, str)
+        Name and value with unit.
+    """
+    unit = summary.unit
+    lines = [(f"{summary.quantity}, flat in water to", f"±{summary.flatness_percent:.1f} %")]
+    if np.isfinite(summary.flat_from_mm):
+        name = f"judged in water, field '{summary.flat_field}'"
+        lines.append((name, f"{summary.flat_from_mm:.0f} to {summary.flat_to_mm:.0f} mm"))
+    if np.isfinite(summary.target_d98_percent):
+        spread = f"{summary.target_d98_percent:.0f} % and {summary.target_d2_percent:.0f} %"
+        lines.append((f"D98 and D2 in {summary.target}", spread))
+    return [
+        *lines,
+        (f"mean dose in {summary.target}", f"{summary.mean_dose_gy:.3f} {unit}"),
+        ("share of it from stars", f"{100.0 * summary.star_share:.1f} %"),
+        ("peak, depth in water", f"{summary.peak_depth_mm:.1f} mm"),
+        ("peak over entrance", f"{summary.peak_to_entrance:.2f}"),
+        ("beam time at the stated rate", f"{summary.beam_time_s:.1f} s"),
+    ]
 
 
 def mean_doses_gy(dose: xr.Dataset, coverage: ArrayLike, *, variable: str = "dose") -> dict[str, float]:
@@ -191,17 +224,7 @@ def summary_text(summary: RunSummary, *, settings: OutputTable | None = None) ->
     parts = [
         _wrapped(CAUTION),
         _heading(summary.title),
-        _pairs(
-            [
-                (f"{summary.quantity} flat over the target to", f"±{summary.flatness_percent:.1f} %"),
-                ("peak, depth in water", f"{summary.peak_depth_mm:.1f} mm"),
-                ("peak over entrance", f"{summary.peak_to_entrance:.2f}"),
-                (f"mean dose in {summary.target}", f"{summary.mean_dose_gy:.3f} {unit}"),
-                ("share of it from stars", f"{100.0 * summary.star_share:.1f} %"),
-                ("beam time at the stated rate", f"{summary.beam_time_s:.1f} s"),
-                ("run", summary.run_hash[:16] or "not hashed"),
-            ]
-        ),
+        _pairs([*key_lines(summary), ("run", summary.run_hash[:16] or "not hashed")]),
     ]
     if summary.component_doses_gy:
         whole = sum(summary.component_doses_gy.values()) or 1.0
@@ -215,7 +238,7 @@ def summary_text(summary: RunSummary, *, settings: OutputTable | None = None) ->
             ),
         ]
     for structure, values in summary.measures.items():
-        parts += [_heading(structure), _pairs([(name, f"{value:.4g}") for name, value in values.items()])]
+        parts += [_heading(structure), _pairs([(spoken(name), f"{value:.4g}") for name, value in values.items()])]
     if summary.energy_balance:
         parts += [
             _heading("Energy balance"),

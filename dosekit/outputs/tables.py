@@ -30,6 +30,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "OutputTable",
+    "component_share_table",
     "component_table",
     "depth_curve_table",
     "histogram_table",
@@ -49,6 +50,7 @@ _UNIT_ENDINGS = {
     "_mev": "MeV",
     "_percent": "%",
     "_cm3": "cm³",
+    "_j": "J",
     "_1e9": "1e9",
     "_s": "s",
 }
@@ -335,6 +337,40 @@ def component_table(
         what="mean dose by component in each structure",
         columns=("structure", "component", "mean_dose_gy", "share_percent"),
         units=f"dose in {unit}; share in % of the structure's mean dose",
+        rows=tuple(rows),
+        sources=tuple(sources),
+    )
+
+
+def component_share_table(
+    doses_gy: Mapping[str, Mapping[str, float]], *, unit: str = "Gy", sources: Sequence[str] = ()
+) -> OutputTable:
+    """Tabulate the mean dose of each structure and how its components share it, one row for each structure.
+
+    Parameters
+    ----------
+    doses_gy : mapping of structure to mapping of component to float
+        Mean doses.
+    unit : str
+        Unit of the dose.
+    sources : sequence of str
+        What the doses rest on.
+
+    Returns
+    -------
+    OutputTable
+        Structure, mean dose, share of each component in %.
+    """
+    names = list(dict.fromkeys(name for parts in doses_gy.values() for name in parts))
+    rows: list[tuple[Cell, ...]] = []
+    for structure, parts in doses_gy.items():
+        whole = float(sum(parts.values()))
+        shares = (100.0 * float(parts.get(name, 0.0)) / whole if whole > 0.0 else float("nan") for name in names)
+        rows.append((structure, whole, *shares))
+    return OutputTable(
+        what="mean dose of each structure and the share of each component",
+        columns=("structure", "mean_dose_gy", *(f"{name}_percent" for name in names)),
+        units=f"dose in {unit}; shares in % of the structure's mean dose",
         rows=tuple(rows),
         sources=tuple(sources),
     )

@@ -134,9 +134,9 @@ def test_everything_asked_for_is_in_it(page_text):
     words = " ".join(" ".join(Page(page_text).words).split())
     for part in (
         "±1.3 %",
-        "171 mm",
-        "31 %",
-        "312 s",
+        "171.4 mm",
+        "31.4 %",
+        "312.0 s",
         "outside validity",
         "A. Author 1980",
         "in (MeV)",
@@ -210,6 +210,15 @@ def test_summary_text_has_its_parts_in_order():
     assert "65.0 %" in text  # 1.3 of 2.0
     assert max(len(line) for line in text.splitlines()) <= 120
     assert "none" in summary_text(summary(warnings=()))
+
+
+def test_flatness_is_never_told_without_where_it_was_judged_and_what_the_target_gets():
+    told = summary(
+        flat_field="left", flat_from_mm=140.0, flat_to_mm=196.0, target_d98_percent=76.0, target_d2_percent=116.0
+    )
+    for text in (console_line(told), summary_text(told), report_html(told, record())):
+        for part in ("140", "196", "left", "76 %", "116 %"):
+            assert part in text, part
 
 
 def test_star_share_counts_all_four_star_parts_and_no_other():

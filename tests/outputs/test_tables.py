@@ -13,6 +13,7 @@ from dosekit.errors import InputError
 from dosekit.maps.fields import Field
 from dosekit.outputs.tables import (
     OutputTable,
+    component_share_table,
     component_table,
     depth_curve_table,
     histogram_table,
@@ -108,6 +109,9 @@ def test_histograms_components_and_measures():
         ("star_light", "0.5", "25"),
         ("total", "2", "100"),
     ]
+    _, rows = parsed(component_share_table({"cord": {"primary": 1.5, "decay": 0.5}, "x": {}}).csv(run_hash=""))
+    assert rows[0] == {"structure": "cord", "mean_dose_gy": "2", "primary_percent": "75", "decay_percent": "25"}
+    assert rows[1]["primary_percent"] == ""  # no dose, no share
     _, rows = parsed(measures_table({"a": {"D95": 1.0}, "b": {"V20": 3.0}}, units="Gy, %").csv(run_hash=""))
     assert rows == [{"structure": "a", "D95": "1", "V20": ""}, {"structure": "b", "D95": "", "V20": "3"}]
 
