@@ -39,6 +39,7 @@ if TYPE_CHECKING:
 __all__ = ["CtVolume", "read_ct", "read_hu"]
 
 _TILT_SEEN_DEG = 0.1
+_MOST_GROWTH = 20
 
 Source = str | Path | Iterable[str | Path]
 Progress = Callable[[int, int], None]
@@ -362,6 +363,12 @@ def _resampled(
     check_memory(
         float(np.prod(sizes.astype(float))) * 28.0, what=f"a resampled CT of {' x '.join(map(str, sizes))} voxels"
     )
+    if float(np.prod(sizes.astype(float))) > _MOST_GROWTH * max(values.size, 1000):
+        raise GeometryError(
+            f"{values.size} voxels would become {' x '.join(map(str, sizes))}, mostly invented",
+            allowed=f"up to {_MOST_GROWTH} times the voxels that were scanned",
+            remedy="get the missing slices or reformat the series",
+        )
     nx, ny, nz = (int(n) for n in sizes)
     inverse = np.linalg.inv(np.stack([matrix[:, 0], matrix[:, 1], stack.along], axis=1))
     x = low[0] + spacing[0] * np.arange(nx)
