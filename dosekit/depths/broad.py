@@ -1,8 +1,7 @@
 """Where do neutrons and high-energy photons from reactions in flight leave their energy?
 
 Both reach decimetres; in one dimension their energy is spread by a plane kernel, a mixture over source energies of kernels
-about a plane of emission, pushed forward by the mean cosine g of the emission (emission 1 + 3 g mu). For photons the
-half-spaces ahead and behind share as 1/2 + 3 g / 4 and 1/2 - 3 g / 4.
+about a plane of emission, pushed forward by the mean cosine g of the emission (1 + 3 g mu).
 """
 
 from __future__ import annotations
@@ -12,12 +11,14 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-from dosekit.basis.materials import Material
+from dosekit.basis.materials import Material, material
+from dosekit.capture.neutrons import EDGES_MM
+from dosekit.capture.photons import NODE_PHOTON_MEV
 from dosekit.capture.products import planar_neutron_kernel
+from dosekit.capture.profiles import photon_response
 
 __all__ = ["convolve_planes", "neutron_plane_kernel", "photon_plane_kernel"]
 
-_PHOTON_ABSORPTION_CM2_G = 0.0165
 _NEUTRON_NODES_MEV = (2.0, 5.0, 10.0, 20.0, 35.0, 55.0, 80.0, 118.0)
 
 
@@ -76,38 +77,49 @@ def _neutron_node(energy_mev: float, mean_cosine: float, bin_mm: float, half_len
 
 
 @lru_cache(maxsize=64)
-def photon_plane_kernel(medium: Material, *, bin_mm: float, half_length_mm: float) -> NDArray[np.float64]:
-    """Return the share of the energy of photons over 20 MeV left per bin about a plane of isotropic emission.
+def photon_plane_kernel(
+    medium: Material, energy_mev: float, *, bin_mm: float, half_length_mm: float, mean_cosine: float = 0.0
+) -> NDArray[np.float64]:
+    """Return the share of the energy of photons left per bin about a plane of emission.
 
-    Energy absorption 0.0165 cm2/g (water, 30 to 100 MeV, pair production included; J.H. Hubbell & S.M. Seltzer, NISTIR
-    5632, memory), first-collision law of a plane source: E1(mu |z|) / 2.
+    The shells of :func:`dosekit.capture.profiles.photon_response` in water (histories with pair production, Compton
+    scattering, electrons and bremsstrahlung), stretched by density and laid on the axis with emission 1 + 3 g mu.
 
     Parameters
     ----------
     medium : Material
-        Medium.
+        Medium; its density counts.
+    energy_mev : float
+        Photon energy, MeV.
     bin_mm, half_length_mm : float
-        Bin and half length, mm.
+        Bin and half length, mm; kernels end at 1 m of water.
+    mean_cosine : float
+        Mean cosine of emission, -1/3 to 1/3.
 
     Returns
     -------
     ndarray, odd length
         Share of the energy per bin; the centre is the plane.
     """
-    from scipy.special import expn
-
-    half = int(round(half_length_mm / bin_mm))
-    z = bin_mm * (np.arange(2 * half + 2) - half - 0.5)
-    mu = 0.1 * _PHOTON_ABSORPTION_CM2_G * medium.density_g_cm3
-    beyond = 0.5 * expn(2, mu * np.abs(z))
-    kernel = np.diff(np.where(z > 0.0, 1.0 - beyond, beyond))
+    response = photon_response(material("water"))
+    place = float(np.interp(np.log(energy_mev), np.log(NODE_PHOTON_MEV), np.arange(len(NODE_PHOTON_MEV))))
+    low = min(int(place), len(NODE_PHOTON_MEV) - 2)
+    shells = (1.0 - place + low) * response[low] + (place - low) * response[low + 1]
+    step = bin_mm * medium.density_g_cm3
+    half = int(np.ceil(min(half_length_mm * medium.density_g_cm3, 1000.0) / step))
+    edges = step * (np.arange(2 * half + 2) - half - 0.5)
+    bias = float(np.clip(mean_cosine, -0.33, 0.33))
+    kernel = np.zeros(2 * half + 1)
+    for inner, outer, energy in zip(EDGES_MM[:-1], EDGES_MM[1:], shells[:-1], strict=True):
+        for radius in np.linspace(inner, outer, 9)[1::2]:
+            mu = np.clip(edges / radius, -1.0, 1.0)
+            # integral of (1 + 3 g mu) / 2
+            kernel += 0.25 * energy * np.diff(0.5 * (mu + 1.5 * bias * mu**2))
     kernel.setflags(write=False)
     return kernel
 
 
-def convolve_planes(
-    source: NDArray[np.float64], kernel: NDArray[np.float64], *, forward: float = 0.0
-) -> NDArray[np.float64]:
+def convolve_planes(source: NDArray[np.float64], kernel: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return what planes of emission leave in a slab; what goes beyond its faces is lost.
 
     Parameters
@@ -116,8 +128,6 @@ def convolve_planes(
         Energy emitted per bin.
     kernel : ndarray, odd length
         Share per bin about a plane.
-    forward : float
-        Mean cosine of the emission.
 
     Returns
     -------
@@ -126,9 +136,6 @@ def convolve_planes(
     """
     n = len(source)
     half = len(kernel) // 2
-    if forward:
-        side = np.sign(np.arange(len(kernel)) - half)
-        kernel = kernel * (1.0 + np.clip(1.5 * forward, -1.0, 1.0) * side)
     if half >= n:
         kernel = kernel[half - n + 1 : half + n]
         half = n - 1

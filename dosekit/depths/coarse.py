@@ -15,7 +15,7 @@ from scipy.interpolate import PchipInterpolator
 from dosekit.basis.materials import Material, material
 from dosekit.beams.ranges import range_table
 
-__all__ = ["CoarseGrid", "coarse_grid"]
+__all__ = ["CoarseGrid", "coarse_grid", "regrid"]
 
 _STEPS_MM = (0.25, 0.5, 0.75, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 8.0, 10.0, 15.0, 20.0, 30.0)
 
@@ -87,6 +87,29 @@ class CoarseGrid:
         """
         running = np.concatenate([[0.0], np.cumsum(values)])
         return np.asarray(np.diff(np.interp(np.arange(self.cells + 1.0), self.place_of_edge, running)))
+
+
+def regrid(values: NDArray[np.float64], cells: int) -> NDArray[np.float64]:
+    """Sum cells of one grid into those of another over the same depth, sharing by overlap.
+
+    Parameters
+    ----------
+    values : ndarray, shape (old cells, ...)
+        Amounts per cell.
+    cells : int
+        New number of cells.
+
+    Returns
+    -------
+    ndarray, shape (cells, ...)
+        Amounts per new cell; sums are kept.
+    """
+    old = len(values)
+    running = np.concatenate([np.zeros((1, *values.shape[1:])), np.cumsum(values, axis=0)])
+    place = np.arange(cells + 1.0) * (old / cells)
+    low = np.minimum(place.astype(np.int64), old - 1)
+    part = (place - low).reshape(-1, *([1] * (values.ndim - 1)))
+    return np.asarray(np.diff(running[low] * (1.0 - part) + running[low + 1] * part, axis=0))
 
 
 def coarse_grid(

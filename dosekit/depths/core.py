@@ -9,8 +9,7 @@ edges keep their energy. Energy flux and number at each depth are exact for the 
 
     deposit of a bin = mean over the bin's ends of survival * (T at the front - T at the back)
 
-(H. Bichsel, R.F. Mohling et al. describe the Gaussian ancestor of this; the closed form for protons is T. Bortfeld,
-Med. Phys. 24 (1997) 2024).
+A closed form with similar ingredients for protons: T. Bortfeld, Med. Phys. 24 (1997) 2024.
 """
 
 from __future__ import annotations
@@ -147,11 +146,11 @@ def solve_core(
         inside = np.flatnonzero(layer == m)
         first_bin = int(inside[0])
         z = edges[first_bin : first_bin + len(inside) + 1] - edges[first_bin]
-        path, angles, walk_out = _trajectory(species, table, walk, angle, mean_energy, z, detour=detour)
+        path, angles, walk_out, detour_variance = _trajectory(species, table, walk, angle, mean_energy, z, detour=detour)
         start_range = float(table.range_mm(walk))
         left = np.maximum(start_range - path, 0.0)
         grown = np.maximum(range_variance_mm2(species, stuff, walk) - range_variance_mm2(species, stuff, table.energy_mev(left)), 0.0)
-        deviation = np.sqrt(sd**2 + grown)
+        deviation = np.sqrt(sd**2 + grown + detour_variance)
         total_variance = max(float(range_variance_mm2(species, stuff, walk)), 1e-12)
         excess = mean_range_excess_mm(species, stuff, walk) * grown / total_variance if walk > 0.1 else 0.0 * grown
         now = ranges[:, None] - path[None, :] + shape[:, None] * (deviation - sd)[None, :] + excess[None, :]
@@ -269,22 +268,30 @@ def _trajectory(
     z: NDArray[np.float64],
     *,
     detour: bool,
-) -> tuple[NDArray[np.float64], NDArray[np.float64], float]:
-    """Return path and angle variance at depths in a layer, and the mean energy behind it."""
+) -> tuple[NDArray[np.float64], NDArray[np.float64], float, NDArray[np.float64]]:
+    """Return path and angle variance at depths in a layer, the mean energy behind it, and the variance of the path.
+
+    The path exceeds the depth by half the integral of the squared angle; for two Gaussian angles with independent increments
+    its variance is 2 int ds int_0^s A0(s')^2 ds'.
+    """
     total = float(table.range_mm(energy))
     nodes = total * (1.0 - (1.0 - np.linspace(0.0, 1.0, 301)) ** 2)
     middle = _middle(nodes)
     t_middle = np.maximum(table.energy_mev(total - middle), 1e-3)
     power = scattering_power_rad2_mm(species, table.material, t_middle, start_energy_mev=start_energy)
     angles = angle + np.concatenate([[0.0], np.cumsum(power * np.diff(nodes))])
+    spread = np.zeros(len(nodes))
     if not detour or total <= 0.0:
         path = z.copy()
     else:
+        inner = np.concatenate([[0.0], np.cumsum(_middle(np.minimum(angles, 1.0)) ** 2 * np.diff(nodes))])
+        spread = np.concatenate([[0.0], np.cumsum(2.0 * _middle(inner) * np.diff(nodes))])
         shrink = np.exp(-np.minimum(_middle(angles), 1.0))
         depth = np.concatenate([[0.0], np.cumsum(shrink * np.diff(nodes))])
         path = np.interp(z, depth, nodes)
         path = np.where(z > depth[-1], total + (z - depth[-1]), path)
-    return path, np.interp(path, nodes, angles), float(table.energy_mev(total - path[-1]))
+    left = float(table.energy_mev(total - path[-1]))
+    return path, np.interp(path, nodes, angles), left, np.interp(path, nodes, spread)
 
 
 @dataclass(frozen=True)

@@ -128,6 +128,8 @@ def march(  # type: ignore[no-untyped-def]
     recoil = np.zeros(cells)
     happened = np.zeros((2, cells, directions))
     moved = np.zeros((cells, directions))
+    left = np.full(directions, width)
+    right = np.full(directions, -1)
     events = chance.shape[1] > 0
     diffuse = turn.shape[0] > 0
     for k in range(nodes - 1, -1, -1):
@@ -142,6 +144,8 @@ def march(  # type: ignore[no-untyped-def]
                     w = c - low
                     state[j, low] += n * (1.0 - w)
                     state[j, low + 1] += n * w
+                    left[j] = min(left[j], low)
+                    right[j] = max(right[j], low + 1)
         if k == 0:
             break
         loss = node_energy[k] - node_energy[k - 1]
@@ -150,7 +154,7 @@ def march(  # type: ignore[no-untyped-def]
             happened[:] = 0.0
         any_event = False
         for j in range(directions):
-            for c in range(width):
+            for c in range(left[j], right[j] + 1):
                 n = state[j, c]
                 if n < 1e-16:
                     continue
@@ -172,9 +176,9 @@ def march(  # type: ignore[no-untyped-def]
                     if hit > 0.0:
                         any_event = True
                         n -= hit
-                        left = 1.0 - chance[m, k]
-                        way[j, c] *= left
-                        aside[j, c] *= left
+                        spared = 1.0 - chance[m, k]
+                        way[j, c] *= spared
+                        aside[j, c] *= spared
                         for which in range(2):
                             happened[which, first, j] += hit * parts[m, k, which] * (1.0 - w)
                             happened[which, second, j] += hit * parts[m, k, which] * w
@@ -254,7 +258,7 @@ def march(  # type: ignore[no-untyped-def]
             moved[:] = 0.0
             for j in range(directions):
                 stay = turn[k, j, j]
-                for c in range(width):
+                for c in range(left[j], right[j] + 1):
                     n = state[j, c]
                     if n < 1e-16:
                         continue

@@ -102,7 +102,7 @@ def muon_capture_products(caught: NDArray[np.float64], grid: CoarseGrid) -> Muon
         caught * _NEUTRON, neutron_plane_kernel(grid.reference, (2.0, 5.0, 12.0), bin_mm=grid.step_mm, half_length_mm=half)
     )
     photon = convolve_planes(
-        caught * _PHOTON, photon_plane_kernel(grid.reference, bin_mm=grid.step_mm, half_length_mm=half)
+        caught * _PHOTON, photon_plane_kernel(grid.reference, 2.0, bin_mm=grid.step_mm, half_length_mm=half)
     )
     deposit = {
         "capture_light": (caught * _LIGHT, 20.0),

@@ -250,8 +250,12 @@ def neutral_products(
             )
             deposit += convolve_planes(source, kernel)
         else:
-            kernel = photon_plane_kernel(base, bin_mm=grid.step_mm, half_length_mm=half)
-            deposit += convolve_planes(source, kernel, forward=forward)
+            mean = float(table.at(table.mean_energy_mev[species], middle))
+            energy = 0.5 * (134.98 + round(mean / 20.0) * 20.0) if species == "pi0" else max(round(mean), 1.0)
+            kernel = photon_plane_kernel(
+                base, energy, bin_mm=grid.step_mm, half_length_mm=half, mean_cosine=round(forward, 1)
+            )
+            deposit += convolve_planes(source, kernel)
     return deposit, emitted
 
 

@@ -18,8 +18,9 @@ from dosekit.basis.particles import kinetic_energy_mev, particle
 from dosekit.beams.decay import MICHEL_MEAN_ENERGY_MEV, MUON_ENERGY_AT_REST_MEV
 from dosekit.beams.reactions import CHANNELS, reactions
 from dosekit.depths.angles import COSINES
-from dosekit.depths.coarse import CoarseGrid, coarse_grid
+from dosekit.depths.coarse import CoarseGrid, coarse_grid, regrid
 from dosekit.depths.core import Core, solve_core
+from dosekit.depths.deltas import carry_deltas
 from dosekit.depths.kernels import gather_products, march, score_events
 from dosekit.depths.muons import muon_capture_share, muon_capture_products
 from dosekit.depths.products import (
@@ -144,29 +145,53 @@ def _solve(
     parts: dict[str, Carried] = {"scattered": scattered.carried}
     charged = charged_products(species, scattered.core_reactions, grid, yields=yields)
     charged.add(charged_products(species, scattered.later_reactions, grid, yields=yields, isotropic=True))
-    charged.deposit += scattered.recoil
-    charged.let_weighted += scattered.recoil * 100.0
+    if species == "proton":
+        # a struck hydrogen nucleus is a beam proton too; it stops within centimetres, here at once
+        scattered.carried.deposit += scattered.recoil
+        scattered.carried.let_weighted += scattered.recoil * 2.0
+        scattered.carried.stops += scattered.struck
+    else:
+        charged.deposit += scattered.recoil
+        charged.let_weighted += scattered.recoil * 100.0
     parts["in_flight_charged"] = charged
     reacted = scattered.core_reactions + scattered.later_reactions
-    neutral, emitted = neutral_products(species, reacted, grid, yields=yields)
-    parts["decay"], rest = _decays(species, core, grid, scattered)
+    # neutral products and decays vary slowly: twice the step
+    wide = coarse_grid(
+        species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=2.0 * grid.step_mm
+    )
+    neutral, emitted = neutral_products(species, regrid(reacted, wide.cells), wide, yields=yields)
+    decayed, rest = _decays(species, core, wide, scattered)
 
     to_bins = grid.to_bins
-    deposit = {"core": core.deposit, **{name: to_bins(part.deposit) for name, part in parts.items()}}
-    deposit["in_flight_neutral"] = to_bins(neutral)
+    built_up = carry_deltas(
+        species,
+        core.deposit,
+        edges_mm=core.edges_mm,
+        energy_mev=core.mean_energy,
+        materials=tuple(stuff for stuff, _ in layers),
+        layer=core.layer,
+    )
+    deposit = {"core": built_up, **{name: to_bins(part.deposit) for name, part in parts.items()}}
+    deposit["in_flight_neutral"] = wide.to_bins(neutral)
+    stopped = {"core": core.stops, "scattered": to_bins(scattered.carried.stops)}
+    # the muon of a pion at rest goes 1.4 mm in water: it stays in its bin
+    at_rest = (stopped["core"] + stopped["scattered"]) * (MUON_ENERGY_AT_REST_MEV if species == "pi+" else 0.0)
+    deposit["decay"] = wide.to_bins(decayed.deposit) + at_rest
     weighted = {"core": core.let_weighted, **{name: to_bins(part.let_weighted) for name, part in parts.items()}}
+    weighted["decay"] = wide.to_bins(decayed.let_weighted) + 1.5 * at_rest
     weighted["in_flight_neutral"] = 15.0 * deposit["in_flight_neutral"]
     for name, (amount, let) in rest.capture.items():
-        deposit[name] = to_bins(amount)
+        deposit[name] = wide.to_bins(amount)
         weighted[name] = let * deposit[name]
     let = {name: weighted[name] / np.where(deposit[name] > 1e-15, deposit[name], 1.0) for name in deposit}
+    let["core"] = core.let_weighted / np.where(core.deposit > 1e-15, core.deposit, 1.0)
     channels = {name: core.channels[name].copy() for name in (*CHANNELS, "decay")}
     _add_later(channels, scattered, grid, species, yields)
 
     rest_energy = particle(species).mass_mev if species != "proton" else 0.0
     stars = float(np.sum(core.stops) + np.sum(scattered.carried.stops)) * _PION_REST if species == "pi-" else 0.0
     out = scattered.carried.escaped
-    escaped = core.energy_out + float(core.number[-1]) * rest_energy + float(out[0] + out[2] + (out[1] + out[3]) * rest_energy)
+    escaped = float(np.sum(core.deposit) - np.sum(built_up)) + core.energy_out + float(core.number[-1]) * rest_energy + float(out[0] + out[2] + (out[1] + out[3]) * rest_energy)
     escaped += float(charged.escaped[0] + charged.escaped[2]) + float(sum(np.sum(v) for v in emitted.values()) - np.sum(neutral))
     ledger = {
         "in": core.energy_in + rest_energy,
@@ -177,8 +202,9 @@ def _solve(
         "star": stars,
     }
     return Solution(
-        species, core, grid, deposit, let, {"core": core.stops, "scattered": to_bins(scattered.carried.stops)}, channels,
-        to_bins(rest.at_rest), ledger, {name: _width(part, grid) for name, part in parts.items()},
+        species, core, grid, deposit, let, stopped, channels,
+        wide.to_bins(rest.at_rest), ledger,
+        {"decay": _width(decayed, wide), **{name: _width(part, grid) for name, part in parts.items()}},
     )  # fmt: skip
 
 
@@ -213,6 +239,7 @@ class _Scattered:
         )
         source = np.zeros((nodes, grid.cells, len(COSINES)))
         self.recoil = np.zeros(grid.cells)
+        self.struck = np.zeros(grid.cells)
         self.carried = Carried(grid.cells)
         self.core_reactions, self.core_decays = by_group[0], by_group[1]
         self.later_reactions, self.later_decays = np.zeros((grid.cells, groups)), np.zeros((grid.cells, groups))
@@ -222,9 +249,11 @@ class _Scattered:
             spread = np.stack([node_spread(row[:, None], table.energy) for row in table.elastic_to])
             gather_products(by_node[0], grid.stuff, spread, table.start_elastic, source)
             gather_products(by_node[1], grid.stuff, table.reemit, table.start_reemit, source)
+            self.struck = np.sum(by_node[0], axis=1)
             loss = table.energy[None, :] - table.elastic_to
             self.recoil += np.sum(by_node[0] * loss[grid.stuff], axis=1)
             self.recoil += self._run(table, grid, source)
+            self.struck += self.counts[0]
 
     def _run(self, table: SpeciesTable, grid: CoarseGrid, source: NDArray[np.float64]) -> NDArray[np.float64]:
         """Carry all generations."""
@@ -258,11 +287,12 @@ def _decays(species: str, core: Core, grid: CoarseGrid, scattered: _Scattered) -
         return total, rest
     positive = species in ("pi+", "mu+")
     muon = "mu+" if positive else "mu-"
-    stopped = grid.to_cells(core.stops) + scattered.carried.stops
+    stopped = grid.to_cells(core.stops) + regrid(scattered.carried.stops, grid.cells)
+    first, later = (regrid(rows, grid.cells) for rows in (scattered.core_decays, scattered.later_decays))
     muons = np.zeros(grid.cells)
     electrons = np.zeros(grid.cells)
     if species in ("pi-", "pi+"):
-        for decays, isotropic in ((scattered.core_decays, False), (scattered.later_decays, True)):
+        for decays, isotropic in ((first, False), (later, True)):
             flown = decay_muons(muon, decays, grid, isotropic=isotropic)
             total.add(flown)
             muons += flown.stops
@@ -273,15 +303,13 @@ def _decays(species: str, core: Core, grid: CoarseGrid, scattered: _Scattered) -
             rest.neutrino += pion * (1.0 - (MUON_ENERGY_AT_REST_MEV + _MUON_REST) / _PION_REST)
         if positive:
             rest.at_rest = stopped.copy()
-            total.deposit += stopped * MUON_ENERGY_AT_REST_MEV
-            total.let_weighted += stopped * MUON_ENERGY_AT_REST_MEV * 1.5
             rest.neutrino += float(np.sum(stopped)) * (_PION_REST - MUON_ENERGY_AT_REST_MEV - _MUON_REST)
             muons += stopped
     else:
         muons += stopped
         # muons that decay in flight: their electron starts where they are, boost neglected
-        flying = np.sum(scattered.core_decays + scattered.later_decays, axis=1)
-        count = np.sum(scattered.core_decays + scattered.later_decays, axis=0)
+        flying = np.sum(first + later, axis=1)
+        count = np.sum(first + later, axis=0)
         rest.neutrino += float(np.sum(count * GROUP_ENERGY_MEV))
         electrons += flying
     caught = np.zeros(grid.cells)
