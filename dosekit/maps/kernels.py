@@ -213,7 +213,7 @@ def _split(variance, inverse_width_step, ladder):  # type: ignore[no-untyped-def
 
 @njit(error_model="numpy", cache=True)
 def _fill_row(  # type: ignore[no-untyped-def]
-    j, r, gap, fluence, wet, local, slant, inverse_bin, power, narrow, state, reference, growth, ladder,
+    j, r, gap, fluence, wet, local, slant, inverse_bin, power, survivors, narrow, state, reference, growth, ladder,
     inverse_width_step, broad, column, share_u, source, touched, gathered,
 ):  # fmt: skip
     """Take one row of rays to plane j and share out what they leave there: widths of the core, coarse columns."""
@@ -244,7 +244,9 @@ def _fill_row(  # type: ignore[no-untyped-def]
             stops = low * narrow[i, k, 1] + high * narrow[i + 1, k, 1]
             if energy == 0.0 and stops == 0.0:
                 continue
-            g, share = _split(state[r, c, 2, k] - reference[k] * growth, inverse_width_step, ladder)
+            left = (1.0 - f) * survivors[i, k] + f * survivors[i + 1, k]
+            variance = (state[r, c, 2, k] - reference[k] * growth) * left
+            g, share = _split(variance, inverse_width_step, ladder)
             source[g, 0, r, c] += (1.0 - share) * energy
             source[g, 1, r, c] += (1.0 - share) * stops
             touched[r, g] = 1
@@ -261,10 +263,10 @@ def _fill_row(  # type: ignore[no-untyped-def]
 
 @njit(error_model="numpy", cache=True)
 def _touch_row(  # type: ignore[no-untyped-def]
-    j, r, gap, wet, local, slant, inverse_bin, power, narrow, state, reference, growth, ladder, inverse_width_step,
-    touched,
+    j, r, gap, wet, local, slant, inverse_bin, power, survivors, narrow, state, reference, growth, ladder,
+    inverse_width_step, touched, variances,
 ):  # fmt: skip
-    """Take one row of rays to plane j and note which widths they use."""
+    """Take one row of rays to plane j; keep their variances and note which widths they use."""
     last = power.shape[0] - 1
     touched[r, :] = 0
     for c in range(wet.shape[2]):
@@ -277,156 +279,142 @@ def _touch_row(  # type: ignore[no-untyped-def]
             stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
             if energy == 0.0 and stops == 0.0:
                 continue
-            g, share = _split(state[r, c, 2, k] - reference[k] * growth, inverse_width_step, ladder)
+            left = (1.0 - f) * survivors[i, k] + f * survivors[i + 1, k]
+            variances[r, c, k] = (state[r, c, 2, k] - reference[k] * growth) * left
+            g, share = _split(variances[r, c, k], inverse_width_step, ladder)
             touched[r, g] = 1
             if share > 0.0:
                 touched[r, g + 1] = 1
 
 
 @njit(error_model="numpy", cache=True)
-def _list_rungs(touched, rungs):  # type: ignore[no-untyped-def]
-    """Write down the widths that any row uses; return how many."""
-    used = 0
-    for g in range(touched.shape[1]):
-        for r in range(touched.shape[0]):
-            if touched[r, g]:
-                rungs[used] = g
-                used += 1
-                break
-    return used
-
-
-@njit(error_model="numpy", cache=True)
-def _spread_along_u(source, taps, reach, first_column, across):  # type: ignore[no-untyped-def]
-    """Spread one row of rays along u: across[part, column] from source[part, ray]."""
-    parts, nu = source.shape
-    columns = across.shape[1]
-    for part in range(parts):
-        across[part, :] = 0.0
-        for t in range(-reach, reach + 1):
-            tap = taps[abs(t)]
-            shift = first_column + t
-            for c in range(max(0, -shift), min(nu, columns - shift)):
-                across[part, shift + c] += tap * source[part, c]
-
-
-@njit(error_model="numpy", cache=True)
-def _gather_along_u(across, taps, reach, first_column, source):  # type: ignore[no-untyped-def]
-    """Transpose of `_spread_along_u`."""
-    parts, nu = source.shape
-    columns = across.shape[1]
-    for part in range(parts):
-        source[part, :] = 0.0
-        for t in range(-reach, reach + 1):
-            tap = taps[abs(t)]
-            shift = first_column + t
-            for c in range(max(0, -shift), min(nu, columns - shift)):
-                source[part, c] += tap * across[part, shift + c]
-
-
-@njit(error_model="numpy", cache=True)
-def _spread_along_v(row, across, taps, radius, rungs, used, touched, first_row, per_area, line, out):  # type: ignore[no-untyped-def]
-    """Collect one row of a plane from the rows of rays, over all widths."""
-    nv = touched.shape[0]
-    columns = line.size
-    for part in range(2):
-        line[:] = 0.0
-        for n in range(used):
-            g = rungs[n]
-            reach = radius[g]
-            for r in range(max(0, row - first_row - reach), min(nv, row - first_row + reach + 1)):
+def _spread_plane(source, touched, taps_u, taps_v, radius, first_row, first_column, per_area, out):  # type: ignore[no-untyped-def]
+    """Spread every width of one plane along u and v: out[row, column, part] from source[rung, part, v, u]."""
+    rungs, parts, nv, nu = source.shape
+    rows, columns = out.shape[0], out.shape[1]
+    across = np.empty((parts, nv, columns))
+    total = np.zeros((parts, rows, columns))
+    for g in range(rungs):
+        if not touched[:, g].any():
+            continue
+        reach = radius[g]
+        for part in range(parts):
+            for r in range(nv):
+                across[part, r, :] = 0.0
                 if touched[r, g] == 0:
                     continue
-                tap = taps[g, abs(row - first_row - r)]
-                for c in range(columns):
-                    line[c] += tap * across[g, part, r, c]
+                for t in range(-reach, reach + 1):
+                    tap = taps_u[g, abs(t)]
+                    shift = first_column + t
+                    for c in range(max(0, -shift), min(nu, columns - shift)):
+                        across[part, r, shift + c] += tap * source[g, part, r, c]
+            for row in range(rows):
+                for r in range(max(0, row - first_row - reach), min(nv, row - first_row + reach + 1)):
+                    if touched[r, g] == 0:
+                        continue
+                    tap = taps_v[g, abs(row - first_row - r)]
+                    for c in range(columns):
+                        total[part, row, c] += tap * across[part, r, c]
+    for row in range(rows):
         for c in range(columns):
-            out[c, part] = line[c] * per_area
+            for part in range(parts):
+                out[row, c, part] = total[part, row, c] * per_area
 
 
 @njit(error_model="numpy", cache=True)
-def _gather_along_v(g, r, plane, taps, reach, first_row, per_area, across):  # type: ignore[no-untyped-def]
-    """Transpose of `_spread_along_v` for one width and row of rays."""
+def _gather_plane(plane, touched, taps_u, taps_v, radius, first_row, first_column, per_area, source):  # type: ignore[no-untyped-def]
+    """Transpose of `_spread_plane`."""
+    rungs, parts, nv, nu = source.shape
     rows, columns = plane.shape[0], plane.shape[1]
-    for part in range(2):
-        across[g, part, r, :] = 0.0
-        for row in range(max(0, first_row + r - reach), min(rows, first_row + r + reach + 1)):
-            tap = taps[abs(row - first_row - r)] * per_area
-            for c in range(columns):
-                across[g, part, r, c] += tap * plane[row, c, part]
+    line = np.empty(columns)
+    for g in range(rungs):
+        reach = radius[g]
+        for r in range(nv):
+            if touched[r, g] == 0:
+                continue
+            for part in range(parts):
+                line[:] = 0.0
+                for row in range(max(0, first_row + r - reach), min(rows, first_row + r + reach + 1)):
+                    tap = taps_v[g, abs(row - first_row - r)] * per_area
+                    for c in range(columns):
+                        line[c] += tap * plane[row, c, part]
+                source[g, part, r, :] = 0.0
+                for t in range(-reach, reach + 1):
+                    tap = taps_u[g, abs(t)]
+                    shift = first_column + t
+                    for c in range(max(0, -shift), min(nu, columns - shift)):
+                        source[g, part, r, c] += tap * line[shift + c]
 
 
 @njit(error_model="numpy", cache=True)
-def _coarse_along_u(row, gathered, coarse_row, share_v, taps, reach, first_column, source, across):  # type: ignore[no-untyped-def]
-    """Add rows of rays into one coarse row and spread it along u."""
-    active, parts = source.shape
-    source[:] = 0.0
-    across[:] = 0.0
-    for r in range(coarse_row.size):
-        here = coarse_row[r] - coarse_row[0]
-        if here == row:
-            share = 1.0 - share_v[r]
-        elif here + 1 == row:
-            share = share_v[r]
-        else:
-            continue
-        for n in range(active):
-            for b in range(parts):
-                source[n, b] += share * gathered[r, n, b]
-    for column in range(across.shape[0]):
-        for n in range(active):
-            offset = abs(column - first_column - n)
-            for b in range(reach[offset]):
-                across[column, b] += taps[offset, b] * source[n, b]
-
-
-@njit(error_model="numpy", cache=True)
-def _coarse_along_v(row, across, taps, reach, first_row, component, per_area, cell, out):  # type: ignore[no-untyped-def]
-    """Collect one coarse row from the coarse rows of rays and add the parts of each component."""
-    active, columns, parts = across.shape
-    for column in range(columns):
-        cell[:] = 0.0
-        for n in range(active):
-            offset = abs(row - first_row - n)
-            for b in range(reach[offset]):
-                cell[b] += taps[offset, b] * across[n, column, b]
-        for m in range(out.shape[1]):
-            out[column, m] = 0.0
-        for b in range(parts):
-            out[column, component[b]] += cell[b] * per_area
-
-
-@njit(error_model="numpy", cache=True)
-def _coarse_transposed(n, plane, taps_u, taps_v, reach, first_row, first_column, component, per_area, across, source):  # type: ignore[no-untyped-def]
-    """Transpose of both coarse spreads for one coarse row of rays."""
-    rows, columns = plane.shape[0], plane.shape[1]
-    active, parts = source.shape
+def _spread_coarse(  # type: ignore[no-untyped-def]
+    gathered, coarse_row, share_v, taps_u, taps_v, reach, first_row, first_column, component, per_area, out
+):
+    """Spread the broad parts of one plane: out[row, column, component] from gathered[v, column of rays, part]."""
+    nv, active, parts = gathered.shape
+    rows, columns = out.shape[0], out.shape[1]
+    lines = coarse_row[nv - 1] - coarse_row[0] + 2
+    source = np.zeros((lines, active, parts))
+    across = np.zeros((lines, columns, parts))
     cell = np.zeros(parts)
-    for column in range(columns):
-        cell[:] = 0.0
-        for row in range(rows):
-            offset = abs(row - first_row - n)
-            for b in range(reach[offset]):
-                cell[b] += taps_v[offset, b] * plane[row, column, component[b]]
-        for b in range(parts):
-            across[column, b] = cell[b] * per_area
-    for m in range(active):
-        cell[:] = 0.0
+    for r in range(nv):
+        n = coarse_row[r] - coarse_row[0]
+        for m in range(active):
+            for b in range(parts):
+                source[n, m, b] += (1.0 - share_v[r]) * gathered[r, m, b]
+                source[n + 1, m, b] += share_v[r] * gathered[r, m, b]
+    for n in range(lines):
         for column in range(columns):
-            offset = abs(column - first_column - m)
-            for b in range(reach[offset]):
-                cell[b] += taps_u[offset, b] * across[column, b]
-        for b in range(parts):
-            source[m, b] = cell[b]
+            for m in range(active):
+                offset = abs(column - first_column - m)
+                for b in range(reach[offset]):
+                    across[n, column, b] += taps_u[offset, b] * source[n, m, b]
+    for row in range(rows):
+        for column in range(columns):
+            cell[:] = 0.0
+            for n in range(lines):
+                offset = abs(row - first_row - n)
+                for b in range(reach[offset]):
+                    cell[b] += taps_v[offset, b] * across[n, column, b]
+            for m in range(out.shape[2]):
+                out[row, column, m] = 0.0
+            for b in range(parts):
+                out[row, column, component[b]] += cell[b] * per_area
+
+
+@njit(error_model="numpy", cache=True)
+def _gather_coarse(plane, taps_u, taps_v, reach, first_row, first_column, component, per_area, source):  # type: ignore[no-untyped-def]
+    """Transpose of `_spread_coarse`, up to the coarse rows of rays."""
+    lines, active, parts = source.shape
+    rows, columns = plane.shape[0], plane.shape[1]
+    cell = np.zeros(parts)
+    across = np.zeros((columns, parts))
+    for n in range(lines):
+        for column in range(columns):
+            cell[:] = 0.0
+            for row in range(rows):
+                offset = abs(row - first_row - n)
+                for b in range(reach[offset]):
+                    cell[b] += taps_v[offset, b] * plane[row, column, component[b]]
+            for b in range(parts):
+                across[column, b] = cell[b] * per_area
+        for m in range(active):
+            cell[:] = 0.0
+            for column in range(columns):
+                offset = abs(column - first_column - m)
+                for b in range(reach[offset]):
+                    cell[b] += taps_u[offset, b] * across[column, b]
+            for b in range(parts):
+                source[n, m, b] = cell[b]
 
 
 @njit(error_model="numpy", cache=True)
 def _read_row(  # type: ignore[no-untyped-def]
-    j, r, wet, slant, inverse_bin, power, narrow, state, reference, growth, ladder, inverse_width_step, broad,
-    column, share_u, row, share_v, source, coarse, fluence,
+    j, r, wet, slant, inverse_bin, narrow, variances, ladder, inverse_width_step, broad, column, share_u, row,
+    share_v, source, coarse, fluence,
 ):  # fmt: skip
     """Transpose of `_fill_row`: what each particle on a row of rays is worth at plane j."""
-    last = power.shape[0] - 1
+    last = narrow.shape[0] - 1
     parts = broad.shape[2]
     total = np.zeros(parts)
     n = row[r] - row[0]
@@ -437,14 +425,14 @@ def _read_row(  # type: ignore[no-untyped-def]
                 (1.0 - share_u[c]) * coarse[n, m, b] + share_u[c] * coarse[n, m + 1, b]
             ) + share_v[r] * ((1.0 - share_u[c]) * coarse[n + 1, m, b] + share_u[c] * coarse[n + 1, m + 1, b])
         i, f = _row(wet[j, r, c], inverse_bin, last)
-        for k in range(power.shape[1]):
+        for k in range(narrow.shape[1]):
             value = 0.0
             for b in range(parts):
                 value += total[b] * ((1.0 - f) * broad[i, k, b] + f * broad[i + 1, k, b])
             energy = (1.0 - f) * narrow[i, k, 0] + f * narrow[i + 1, k, 0]
             stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
             if energy != 0.0 or stops != 0.0:
-                g, share = _split(state[r, c, 2, k] - reference[k] * growth, inverse_width_step, ladder)
+                g, share = _split(variances[r, c, k], inverse_width_step, ladder)
                 value += (1.0 - share) * (energy * source[g, 0, r, c] + stops * source[g, 1, r, c])
                 if share > 0.0:
                     value += share * (energy * source[g + 1, 0, r, c] + stops * source[g + 1, 1, r, c])
@@ -461,105 +449,89 @@ def _begin(start, state):  # type: ignore[no-untyped-def]
 
 @njit(parallel=True, error_model="numpy", cache=True)
 def spread(  # type: ignore[no-untyped-def]
-    fluence, wet, local, slant, w, inverse_bin, power, narrow, start, ahead, reference, growth, ladder,
+    fluence, wet, local, slant, w, inverse_bin, power, survivors, narrow, start, ahead, reference, growth, ladder,
     inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
     broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_reach,
-    broad_component, coarse_first_row, coarse_first_column, coarse_per_area, fine_map, coarse_map,
+    broad_component, coarse_first_row, coarse_first_column, coarse_per_area, block, fine_map, coarse_map,
 ):  # fmt: skip
-    """Fold the fluence on rays into maps on the planes: fine_map[j, v, u, 2] and coarse_map[j, v, u, component]."""
+    """Fold the fluence on rays into maps on the planes: fine_map[j, v, u, 2] and coarse_map[j, v, u, component].
+
+    Rows of rays are followed through a block of planes at a time; then the planes of the block are spread.
+    """
     nw, nv, nu = wet.shape
-    columns, coarse_columns = fine_map.shape[2], coarse_map.shape[2]
     parts = broad.shape[2]
-    active_rows = coarse_row[nv - 1] - coarse_row[0] + 2
     active_columns = coarse_column[nu - 1] - coarse_column[0] + 2
     state = np.empty((nv, nu, 3, power.shape[1]))
     _begin(start, state)
-    source = np.zeros((ladder.size, 2, nv, nu))
-    across = np.zeros((ladder.size, 2, nv, columns))
-    touched = np.zeros((nv, ladder.size), dtype=np.uint8)
-    rungs = np.zeros(ladder.size, dtype=np.int64)
-    gathered = np.zeros((nv, active_columns, parts))
-    coarse_source = np.zeros((active_rows, active_columns, parts))
-    coarse_across = np.zeros((active_rows, coarse_columns, parts))
-    for j in range(nw):
-        gap = ahead if j == 0 else w[j] - w[j - 1]
-        n = kernel_of_plane[j]
+    source = np.empty((block, ladder.size, 2, nv, nu))
+    touched = np.zeros((block, nv, ladder.size), dtype=np.uint8)
+    gathered = np.empty((block, nv, active_columns, parts))
+    for begin in range(0, nw, block):
+        end = min(begin + block, nw)
         for r in prange(nv):
-            _fill_row(
-                j, r, gap, fluence, wet, local, slant, inverse_bin, power, narrow, state, reference, growth[j],
-                ladder, inverse_width_step, broad, coarse_column, coarse_share_u, source, touched, gathered,
+            for j in range(begin, end):
+                _fill_row(
+                    j, r, ahead if j == 0 else w[j] - w[j - 1], fluence, wet, local, slant, inverse_bin, power,
+                    survivors, narrow, state, reference, growth[j], ladder, inverse_width_step, broad, coarse_column,
+                    coarse_share_u, source[j - begin], touched[j - begin], gathered[j - begin],
+                )  # fmt: skip
+        for j in prange(begin, end):
+            n = kernel_of_plane[j]
+            _spread_plane(
+                source[j - begin], touched[j - begin], taps_u[n], taps_v[n], radius[n], first_row, first_column,
+                per_area[j], fine_map[j],
             )  # fmt: skip
-        used = _list_rungs(touched, rungs)
-        for task in prange(used * nv):
-            g = rungs[task // nv]
-            r = task % nv
-            if touched[r, g]:
-                _spread_along_u(source[g, :, r], taps_u[n, g], radius[n, g], first_column, across[g, :, r])
-        for row in prange(fine_map.shape[1]):
-            _spread_along_v(
-                row, across, taps_v[n], radius[n], rungs, used, touched, first_row, per_area[j], np.empty(columns),
-                fine_map[j, row],
-            )  # fmt: skip
-        for row in prange(active_rows):
-            _coarse_along_u(
-                row, gathered, coarse_row, coarse_share_v, broad_taps_u[n], broad_reach[n], coarse_first_column,
-                coarse_source[row], coarse_across[row],
-            )  # fmt: skip
-        for row in prange(coarse_map.shape[1]):
-            _coarse_along_v(
-                row, coarse_across, broad_taps_v[n], broad_reach[n], coarse_first_row, broad_component,
-                coarse_per_area[j], np.empty(parts), coarse_map[j, row],
+            _spread_coarse(
+                gathered[j - begin], coarse_row, coarse_share_v, broad_taps_u[n], broad_taps_v[n], broad_reach[n],
+                coarse_first_row, coarse_first_column, broad_component, coarse_per_area[j], coarse_map[j],
             )  # fmt: skip
 
 
 @njit(parallel=True, error_model="numpy", cache=True)
 def spread_transposed(  # type: ignore[no-untyped-def]
-    fine_map, coarse_map, wet, local, slant, w, inverse_bin, power, narrow, start, ahead, reference, growth, ladder,
-    inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
+    fine_map, coarse_map, wet, local, slant, w, inverse_bin, power, survivors, narrow, start, ahead, reference,
+    growth, ladder, inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
     broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_reach,
-    broad_component, coarse_first_row, coarse_first_column, coarse_per_area, fluence,
+    broad_component, coarse_first_row, coarse_first_column, coarse_per_area, block, fluence,
 ):  # fmt: skip
     """Transpose of `spread`: maps on the planes to fluence on rays."""
     nw, nv, nu = wet.shape
-    columns, coarse_columns = fine_map.shape[2], coarse_map.shape[2]
-    parts = broad.shape[2]
-    active_rows = coarse_row[nv - 1] - coarse_row[0] + 2
+    steps = power.shape[1]
+    lines = coarse_row[nv - 1] - coarse_row[0] + 2
     active_columns = coarse_column[nu - 1] - coarse_column[0] + 2
-    state = np.empty((nv, nu, 3, power.shape[1]))
+    state = np.empty((nv, nu, 3, steps))
     _begin(start, state)
     fluence[:] = 0.0
-    source = np.zeros((ladder.size, 2, nv, nu))
-    across = np.zeros((ladder.size, 2, nv, columns))
-    touched = np.zeros((nv, ladder.size), dtype=np.uint8)
-    rungs = np.zeros(ladder.size, dtype=np.int64)
-    coarse_source = np.zeros((active_rows, active_columns, parts))
-    coarse_across = np.zeros((active_rows, coarse_columns, parts))
-    for j in range(nw):
-        gap = ahead if j == 0 else w[j] - w[j - 1]
-        n = kernel_of_plane[j]
+    source = np.empty((block, ladder.size, 2, nv, nu))
+    touched = np.zeros((block, nv, ladder.size), dtype=np.uint8)
+    variances = np.zeros((block, nv, nu, steps))
+    coarse_source = np.empty((block, lines, active_columns, broad.shape[2]))
+    for begin in range(0, nw, block):
+        end = min(begin + block, nw)
         for r in prange(nv):
-            _touch_row(
-                j, r, gap, wet, local, slant, inverse_bin, power, narrow, state, reference, growth[j], ladder,
-                inverse_width_step, touched,
+            for j in range(begin, end):
+                _touch_row(
+                    j, r, ahead if j == 0 else w[j] - w[j - 1], wet, local, slant, inverse_bin, power, survivors,
+                    narrow, state, reference, growth[j], ladder, inverse_width_step, touched[j - begin],
+                    variances[j - begin],
+                )  # fmt: skip
+        for j in prange(begin, end):
+            n = kernel_of_plane[j]
+            _gather_plane(
+                fine_map[j], touched[j - begin], taps_u[n], taps_v[n], radius[n], first_row, first_column,
+                per_area[j], source[j - begin],
             )  # fmt: skip
-        used = _list_rungs(touched, rungs)
-        for task in prange(used * nv):
-            g = rungs[task // nv]
-            r = task % nv
-            if touched[r, g]:
-                _gather_along_v(g, r, fine_map[j], taps_v[n, g], radius[n, g], first_row, per_area[j], across)
-                _gather_along_u(across[g, :, r], taps_u[n, g], radius[n, g], first_column, source[g, :, r])
-        for row in prange(active_rows):
-            _coarse_transposed(
-                row, coarse_map[j], broad_taps_u[n], broad_taps_v[n], broad_reach[n], coarse_first_row,
-                coarse_first_column, broad_component, coarse_per_area[j], coarse_across[row], coarse_source[row],
+            _gather_coarse(
+                coarse_map[j], broad_taps_u[n], broad_taps_v[n], broad_reach[n], coarse_first_row,
+                coarse_first_column, broad_component, coarse_per_area[j], coarse_source[j - begin],
             )  # fmt: skip
         for r in prange(nv):
-            _read_row(
-                j, r, wet, slant, inverse_bin, power, narrow, state, reference, growth[j], ladder,
-                inverse_width_step, broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, source,
-                coarse_source, fluence,
-            )  # fmt: skip
+            for j in range(begin, end):
+                _read_row(
+                    j, r, wet, slant, inverse_bin, narrow, variances[j - begin], ladder, inverse_width_step, broad,
+                    coarse_column, coarse_share_u, coarse_row, coarse_share_v, source[j - begin],
+                    coarse_source[j - begin], fluence,
+                )  # fmt: skip
 
 
 @njit(inline="always", error_model="numpy")

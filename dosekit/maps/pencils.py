@@ -36,6 +36,7 @@ __all__ = ["FieldPencils", "field_bytes", "field_pencils"]
 BODY_RSP = 0.05
 """Relative stopping power above which a ray counts as having met something."""
 
+PLANES_AT_ONCE = 16
 _COARSEST_MM = 8.0
 _LINEAR_VARIANCE = 1.0 / 6.0  # mean variance that linear interpolation adds, squared lattice steps
 _SPLINE_VARIANCE = 1.0 / 4.0  # variance that interpolation by a quadratic B-spline adds, anywhere
@@ -420,6 +421,7 @@ def field_pencils(
         planes.w_mm,
         1.0 / tables.bin_mm,
         tables.power,
+        tables.survivors,
         tables.narrow,
         tables.start,
         ahead,
@@ -446,6 +448,7 @@ def field_pencils(
         int(lines[0]),
         int(columns[0]),
         1.0 / (coarse.spacing_mm * magnified) ** 2,
+        PLANES_AT_ONCE,
     )
     return FieldPencils(
         field=field,

@@ -44,6 +44,7 @@ _WIDTH_RATIO = 1.5
 _SIGNIFICANT = 1e-4
 _NEGLIGIBLE = 1e-10
 _GONE = 1e-3
+_QUADRATURE = 24
 _LOWEST_ENERGY_MEV = 0.5
 
 
@@ -59,6 +60,8 @@ class StepTables:
         Energy (MeV/mm) and stops (1/mm) of the core per particle, shape (rows, K, 2).
     power : ndarray
         Scattering power of the core in water, rad2/mm, shape (rows, K).
+    survivors : ndarray
+        Scatter variance of those that reach a depth over that of the mean particle, shape (rows, K).
     broad : ndarray
         Energy or stops per part, shape (rows, K, parts).
     part_sigma_mm : ndarray
@@ -74,6 +77,7 @@ class StepTables:
     bin_mm: float
     narrow: NDArray[np.float64]
     power: NDArray[np.float64]
+    survivors: NDArray[np.float64]
     broad: NDArray[np.float64]
     part_sigma_mm: NDArray[np.float64]
     part_target: NDArray[np.int64]
@@ -113,6 +117,8 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     start = _behind_shifter(library, beam)
     gap = beam.range_shifter_gap_mm
     in_water = _variance_in_water(power, start, gap_mm=gap, bin_mm=bin_mm)
+    survivors = _survivors(beam, energy, start, in_water, gap_mm=gap, depth_mm=depth)
+    in_water *= survivors
     narrow = np.stack([_clean(library.quantities[key]) for key in ("core", "core_stops")], axis=2)
     values, sigmas, targets = [], [], []
     for key, target in BROAD_TARGETS.items():
@@ -133,6 +139,7 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
         bin_mm=bin_mm,
         narrow=_rows(narrow),
         power=_rows(power),
+        survivors=_rows(survivors),
         broad=_rows(broad),
         part_sigma_mm=np.array([sigmas[n] for n in order], dtype=np.float64),
         part_target=np.array([targets[n] for n in order], dtype=np.int64),
@@ -173,6 +180,37 @@ def _variance_in_water(
         a0 = a0 + t * dl
         gained[:, n] = a2 - surface
     return gained
+
+
+def _survivors(
+    beam: Beam,
+    energy: NDArray[np.float64],
+    start: NDArray[np.float64],
+    in_water: NDArray[np.float64],
+    *,
+    gap_mm: float,
+    depth_mm: NDArray[np.float64],
+) -> NDArray[np.float64]:
+    """Return by how much the scatter variance of those that reach a depth differs from `in_water`, shape (K, N).
+
+    Near the end of the range only particles with more range than the mean are left: they had more energy all along
+    and scattered less. Their own range is the depth plus what is left of it, and their variance in water is the
+    integral of the scattering power over the squared distance, at the energies that belong to that range.
+    """
+    from dosekit.beams.ranges import range_table
+    from dosekit.beams.scattering import scattering_power_rad2_mm
+
+    table = range_table(beam.particle, "water")
+    left = np.asarray(table.range_mm(energy), dtype=np.float64)  # range left at each depth
+    nodes, weights = np.polynomial.legendre.leggauss(_QUADRATURE)
+    part, weights = 0.5 * (nodes + 1.0), 0.5 * weights
+    distance = depth_mm[None, :, None] * part**2  # from the depth back to the surface, finer near the depth
+    there = np.maximum(table.energy_mev(left[..., None] + distance), _LOWEST_ENERGY_MEV)
+    power = scattering_power_rad2_mm(beam.particle, "water", there, start_energy_mev=beam.kinetic_energy_mev)
+    gained = (power * distance**2 * (2.0 * part * depth_mm[None, :, None]) * weights).sum(axis=2)
+    a0, a1, _ = start
+    drift = 2.0 * (a1 + a0 * gap_mm)[:, None] * depth_mm + a0[:, None] * depth_mm**2
+    return np.where(in_water > 0.0, (gained + drift) / np.where(in_water > 0.0, in_water, 1.0), 1.0)
 
 
 def _divide(quantity: NDArray[np.float64], variance: NDArray[np.float64]) -> list[tuple[float, NDArray[np.float64]]]:
