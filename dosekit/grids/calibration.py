@@ -229,28 +229,31 @@ class Calibration:
         CalibrationWarning
             When voxels lie beyond the chain; they get the tissue at its end.
         """
-        from dosekit.grids.kernels import look_up_matter, renumber
-
         low, high = math.floor(self.nodes_hu[0]), math.ceil(self.nodes_hu[-1])
-        bottom, top = min(AIR_HU, low), max(AIR_HU, high)
-        steps = np.arange(bottom, top + 1, dtype=float)
-        density_of = self.density_g_cm3(steps).astype(np.float32)
-        bin_of = np.clip(np.searchsorted(self.bins_hu, steps, side="right") - 1, 0, len(self.compositions) - 1)
-        values = (hu if hu.dtype.kind == "i" else np.rint(np.clip(hu, -1e6, 1e6)).astype(np.int32)).ravel()
-        marked = np.zeros(0, dtype=bool) if padding is None else padding.ravel()
+        top = max(AIR_HU, high) + 1  # the last cell of the tables stands for all that lies above
+        cells = np.arange(AIR_HU, top + 1, dtype=float)
+        density_of = self.density_g_cm3(cells).astype(np.float32)
+        bin_of = np.clip(np.searchsorted(self.bins_hu, cells, side="right") - 1, 0, len(self.compositions) - 1)
+
+        def cells_of(plane: int) -> NDArray[np.intp]:
+            values = hu[plane] if hu.dtype.kind == "i" else np.rint(hu[plane])
+            if padding is not None:
+                values = np.where(padding[plane], AIR_HU, values)
+            return np.asarray(np.clip(values, AIR_HU, top), dtype=np.intp) - AIR_HU
+
+        voxels = np.zeros(len(cells), dtype=np.int64)
+        for plane in range(hu.shape[0]):
+            voxels += np.bincount(cells_of(plane).ravel(), minlength=len(cells))
+        used = np.unique(bin_of[voxels > 0])
+        numbers = np.searchsorted(used, bin_of).astype(np.uint16)
         density = np.empty(hu.shape, dtype=np.float32)
         index = np.empty(hu.shape, dtype=np.uint16)
-        seen = np.zeros(len(self.compositions), dtype=np.int64)
-        below, above = look_up_matter(
-            values,
-            marked,
-            density_of,
-            bin_of.astype(np.uint16),
-            (bottom, top, AIR_HU, low if low > AIR_HU + _AIR_SLACK_HU else bottom, high),
-            density.reshape(-1),
-            index.reshape(-1),
-            seen,
-        )
+        for plane in range(hu.shape[0]):
+            which = cells_of(plane)
+            density[plane] = density_of[which]
+            index[plane] = numbers[which]
+        above = int(voxels[cells > high].sum())
+        below = int(voxels[cells < low].sum()) if low > AIR_HU + _AIR_SLACK_HU else 0
         highest = float(hu.max()) if above else 0.0
         if above or below:
             sides = [f"{above} voxels above {high} HU (highest {highest:.0f})"] if above else []
@@ -261,10 +264,6 @@ class Calibration:
                 CalibrationWarning,
                 stacklevel=2,
             )
-        used = np.flatnonzero(seen)
-        numbers = np.zeros(len(seen), dtype=np.uint16)
-        numbers[used] = np.arange(len(used))
-        renumber(index.reshape(-1), numbers)
         return density, index, tuple(self.compositions[int(i)] for i in used), above + below
 
     def curve(self, *, step_hu: float = 5.0, yields: str = "evaluated") -> CalibrationCurve:

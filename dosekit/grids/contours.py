@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 
 __all__ = ["GAP", "ON_SLICE", "RAYS", "Contour", "Lattice", "covered_voxels"]
 
-RAYS = 8
+RAYS = 32
 """Scan lines per pixel row."""
 ON_SLICE = 0.1
 """A contour this close to a slice, as a share of the slice spacing, lies on it."""

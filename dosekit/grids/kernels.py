@@ -1,4 +1,4 @@
-"""Compiled kernels of the room: resampling by overlap, filling of contours, HU to matter.
+"""Compiled kernels of the room: material by overlap, filling of contours.
 
 Readable twins live in ``tests/naive.py``.
 """
@@ -13,47 +13,7 @@ from numba import njit
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-__all__ = ["look_up_matter", "overlap_density", "overlap_material", "renumber", "scan_edges"]
-
-
-@njit(cache=True, error_model="numpy", nogil=True)
-def overlap_density(
-    values: NDArray[np.float32],
-    first: tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]],
-    shares: tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]],
-    out: NDArray[np.float32],
-) -> None:
-    """Average values over new voxels.
-
-    Parameters
-    ----------
-    values : ndarray
-        Values on the old lattice [z, y, x].
-    first : tuple of ndarray
-        Per axis (z, y, x) the first old voxel under each new voxel.
-    shares : tuple of ndarray
-        Per axis the share of the new voxel that each old voxel from `first` on covers, [new, k].
-    out : ndarray
-        Averages on the new lattice [z, y, x], overwritten.
-    """
-    count_z, count_y, count_x = out.shape
-    for z in range(count_z):
-        for y in range(count_y):
-            for x in range(count_x):
-                total = 0.0
-                for a in range(shares[0].shape[1]):
-                    share_z = shares[0][z, a]
-                    if share_z == 0.0:
-                        continue
-                    for b in range(shares[1].shape[1]):
-                        share_zy = share_z * shares[1][y, b]
-                        if share_zy == 0.0:
-                            continue
-                        for c in range(shares[2].shape[1]):
-                            share = share_zy * shares[2][x, c]
-                            if share != 0.0:
-                                total += share * values[first[0][z] + a, first[1][y] + b, first[2][x] + c]
-                out[z, y, x] = total
+__all__ = ["overlap_material", "scan_edges"]
 
 
 @njit(cache=True, error_model="numpy", nogil=True)
@@ -70,8 +30,10 @@ def overlap_material(
     ----------
     index : ndarray
         Material index on the old lattice [z, y, x].
-    first, shares : tuple of ndarray
-        As in `overlap_density`.
+    first : tuple of ndarray
+        Per axis (z, y, x) the first old voxel under each new voxel.
+    shares : tuple of ndarray
+        Per axis the share of the new voxel that each old voxel from `first` on covers, [new, k].
     tally : ndarray
         Work space, one entry per material, all 0.
     out : ndarray
@@ -162,73 +124,11 @@ def _cross(edges: NDArray[np.float64], y: float, crossings: NDArray[np.float64])
         y1, y2 = edges[number, 1], edges[number, 3]
         if (y1 <= y) != (y2 <= y):
             x1 = edges[number, 0]
-            crossings[count] = x1 + (y - y1) * (edges[number, 2] - x1) / (y2 - y1)
+            x = x1 + (y - y1) * (edges[number, 2] - x1) / (y2 - y1)
+            place = count
+            while place > 0 and crossings[place - 1] > x:
+                crossings[place] = crossings[place - 1]
+                place -= 1
+            crossings[place] = x
             count += 1
-    crossings[:count].sort()
     return count
-
-
-@njit(cache=True, error_model="numpy", nogil=True)
-def look_up_matter(
-    hu: NDArray[np.int32],
-    padding: NDArray[np.bool_],
-    density_of: NDArray[np.float32],
-    bin_of: NDArray[np.uint16],
-    limits: tuple[int, int, int, int, int],
-    density: NDArray[np.float32],
-    index: NDArray[np.uint16],
-    seen: NDArray[np.int64],
-) -> tuple[int, int]:
-    """Look up density and composition of voxels by whole HU.
-
-    Parameters
-    ----------
-    hu : ndarray
-        HU, one dimension, whole numbers.
-    padding : ndarray
-        Voxels that are air whatever their HU; empty when there are none.
-    density_of, bin_of : ndarray
-        Tables over whole HU from the first limit to the second.
-    limits : tuple of int
-        First and last HU of the tables; HU of air, below which everything is air; HU below and above which a voxel
-        lies beyond the calibration.
-    density, index : ndarray
-        Overwritten.
-    seen : ndarray
-        Voxels per composition, added to.
-
-    Returns
-    -------
-    tuple of int
-        How many voxels lie below and above the calibration.
-    """
-    bottom, top, air, lowest, highest = limits
-    below = above = 0
-    for voxel in range(hu.size):
-        value = max(int(hu[voxel]), air)
-        if padding.size > 0 and padding[voxel]:
-            value = air
-        if value > highest:
-            above += 1
-        if value < lowest:
-            below += 1
-        where = min(max(value, bottom), top) - bottom
-        density[voxel] = density_of[where]
-        index[voxel] = bin_of[where]
-        seen[bin_of[where]] += 1
-    return below, above
-
-
-@njit(cache=True, error_model="numpy", nogil=True)
-def renumber(index: NDArray[np.uint16], numbers: NDArray[np.uint16]) -> None:
-    """Replace each index (one dimension) by the number that stands for it.
-
-    Parameters
-    ----------
-    index : ndarray
-        Indices, overwritten.
-    numbers : ndarray
-        New index of each old one.
-    """
-    for voxel in range(index.size):
-        index[voxel] = numbers[index[voxel]]

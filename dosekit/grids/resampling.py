@@ -73,7 +73,7 @@ def resample_grid(grid: VoxelGrid, spacing_mm: tuple[float, float, float]) -> Vo
     VoxelGrid
         The resampled volume; see `VoxelGrid.resample`.
     """
-    from dosekit.grids.kernels import overlap_density, overlap_material
+    from dosekit.grids.kernels import overlap_material
 
     counts = [grid.shape[2 - a] * grid.spacing_mm[a] / spacing_mm[a] for a in range(3)]
     wanted = math.prod(max(1.0, float(np.ceil(n - 1e-6))) for n in counts)
@@ -82,15 +82,12 @@ def resample_grid(grid: VoxelGrid, spacing_mm: tuple[float, float, float]) -> Vo
     first = (axes[0][0], axes[1][0], axes[2][0])
     shares = (axes[0][1], axes[1][1], axes[2][1])
     shape = (len(first[0]), len(first[1]), len(first[2]))
-    density = np.empty(shape, dtype=np.float32)
-    overlap_density(grid.density_g_cm3, first, shares, density)
+    density = _averaged(grid.density_g_cm3, axes)
     index = np.empty(shape, dtype=np.uint16)
     overlap_material(grid.material_index, first, shares, np.zeros(len(grid.materials)), index)
     structures = {}
     for name in grid.structures:
-        coverage = np.empty(shape, dtype=np.float32)
-        overlap_density(grid.structures[name], first, shares, coverage)
-        structures[name] = np.minimum(coverage, np.float32(1.0))
+        structures[name] = np.minimum(_averaged(grid.structures[name], axes), np.float32(1.0))
     x, y, z = (corner + 0.5 * step for corner, step in zip(grid.lower_mm, spacing_mm, strict=True))
     return replace(
         grid,
@@ -101,3 +98,20 @@ def resample_grid(grid: VoxelGrid, spacing_mm: tuple[float, float, float]) -> Vo
         structures=Coverages(shape, structures),
         hu=None,
     )
+
+
+def _averaged(
+    values: NDArray[np.float32], axes: list[tuple[NDArray[np.int64], NDArray[np.float64]]]
+) -> NDArray[np.float32]:
+    """Average values over new voxels, one axis after the other."""
+    result: NDArray[np.float32] = values
+    for axis, (first, shares) in enumerate(axes):
+        count = result.shape[axis]
+        along = [1, 1, 1]
+        along[axis] = len(first)
+        summed = np.zeros(tuple(len(first) if a == axis else n for a, n in enumerate(result.shape)), dtype=np.float32)
+        for k in range(shares.shape[1]):
+            weights = shares[:, k].astype(np.float32).reshape(along)
+            summed += weights * np.take(result, np.minimum(first + k, count - 1), axis=axis)
+        result = summed
+    return result

@@ -145,7 +145,7 @@ def deflate_bomb(folder):
     meta_end = 144 + int.from_bytes(data[140:144], "little")
     packer = zlib.compressobj(9, zlib.DEFLATED, -zlib.MAX_WBITS)
     flood = packer.compress(b"\x08\x00\x05\x00CS\x00\x00")
-    flood += b"".join(packer.compress(bytes(1 << 20)) for _ in range(400)) + packer.flush()
+    flood += b"".join(packer.compress(bytes(1 << 20)) for _ in range(150)) + packer.flush()
     (folder / SLICE).write_bytes(data[:meta_end] + flood)
 
 
