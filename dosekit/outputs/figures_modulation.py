@@ -90,6 +90,7 @@ def range_steps_figure(
         main.plot(depth, 100.0 * weighted[k] / mean, color=_STEP_COLOUR, linewidth=0.6)
     main.plot([], [], color=_STEP_COLOUR, linewidth=0.8, label="range step, weighted")
     highest = 100.0 * float(total.max()) / mean
+    top = 100.0 * float(total[inside].max()) / mean
     if flat_dose is None:
         main.plot(depth, 100.0 * total / mean, color=_SUM_COLOUR, linewidth=1.4, label="sum of the steps")
     else:
@@ -102,6 +103,7 @@ def range_steps_figure(
         )
         main.plot(depth, flat, color=_FLAT_COLOUR, linewidth=1.4, label=quantity)
         highest = max(highest, float(flat.max()))
+        top = max(top, float(flat[inside].max()))
     main.hlines(
         [100.0 * (1.0 - flatness), 100.0 * (1.0 + flatness)],
         low,
@@ -115,7 +117,7 @@ def range_steps_figure(
     main.set_ylim(0.0, 1.25 * highest)
     main.annotate(
         f"flat to ±{100 * flatness:.1f} %\n{low:.0f} to {high:.0f} mm",
-        (0.5 * (low + high), 100.0 * (1.0 + flatness)),
+        (0.5 * (low + high), max(top, 100.0 * (1.0 + flatness))),
         xytext=(0, 4),
         textcoords="offset points",
         ha="center",

@@ -57,6 +57,8 @@ def slices_figure(
     components: Sequence[str] | None = None,
     structures: Sequence[str] | None = None,
     isodose_percent: Sequence[float] = ISODOSE_PERCENT,
+    variable: str = "dose",
+    quantity: str = "dose",
     unit: str = "Gy",
     title: str = "",
 ) -> Figure:
@@ -80,8 +82,10 @@ def slices_figure(
         Structures to outline; all without it.
     isodose_percent : sequence of float
         Levels of the isodose lines.
-    unit : str
-        Printed unit of the reference dose.
+    variable : str
+        Variable of the dataset to draw.
+    quantity, unit : str
+        What it holds and the printed unit of the reference dose.
     title : str
         A few words.
 
@@ -90,7 +94,7 @@ def slices_figure(
     Figure
         175 mm wide.
     """
-    volume = dose_volume(dose, components=None if components is None else list(components))
+    volume = dose_volume(dose, components=None if components is None else list(components), variable=variable)
     reference = _reference_gy(volume, reference_gy)
     point = _point_mm(volume, grid, target, point_mm)
     named = _structure_names(grid, structures, target)
@@ -104,7 +108,8 @@ def slices_figure(
         PAGE_MM,
         max(50.0, tallest * scale + 12.0 + 3.8 * -(-len(names) // 5)),
         alt=(
-            f"Dose in three planes (transverse, coronal, sagittal) through {where}{', ' + title if title else ''}: "
+            f"{quantity.capitalize()} in three planes (transverse, coronal, sagittal) through {where}"
+            f"{', ' + title if title else ''}: "
             f"colour wash and isodose lines at {', '.join(f'{level:g}' for level in isodose_percent)} % of "
             f"{reference:.3g} {unit}; outlines: {', '.join(names) or 'none'}."
         ),
@@ -128,7 +133,7 @@ def slices_figure(
         at = point["xyz".index(view.fixed)]
         letter_panel(axes, letter, f"{view.name}, {view.fixed} {at:.0f} mm")
     bar = figure.colorbar(ScalarMappable(norm, dose_colours()), ax=list(panels), shrink=0.9, aspect=28, pad=0.012)
-    bar.set_label(f"dose (% of {reference:.3g} {unit})")
+    bar.set_label(f"{quantity} (% of {reference:.3g} {unit})")
     bar.ax.tick_params(length=1.5)
     for axes in panels:
         axes.set_anchor("N")

@@ -12,6 +12,7 @@ from dosekit.studies.result import Result
 
 if TYPE_CHECKING:
     import xarray as xr
+    from numpy.typing import NDArray
 
     from dosekit.outputs.report import ReportFigure
     from dosekit.outputs.style import FigureFiles
@@ -101,7 +102,14 @@ def _write_tables(result: Result, folder: Path) -> list[tuple[str, OutputTable]]
     """Write the tables and return those that the report shows."""
     from dosekit.outputs.files import write_text
     from dosekit.outputs.summary import summary_text
-    from dosekit.outputs.tables import component_table, histogram_table, measures_table, settings_table, spots_table
+    from dosekit.outputs.tables import (
+        component_share_table,
+        component_table,
+        histogram_table,
+        measures_table,
+        settings_table,
+        spots_table,
+    )
 
     sources = result.summary.sources
     fields = [plan.field for plan in result.planned]
@@ -112,7 +120,8 @@ def _write_tables(result: Result, folder: Path) -> list[tuple[str, OutputTable]]
         sources=sources,
     )
     measures = measures_table(result.summary.measures, units="doses Gy, volumes cm3", sources=sources)
-    components = component_table(_doses_by_structure(result), sources=sources)
+    doses = _doses_by_structure(result)
+    components = component_table(doses, sources=sources)
     histograms = histogram_table(
         {name: histogram.curve() for name, histogram in result.histograms.items()},
         volumes_cm3={name: histogram.total_volume_cm3 for name, histogram in result.histograms.items()},
@@ -138,7 +147,7 @@ def _write_tables(result: Result, folder: Path) -> list[tuple[str, OutputTable]]
     return [
         ("Settings of each field and range step", settings),
         ("Dose measures by structure", measures),
-        ("Mean dose by component", components),
+        ("Mean dose by structure and shares of the components", component_share_table(doses, sources=sources)),
     ]
 
 
@@ -190,7 +199,7 @@ def _write_figures(result: Result, folder: Path, tell: Progress) -> list[ReportF
     from dosekit.outputs.figures_modulation import convergence_figure, range_steps_figure
     from dosekit.outputs.figures_slices import component_slices_figure, slices_figure
     from dosekit.outputs.report import report_figure
-    from dosekit.outputs.style import write_figure
+    from dosekit.outputs.style import particle_label, write_figure
 
     effective = result.study.goal.quantity == "effect"
     quantity = "effect-weighted dose" if effective else "dose"
@@ -203,22 +212,35 @@ def _write_figures(result: Result, folder: Path, tell: Progress) -> list[ReportF
         shown.append(report_figure(files, caption=caption))
 
     add(
-        slices_figure(result.dose, result.grid, target=result.target, reference_gy=result.study.goal.dose_gy),
+        slices_figure(
+            _with_effect(result),
+            result.grid,
+            target=result.target,
+            reference_gy=result.study.goal.dose_gy,
+            variable="effect_dose" if effective else "dose",
+            quantity=quantity,
+        ),
         "slices",
-        "Absorbed dose over the anatomy in three planes through the target, per fraction.",
+        f"The {quantity} over the anatomy in three planes through the target, per fraction.",
     )
     if not effective:
         histograms = {name: histogram.curve() for name, histogram in result.histograms.items()}
     else:
         histograms = {name: histogram.curve() for name, histogram in result.effect_histograms.items()}
     add(
-        histogram_figure(histograms, target=result.target, prescribed_gy=result.study.goal.dose_gy, quantity=quantity),
+        histogram_figure(
+            histograms,
+            target=result.target,
+            order=list(result.grid.structures),
+            prescribed_gy=result.study.goal.dose_gy,
+            quantity=quantity,
+        ),
         "histograms",
         f"Volume histograms of {quantity} per fraction.",
     )
     for plan in result.planned:
         beam = plan.field.beam
-        words = f"{beam.particle} {beam.momentum_mev_c:.1f} MeV/c"
+        words = f"{particle_label(beam.particle)} {beam.momentum_mev_c:.1f} MeV/c"
         add(
             depth_curve_figure(_beam_curve(result, beam), title=words),
             f"depth_{_file_name(plan.field.name)}",
@@ -234,14 +256,15 @@ def _write_figures(result: Result, folder: Path, tell: Progress) -> list[ReportF
                 weights=settings.weights,
                 flatness=settings.flatness,
                 flat_interval_mm=settings.measures.judged_mm,
-                quantity="dose",
+                flat_dose=settings.effect_dose,
+                quantity="dose" if settings.effect_dose is None else "effect-weighted dose",
                 title=f"{plan.field.name}, {words}",
             ),
             f"range_steps_{_file_name(plan.field.name)}",
             f"Range steps of field '{plan.field.name}' over its widest interval of the target, broad field in water.",
         )
     add(
-        component_slices_figure(result.dose, result.grid, target=result.target),
+        component_slices_figure(result.dose, result.grid, target=result.target, reference_gy=result.study.goal.dose_gy),
         "components",
         "Components of the dose in the transverse plane through the target.",
     )
@@ -329,11 +352,11 @@ def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
     maps = _on_output_lattice(result, _with_effect(result))
     axes = {f"{axis}_mm": maps[axis].values for axis in "xyz"}
     common: dict[str, Any] = {"reference": reference, "run_hash": result.run_hash, "plan_instance_uid": plan, **axes}
-    total = np.asarray(maps["dose"].sum("component", dtype=np.float64))
+    total = _summed(maps)
     write_rt_dose(folder / "rt_dose_total.dcm", total, comment="dose per fraction", **common)
     write_rt_dose(
         folder / "rt_dose_effective.dcm",
-        maps["effect_dose"].values,
+        np.maximum(maps["effect_dose"].values, 0.0),
         dose_type="EFFECTIVE",
         label="effect",
         comment=f"effect-weighted dose per fraction, model {result.study.effect.model}",
@@ -344,7 +367,7 @@ def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
         own = _on_output_lattice(result, result.per_field[field.name])
         write_rt_dose(
             folder / f"rt_dose_field_{_file_name(field.name)}.dcm",
-            np.asarray(own["dose"].sum("component", dtype=np.float64)),
+            _summed(own),
             summation="BEAM",
             label=field.name,
             comment=f"field {field.name}, dose per fraction",
@@ -362,3 +385,8 @@ def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
                 label=picture.stem,
                 instance_number=number,
             )
+
+
+def _summed(maps: xr.Dataset) -> NDArray[np.float64]:
+    """Return the sum of the components; what interpolation leaves below zero (parts per million) becomes zero."""
+    return np.maximum(maps["dose"].sum("component", dtype=np.float64).values, 0.0)

@@ -353,6 +353,18 @@ def test_slices_show_the_dose_where_it_is(dose, anatomy):
         assert values.max() == pytest.approx(100.0)
 
 
+def test_another_quantity_is_drawn_and_named(dose, anatomy):
+    effect = dose["dose"].sum("component") * 3.0
+    with_effect = dose.assign(effect_dose=effect)
+    settings = {"target": "target", "reference_gy": 2.0}
+    plain = panels(slices_figure(dose, anatomy, **settings))[0]
+    figure = slices_figure(with_effect, anatomy, variable="effect_dose", quantity="effect-weighted dose", **settings)
+    np.testing.assert_allclose(
+        panels(figure)[0].images[1].get_array(), 3.0 * plain.images[1].get_array(), rtol=1e-5, atol=1e-6
+    )
+    assert any("effect-weighted dose (% of 2 Gy)" in text for text in all_text(figure))
+
+
 def test_scale_bar_has_the_length_it_says(figures):
     for axes in panels(figures["slices"]):
         bar = next(line for line in axes.lines if line.get_gid() == "scale bar")
