@@ -62,7 +62,7 @@ def slice_dataset(
     ds.ImagePositionPatient = [f"{v:.6f}" for v in position]
     ds.ImageOrientationPatient = [f"{v:.10f}"[:16] for v in orientation]
     ds.PixelSpacing = [f"{v:.6f}" for v in spacing]
-    ds.SliceThickness = "1"
+    ds.SliceThickness = "3"
     ds.Rows, ds.Columns = stored.shape
     ds.SamplesPerPixel = 1
     ds.PhotometricInterpretation = "MONOCHROME2"

@@ -26,6 +26,7 @@ from dosekit.grids.calibration import (
 )
 from dosekit.grids.ct_geometry import JITTER_SHARE, SKEW_LIMIT_MM, Stack, choose_series, sort_stack
 from dosekit.grids.ct_pixels import read_pixels
+from dosekit.grids.ct_turning import resampled_volume, turned_volume
 from dosekit.grids.dicom_files import DicomHeaders, list_files, quiet_decoder, read_headers, text_of
 from dosekit.grids.memory import check_memory
 from dosekit.grids.overrides import override_structures
@@ -39,7 +40,7 @@ if TYPE_CHECKING:
 __all__ = ["CtVolume", "read_ct", "read_hu"]
 
 _TILT_SEEN_DEG = 0.1
-_MOST_GROWTH = 20
+_SAID = ("GantryDetectorTilt", "SpacingBetweenSlices", "SliceThickness")
 
 Source = str | Path | Iterable[str | Path]
 Progress = Callable[[int, int], None]
@@ -224,16 +225,17 @@ def read_hu(
     with quiet_decoder():
         stack = sort_stack(choose_series(headers, series))
         first = stack.headers[0]
-        tilt_said = text_of(first.dataset, "GantryDetectorTilt", name=first.name)
+        said = {key: text_of(first.dataset, key, name=first.name) for key in _SAID}
     _refuse_lookalikes(stack, strange)
-    tilted, uneven = _judge(stack, resample, tilt_said)
+    tilted, uneven = _judge(stack, resample)
+    _compare(stack, said, resampled=tilted or uneven)
     values, padding = read_pixels(stack, progress=_share(progress, 1, 2))
     with quiet_decoder():
         names = DicomHeaders.from_headers(stack.headers)
     if tilted or uneven:
-        values, origin, spacing, padding = _resampled(stack, values, padding)
+        values, origin, spacing, padding = resampled_volume(stack, values, padding)
     else:
-        values, origin, spacing, padding = _turned(stack, values, padding)
+        values, origin, spacing, padding = turned_volume(stack, values, padding)
     return CtVolume(
         hu=values,
         origin_mm=origin,
@@ -278,7 +280,7 @@ def _share(progress: Progress | None, part: int, parts: int) -> Progress | None:
     return tell
 
 
-def _judge(stack: Stack, resample: bool | str, tilt_said: str) -> tuple[bool, bool]:
+def _judge(stack: Stack, resample: bool | str) -> tuple[bool, bool]:
     """Refuse geometry that cannot be used as it is, or say what is to be resampled."""
     skewed = stack.skew_mm() > SKEW_LIMIT_MM
     if skewed and resample not in {True, "tilt"}:
@@ -300,103 +302,27 @@ def _judge(stack: Stack, resample: bool | str, tilt_said: str) -> tuple[bool, bo
         )
     for reason in [f"tilt of {stack.tilt_deg:.1f} degrees"] * skewed + [unevenness] * bool(unevenness):
         warn(f"the CT was resampled linearly: {reason}", GeometryWarning, stacklevel=4)
-    try:
-        tilt = abs(float(tilt_said or 0.0))
-    except ValueError:
-        tilt = 0.0
-    if 0.5 < tilt < 45.0 and stack.tilt_deg <= _TILT_SEEN_DEG and not skewed:
-        warn(
-            f"the header names a gantry tilt of {tilt:.1f} degrees, the positions of the slices show none; "
-            "the positions are used",
-            GeometryWarning,
-            stacklevel=4,
-        )
     return skewed, bool(unevenness)
 
 
-def _turned(
-    stack: Stack, values: NDArray[Any], padding: NDArray[np.bool_] | None
-) -> tuple[NDArray[Any], tuple[float, float, float], tuple[float, float, float], NDArray[np.bool_] | None]:
-    """Turn a volume to increasing patient axes without touching a value."""
-    matrix, start = stack.affine()
-    which = [int(np.abs(matrix[:, index]).argmax()) for index in range(3)]  # patient axis of each image index
-    if sorted(which) != [0, 1, 2]:
-        raise GeometryError("image axes that do not span the volume", remedy="the file is damaged; get it again")
-    of_axis = [which.index(axis) for axis in range(3)]
-    order = tuple(2 - of_axis[axis] for axis in (2, 1, 0))
-    flips = tuple(slice(None, None, -1) if matrix[axis, of_axis[axis]] < 0 else slice(None) for axis in (2, 1, 0))
-    counts = (stack.columns, stack.rows, stack.count)
-    spacing = [float(np.linalg.norm(matrix[:, of_axis[axis]])) for axis in range(3)]
-    origin = [
-        float(start[axis] + min(0.0, matrix[axis, of_axis[axis]] * (counts[of_axis[axis]] - 1))) for axis in range(3)
-    ]
-    turned = np.ascontiguousarray(values.transpose(order)[flips])
-    marked = None if padding is None else np.ascontiguousarray(padding.transpose(order)[flips])
-    return turned, (origin[0], origin[1], origin[2]), (spacing[0], spacing[1], spacing[2]), marked
-
-
-def _resampled(
-    stack: Stack, values: NDArray[Any], padding: NDArray[np.bool_] | None
-) -> tuple[NDArray[Any], tuple[float, float, float], tuple[float, float, float], NDArray[np.bool_] | None]:
-    """Interpolate a volume linearly on a lattice along the patient axes that holds all of it.
-
-    A point p has the image indices (i, j, t) with p = start + i a + j b + t n, where a and b are the steps along a row
-    and a column, n the unit vector along the line of slices and t in mm; t becomes a slice index between the real
-    positions of the slices. Points outside the scanned volume are air.
-    """
-    from scipy import ndimage
-
-    matrix, start = stack.affine()
-    counts = np.array([stack.columns, stack.rows, stack.count])
-    corners = np.array(np.meshgrid(*[[0.0, n - 1.0] for n in counts])).reshape(3, -1)
-    points = matrix @ corners + start[:, None]
-    low, high = points.min(axis=1), points.max(axis=1)
-    which = [int(np.abs(matrix[:, index]).argmax()) for index in range(3)]
-    if sorted(which) != [0, 1, 2]:
-        raise GeometryError("slices too oblique to be resampled", allowed="angles below 45 degrees",
-                            remedy="reformat the series first")  # fmt: skip
-    steps = np.linalg.norm(matrix, axis=0)
-    spacing = np.array([steps[which.index(axis)] for axis in range(3)])
-    if stack.unevenness():
-        spacing[which[2]] = float(np.median(np.diff(stack.offsets_mm)))
-    sizes = np.floor((high - low) / spacing + 1e-6).astype(int) + 1
-    check_memory(
-        float(np.prod(sizes.astype(float))) * 28.0, what=f"a resampled CT of {' x '.join(map(str, sizes))} voxels"
-    )
-    if float(np.prod(sizes.astype(float))) > _MOST_GROWTH * max(values.size, 1000):
-        raise GeometryError(
-            f"{values.size} voxels would become {' x '.join(map(str, sizes))}, mostly invented",
-            allowed=f"up to {_MOST_GROWTH} times the voxels that were scanned",
-            remedy="get the missing slices or reformat the series",
-        )
-    nx, ny, nz = (int(n) for n in sizes)
-    inverse = np.linalg.inv(np.stack([matrix[:, 0], matrix[:, 1], stack.along], axis=1))
-    x = low[0] + spacing[0] * np.arange(nx)
-    y = low[1] + spacing[1] * np.arange(ny)
-    out = np.empty((nz, ny, nx), dtype=np.float32)
-    marked = None if padding is None else np.zeros(out.shape, dtype=bool)
-    slices = np.arange(stack.count, dtype=float)
-    floats = values.astype(np.float32)
-    for plane in range(nz):
-        z = low[2] + spacing[2] * plane - start[2]
-        i, j, t = (row[0] * (x - start[0])[None, :] + row[1] * (y - start[1])[:, None] + row[2] * z for row in inverse)
-        offsets = stack.offsets_mm
-        k = np.interp(t, offsets, slices)
-        first, last = offsets[1] - offsets[0], offsets[-1] - offsets[-2]
-        inside = (np.abs(i - (stack.columns - 1) / 2) <= stack.columns / 2) & (
-            np.abs(j - (stack.rows - 1) / 2) <= stack.rows / 2
-        )
-        inside &= (t >= -first / 2) & (t <= offsets[-1] + last / 2)
-        out[plane] = ndimage.map_coordinates(floats, [k, j, i], order=1, mode="nearest", output=np.float32)
-        out[plane][~inside] = AIR_HU
-        if marked is not None and padding is not None:
-            marked[plane] = ndimage.map_coordinates(padding, [k, j, i], order=0, mode="nearest") & inside
-    return (
-        out,
-        (float(low[0]), float(low[1]), float(low[2])),
-        (float(spacing[0]), float(spacing[1]), float(spacing[2])),
-        marked,
-    )
+def _compare(stack: Stack, said: dict[str, str], *, resampled: bool) -> None:
+    """Warn where the header contradicts the positions of the slices, which are what is used."""
+    numbers: dict[str, float] = {}
+    for key, text in said.items():
+        try:
+            numbers[key] = abs(float(text or 0.0))
+        except ValueError:
+            numbers[key] = 0.0
+    tilt, between, thickness = (numbers[key] for key in _SAID)
+    doubts = []
+    if 0.5 < tilt < 45.0 and stack.tilt_deg <= _TILT_SEEN_DEG and not resampled:
+        doubts.append(f"the header names a gantry tilt of {tilt:.1f} degrees, the positions of the slices show none")
+    if between > 0.0 and not resampled and abs(stack.spacing_mm / between - 1.0) > 2 * JITTER_SHARE:
+        doubts.append(f"the header names {between:g} mm between slices, the positions say {stack.spacing_mm:.4g} mm")
+    elif 0.0 < 1.5 * thickness < stack.spacing_mm and not resampled:
+        doubts.append(f"slices of {thickness:g} mm lie {stack.spacing_mm:.4g} mm apart; what lies between is not seen")
+    for doubt in doubts:
+        warn(f"{doubt}; the positions are used", GeometryWarning, stacklevel=4)
 
 
 def _whole(hu: NDArray[Any]) -> NDArray[np.int16]:

@@ -29,6 +29,7 @@ PADDING_BELOW_HU = -1024
 """Nothing a scanner measures lies lower; what does is padding."""
 
 _BITS = (8, 16, 32)
+_UNITS = ("HU", "US")  # US: unspecified, as older scanners write (DICOM PS3.3 C.11.1.1.2)
 _LARGEST_SCALE = 1.0e6
 
 
@@ -91,8 +92,21 @@ def read_pixels(
 def _scale(header: Header) -> tuple[float, float]:
     """Return slope and intercept."""
     with guarded(header.name):
-        slope = float(header.dataset.get("RescaleSlope", 1.0) or 0.0)
-        intercept = float(header.dataset.get("RescaleIntercept", 0.0) or 0.0)
+        said = [header.dataset.get(keyword) for keyword in ("RescaleSlope", "RescaleIntercept")]
+        if any(value is None or value == "" for value in said):
+            raise DicomError(
+                f"{header.name} has no slope or no intercept, so its CT numbers are unknown",
+                allowed="CT images with RescaleSlope and RescaleIntercept",
+                remedy="get the original series",
+            )
+        slope, intercept = (float(value) for value in said)
+        unit = str(header.dataset.get("RescaleType") or "HU").strip().upper()
+        if unit not in _UNITS:
+            raise DicomError(
+                f"{header.name} holds {unit[:20]!r}, not CT numbers",
+                allowed="Hounsfield units (RescaleType HU, or none named)",
+                remedy="choose the series in Hounsfield units",
+            )
     sane = math.isfinite(slope) and math.isfinite(intercept)
     if not sane or not 0.0 < slope < _LARGEST_SCALE or abs(intercept) > _LARGEST_SCALE:
         raise DicomError(

@@ -115,20 +115,22 @@ class DicomHeaders:
             Copies of the elements needed.
         """
         return cls(
-            tuple(_identity(header.dataset, header.name) for header in images),
-            None if structure_set is None else _identity(structure_set, "the structure set"),
+            tuple(_identity(header.dataset) for header in images),
+            None if structure_set is None else _identity(structure_set),
         )
 
 
-def _identity(dataset: Dataset, name: str) -> Dataset:
-    """Copy the identifying elements that are there."""
+def _identity(dataset: Dataset) -> Dataset:
+    """Copy the identifying elements that are there; one that cannot be read is left out, never quoted."""
     from pydicom.dataset import Dataset
 
     kept = Dataset()
-    with guarded(name):
-        for keyword in _IDENTITY:
+    for keyword in _IDENTITY:
+        try:
             if keyword in dataset:
                 kept.add(dataset[keyword])
+        except Exception:  # noqa: S112 - whatever it is, it must not show a name
+            continue
     return kept
 
 

@@ -215,7 +215,8 @@ def _check_frames(file: str, outlines: Sequence[Outline], dataset: Dataset, volu
         images = {str(image.get("SOPInstanceUID", "")) for image in (volume.headers.images if volume.headers else ())}
         if images & _referenced_images(dataset):  # contradicts itself: the images are these, the frame is another
             warn(
-                f"{file} names another frame of reference than the CT but refers to its images; the images decide",
+                "the structure set names another frame of reference than the CT but refers to its images; "
+                "the images decide",
                 GeometryWarning,
                 stacklevel=4,
             )
@@ -227,7 +228,7 @@ def _check_frames(file: str, outlines: Sequence[Outline], dataset: Dataset, volu
         )
     if not own or any(not outline.frame_of_reference_uid for outline in outlines):
         warn(
-            f"{file} or the CT names no frame of reference; contours are placed by their coordinates",
+            "the structure set or the CT names no frame of reference; contours are placed by their coordinates",
             GeometryWarning,
             stacklevel=4,
         )

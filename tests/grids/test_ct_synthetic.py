@@ -211,6 +211,22 @@ def test_a_tilt_named_but_not_there_is_a_warning(tmp_path):
         read_hu(tmp_path)
 
 
+def test_a_header_that_contradicts_the_positions_is_a_warning(tmp_path):
+    write_series(tmp_path / "a", odd_volume(), SpacingBetweenSlices="1.0")
+    with pytest.warns(GeometryWarning, match="1 mm between slices, the positions say 2 mm"):
+        read_hu(tmp_path / "a")
+    write_series(tmp_path / "b", odd_volume(), SliceThickness="1.0")
+    with pytest.warns(GeometryWarning, match="1 mm lie 2 mm apart"):
+        read_hu(tmp_path / "b")
+
+
+@pytest.mark.parametrize("unit", ["ED", "Z_EFF", "MGML"])
+def test_maps_of_other_quantities_are_not_taken_for_hu(tmp_path, unit):
+    write_series(tmp_path, odd_volume(), RescaleType=unit)
+    with pytest.raises(DicomError, match="not CT numbers"):
+        read_hu(tmp_path)
+
+
 def test_several_series_ask_for_a_choice(tmp_path):
     first, second = odd_volume(), odd_volume(4, 5, 6)
     write_series(tmp_path / "a", first)
