@@ -52,13 +52,16 @@ def run(study: Path, out: Path | None, anonymize: bool, quiet: bool) -> None:
 @cli.command()
 @click.argument("record", type=click.Path(path_type=Path))
 @click.option("-o", "--out", type=click.Path(path_type=Path), required=True, help="Folder for the repeated results.")
+@click.option(
+    "--beside", type=click.Path(path_type=Path), default=Path(), help="Folder that paths in the study are relative to."
+)
 @click.option("-q", "--quiet", is_flag=True, help="No progress.")
-def repeat(record: Path, out: Path, quiet: bool) -> None:
+def repeat(record: Path, out: Path, beside: Path, quiet: bool) -> None:
     """Repeat a run from its RECORD (record.json) and say whether every output has the same bytes."""
     from dosekit.studies.repeating import repeat as repeat_run
 
     with _progress(quiet) as tell:
-        report = repeat_run(record, out, progress=tell)
+        report = repeat_run(record, out, beside=beside, progress=tell)
     click.echo(report.text)
     if report.different:
         raise OutputError(
@@ -82,7 +85,7 @@ def repeat(record: Path, out: Path, quiet: bool) -> None:
 @click.option("-q", "--quiet", is_flag=True, help="No summary on the console.")
 def curve(**given: Any) -> None:
     """Compute a depth curve with every part of the dose kept apart."""
-    from dosekit.studies.small import curve_summary, depth_curve_of, write_curve
+    from dosekit.studies.small_curves import curve_summary, depth_curve_of, write_curve
 
     dataset = depth_curve_of(
         given["particle"],
@@ -112,7 +115,7 @@ def curve(**given: Any) -> None:
 @click.option("-o", "--out", type=click.Path(path_type=Path), help="Write the table and figure into this folder.")
 def steps(**given: Any) -> None:
     """Find range steps and weights that make dose flat over a depth interval in water."""
-    from dosekit.studies.small import range_steps_of, steps_summary, write_steps
+    from dosekit.studies.small_steps import range_steps_of, steps_summary, write_steps
 
     result = range_steps_of(**{key: value for key, value in given.items() if key != "out"})
     click.echo(steps_summary(result))
@@ -132,7 +135,7 @@ def look(
     volume: str, structures: Path | None, series: str | None, resample: bool, out: Path | None, quiet: bool
 ) -> None:
     """Look at a VOLUME: a CT folder, or a phantom by name or file."""
-    from dosekit.studies.small import describe_volume, write_look
+    from dosekit.studies.small_volumes import describe_volume, write_look
 
     with _progress(quiet) as tell:
         grid, text = describe_volume(volume, structures=structures, series=series, resample=resample, progress=tell)
@@ -150,7 +153,7 @@ def look(
 @click.option("-o", "--out", type=click.Path(path_type=Path), help="Write result and figure into this folder.")
 def fit(data: Path, particle: str, momentum: float, medium: str, out: Path | None) -> None:
     """Fit a beam to measured DATA: a CSV of depth_mm and relative dose."""
-    from dosekit.studies.small import fit_summary, fit_to_file, write_fit
+    from dosekit.studies.small_curves import fit_summary, fit_to_file, write_fit
 
     result = fit_to_file(data, particle=particle, momentum_mev_c=momentum, medium=medium)
     click.echo(fit_summary(result))
@@ -172,7 +175,7 @@ def new(path: Path) -> None:
 @cli.command(name="list")
 def list_names() -> None:
     """List what is known by name: phantoms, materials, particles, shipped studies."""
-    from dosekit.studies.small import known_names
+    from dosekit.studies.small_volumes import known_names
 
     click.echo(known_names())
 
@@ -183,7 +186,7 @@ def list_names() -> None:
 @click.option("--spacing", type=float, metavar="MM", help="Voxel size [default: the phantom's own].")
 def export(phantom: str, out: Path, spacing: float | None) -> None:
     """Write a PHANTOM as a DICOM CT series with its structure set."""
-    from dosekit.studies.small import export_phantom
+    from dosekit.studies.small_volumes import export_phantom
 
     count = export_phantom(phantom, out, spacing_mm=spacing)
     click.echo(f"wrote {count} CT slices and a structure set to {out}. {BANNER}")
@@ -196,7 +199,7 @@ def export(phantom: str, out: Path, spacing: float | None) -> None:
 @click.option("-o", "--out", type=click.Path(path_type=Path), required=True, help="NetCDF file to write.")
 def reweigh(dose: Path, star_scale: float, yields: str | None, out: Path) -> None:
     """Change star yields on a finished run's DOSE (NetCDF) without folding again."""
-    from dosekit.studies.small import reweigh_file
+    from dosekit.studies.small_volumes import reweigh_file
 
     click.echo(reweigh_file(dose, out, star_scale=star_scale, yields=yields))
 

@@ -127,7 +127,7 @@ def _trace(
     spots: NDArray[np.float64],
     along: NDArray[np.float64],
 ) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.int64]]:
-    """Return water-equivalent depth at the far end of each sample, and the first and last sample in the target (-1: none)."""
+    """Return water-equivalent depth behind each sample, and the first and last sample in the target (-1: none)."""
     from scipy.ndimage import map_coordinates
 
     power = grid.relative_stopping_power()

@@ -127,7 +127,7 @@ def _compute(study: Study, base: Path, tell: Progress) -> Result:
     tell("volume", 1.0)
     planned = [plan_field(study, section, grid, target, progress=tell) for section in study.field]
     shares = 1.0 / len(planned)
-    planned = [replace(plan, field=plan.field.replace(weights=plan.field.weights * shares)) for plan in planned]
+    planned = [_times(plan, shares) for plan in planned]
     searches: tuple[Any, ...] = ()
     if study.goal.weights != "range_steps":
         planned, searches = search_weights(study, grid, target, planned, progress=tell)
@@ -135,7 +135,7 @@ def _compute(study: Study, base: Path, tell: Progress) -> Result:
     coverage = grid.structure(target)
     model = effect_model_of(study, planned[0].field.beam.particle)
     scale = _prescription_scale(study, total, coverage, model)
-    planned = [replace(plan, field=plan.field.replace(weights=plan.field.weights * scale)) for plan in planned]
+    planned = [_times(plan, scale) for plan in planned]
     per_field = {name: _scaled(dataset, scale) for name, dataset in per_field.items()}
     total = _scaled(total, scale)
     tell("effect and measures", 0.0)
@@ -192,6 +192,11 @@ def _folded(
     total.attrs["fields"] = ", ".join(per_field)
     total.attrs["particles"] = float(sum(plan.field.particles for plan in planned))
     return per_field, total
+
+
+def _times(plan: PlannedField, factor: float) -> PlannedField:
+    """Return a planned field with its weights multiplied."""
+    return replace(plan, field=plan.field.replace(weights=np.asarray(plan.field.weights) * factor))
 
 
 def _scaled(dataset: xr.Dataset, scale: float) -> xr.Dataset:

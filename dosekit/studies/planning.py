@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from dosekit.effects.mixed_field import EffectModel
     from dosekit.grids.voxels import VoxelGrid
     from dosekit.maps.fields import Field
+    from dosekit.modulation.flattening import EffectCurves
     from dosekit.modulation.steps import StepSettings
     from dosekit.studies.model import BeamSection, FieldSection, Study
 
@@ -296,21 +297,19 @@ def plan_field(
     return PlannedField(field, aimed, library, ranges, curves, settings)
 
 
-def _solve(  # noqa: PLR0917
+def _solve(
     range_steps: Callable[..., StepSettings],
     curves: NDArray[np.float64],
     depth_mm: NDArray[np.float64],
     interval: tuple[float, float],
     ranges: NDArray[np.float64],
     shift: NDArray[np.float64],
-    effect: object,
+    effect: EffectCurves | None,
     dose_gy: float,
     offset: float,
 ) -> StepSettings:
     """Solve one spot's interval with the steps that stop in it; the others would only add to its entrance."""
     from dataclasses import replace
-
-    from dosekit.modulation.flattening import EffectCurves
 
     step = float(np.median(-np.diff(ranges))) if len(ranges) > 1 else interval[1] - interval[0]
     inside = (ranges >= interval[0] - step) & (ranges <= interval[1] + offset + 0.5 * step)
@@ -318,7 +317,7 @@ def _solve(  # noqa: PLR0917
         inside[np.argmin(np.abs(ranges - interval[1]))] = True
     rows = np.flatnonzero(inside)
     own = None
-    if isinstance(effect, EffectCurves):
+    if effect is not None:
         own = replace(effect, linear=effect.linear[rows], root=effect.root[rows])
     found = range_steps(
         curves[rows],
@@ -353,7 +352,7 @@ def _beam_for(section: BeamSection, far_mm: float, name: str) -> Beam:
     return beam
 
 
-def _effect_curves(study: Study, particle: str, library: DepthLibrary, gray: float) -> object:
+def _effect_curves(study: Study, particle: str, library: DepthLibrary, gray: float) -> EffectCurves:
     """Return the sums of alpha times dose and of root beta times dose for each step."""
     from dosekit.basis.components import COMPONENTS
     from dosekit.modulation.flattening import EffectCurves

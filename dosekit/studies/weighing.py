@@ -76,7 +76,7 @@ def search_weights(
         )
         parts = [one.weights.reshape(field.shape) for one, field in zip(found, fields, strict=True)]
     else:
-        start = np.concatenate([field.weights.ravel() for field in fields]) / len(fields)
+        start = np.concatenate([np.asarray(field.weights).ravel() for field in fields]) / len(fields)
         one = find_weights(
             _response(study, planned, grid, voxels),
             goals,

@@ -186,7 +186,7 @@ def _on_output_lattice(result: Result, dataset: xr.Dataset) -> xr.Dataset:
     spacing = result.study.outputs.dose_spacing_mm
     if spacing is None:
         return dataset
-    from dosekit.maps.regrid import on_lattice
+    from dosekit.maps.lattices import on_lattice
     from dosekit.studies.model import axis_triple
 
     return on_lattice(dataset, result.grid, axis_triple(spacing), dose_to=result.study.outputs.dose_to)
@@ -389,4 +389,4 @@ def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
 
 def _summed(maps: xr.Dataset) -> NDArray[np.float64]:
     """Return the sum of the components; what interpolation leaves below zero (parts per million) becomes zero."""
-    return np.maximum(maps["dose"].sum("component", dtype=np.float64).values, 0.0)
+    return np.asarray(np.maximum(maps["dose"].sum("component", dtype=np.float64).values, 0.0))
