@@ -1,0 +1,186 @@
+"""Weights from a quick stand-in, set right by the exact dose.
+
+A search needs a hundred doses and slopes; the exact one may take seconds.  Each round searches with a
+stand-in ``s`` plus what it lacked at the last weights ``w_n``::
+
+    d(w) = s(w) + (e(w_n) - s(w_n))
+
+with the exact dose ``e``, and keeps the outcome only if the exact cost falls; otherwise it goes half as
+far.  Only one exact dose, and no exact slope, is needed in a round.  A fixed point meets the goals with the
+exact dose as well as the stand-in's slopes allow.
+
+Stopping rules: exact cost falls by less than `least_gain`; number of rounds; no lower cost after four
+halvings.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from dosekit.modulation.goals import Goal, goal_costs
+from dosekit.modulation.weights import FoundWeights, find_weights
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Sequence
+
+    from numpy.typing import ArrayLike, NDArray
+
+    from dosekit.modulation.responses import Response
+
+__all__ = ["CorrectedResponse", "find_weights_corrected"]
+
+_HALVINGS = 4
+
+
+@dataclass(frozen=True, eq=False)
+class CorrectedResponse:
+    """A stand-in with a fixed dose added.
+
+    Parameters
+    ----------
+    inner : Response
+        The stand-in.
+    lacking_gy : ndarray, shape (n,)
+        Dose added in each voxel, Gy.
+    """
+
+    inner: Response
+    lacking_gy: NDArray[np.float64]
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        """Voxels and weights."""
+        return self.inner.shape
+
+    def dose(self, weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], Any]:
+        """Give the corrected dose.
+
+        Parameters
+        ----------
+        weights : ndarray, shape (w,)
+            Weights.
+
+        Returns
+        -------
+        dose_gy : ndarray, shape (n,)
+            Gy.
+        kept : object
+            What the stand-in needs on the way back.
+        """
+        dose, kept = self.inner.dose(weights)
+        return dose + self.lacking_gy, kept
+
+    def pull_back(self, slope: NDArray[np.float64], kept: Any) -> NDArray[np.float64]:
+        """Turn a slope per voxel into a slope per weight.
+
+        Parameters
+        ----------
+        slope : ndarray, shape (n,)
+            Slope with respect to the dose.
+        kept : object
+            From `dose`.
+
+        Returns
+        -------
+        ndarray, shape (w,)
+            Slope with respect to the weights.
+        """
+        return self.inner.pull_back(slope, kept)
+
+
+def find_weights_corrected(
+    exact: Response,
+    quick: Response,
+    goals: Sequence[Goal],
+    *,
+    scale_gy: float,
+    start: ArrayLike | None = None,
+    rounds: int = 5,
+    largest_steps: int = 60,
+    least_gain: float = 0.2,
+    progress: Callable[[int, float], None] | None = None,
+) -> FoundWeights:
+    """Find weights with a stand-in, corrected by the exact dose.
+
+    Parameters
+    ----------
+    exact, quick : Response
+        The exact dose and its stand-in, for the same voxels and weights.
+    goals : sequence of Goal
+        The goals.
+    scale_gy : float
+        The prescription, Gy.
+    start : array_like, shape (w,), optional
+        Weights to begin with.
+    rounds : int
+        Largest number of rounds.
+    largest_steps : int
+        Steps of each search with the stand-in.
+    least_gain : float
+        Relative gain of the exact cost that counts as no progress.
+    progress : callable, optional
+        Called with round and exact cost.
+
+    Returns
+    -------
+    FoundWeights
+        Best weights; history, parts and dose are those of the exact response.
+    """
+    import warnings
+
+    from dosekit.errors import SettingsWarning
+
+    def search(response: Response, begin: ArrayLike | None) -> NDArray[np.float64]:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", SettingsWarning)
+            return find_weights(response, goals, scale_gy=scale_gy, start=begin, largest_steps=largest_steps).weights
+
+    evaluations = 0
+
+    def judge(weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], float, dict[str, float]]:
+        nonlocal evaluations
+        evaluations += 1
+        dose, _ = exact.dose(weights)
+        cost, parts, _ = goal_costs(goals, dose, scale_gy=scale_gy)
+        return dose, cost, parts
+
+    best = search(quick, start)
+    dose, cost, parts = judge(best)
+    history, parts_history = [cost], {name: [value] for name, value in parts.items()}
+    reason = f"{rounds} rounds"
+    for number in range(1, rounds + 1):
+        corrected = CorrectedResponse(quick, dose - quick.dose(best)[0])
+        aimed = search(corrected, best)
+        part, found = 1.0, None
+        for _ in range(_HALVINGS + 1):
+            trial = best + part * (aimed - best)
+            after = judge(trial)
+            if after[1] < cost:
+                found = (trial, *after)
+                break
+            part *= 0.5
+        if found is None:
+            reason = f"no lower cost after {_HALVINGS} halvings"
+            break
+        before = cost
+        best, dose, cost, parts = found
+        history.append(cost)
+        for name, value in parts.items():
+            parts_history[name].append(value)
+        if progress is not None:
+            progress(number, cost)
+        if before - cost < least_gain * before:
+            reason = f"exact cost falls by less than {100 * least_gain:g} %"
+            break
+    return FoundWeights(
+        weights=best,
+        dose_gy=dose,
+        history=tuple(history),
+        parts={name: tuple(values) for name, values in parts_history.items()},
+        steps=len(history) - 1,
+        evaluations=evaluations,
+        stopped_because=reason,
+    )
