@@ -16,7 +16,7 @@ from numba import njit, prange
 
 _C3, _C4, _C5, _C6 = 1.0 / 6.0, 1.0 / 24.0, 1.0 / 120.0, 1.0 / 720.0
 
-__all__ = ["source_ranges", "sweep", "sweep_transposed"]
+__all__ = ["source_ranges", "sweep", "sweep_transposed", "sweep_widening", "sweep_widening_transposed"]
 
 
 @njit(cache=True, error_model="numpy")
@@ -205,3 +205,87 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
                     kind = material[k, j, i0 : i0 + count]
                     for q in range(count):
                         goal[q] += worth[q] * energies[kind[q], m]
+
+
+@njit(cache=True, error_model="numpy")
+def _shift(old, middle, new, taps_j, start_j, taps_i, start_i):  # type: ignore[no-untyped-def]
+    """Move every mode sideways by four taps along each lateral axis; what crosses an edge is gone."""
+    modes, nj, ni = old.shape
+    for m in range(modes):
+        for j in range(nj):
+            row = middle[j]
+            row[:] = 0.0
+            for tap in range(4):
+                source = j - start_j - tap
+                if 0 <= source < nj:
+                    weight = taps_j[tap]
+                    from_row = old[m, source]
+                    for i in range(ni):
+                        row[i] += weight * from_row[i]
+        for j in range(nj):
+            row = middle[j]
+            goal = new[m, j]
+            goal[:] = 0.0
+            for tap in range(4):
+                move = start_i + tap
+                weight = taps_i[tap]
+                low = max(0, move)
+                high = min(ni, ni + move)
+                if high > low:
+                    to = goal[low:high]
+                    be = row[low - move : high - move]
+                    for q in range(high - low):
+                        to[q] += weight * be[q]
+
+
+@njit(cache=True, parallel=True, error_model="numpy")
+def sweep_widening(sources, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out):  # type: ignore[no-untyped-def]
+    """Carry all modes along several directions, widening on the way; each direction has its own ``out[line]``."""
+    nk, nj, ni = scale.shape
+    modes = len(rates)
+    for line in prange(len(weights)):
+        state = np.zeros((modes, nj, ni))
+        moved = np.zeros((modes, nj, ni))
+        middle = np.zeros((nj, ni))
+        emitted = np.empty(ni)
+        for turn in range(nk):
+            k = nk - 1 - turn if down[line] else turn
+            if turn > 0:
+                _shift(state, middle, moved, taps_j[line], start_j[line], taps_i[line], start_i[line])
+                state, moved = moved, state
+            for j in range(nj):
+                given = out[line, k, j]
+                thick = scale[k, j]
+                for m in range(modes):
+                    light = sources[m, k, j]
+                    for i in range(ni):
+                        emitted[i] = weights[line] * light[i]
+                    _step_shining(thick, rates[m] * steps_mm[line], state[m, j], emitted, given)
+
+
+@njit(cache=True, parallel=True, error_model="numpy")
+def sweep_widening_transposed(wanted, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out):  # type: ignore[no-untyped-def]
+    """Apply the exact transpose of `sweep_widening`; results per mode in ``out[line, mode]``."""
+    nk, nj, ni = scale.shape
+    modes = len(rates)
+    for line in prange(len(weights)):
+        state = np.zeros((modes, nj, ni))
+        moved = np.zeros((modes, nj, ni))
+        middle = np.zeros((nj, ni))
+        back_j = taps_j[line, ::-1].copy()
+        back_i = taps_i[line, ::-1].copy()
+        for turn in range(nk):
+            k = turn if down[line] else nk - 1 - turn
+            if turn > 0:
+                _shift(state, middle, moved, back_j, -start_j[line] - 3, back_i, -start_i[line] - 3)
+                state, moved = moved, state
+            for j in range(nj):
+                for m in range(modes):
+                    _step_back(
+                        scale[k, j],
+                        rates[m] * steps_mm[line],
+                        state[m, j],
+                        wanted[k, j],
+                        weights[line],
+                        out[line, m, k, j],
+                    )

@@ -33,7 +33,7 @@ if TYPE_CHECKING:
 
 __all__ = ["DIRECTIONS", "carry_stars", "carry_stars_transposed", "star_balance", "star_scales"]
 
-DIRECTIONS: dict[str, int] = {"star_light": 50, "star_neutron": 110, "star_photon": 50}
+DIRECTIONS: dict[str, int] = {"star_light": 86, "star_neutron": 110, "star_photon": 50}
 """Directions for each component that travels; see docs/explanation/star_transport.md for the study."""
 
 BLOCK_MM = 6.0
@@ -142,13 +142,13 @@ def carry_stars_transposed(
         rates = np.array(RATES_PER_MM[component])
         scale = star_scales(grid, component)
         factors = _factors(component, grid, block_mm)
-        if factors == (1, 1, 1):
+        if component in _CHARGED:
             cones = Cones(grid.spacing_mm, count)
             total += cones.gather(scale, rates, value, material=grid.material_index, energies_mev=table)
             continue
         blocks = Blocks(grid.shape, factors, grid.density_g_cm3)
         cones = Cones(_coarse_spacing(grid, factors), count)
-        per_mode = cones.gather(blocks.averaged(scale), rates, blocks.spread_transposed(value))
+        per_mode = cones.gather_widening(blocks.averaged(scale), rates, blocks.spread_transposed(value))
         for mode in range(len(rates)):
             total += blocks.repeated(per_mode[mode]) * table[:, mode][grid.material_index]
     return total
@@ -275,10 +275,10 @@ def _carried(
     rates = np.array(RATES_PER_MM[component])
     scale = star_scales(grid, component)
     factors = _factors(component, grid, block_mm)
-    if factors == (1, 1, 1):
+    if component in _CHARGED:
         cones = Cones(grid.spacing_mm, count)
         return cones.carry(scale, rates, stops=stops, material=grid.material_index, energies_mev=table)
     blocks = Blocks(grid.shape, factors, grid.density_g_cm3)
     sources = np.stack([blocks.summed(stops * table[:, m][grid.material_index]) for m in range(len(rates))])
-    carried = Cones(_coarse_spacing(grid, factors), count).carry(blocks.averaged(scale), rates, sources_mev=sources)
-    return blocks.spread(carried)
+    cones = Cones(_coarse_spacing(grid, factors), count)
+    return blocks.spread(cones.carry_widening(blocks.averaged(scale), rates, sources))
