@@ -32,6 +32,7 @@ import numpy as np
 from dosekit.basis.materials import Material, material, mixture
 from dosekit.errors import CalibrationError, CalibrationWarning, DosekitError
 from dosekit.grids.attenuation import KAPPA_COHERENT, KAPPA_PHOTO, hounsfield_units
+from dosekit.grids.tissues import usual_chain
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
@@ -47,16 +48,6 @@ __all__ = [
 AIR_HU = -1000
 """HU below this count as this."""
 
-_CHAIN: tuple[tuple[str, float | None], ...] = (
-    ("air", None),
-    ("lung_tissue", 0.26),  # inflated lung, ICRU Report 46 (1992) and the note in the table of materials
-    ("adipose", None),
-    ("soft_tissue", None),
-    ("muscle_skeletal", None),
-    ("skin", None),
-    ("bone_compact", None),
-    ("bone_cortical", None),
-)
 _FINE_STEP_HU, _COARSE_STEP_HU = 20.0, 100.0
 _FINE_RANGE_HU = (-120.0, 200.0)
 _AIR_SLACK_HU = 5  # a chain that begins with air begins a little above -1000
@@ -311,7 +302,8 @@ def stoichiometric_calibration(
     kappa_coherent, kappa_photo : float
         The scanner's coefficients over its Klein-Nishina coefficient; `fit_kappas` finds them from inserts.
     tissues : sequence of str or Material, optional
-        The chain, by rising HU; air, inflated lung, fat, soft tissue, muscle, skin and two bones by default.
+        The chain, by rising HU; air, inflated lung, fat, soft tissue, muscle, skin, spongy, compact and
+        cortical bone by default.
 
     Returns
     -------
@@ -334,11 +326,7 @@ def stoichiometric_calibration(
             allowed="0 to 0.1 (coherent) and 0 to 0.01 (photo-electric)",
             remedy="fit them to a scan of known inserts",
         )
-    chain = (
-        [material(name, density_g_cm3=density) for name, density in _CHAIN]
-        if tissues is None
-        else [material(tissue) for tissue in tissues]
-    )
+    chain = usual_chain() if tissues is None else [material(tissue) for tissue in tissues]
     units = [hounsfield_units(t, kappa_coherent=kappa_coherent, kappa_photo=kappa_photo) for t in chain]
     return Calibration(
         name="stoichiometric",

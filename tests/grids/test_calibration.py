@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import warnings
 from itertools import pairwise
+from pathlib import Path
 
 import numpy as np
 import pytest
 from ct_series import write_series
 
 from dosekit.basis.materials import material, mixture
+from dosekit.basis.tables import parse_table
 from dosekit.beams.stopping import relative_stopping_power
 from dosekit.errors import (
     CalibrationError,
@@ -60,6 +62,46 @@ def test_coefficients_are_found_back_from_inserts():
 def test_too_few_inserts_are_refused(inserts):
     with pytest.raises(CalibrationError, match="do not determine"):
         fit_kappas(inserts)
+
+
+PUBLISHED = list(
+    parse_table(
+        (Path(__file__).parents[1] / "published" / "ct_numbers.csv").read_text(encoding="utf-8"), name="ct_numbers"
+    ).rows()
+)
+
+
+@pytest.mark.published
+@pytest.mark.parametrize("row", PUBLISHED, ids=lambda row: str(row["tissue"]))
+def test_hu_of_tissues_are_the_published_ones(row, evidence):
+    stuff = material(str(row["tissue"]), density_g_cm3=float(row["density_g_cm3"]))
+    ours = hounsfield_units(stuff)
+    evidence(
+        what=f"HU of {row['tissue']} at {row['density_g_cm3']} g/cm3",
+        source="Schneider et al., Phys. Med. Biol. 45 (2000) 459, table 1 (memory)",
+        value=row["hu"],
+        ours=ours,
+        unit="HU",
+        bar="half a unit of the last digit",
+    )
+    assert ours == pytest.approx(float(row["hu"]), abs=0.5)
+
+
+@pytest.mark.model
+def test_spongy_bone_lies_on_the_published_line(evidence):
+    """rho = 1.017 + 0.592e-3 HU above 100 HU, for mixtures of marrow and cortical bone; 1 % asked for."""
+    rules = stoichiometric_calibration()
+    spongy = rules.nodes_hu[[tissue.name for tissue in rules.tissues].index("spongy_bone")]
+    value, ours = 1.017 + 0.592e-3 * spongy, float(rules.density_g_cm3(spongy))
+    evidence(
+        what=f"density of spongy bone at {spongy:.0f} HU",
+        source="Schneider et al., Phys. Med. Biol. 45 (2000) 459, density line above 100 HU (memory)",
+        value=value,
+        ours=ours,
+        unit="g/cm3",
+        bar="1 %",
+    )
+    assert ours == pytest.approx(value, rel=0.01)
 
 
 @pytest.mark.model
