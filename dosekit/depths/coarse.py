@@ -53,6 +53,11 @@ class CoarseGrid:
     place_of_edge: NDArray[np.float64] = field(repr=False)
     factor: NDArray[np.float64] = field(repr=False)
 
+    @property
+    def nodes(self) -> NDArray[np.float64]:
+        """Cell edges in units of cells; the last cell ends with the stack, half to one and a half cells long."""
+        return np.concatenate([np.arange(float(self.cells)), [self.place_of_edge[-1]]])
+
     def to_bins(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
         """Share out values summed per cell to fine bins.
 
@@ -69,7 +74,7 @@ class CoarseGrid:
         if not np.any(values):
             return np.zeros(len(self.place_of_edge) - 1)
         total = np.concatenate([[0.0], np.cumsum(values)])
-        running = PchipInterpolator(np.arange(self.cells + 1.0), total)(self.place_of_edge)
+        running = PchipInterpolator(self.nodes, total)(self.place_of_edge)
         return np.asarray(np.diff(running))
 
     def to_cells(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -86,28 +91,27 @@ class CoarseGrid:
             Amounts per cell; the sum is kept.
         """
         running = np.concatenate([[0.0], np.cumsum(values)])
-        return np.asarray(np.diff(np.interp(np.arange(self.cells + 1.0), self.place_of_edge, running)))
+        return np.asarray(np.diff(np.interp(self.nodes, self.place_of_edge, running)))
 
 
-def regrid(values: NDArray[np.float64], cells: int) -> NDArray[np.float64]:
-    """Sum cells of one grid into those of another over the same depth, sharing by overlap.
+def regrid(values: NDArray[np.float64], old: CoarseGrid, new: CoarseGrid) -> NDArray[np.float64]:
+    """Sum cells of one grid into those of another over the same stack, sharing by overlap.
 
     Parameters
     ----------
     values : ndarray, shape (old cells, ...)
         Amounts per cell.
-    cells : int
-        New number of cells.
+    old, new : CoarseGrid
+        The grids.
 
     Returns
     -------
-    ndarray, shape (cells, ...)
+    ndarray, shape (new cells, ...)
         Amounts per new cell; sums are kept.
     """
-    old = len(values)
     running = np.concatenate([np.zeros((1, *values.shape[1:])), np.cumsum(values, axis=0)])
-    place = np.arange(cells + 1.0) * (old / cells)
-    low = np.minimum(place.astype(np.int64), old - 1)
+    place = np.interp(new.nodes * new.step_mm, old.nodes * old.step_mm, np.arange(old.cells + 1.0))
+    low = np.minimum(place.astype(np.int64), old.cells - 1)
     part = (place - low).reshape(-1, *([1] * (values.ndim - 1)))
     return np.asarray(np.diff(running[low] * (1.0 - part) + running[low + 1] * part, axis=0))
 
@@ -153,9 +157,8 @@ def coarse_grid(
     ratio = np.array([float(range_table(species, stuff).stopping_mev_mm(probe) / base) for stuff, _ in layers])
     equivalent = np.concatenate([[0.0], np.cumsum(np.diff(edges_mm) * ratio[layer])])
     cells = max(int(round(equivalent[-1] / step_mm)), 2)
-    place = equivalent / equivalent[-1] * cells
-    borders = np.array([thickness for _, thickness in layers]) * ratio
-    border_place = np.cumsum(borders) / equivalent[-1] * cells
+    place = equivalent / step_mm
+    border_place = np.cumsum(np.array([thickness for _, thickness in layers]) * ratio) / step_mm
     layer_of_cell = np.minimum(np.searchsorted(border_place, np.arange(cells) + 0.5), len(layers) - 1)
     index = np.array([materials.index(stuff) for stuff, _ in layers])
     middle = 0.5 * (place[1:] + place[:-1])

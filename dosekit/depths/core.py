@@ -247,11 +247,10 @@ def _classes(
     shape_cdf = np.concatenate([[0.0], np.cumsum(density) * dx])
     reduced = (fine[None, :] - ranges[:, None]) / sigmas[:, None]
     cumulative = gauss @ np.interp(reduced, x_edge, shape_cdf / shape_cdf[-1])
-    inside = np.flatnonzero((cumulative > 1e-9) & (cumulative < 1.0 - 1e-9))
     total_sd = np.sqrt(float(np.sum(gauss * (ranges - centre) ** 2)) + sigma**2)
-    final = np.arange(fine[inside[0]], fine[inside[-1]] + _SPACING * total_sd, _SPACING * total_sd)
-    final = np.linspace(fine[inside[0]], fine[inside[-1]], max(len(final), 40))
-    at = np.interp(final, fine, cumulative)
+    # edges scale with the spread, so that curves change smoothly with momentum and spread
+    final = centre + total_sd * np.arange(-6.2, 6.21, 0.08)
+    at = np.interp(final, fine, cumulative, left=0.0, right=1.0)
     at[0], at[-1] = 0.0, 1.0
     weight = np.diff(at)
     quantile = ndtri(np.clip(at, 1e-10, 1.0 - 1e-10))

@@ -97,7 +97,7 @@ def muon_capture_products(caught: NDArray[np.float64], grid: CoarseGrid) -> Muon
         Deposits and the rest of the balance.
     """
     number = float(np.sum(caught))
-    half = grid.step_mm * (grid.cells + 1)
+    half = 1000.0
     neutron = convolve_planes(
         caught * _NEUTRON, neutron_plane_kernel(grid.reference, (2.0, 5.0, 12.0), bin_mm=grid.step_mm, half_length_mm=half)
     )

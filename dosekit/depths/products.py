@@ -36,6 +36,8 @@ __all__ = [
 
 _NO_EVENTS = np.zeros((0, 0))
 _GAMMA_CM2_G = 0.0170
+_ANCHORS_MEV = (10.0, 50.0, 100.0, 200.0)
+_HALF_LENGTH_MM = 1000.0
 
 
 class Carried:
@@ -234,40 +236,42 @@ def neutral_products(
     emitted: dict[str, NDArray[np.float64]] = {}
     if not np.any(events > 0.0):
         return deposit, {name: np.zeros(grid.cells) for name in ("neutron", "photon", "pi0")}
-    half = grid.step_mm * (grid.cells + 1)
-    base = grid.reference
     for species in ("neutron", "photon", "pi0"):
         held = _energy_by_group(projectile, species, grid.materials, yields)
-        source = np.sum(events * held[grid.stuff], axis=1)
-        emitted[species] = source
-        table = reactions(projectile, grid.materials[0], yields=yields)
-        middle = float(np.sum(events @ GROUP_ENERGY_MEV) / np.sum(events))
-        forward = float(table.at(table.mean_cosine[species], middle))
-        if species == "neutron":
-            energies = _neutron_energies(projectile, grid.materials[0], yields, float(round(middle / 20.0) * 20.0))
-            kernel = neutron_plane_kernel(
-                base, energies, bin_mm=grid.step_mm, half_length_mm=half, mean_cosine=forward
-            )
-            deposit += convolve_planes(source, kernel)
-        else:
-            mean = float(table.at(table.mean_energy_mev[species], middle))
-            energy = 0.5 * (134.98 + round(mean / 20.0) * 20.0) if species == "pi0" else max(round(mean), 1.0)
-            kernel = photon_plane_kernel(
-                base, energy, bin_mm=grid.step_mm, half_length_mm=half, mean_cosine=round(forward, 1)
-            )
-            deposit += convolve_planes(source, kernel)
+        by_group = events * held[grid.stuff]
+        emitted[species] = np.sum(by_group, axis=1)
+        for index, anchor in enumerate(_ANCHORS_MEV):
+            source = by_group @ _anchor_weights()[:, index]
+            if np.any(source > 0.0):
+                kernel = _neutral_kernel(projectile, species, anchor, grid.reference, grid.materials[0], grid.step_mm, yields)
+                deposit += convolve_planes(source, kernel)
     return deposit, emitted
 
 
+@lru_cache(maxsize=1)
+def _anchor_weights() -> NDArray[np.float64]:
+    """Return linear weights of projectile energies at which kernels are made, shape (groups, anchors)."""
+    return np.stack([np.interp(GROUP_ENERGY_MEV, _ANCHORS_MEV, row) for row in np.eye(len(_ANCHORS_MEV))], axis=1)
+
+
 @lru_cache(maxsize=256)
-def _neutron_energies(projectile: str, stuff: Material, yields: str, middle_mev: float) -> tuple[float, ...]:
-    """Return equally likely neutron energies of reactions at a projectile energy, MeV."""
+def _neutral_kernel(
+    projectile: str, species: str, anchor_mev: float, reference: Material, stuff: Material, step: float, yields: str
+) -> NDArray[np.float64]:
+    """Return the plane kernel of a neutral product for one energy of the projectile."""
     table = reactions(projectile, stuff, yields=yields)
-    at = np.array([max(middle_mev, 5.0)])
-    mean = table.at(table.mean_energy_mev["neutron"], at)
-    rms = table.at(table.rms_energy_mev["neutron"], at)
-    top = at + (130.0 if projectile.startswith("pi") else 0.0)
-    return tuple(float(value) for value in beta_samples(mean, rms, top, samples=12)[0])
+    at = np.array([anchor_mev])
+    forward = float(table.at(table.mean_cosine[species], at)[0])
+    mean = table.at(table.mean_energy_mev[species], at)
+    if species == "neutron":
+        rms = table.at(table.rms_energy_mev[species], at)
+        top = at + (130.0 if projectile.startswith("pi") else 0.0)
+        energies = tuple(float(value) for value in beta_samples(mean, rms, top, samples=12)[0])
+        return neutron_plane_kernel(
+            reference, energies, bin_mm=step, half_length_mm=_HALF_LENGTH_MM, mean_cosine=forward
+        )
+    energy = 0.5 * (134.98 + float(mean[0])) if species == "pi0" else max(float(mean[0]), 0.5)
+    return photon_plane_kernel(reference, energy, bin_mm=step, half_length_mm=_HALF_LENGTH_MM, mean_cosine=forward)
 
 
 @lru_cache(maxsize=64)

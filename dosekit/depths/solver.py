@@ -159,8 +159,8 @@ def _solve(
     wide = coarse_grid(
         species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=2.0 * grid.step_mm
     )
-    neutral, emitted = neutral_products(species, regrid(reacted, wide.cells), wide, yields=yields)
-    decayed, rest = _decays(species, core, wide, scattered)
+    neutral, emitted = neutral_products(species, regrid(reacted, grid, wide), wide, yields=yields)
+    decayed, rest = _decays(species, core, grid, wide, scattered)
 
     to_bins = grid.to_bins
     built_up = carry_deltas(
@@ -279,7 +279,9 @@ class _Rest:
     electron_rest: float = 0.0
 
 
-def _decays(species: str, core: Core, grid: CoarseGrid, scattered: _Scattered) -> tuple[Carried, _Rest]:
+def _decays(
+    species: str, core: Core, fine: CoarseGrid, grid: CoarseGrid, scattered: _Scattered
+) -> tuple[Carried, _Rest]:
     """Follow muons and electrons from decays in flight and at rest."""
     total = Carried(grid.cells)
     rest = _Rest(np.zeros(grid.cells), {})
@@ -287,8 +289,8 @@ def _decays(species: str, core: Core, grid: CoarseGrid, scattered: _Scattered) -
         return total, rest
     positive = species in ("pi+", "mu+")
     muon = "mu+" if positive else "mu-"
-    stopped = grid.to_cells(core.stops) + regrid(scattered.carried.stops, grid.cells)
-    first, later = (regrid(rows, grid.cells) for rows in (scattered.core_decays, scattered.later_decays))
+    stopped = grid.to_cells(core.stops) + regrid(scattered.carried.stops, fine, grid)
+    first, later = (regrid(rows, fine, grid) for rows in (scattered.core_decays, scattered.later_decays))
     muons = np.zeros(grid.cells)
     electrons = np.zeros(grid.cells)
     if species in ("pi-", "pi+"):
