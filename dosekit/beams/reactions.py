@@ -241,8 +241,7 @@ def element_cross_sections_mb(
         for channel in shares:
             shares[channel] = np.interp(energy, split["kinetic_energy_mev"], split[channel])
         if projectile == "pi-":
-            inelastic, elastic = _barashenkov(row, energy, inelastic / grow, elastic / grow)
-            inelastic, elastic = inelastic * grow, elastic * grow
+            inelastic, elastic = _barashenkov(symbol, row, energy, inelastic / grow, elastic / grow)
     total = sum(shares.values())
     result = {channel: np.asarray(inelastic * shares[channel] / total) for channel in CHANNELS[:3]}
     result["elastic"] = np.asarray(elastic)
@@ -318,7 +317,7 @@ def _inflight(projectile: str, symbol: str) -> dict[str, NDArray[np.float64]]:
 
 
 def _barashenkov(
-    symbol: str, energy: NDArray[np.float64], inelastic: NDArray[np.float64], elastic: NDArray[np.float64]
+    symbol: str, row: str, energy: NDArray[np.float64], inelastic: NDArray[np.float64], elastic: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return reaction and elastic cross sections of the evaluated table, scaled from the other table outside its range."""
     table = read_table("pion_minus_cross_sections")
@@ -328,7 +327,7 @@ def _barashenkov(
     grow = (mass / element(base).atomic_weight) ** 0.75
     rows = table.where(element=base)
     grid = rows["kinetic_energy_mev"]
-    data = _inflight("pi-", symbol)
+    data = _inflight("pi-", row)
 
     def along(values: NDArray[np.float64], other: str, shape: NDArray[np.float64]) -> NDArray[np.float64]:
         """Use the table inside its range; outside, the other table times the ratio at the end."""
