@@ -20,8 +20,8 @@ from numpy.typing import NDArray
 
 from dosekit.errors import InputError
 from dosekit.outputs.figures_histogram import Histogram, draw_histograms, structure_style
-from dosekit.outputs.figures_slices import dose_colours, draw_slice
 from dosekit.outputs.planes import dose_volume, plane, shown_box_mm
+from dosekit.outputs.slice_drawing import dose_colours, draw_slice
 from dosekit.outputs.style import INK, PAGE_MM, foot_legend, letter_panel, new_figure, particle_style, styled
 
 if TYPE_CHECKING:
