@@ -57,7 +57,7 @@ def volume_figure(
     scale = min(_PANELS_WIDTH_MM / sum(widths), _TALLEST_PANEL_MM / tallest)
     figure = new_figure(
         PAGE_MM,
-        max(50.0, tallest * scale + 12.0 + 3.8 * -(-len(names) // 5)),
+        max(50.0, tallest * scale + 16.0 + 3.8 * -(-len(names) // 5)),
         alt=f"Density of {grid.name or 'a volume'} in three planes; outlines: {', '.join(names) or 'none'}.",
     )
     panels = figure.subplots(1, 3, width_ratios=widths)
