@@ -12,78 +12,122 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosekit.basis.materials import Material, material
-from dosekit.capture.neutrons import EDGES_MM
+from dosekit.capture.neutrons import EDGES_MM, NODE_ENERGIES_MEV
 from dosekit.capture.photons import NODE_PHOTON_MEV
-from dosekit.capture.products import planar_neutron_kernel
-from dosekit.capture.profiles import photon_response
+from dosekit.capture.products import point_kernel
+from dosekit.capture.profiles import neutron_response, photon_response
 
-__all__ = ["convolve_planes", "neutron_plane_kernel", "photon_plane_kernel"]
+__all__ = [
+    "convolve_planes",
+    "neutron_kerma_ratio",
+    "neutron_plane_kernel",
+    "photon_plane_kernel",
+    "plane_from_shells",
+    "star_plane_kernel",
+]
 
-_NEUTRON_NODES_MEV = (2.0, 5.0, 10.0, 20.0, 35.0, 55.0, 80.0, 118.0)
+_REACH_MM = 1000.0
+_KERMA_H, _KERMA_REST = 45.0, 2.4
+
+
+def plane_from_shells(
+    energy: NDArray[np.float64],
+    edges_mm: NDArray[np.float64],
+    *,
+    bin_mm: float,
+    half_length_mm: float,
+    mean_cosine: float = 0.0,
+    width_mm: float | None = None,
+) -> NDArray[np.float64]:
+    """Turn energy in spherical shells about a point into energy per bin of depth.
+
+    Parameters
+    ----------
+    energy : ndarray, shape (n,)
+        Energy in each shell.
+    edges_mm : ndarray, shape (n + 1,)
+        Shell radii, mm.
+    bin_mm, half_length_mm : float
+        Bin and half length, mm.
+    mean_cosine : float
+        Mean cosine g of the emission, -1/3 to 1/3; energy at distance r lies in the direction of emission, 1 + 3 g mu.
+    width_mm : float, optional
+        Only what lies inside a square of this width, centred on the axis, counts: of a ring of radius rho beyond the half
+        width a, the share 1 - (4 / pi) arccos(a / rho). None: no end.
+
+    Returns
+    -------
+    ndarray, odd length
+        Energy per bin; the centre is the plane of the point.
+    """
+    half = int(np.ceil(half_length_mm / bin_mm))
+    edges = bin_mm * (np.arange(2 * half + 2) - half - 0.5)
+    bias = float(np.clip(mean_cosine, -1.0 / 3.0, 1.0 / 3.0))
+    inner = np.repeat(edges_mm[:-1], 4)
+    outer = np.repeat(edges_mm[1:], 4)
+    radius = inner + (outer - inner) * np.tile([0.125, 0.375, 0.625, 0.875], len(energy))
+    mu = np.clip(edges[None, :] / radius[:, None], -1.0, 1.0)
+    share = np.diff(0.5 * (mu + 1.5 * bias * mu**2), axis=1)
+    if width_mm is not None:
+        middle = 0.5 * (mu[:, 1:] + mu[:, :-1])
+        rho = radius[:, None] * np.sqrt(np.maximum(1.0 - middle**2, 0.0))
+        inside = 1.0 - 4.0 / np.pi * np.arccos(np.clip(0.5 * width_mm / np.maximum(rho, 1e-9), 0.0, 1.0))
+        share = share * np.clip(np.where(rho <= 0.5 * width_mm, 1.0, inside), 0.0, 1.0)
+    kernel = np.sum(0.25 * np.repeat(energy, 4)[:, None] * share, axis=0)
+    kernel.setflags(write=False)
+    return np.asarray(kernel)
 
 
 @lru_cache(maxsize=256)
 def neutron_plane_kernel(
-    medium: Material, energies_mev: tuple[float, ...], *, bin_mm: float, half_length_mm: float, mean_cosine: float = 0.0
+    medium: Material,
+    energies_mev: tuple[float, ...],
+    *,
+    bin_mm: float,
+    mean_cosine: float = 0.0,
+    width_mm: float | None = None,
 ) -> NDArray[np.float64]:
     """Return the share of the energy of neutrons left per bin about a plane of emission.
 
-    The kernels of :func:`dosekit.capture.products.planar_neutron_kernel` in water, stretched by density and averaged with
-    the energies as weights.
+    The shells of :func:`dosekit.capture.profiles.neutron_response` in water, stretched by density and averaged with the
+    energies as weights.
 
     Parameters
     ----------
     medium : Material
         Medium; its density counts.
     energies_mev : tuple of float
-        Equally likely neutron energies, MeV; rounded to the nodes of the kernels.
+        Equally likely neutron energies, MeV.
     bin_mm : float
         Bin, mm.
-    half_length_mm : float
-        Half length, mm; kernels end at 1 m of water.
     mean_cosine : float
         Mean cosine of emission.
+    width_mm : float, optional
+        Width of the square over which energy is summed, mm.
 
     Returns
     -------
     ndarray, odd length
-        Share of the energy per bin; the centre is the plane.
+        Share of the energy per bin, to 1 m of water; the centre is the plane.
     """
-    density = medium.density_g_cm3
-    half = min(half_length_mm * density, 1000.0)
-    bias = round(float(np.clip(mean_cosine, -0.33, 0.33)), 1)
-    nodes = np.array(_NEUTRON_NODES_MEV)
-    weight = np.zeros(len(nodes))
-    for energy in energies_mev:
-        place = float(np.interp(energy, nodes, np.arange(len(nodes))))
-        low = min(int(place), len(nodes) - 2)
-        weight[low] += energy * (1.0 - place + low)
-        weight[low + 1] += energy * (place - low)
-    weight /= max(float(np.sum(weight)), 1e-12)
-    kernel = sum(
-        share * _neutron_node(energy, bias, bin_mm * density, half)
-        for energy, share in zip(_NEUTRON_NODES_MEV, weight, strict=True)
-        if share > 0.0
-    )
-    kernel = np.asarray(kernel)
-    kernel.setflags(write=False)
-    return kernel
-
-
-@lru_cache(maxsize=256)
-def _neutron_node(energy_mev: float, mean_cosine: float, bin_mm: float, half_length_mm: float) -> NDArray[np.float64]:
-    """Return a kernel at a node energy."""
-    return planar_neutron_kernel(energy_mev, mean_cosine, bin_mm=bin_mm, half_length_mm=half_length_mm)
+    response = neutron_response(material("water"))
+    shells = _mix(response, NODE_ENERGIES_MEV, energies_mev)
+    return _scaled_plane(shells, medium, bin_mm, mean_cosine, width_mm)
 
 
 @lru_cache(maxsize=64)
 def photon_plane_kernel(
-    medium: Material, energy_mev: float, *, bin_mm: float, half_length_mm: float, mean_cosine: float = 0.0
+    medium: Material,
+    energy_mev: float,
+    *,
+    bin_mm: float,
+    mean_cosine: float = 0.0,
+    width_mm: float | None = None,
 ) -> NDArray[np.float64]:
     """Return the share of the energy of photons left per bin about a plane of emission.
 
     The shells of :func:`dosekit.capture.profiles.photon_response` in water (histories with pair production, Compton
-    scattering, electrons and bremsstrahlung), stretched by density and laid on the axis with emission 1 + 3 g mu.
+    scattering, electrons and bremsstrahlung), stretched by density.
 
     Parameters
     ----------
@@ -91,32 +135,106 @@ def photon_plane_kernel(
         Medium; its density counts.
     energy_mev : float
         Photon energy, MeV.
-    bin_mm, half_length_mm : float
-        Bin and half length, mm; kernels end at 1 m of water.
+    bin_mm : float
+        Bin, mm.
     mean_cosine : float
-        Mean cosine of emission, -1/3 to 1/3.
+        Mean cosine of emission.
+    width_mm : float, optional
+        Width of the square over which energy is summed, mm.
 
     Returns
     -------
     ndarray, odd length
-        Share of the energy per bin; the centre is the plane.
+        Share of the energy per bin, to 1 m of water; the centre is the plane.
     """
     response = photon_response(material("water"))
-    place = float(np.interp(np.log(energy_mev), np.log(NODE_PHOTON_MEV), np.arange(len(NODE_PHOTON_MEV))))
-    low = min(int(place), len(NODE_PHOTON_MEV) - 2)
-    shells = (1.0 - place + low) * response[low] + (place - low) * response[low + 1]
-    step = bin_mm * medium.density_g_cm3
-    half = int(np.ceil(min(half_length_mm * medium.density_g_cm3, 1000.0) / step))
-    edges = step * (np.arange(2 * half + 2) - half - 0.5)
-    bias = float(np.clip(mean_cosine, -0.33, 0.33))
-    kernel = np.zeros(2 * half + 1)
-    for inner, outer, energy in zip(EDGES_MM[:-1], EDGES_MM[1:], shells[:-1], strict=True):
-        for radius in np.linspace(inner, outer, 9)[1::2]:
-            mu = np.clip(edges / radius, -1.0, 1.0)
-            # integral of (1 + 3 g mu) / 2
-            kernel += 0.25 * energy * np.diff(0.5 * (mu + 1.5 * bias * mu**2))
-    kernel.setflags(write=False)
-    return kernel
+    shells = _mix(response, NODE_PHOTON_MEV, (energy_mev,))
+    return _scaled_plane(shells, medium, bin_mm, mean_cosine, width_mm)
+
+
+@lru_cache(maxsize=256)
+def star_plane_kernel(
+    medium: Material, component: str, *, yields: str, bin_mm: float, width_mm: float | None
+) -> NDArray[np.float64]:
+    """Return the energy of star neutrons or photons per bin and stop, inside a square of finite width.
+
+    Parameters
+    ----------
+    medium : Material
+        Where the pion stops; its density counts.
+    component : str
+        star_neutron or star_photon.
+    yields : str
+        Yield set.
+    bin_mm : float
+        Bin, mm.
+    width_mm : float or None
+        Width of the square, mm.
+
+    Returns
+    -------
+    ndarray, odd length
+        MeV per stop and bin, to 1 m of water.
+    """
+    edges = EDGES_MM[EDGES_MM <= 2000.0] / medium.density_g_cm3
+    shells = point_kernel(medium, component, yields=yields, edges_mm=edges)
+    return plane_from_shells(
+        shells, edges, bin_mm=bin_mm, half_length_mm=_REACH_MM / medium.density_g_cm3, width_mm=width_mm
+    )
+
+
+def _mix(
+    response: NDArray[np.float64], nodes: NDArray[np.float64], energies: tuple[float, ...]
+) -> NDArray[np.float64]:
+    """Average shells over energies, energy as weight."""
+    place = np.interp(np.log(np.maximum(energies, 1e-6)), np.log(nodes), np.arange(len(nodes)))
+    low = np.minimum(place.astype(np.int64), len(nodes) - 2)
+    weight = np.zeros(len(nodes))
+    np.add.at(weight, low, np.asarray(energies) * (1.0 - place + low))
+    np.add.at(weight, low + 1, np.asarray(energies) * (place - low))
+    return np.asarray(weight @ response / max(float(np.sum(weight)), 1e-12))
+
+
+def _scaled_plane(
+    shells: NDArray[np.float64], medium: Material, bin_mm: float, mean_cosine: float, width_mm: float | None
+) -> NDArray[np.float64]:
+    """Return a plane kernel from shells at unit density."""
+    density = medium.density_g_cm3
+    count = min(len(shells), len(EDGES_MM) - 1)
+    return plane_from_shells(
+        shells[:count],
+        EDGES_MM[: count + 1] / density,
+        bin_mm=bin_mm,
+        half_length_mm=_REACH_MM / density,
+        mean_cosine=mean_cosine,
+        width_mm=width_mm,
+    )
+
+
+def neutron_kerma_ratio(medium: Material) -> float:
+    """Return what neutrons of some 20 MeV leave per mass in a material, relative to water.
+
+    Kerma factors at 20 MeV: hydrogen 45, other light elements 2.4 (1e-15 Gy m2; ICRU Report 63 (2000), from memory), so that
+    hydrogen takes 0.70 of the energy in water. Energy that a material poor in hydrogen does not take goes on and is counted
+    as escaped.
+
+    Parameters
+    ----------
+    medium : Material
+        Material.
+
+    Returns
+    -------
+    float
+        Ratio per mass; 1 for water.
+
+    Examples
+    --------
+    >>> neutron_kerma_ratio(material("water"))
+    1.0
+    """
+    kerma = [_KERMA_H * stuff.fraction("H") + _KERMA_REST * (1.0 - stuff.fraction("H")) for stuff in (medium, material("water"))]
+    return kerma[0] / kerma[1]
 
 
 def convolve_planes(source: NDArray[np.float64], kernel: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -45,6 +45,7 @@ def depth_curve(
     bin_mm: float = 1.0,
     depth_mm: float | None = None,
     star_scale: float = 1.0,
+    width_mm: float | None = 600.0,
     nuclear: bool = True,
     decays: bool = True,
 ) -> xr.Dataset:
@@ -64,6 +65,10 @@ def depth_curve(
         Depth covered; vacuum beyond. By default the stack, or the range and 1.3 times of it plus 50 mm.
     star_scale : float
         Factor on the charged energy of stars.
+    width_mm : float, optional
+        Width of the square medium, centred on the beam, over which energy is summed. It matters to neutrons and photons, part
+        of which leaves sideways and counts as escaped; None means without end. What a wider medium would scatter back is
+        not taken off.
     nuclear, decays : bool
         Switch reactions in flight and stars, or decays, off (for comparisons).
 
@@ -95,6 +100,7 @@ def depth_curve(
         raise UnknownNameError("yield set", yields, YIELDS)
     check_star_scale(star_scale)
     settings: dict[str, Any] = {"layers": layers, "bin_mm": bin_width, "yields": yields, "nuclear": nuclear, "decays": decays}
+    settings["width_mm"] = None if width_mm is None else _width(width_mm)
     main = solve(beam.particle, beam.momentum_mev_c, spread=beam.momentum_spread, **settings)
     edges, layer = main.core.edges_mm, main.core.layer
     materials = tuple(stuff for stuff, _ in layers)
@@ -103,7 +109,8 @@ def depth_curve(
     stops = main.stops["core"] + main.stops["scattered"]
     if beam.particle == "pi-" and nuclear:
         stars = star_deposits(
-            stops, edges_mm=edges, layer=layer, materials=materials, yields=yields, star_scale=star_scale
+            stops, edges_mm=edges, layer=layer, materials=materials, yields=yields, star_scale=star_scale,
+            width_mm=settings["width_mm"],
         )
         by_material: dict[Material, float] = {}
         for index, stuff in enumerate(materials):
@@ -185,6 +192,7 @@ def depth_curve(
             "yields": yields,
             "star_scale": float(star_scale),
             "bin_mm": float(bin_width),
+            "width_mm": "without end" if width_mm is None else float(width_mm),
             "medium": "; ".join(f"{stuff.name} {thickness:g} mm" for stuff, thickness in layers),
             "sources": _SOURCES,
             "caution": CAUTION,
@@ -274,6 +282,14 @@ def _layout(
     if shifter is not None and offset > 0.0:
         layers = ((shifter, offset), *layers)
     return layers, count, bin_width, offset
+
+
+def _width(width_mm: float) -> float:
+    """Return a width that makes sense."""
+    width = _finite(width_mm, "width")
+    if not 10.0 <= width <= 1e5:
+        raise InputError(f"width of {width:g} mm", allowed="10 to 100000 mm, or None for a medium without end")
+    return width
 
 
 def _finite(value: float, what: str) -> float:

@@ -50,6 +50,7 @@ _COMPONENT_OF = {
     "contaminant_electron": "contaminant_electron",
 }
 _NEUTRAL_SIGMA_MM = 100.0
+_WIDTH_MM = 600.0
 
 
 @dataclass(frozen=True)
@@ -97,7 +98,9 @@ class DepthLibrary:
     kinetic_energy_mev: NDArray[np.float64] = field(repr=False)
     let: dict[str, NDArray[np.float64]] = field(repr=False)
 
-    def depth_dose(self, components: bool = True, *, star_scale: float = 1.0) -> NDArray[np.float64]:
+    def depth_dose(
+        self, components: bool = True, *, star_scale: float = 1.0, width_mm: float | None = 600.0
+    ) -> NDArray[np.float64]:
         """Return depth dose in water with the stars folded in along depth.
 
         Parameters
@@ -106,6 +109,8 @@ class DepthLibrary:
             Whether components stay apart.
         star_scale : float
             Factor on the charged energy of stars.
+        width_mm : float, optional
+            Width of the square over which star neutrons and photons are summed, mm; None without end.
 
         Returns
         -------
@@ -127,6 +132,7 @@ class DepthLibrary:
                 materials=(water,),
                 yields=self.yields,
                 star_scale=star_scale,
+                width_mm=width_mm,
             )
             for name in STAR_COMPONENTS:
                 table[:, COMPONENTS.index(name)] += stars[name]
@@ -320,7 +326,7 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
     """Solve for main species and contaminants and sort into library quantities."""
     water = material("water")
     layers = ((water, bins * bin_mm),)
-    settings = {"spread": beam.momentum_spread, "layers": layers, "bin_mm": bin_mm, "yields": yields}
+    settings = {"spread": beam.momentum_spread, "layers": layers, "bin_mm": bin_mm, "yields": yields, "width_mm": _WIDTH_MM}
     main = solve(beam.particle, momentum, **settings)  # type: ignore[arg-type]
     names = ("core", "scattered", "in_flight_charged", "in_flight_neutral", "decay")
     amount = {name: main.deposit[name] for name in names}

@@ -81,7 +81,9 @@ def muon_capture_share(medium: Material) -> float:
     return float(caught / weight) if weight > 0.0 else 0.0
 
 
-def muon_capture_products(caught: NDArray[np.float64], grid: CoarseGrid) -> MuonCapture:
+def muon_capture_products(
+    caught: NDArray[np.float64], grid: CoarseGrid, *, width_mm: float | None = None
+) -> MuonCapture:
     """Return the energy that muon captures leave.
 
     Parameters
@@ -90,6 +92,8 @@ def muon_capture_products(caught: NDArray[np.float64], grid: CoarseGrid) -> Muon
         Captures per cell.
     grid : CoarseGrid
         The cells.
+    width_mm : float, optional
+        Width of the square over which energy is summed, mm.
 
     Returns
     -------
@@ -97,12 +101,11 @@ def muon_capture_products(caught: NDArray[np.float64], grid: CoarseGrid) -> Muon
         Deposits and the rest of the balance.
     """
     number = float(np.sum(caught))
-    half = 1000.0
     neutron = convolve_planes(
-        caught * _NEUTRON, neutron_plane_kernel(grid.reference, (2.0, 5.0, 12.0), bin_mm=grid.step_mm, half_length_mm=half)
+        caught * _NEUTRON, neutron_plane_kernel(grid.reference, (2.0, 5.0, 12.0), bin_mm=grid.step_mm, width_mm=width_mm)
     )
     photon = convolve_planes(
-        caught * _PHOTON, photon_plane_kernel(grid.reference, 2.0, bin_mm=grid.step_mm, half_length_mm=half)
+        caught * _PHOTON, photon_plane_kernel(grid.reference, 2.0, bin_mm=grid.step_mm, width_mm=width_mm)
     )
     deposit = {
         "capture_light": (caught * _LIGHT, 20.0),

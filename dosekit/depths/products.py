@@ -19,7 +19,12 @@ from dosekit.beams.ranges import range_table
 from dosekit.beams.reactions import reactions
 from dosekit.beams.scattering import pv_mev, scattering_length_g_cm2
 from dosekit.depths.angles import COSINES, WEIGHTS, diffusion_matrices
-from dosekit.depths.broad import convolve_planes, neutron_plane_kernel, photon_plane_kernel
+from dosekit.depths.broad import (
+    convolve_planes,
+    neutron_kerma_ratio,
+    neutron_plane_kernel,
+    photon_plane_kernel,
+)
 from dosekit.depths.coarse import CoarseGrid
 from dosekit.depths.kernels import gather_products, march, stream_photons
 from dosekit.depths.tables import GROUP_ENERGY_MEV, beta_samples, node_spread, product_spread
@@ -37,7 +42,6 @@ __all__ = [
 _NO_EVENTS = np.zeros((0, 0))
 _GAMMA_CM2_G = 0.0170
 _ANCHORS_MEV = (10.0, 50.0, 100.0, 200.0)
-_HALF_LENGTH_MM = 1000.0
 
 
 class Carried:
@@ -210,7 +214,12 @@ def _stopped_let(species: str, stuff: Material) -> float:
 
 
 def neutral_products(
-    projectile: str, events: NDArray[np.float64], grid: CoarseGrid, *, yields: str
+    projectile: str,
+    events: NDArray[np.float64],
+    grid: CoarseGrid,
+    *,
+    yields: str,
+    width_mm: float | None = None,
 ) -> tuple[NDArray[np.float64], dict[str, NDArray[np.float64]]]:
     """Spread the energy of neutrons, photons and neutral pions of reactions.
 
@@ -224,6 +233,8 @@ def neutral_products(
         The cells.
     yields : str
         Yield set.
+    width_mm : float, optional
+        Width of the square over which energy is summed, mm.
 
     Returns
     -------
@@ -243,8 +254,11 @@ def neutral_products(
         for index, anchor in enumerate(_ANCHORS_MEV):
             source = by_group @ _anchor_weights()[:, index]
             if np.any(source > 0.0):
-                kernel = _neutral_kernel(projectile, species, anchor, grid.reference, grid.materials[0], grid.step_mm, yields)
-                deposit += convolve_planes(source, kernel)
+                kernel = _neutral_kernel(projectile, species, anchor, grid.reference, grid.materials[0], grid.step_mm, yields, width_mm)
+                left = convolve_planes(source, kernel)
+                if species == "neutron":
+                    left *= np.array([neutron_kerma_ratio(stuff) for stuff in grid.materials])[grid.stuff]
+                deposit += left
     return deposit, emitted
 
 
@@ -256,7 +270,14 @@ def _anchor_weights() -> NDArray[np.float64]:
 
 @lru_cache(maxsize=256)
 def _neutral_kernel(
-    projectile: str, species: str, anchor_mev: float, reference: Material, stuff: Material, step: float, yields: str
+    projectile: str,
+    species: str,
+    anchor_mev: float,
+    reference: Material,
+    stuff: Material,
+    step: float,
+    yields: str,
+    width_mm: float | None,
 ) -> NDArray[np.float64]:
     """Return the plane kernel of a neutral product for one energy of the projectile."""
     table = reactions(projectile, stuff, yields=yields)
@@ -267,11 +288,9 @@ def _neutral_kernel(
         rms = table.at(table.rms_energy_mev[species], at)
         top = at + (130.0 if projectile.startswith("pi") else 0.0)
         energies = tuple(float(value) for value in beta_samples(mean, rms, top, samples=12)[0])
-        return neutron_plane_kernel(
-            reference, energies, bin_mm=step, half_length_mm=_HALF_LENGTH_MM, mean_cosine=forward
-        )
+        return neutron_plane_kernel(reference, energies, bin_mm=step, mean_cosine=forward, width_mm=width_mm)
     energy = 0.5 * (134.98 + float(mean[0])) if species == "pi0" else max(float(mean[0]), 0.5)
-    return photon_plane_kernel(reference, energy, bin_mm=step, half_length_mm=_HALF_LENGTH_MM, mean_cosine=forward)
+    return photon_plane_kernel(reference, energy, bin_mm=step, mean_cosine=forward, width_mm=width_mm)
 
 
 @lru_cache(maxsize=64)

@@ -93,6 +93,7 @@ def solve(
     yields: str,
     nuclear: bool = True,
     decays: bool = True,
+    width_mm: float | None = None,
 ) -> Solution:
     """Follow one species through a stack.
 
@@ -112,13 +113,15 @@ def solve(
         Yield set.
     nuclear, decays : bool
         Whether reactions and decay happen.
+    width_mm : float, optional
+        Width of the square over which the energy of neutrons and photons is summed, mm.
 
     Returns
     -------
     Solution
         The result; the most recent ones are kept.
     """
-    return _solve(species, float(momentum), float(spread), layers, float(bin_mm), yields, nuclear, decays)
+    return _solve(species, float(momentum), float(spread), layers, float(bin_mm), yields, nuclear, decays, width_mm)
 
 
 @lru_cache(maxsize=24)
@@ -131,6 +134,7 @@ def _solve(
     yields: str,
     nuclear: bool,
     decays: bool,
+    width_mm: float | None,
 ) -> Solution:
     """Put the parts together."""
     if species in ("e-", "e+"):
@@ -159,8 +163,8 @@ def _solve(
     wide = coarse_grid(
         species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=2.0 * grid.step_mm
     )
-    neutral, emitted = neutral_products(species, regrid(reacted, grid, wide), wide, yields=yields)
-    decayed, rest = _decays(species, core, grid, wide, scattered)
+    neutral, emitted = neutral_products(species, regrid(reacted, grid, wide), wide, yields=yields, width_mm=width_mm)
+    decayed, rest = _decays(species, core, grid, wide, scattered, width_mm)
 
     to_bins = grid.to_bins
     built_up = carry_deltas(
@@ -280,7 +284,7 @@ class _Rest:
 
 
 def _decays(
-    species: str, core: Core, fine: CoarseGrid, grid: CoarseGrid, scattered: _Scattered
+    species: str, core: Core, fine: CoarseGrid, grid: CoarseGrid, scattered: _Scattered, width_mm: float | None
 ) -> tuple[Carried, _Rest]:
     """Follow muons and electrons from decays in flight and at rest."""
     total = Carried(grid.cells)
@@ -318,7 +322,7 @@ def _decays(
     if not positive:
         share = np.array([muon_capture_share(stuff) for stuff in grid.materials])[grid.stuff]
         caught = muons * share
-        products = muon_capture_products(caught, grid)
+        products = muon_capture_products(caught, grid, width_mm=width_mm)
         rest.capture.update(products.deposit)
         rest.neutrino += products.neutrino
         rest.escaped += products.escaped
