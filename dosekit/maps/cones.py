@@ -25,6 +25,9 @@ __all__ = ["DIRECTION_SETS", "WIDENING_MM", "Cones", "direction_set"]
 WIDENING_MM = 100.0
 """Distance at which the widening of `Cones.carry_widening` equals the width of a cone: a cone's rms half-width on one axis is r / sqrt(n), mm."""
 
+FAINT = 1e-10
+"""A mode that has fallen below this part of its brightest emission is put down where it is."""
+
 _BATCH = 8
 
 _O3, _O2 = 0.5773502691896258, 0.7071067811865476
@@ -332,8 +335,7 @@ class Cones:
             for line in lines:
                 sweep(
                     emitted, index, table, sources, turned, rates, line.slope_j, line.slope_i, line.down, line.step_mm,
-                    line.weight, first, last, out,
-                )  # fmt: skip
+                    line.weight, first, last, FAINT, out)  # fmt: skip
             total += out.transpose(np.argsort(order))
         return total
 

@@ -75,11 +75,12 @@ def _step_back(thick, b, here, asked, weight, worth):  # type: ignore[no-untyped
 
 @njit(cache=True, parallel=True, error_model="numpy")
 def sweep(  # type: ignore[no-untyped-def]
-    stops, material, energies, sources, scale, rates, slope_j, slope_i, down, step_mm, weight, first, last, out
+    stops, material, energies, sources, scale, rates, slope_j, slope_i, down, step_mm, weight, first, last, faint, out
 ):
     """Carry all modes along one direction and add what they leave to ``out``.
 
-    ``energies[material, mode]`` times ``stops`` is emitted, or ``sources[mode]`` if there is any.
+    ``energies[material, mode]`` times ``stops`` is emitted, or ``sources[mode]`` if there is any. Where a mode has fallen below
+    ``faint`` of its brightest emission on the ray row, what is left is put down at once.
     """
     nk, nj, ni = scale.shape
     modes = len(rates)
@@ -97,6 +98,8 @@ def sweep(  # type: ignore[no-untyped-def]
         emitted = np.empty(ni)
         start = width
         stop = 0
+        alive = np.zeros(modes, dtype=np.bool_)
+        brightest = np.zeros(modes)
         for turn in range(nk):
             k = nk - 1 - turn if down else turn
             j = row - high_j + int(np.rint(slope_j * (k - middle)))
@@ -121,6 +124,7 @@ def sweep(  # type: ignore[no-untyped-def]
                 b = rates[m] * step_mm
                 here = state[m, begin:end]
                 if shining:
+                    alive[m] = True
                     if by_material:
                         many = stops[k, j, i0 : i0 + count]
                         kind = material[k, j, i0 : i0 + count]
@@ -130,9 +134,21 @@ def sweep(  # type: ignore[no-untyped-def]
                         light = sources[m, k, j, i0 : i0 + count]
                         for q in range(count):
                             bright[q] = weight * light[q]
+                    for q in range(count):
+                        brightest[m] = max(brightest[m], abs(bright[q]))
                     _step_shining(thick, b, here, bright, given)
-                else:
+                elif alive[m]:
                     _step_dark(thick, b, here, given)
+                    if turn % 8 == 0:
+                        # a mode that has all but died stays where it is
+                        most = 0.0
+                        for q in range(count):
+                            most = max(most, abs(here[q]))
+                        if most < faint * brightest[m]:
+                            for q in range(count):
+                                given[q] += here[q]
+                            state[m, :] = 0.0
+                            alive[m] = False
             target = out[k, j, i0 : i0 + count]
             for q in range(count):
                 target[q] += given[q]

@@ -5,7 +5,7 @@ Each stopped pion becomes a star of the element that captures it there; shares a
 
 * p, d, t on the voxels themselves, in distance scaled by the local relative stopping power;
 * helium ions and recoils stay in the voxel (they travel 0.1 mm in tissue);
-* neutrons, scaled by density and composition, and photons, scaled by electron density, on blocks of about 6 mm
+* neutrons, scaled by density and composition, and photons, scaled by electron density, on blocks of about 8 mm
   (`dosekit.maps.stars_coarse`).
 
 Energy that reaches the edge of the volume has escaped; neutron energy that goes into separation of nucleons is bound. `star_balance`
@@ -33,10 +33,10 @@ if TYPE_CHECKING:
 
 __all__ = ["DIRECTIONS", "carry_stars", "carry_stars_transposed", "star_balance", "star_scales"]
 
-DIRECTIONS: dict[str, int] = {"star_light": 86, "star_neutron": 110, "star_photon": 50}
+DIRECTIONS: dict[str, int] = {"star_light": 86, "star_neutron": 110, "star_photon": 86}
 """Directions for each component that travels; see docs/explanation/star_transport.md for the study."""
 
-BLOCK_MM = 6.0
+BLOCK_MM = 8.0
 """Size of the blocks that carry neutrons and photons, mm."""
 
 _CHARGED = ("star_light", "star_heavy")
@@ -279,6 +279,6 @@ def _carried(
         cones = Cones(grid.spacing_mm, count)
         return cones.carry(scale, rates, stops=stops, material=grid.material_index, energies_mev=table)
     blocks = Blocks(grid.shape, factors, grid.density_g_cm3)
-    sources = np.stack([blocks.summed(stops * table[:, m][grid.material_index]) for m in range(len(rates))])
+    sources = blocks.sources(stops, grid.material_index, table)
     cones = Cones(_coarse_spacing(grid, factors), count)
     return blocks.spread(cones.carry_widening(blocks.averaged(scale), rates, sources))

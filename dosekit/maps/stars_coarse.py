@@ -89,12 +89,22 @@ class Blocks:
 
     def spread(self, energy: NDArray[Any]) -> NDArray[np.float64]:
         """Return energy per voxel from energy per block, smooth in dose and exact in every block."""
-        dose = energy / self._block_mass
-        smooth = self._interpolated(dose)
-        smooth *= self.mass
-        missing = (energy - self.summed(smooth)) / self._block_mass
-        smooth += self.repeated(missing) * self.mass
-        return smooth
+        from dosekit.maps.kernels_stars_coarse import spread_blocks
+
+        energy = np.ascontiguousarray(energy, dtype=np.float64)
+        out = np.empty(self.shape)
+        spread_blocks(energy, energy / self._block_mass, self._block_mass, self.mass, *self.factors, out)
+        return out
+
+    def sources(
+        self, stops: NDArray[np.float64], material: NDArray[Any], table: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """Return stops times their material's energies per mode, summed over blocks, shape (m, z, y, x)."""
+        from dosekit.maps.kernels_stars_coarse import block_sources
+
+        out = np.zeros((table.shape[1], *self.coarse_shape))
+        block_sources(stops, material, np.ascontiguousarray(table), *self.factors, out)
+        return out
 
     def spread_transposed(self, wanted: NDArray[Any]) -> NDArray[np.float64]:
         """Apply the transpose of `spread`."""
@@ -122,15 +132,8 @@ class Blocks:
             matrices.append(matrix)
         return matrices
 
-    def _interpolated(self, blocks: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Interpolate along the three axes."""
-        z, y, x = self._matrices
-        step = np.tensordot(z, blocks, axes=(1, 0))
-        step = np.matmul(y, step)
-        return np.asarray(np.matmul(step, x.T))
-
     def _interpolated_transposed(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Apply the transpose of `_interpolated`."""
+        """Apply the transpose of linear interpolation along the three axes."""
         z, y, x = self._matrices
         step = np.matmul(values, x)
         step = np.matmul(y.T, step)
