@@ -213,9 +213,9 @@ class Study(_Section):
 
     @model_validator(mode="after")
     def _distinct(self) -> Self:
-        names = [section.name.lower() for section in self.field]
+        names = [file_name(section.name) for section in self.field]
         if len(set(names)) != len(names):
-            msg = "two fields have the same name"
+            msg = "two fields have the same name, or names that would give the same file name"
             raise ValueError(msg)
         return self
 
@@ -349,6 +349,27 @@ def _models_in(annotation: Any) -> list[type[BaseModel]]:
     if isinstance(annotation, type) and issubclass(annotation, BaseModel):
         return [annotation]
     return [model for inner in getattr(annotation, "__args__", ()) for model in _models_in(inner)]
+
+
+def file_name(name: str) -> str:
+    """Return a name as part of a file name: lower case letters and digits, the rest as underscores.
+
+    Parameters
+    ----------
+    name : str
+        Name of a field.
+
+    Returns
+    -------
+    str
+        The part.
+
+    Examples
+    --------
+    >>> file_name("left lateral")
+    'left_lateral'
+    """
+    return "".join(letter if letter.isalnum() else "_" for letter in name.lower())
 
 
 def axis_triple(value: float | tuple[float, float, float]) -> tuple[float, float, float]:

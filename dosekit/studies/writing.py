@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from dosekit.studies.model import file_name
 from dosekit.studies.result import Result
 
 if TYPE_CHECKING:
@@ -243,7 +244,7 @@ def _write_figures(result: Result, folder: Path, tell: Progress) -> list[ReportF
         words = f"{particle_label(beam.particle)} {beam.momentum_mev_c:.1f} MeV/c"
         add(
             depth_curve_figure(_beam_curve(result, beam), title=words),
-            f"depth_{_file_name(plan.field.name)}",
+            f"depth_{file_name(plan.field.name)}",
             f"Depth dose in water of the unmodulated beam of field '{plan.field.name}', every component apart.",
         )
         settings = plan.settings
@@ -260,7 +261,7 @@ def _write_figures(result: Result, folder: Path, tell: Progress) -> list[ReportF
                 quantity="dose" if settings.effect_dose is None else "effect-weighted dose",
                 title=f"{plan.field.name}, {words}",
             ),
-            f"range_steps_{_file_name(plan.field.name)}",
+            f"range_steps_{file_name(plan.field.name)}",
             f"Range steps of field '{plan.field.name}' over its widest interval of the target, broad field in water.",
         )
     add(
@@ -315,11 +316,6 @@ def _add_calibration(result: Result, add: Callable[[Any, str, str], None]) -> No
     )
 
 
-def _file_name(name: str) -> str:
-    """Return a field's name as part of a file name."""
-    return "".join(letter if letter.isalnum() else "_" for letter in name.lower())
-
-
 def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
     """Write RT Dose, RT Ion Plan and what they refer to where it is not there yet: structures, a phantom's CT."""
     from dosekit.outputs.dicom_ct import write_ct_series
@@ -366,7 +362,7 @@ def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
     for number, field in enumerate(fields, start=1):
         own = _on_output_lattice(result, result.per_field[field.name])
         write_rt_dose(
-            folder / f"rt_dose_field_{_file_name(field.name)}.dcm",
+            folder / f"rt_dose_field_{file_name(field.name)}.dcm",
             _summed(own),
             summation="BEAM",
             label=field.name,
