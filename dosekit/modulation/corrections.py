@@ -9,8 +9,8 @@ with the exact dose ``e``, and keeps the outcome only if the exact cost falls; o
 far.  Only one exact dose, and no exact slope, is needed in a round.  A fixed point meets the goals with the
 exact dose as well as the stand-in's slopes allow.
 
-Stopping rules: exact cost falls by less than `least_gain`; number of rounds; no lower cost after four
-halvings.
+Stopping rules: exact cost at or below `enough`; it falls by less than `least_gain`; number of rounds; no
+lower cost after four halvings.
 """
 
 from __future__ import annotations
@@ -99,8 +99,9 @@ def find_weights_corrected(
     scale_gy: float,
     start: ArrayLike | None = None,
     rounds: int = 5,
-    largest_steps: int = 60,
+    largest_steps: int = 40,
     least_gain: float = 0.2,
+    enough: float = 1e-4,
     progress: Callable[[int, float], None] | None = None,
 ) -> FoundWeights:
     """Find weights with a stand-in, corrected by the exact dose.
@@ -121,6 +122,9 @@ def find_weights_corrected(
         Steps of each search with the stand-in.
     least_gain : float
         Relative gain of the exact cost that counts as no progress.
+    enough : float
+        An exact cost at or below this ends the search (1e-4: 1 % of the prescription root-mean-square on a
+        goal of weight 1).
     progress : callable, optional
         Called with round and exact cost.
 
@@ -136,7 +140,9 @@ def find_weights_corrected(
     def search(response: Response, begin: ArrayLike | None) -> NDArray[np.float64]:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore", SettingsWarning)
-            return find_weights(response, goals, scale_gy=scale_gy, start=begin, largest_steps=largest_steps).weights
+            return find_weights(
+                response, goals, scale_gy=scale_gy, start=begin, largest_steps=largest_steps, least_gain=1e-3
+            ).weights
 
     evaluations = 0
 
@@ -152,6 +158,9 @@ def find_weights_corrected(
     history, parts_history = [cost], {name: [value] for name, value in parts.items()}
     reason = f"{rounds} rounds"
     for number in range(1, rounds + 1):
+        if cost <= enough:
+            reason = f"exact cost at or below {enough:g}"
+            break
         corrected = CorrectedResponse(quick, dose - quick.dose(best)[0])
         aimed = search(corrected, best)
         part, found = 1.0, None

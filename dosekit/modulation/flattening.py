@@ -170,13 +170,11 @@ class FlatteningProblem:
 
     def _linear(self, matrix: NDArray[np.float64], right: NDArray[np.float64]) -> NDArray[np.float64]:
         """Solve the regularised non-negative problem."""
-        from scipy.optimize import nnls
-
         count = matrix.shape[1]
         length = np.sqrt(np.sum(matrix**2, axis=0))
         length[length == 0.0] = 1.0
         if self.smoothing == 0.0 or count < 3:
-            return np.asarray(nnls(matrix / length, right, maxiter=100 * count)[0] / length)
+            return _non_negative(matrix / length, right) / length
         bend = np.zeros((count - 2, count))
         for row in range(count - 2):
             bend[row, row : row + 3] = (1.0, -2.0, 1.0)
@@ -186,7 +184,7 @@ class FlatteningProblem:
         weights = np.zeros(count)
         for _ in range(_PASSES):
             wished = np.concatenate([right, bend @ weights])
-            weights = np.asarray(nnls(stacked, wished, maxiter=100 * count)[0] / length)
+            weights = _non_negative(stacked, wished) / length
         return weights
 
     def _value(self, weights: NDArray[np.float64], chosen: NDArray[np.int64]) -> NDArray[np.float64]:
@@ -204,6 +202,16 @@ class FlatteningProblem:
         linear, root = effect.linear[chosen][:, self.inside], effect.root[chosen][:, self.inside]
         by_linear, by_root = weighted_dose_slopes(weights @ linear, weights @ root, tissue=effect.tissue)
         return np.asarray(((linear * by_linear + root * by_root) / self.scale).T)
+
+
+def _non_negative(matrix: NDArray[np.float64], right: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Solve a non-negative least-squares problem; a second method where the first does not come to an end."""
+    from scipy.optimize import lsq_linear, nnls
+
+    try:
+        return np.asarray(nnls(matrix, right, maxiter=100 * matrix.shape[1])[0])
+    except RuntimeError:
+        return np.asarray(np.maximum(lsq_linear(matrix, right, bounds=(0.0, np.inf)).x, 0.0))
 
 
 def weighted_curve(

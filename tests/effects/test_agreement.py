@@ -83,6 +83,7 @@ def test_parallel_ramps_have_the_distance_of_parallel_lines(gradient, evidence):
         ours=float(ours),
         unit="1",
         bar="1e-9",
+        kind="truth",
     )
     assert ours == pytest.approx(expected, rel=1e-9)
 

@@ -59,6 +59,7 @@ def test_sphere_in_linear_gradient(percent, evidence):
         ours=ours,
         unit="Gy",
         bar="1e-6 relative",
+        kind="truth",
     )
     assert ours == pytest.approx(expected, rel=1e-6)
     assert histogram.volume_share(expected) == pytest.approx(percent / 100.0, abs=1e-6)

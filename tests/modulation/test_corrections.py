@@ -29,7 +29,7 @@ def test_corrected_search_comes_near_the_exact_optimum():
     plain = find_weights(quick, goals, scale_gy=2.0, largest_steps=200)
     uncorrected = goal_costs(goals, exact.dose(plain.weights)[0], scale_gy=2.0)[0]
     direct = find_weights(exact, goals, scale_gy=2.0, largest_steps=400)
-    found = find_weights_corrected(exact, quick, goals, scale_gy=2.0, rounds=8, least_gain=0.01)
+    found = find_weights_corrected(exact, quick, goals, scale_gy=2.0, rounds=8, least_gain=0.01, enough=0.0)
     assert found.history[-1] < 0.05 * uncorrected
     assert found.history[-1] < direct.history[-1] + 3e-4
     assert np.all(np.diff(found.history) < 0.0)
@@ -44,6 +44,14 @@ def test_perfect_stand_in_stops_at_once():
     same = LinearResponse(exact_map())
     found = find_weights_corrected(same, same, goals, scale_gy=2.0, rounds=5)
     assert found.steps <= 2
+
+
+def test_good_enough_ends_the_search():
+    goals = [Goal("target", "uniform", TARGET, 2.0)]
+    exact, quick = LinearResponse(exact_map()), LinearResponse(quick_map())
+    found = find_weights_corrected(exact, quick, goals, scale_gy=2.0, rounds=8, least_gain=0.0, enough=2e-3)
+    assert found.history[-1] <= 2e-3 < found.history[-2]
+    assert "2e-3" in found.stopped_because or "0.002" in found.stopped_because
 
 
 def test_correction_is_added_and_slopes_are_the_stand_ins(rng):

@@ -110,6 +110,21 @@ def test_effect_weighted_dose_becomes_flat(model, dose_gy):
     assert settings.dose[152] < settings.dose[97]
 
 
+def test_second_method_gives_the_same_weights(monkeypatch):
+    """Where the first solver does not end, the second one takes over."""
+    import scipy.optimize
+
+    depth, ranges, parts = reference_stack((90.0, 150.0), 6.0)
+    first = range_steps(sum(parts.values()), depth, (90.0, 150.0), residual_range_mm=ranges)
+
+    def endless(*_, **__):
+        raise RuntimeError("maximum number of iterations reached")
+
+    monkeypatch.setattr(scipy.optimize, "nnls", endless)
+    second = range_steps(sum(parts.values()), depth, (90.0, 150.0), residual_range_mm=ranges)
+    np.testing.assert_allclose(second.dose[95:145], first.dose[95:145], rtol=2e-3)
+
+
 def test_dose_scales_weights():
     depth, ranges, parts = reference_stack((90.0, 150.0), 6.0)
     once = range_steps(sum(parts.values()), depth, (90.0, 150.0), residual_range_mm=ranges, dose_gy=1.0)
