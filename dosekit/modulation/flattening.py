@@ -174,7 +174,7 @@ class FlatteningProblem:
         length = np.sqrt(np.sum(matrix**2, axis=0))
         length[length == 0.0] = 1.0
         if self.smoothing == 0.0 or count < 3:
-            return _non_negative(matrix / length, right) / length
+            return np.asarray(_non_negative(matrix / length, right) / length)
         bend = np.zeros((count - 2, count))
         for row in range(count - 2):
             bend[row, row : row + 3] = (1.0, -2.0, 1.0)
