@@ -4,15 +4,16 @@ The energy per length of path at scaled distance t about a stop is approximated 
 
     k(t) = sum_i E_i b_i exp(-b_i t) + local,        t = path times the local scale,
 
-with rates b_i fixed for each component and energies E_i fitted, element by element, to the profile in water by linear least squares on
-relative differences (Ahnesjoe, Med. Phys. 16 (1989) 577, for the form). Energies may be negative (products that all stop at about the same distance need
-alternating terms); their sum with the local part is the energy of the profile. Fitted profiles follow the exact ones within 3 % where a light
-product's energy per length exceeds 5 % of its maximum, and within 5 % for neutrons and photons (tested).
+with rates b_i fixed for each component and energies E_i fitted, element by element, to the profile in water by
+linear least squares on relative differences (Ahnesjoe, Med. Phys. 16 (1989) 577, for the form). Energies may be
+negative (products that all stop at about the same distance need alternating terms); their sum with the local part
+is the energy of the profile. Fitted profiles follow the exact ones within 3 % where a light product's energy per
+length exceeds 5 % of its maximum, and within 5 % for neutrons and photons (tested).
 
-Scales: relative stopping power for charged products, relative electron density for photons, `neutron_scale` for neutrons. The last comes from
-histories of this package in nine materials (polyethylene 1.17, bone 0.58, graphite 0.41, calcium 0.33 for the same mass as water), which one
-factor per material describes within 2 % from 30 to 150 mm: a sum over elements of mass fraction times 5.68 for H, 0.41 for C and
-0.41 (16 / A)^0.27 beyond.
+Scales: relative stopping power for charged products, relative electron density for photons, `neutron_scale` for
+neutrons. The last comes from histories of this package in nine materials (polyethylene 1.17, bone 0.58, graphite
+0.41, calcium 0.33 for the same mass as water), which one factor per material describes within 2 % from 30 to 150
+mm: a sum over elements of mass fraction times 5.68 for H, 0.41 for C and 0.41 (16 / A)^0.27 beyond.
 """
 
 from __future__ import annotations
@@ -26,10 +27,12 @@ from numpy.typing import NDArray
 
 from dosekit.basis.materials import Material, element, material
 from dosekit.capture.neutrons import EDGES_MM
-from dosekit.capture.profiles import Profile, element_profile
+from dosekit.capture.profiles import Profile, charged_profile, element_profile
 from dosekit.capture.sharing import capture_shares
+from dosekit.capture.spectra import Spectrum
+from dosekit.errors import InputError
 
-__all__ = ["RATES_PER_MM", "ConeKernel", "cone_kernel", "material_kernel", "neutron_scale"]
+__all__ = ["RATES_PER_MM", "ConeKernel", "cone_kernel", "material_kernel", "neutron_scale", "proton_kernel"]
 
 RATES_PER_MM: dict[str, tuple[float, ...]] = {
     "star_light": (0.0953, 0.1149, 0.1614, 0.2405, 0.3512, 0.5308, 2.555),
@@ -195,6 +198,33 @@ def material_kernel(component: str, yields: str, medium: Material) -> ConeKernel
             energies = energies + share * kernel.energies_mev
             local += share * kernel.local_mev
     return ConeKernel(energies, rates, local)
+
+
+@lru_cache(maxsize=64)
+def proton_kernel(mean_energy_mev: float) -> ConeKernel:
+    """Return the exponentials of protons with an exponential spectrum, for products of reactions in flight.
+
+    Parameters
+    ----------
+    mean_energy_mev : float
+        Mean energy, MeV, 5 to 60; the spectrum is cut at 110 MeV.
+
+    Returns
+    -------
+    ConeKernel
+        Energies that sum to 1 MeV, on the rates of ``star_light``.
+
+    Raises
+    ------
+    InputError
+        If the energy is out of range.
+    """
+    if not 5.0 <= mean_energy_mev <= 60.0:
+        raise InputError(f"a mean energy of {mean_energy_mev!r} MeV", allowed="5 to 60 MeV")
+    edges = np.linspace(0.0, 110.0, 111)
+    spectrum = Spectrum(edges, np.exp(-0.5 * (edges[1:] + edges[:-1]) / mean_energy_mev))
+    profile = charged_profile(spectrum.scaled(1.0 / spectrum.energy_mev), "proton", material("water"))
+    return _light(profile, np.array(RATES_PER_MM["star_light"]))
 
 
 def neutron_scale(medium: Material | str) -> float:

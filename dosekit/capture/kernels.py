@@ -108,8 +108,9 @@ def _gamma2(state, temperature):  # type: ignore[no-untyped-def]
 def _collide(state, energy, mass_number, q_values, level_mev, pushed, out):  # type: ignore[no-untyped-def]
     """Emit the products of a non-elastic collision.
 
-    Fills ``out`` with rows (kind, kinetic energy, forward push) and returns their number and the photon energy. Kinds: 0
-    neutron, 1 proton, 2 deuteron, 3 alpha, 4 local recoil. ``q_values`` are separation energies of n, p, d, alpha.
+    Fills ``out`` with rows (kind, kinetic energy, forward push) and returns their number and the photon energy.
+    Kinds: 0 neutron, 1 proton, 2 deuteron, 3 alpha, 4 local recoil. ``q_values`` are separation energies of n, p,
+    d, alpha.
     """
     count = 0
     photon = 0.0
@@ -216,8 +217,8 @@ def neutron_histories(  # type: ignore[no-untyped-def]
 ):
     """Follow neutrons from a point and return energy per neutron in shells.
 
-    Returns shells with one element more than there are intervals (energy beyond), and the sums (binding lost, histories'
-    total). Cross-sections are macroscopic, per mm, on the logarithmic energy grid, one row per element.
+    Returns shells with one element more than there are intervals (energy beyond), and the sums (binding lost,
+    histories' total). Cross-sections are macroscopic, per mm, on the logarithmic energy grid, one row per element.
     """
     shells = np.zeros(len(edges))
     sums = np.zeros(4)

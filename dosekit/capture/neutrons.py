@@ -3,32 +3,34 @@
 A small history simulation in a uniform medium (`dosekit.capture.kernels.neutron_histories`): free flight with the total
 cross-section, then
 
-* n-p scattering: sigma after J. L. Gammel (in Fast Neutron Physics II, 1963) below 30 MeV, after Charagi and Gupta, Phys. Rev.
-  C 41 (1990) 1610 above 60 MeV, blended between (both memory); angles 1 + b cos^2, b = 2 (E / 90 MeV)^2 in the centre of mass (Gammel);
-  the recoil proton slows down along a straight line;
-* elastic scattering on nuclei: momentum transfer from exp(-R^2 q^2 / 4), R = 1.3 A^(1/3) + 0.5 fm, which tends to isotropy at
-  low energy; the recoil stays where it is;
-* non-elastic collisions: a direct part (a leading neutron, proton or deuteron with energy uniform up to what is available, often
-  with a partner), then evaporation of n, p, d, alpha against their separation energies; below about 12 MeV inelastic scattering
-  to a low level or (n, alpha). Protons and deuterons run straight, alphas and recoils stay, photons fly one mean free path.
+* n-p scattering: sigma after J. L. Gammel (in Fast Neutron Physics II, 1963) below 30 MeV, after Charagi and Gupta,
+  Phys. Rev. C 41 (1990) 1610 above 60 MeV, blended between (both memory); angles 1 + b cos^2, b = 2 (E / 90 MeV)^2
+  in the centre of mass (Gammel); the recoil proton slows down along a straight line;
+* elastic scattering on nuclei: momentum transfer from exp(-R^2 q^2 / 4), R = 1.3 A^(1/3) + 0.5 fm, which tends to
+  isotropy at low energy; the recoil stays where it is;
+* non-elastic collisions: a direct part (a leading neutron, proton or deuteron with energy uniform up to what is
+  available, often with a partner), then evaporation of n, p, d, alpha against their separation energies; below
+  about 12 MeV inelastic scattering to a low level or (n, alpha). Protons and deuterons run straight, alphas and
+  recoils stay, photons fly one mean free path.
 
-Cross-sections of C, O and Ca are tabled (``neutron_cross_sections``, memory); others are interpolated in A. Neutrons stop at 1 keV.
-Photons of thermal capture (2.2 MeV from hydrogen) are not followed: they would add up to 2.2 MeV for each neutron that does not escape.
+Cross-sections of C, O and Ca are tabled (``neutron_cross_sections``, memory); others are interpolated in A.
+Neutrons stop at 1 keV. Photons of thermal capture (2.2 MeV from hydrogen) are not followed: they would add up to
+2.2 MeV for each neutron that does not escape.
 
 The result for one source energy is a profile: energy in shells about the source, per neutron. Profiles in water are
-tabled for a set of energies (``neutron_profiles``, made by `make_table`); other media are simulated when asked for.
+tabled for a set of energies (``neutron_profiles_water``, made by `dosekit.capture.tabling`); other media are
+simulated when asked for.
 """
 
 from __future__ import annotations
 
 import math
-from functools import lru_cache
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from dosekit.basis.constants import AVOGADRO_PER_MOL
-from dosekit.basis.materials import Material, element, material
+from dosekit.basis.materials import Material, element
 from dosekit.basis.tables import read_table
 from dosekit.beams.ranges import range_table
 
@@ -60,7 +62,8 @@ _NUCLEI = {
 _HEAVY = ((10.0, 8.5, 18.0, 8.5), 2.0, 0.0, 0.2)
 
 _TUNING = np.array([20.0, 0.58, 0.32, 1.0, 0.55, 0.2, -2.0])
-"""Decay of the compound part (MeV), lead shares of n and p, exponent of the lead's energy, chance of a partner, and two slots."""
+"""Decay of the compound part (MeV), lead shares of n and p, exponent of the lead's energy, chance of a partner, and
+two slots."""
 
 
 def np_cross_section_barn(energy_mev: ArrayLike) -> NDArray[np.float64]:
@@ -78,8 +81,8 @@ def np_cross_section_barn(energy_mev: ArrayLike) -> NDArray[np.float64]:
 
     Notes
     -----
-    Gammel below 30 MeV: 3 pi / (1.206 E + (-1.86 + 0.09415 E + 0.0001306 E^2)^2) + pi / (1.206 E + (0.4223 + 0.13 E)^2).
-    Charagi and Gupta above 60 MeV: -70.67 - 18.18 / beta + 25.26 / beta^2 + 113.85 beta, millibarn.
+    Gammel below 30 MeV: 3 pi / (1.206 E + (-1.86 + 0.09415 E + 0.0001306 E^2)^2) + pi / (1.206 E + (0.4223 + 0.13
+    E)^2). Charagi and Gupta above 60 MeV: -70.67 - 18.18 / beta + 25.26 / beta^2 + 113.85 beta, millibarn.
 
     Examples
     --------
@@ -109,7 +112,8 @@ def nucleus_cross_sections_barn(symbol: str, energy_mev: ArrayLike) -> tuple[NDA
     Returns
     -------
     tuple of ndarray
-        Total and non-elastic, barn. Between tabled elements the power of A is interpolated; beyond Ca both grow as A^(2/3).
+        Total and non-elastic, barn. Between tabled elements the power of A is interpolated; beyond Ca both grow as
+        A^(2/3).
     """
     energy = np.asarray(energy_mev, dtype=float)
     if symbol == "H":
@@ -121,7 +125,7 @@ def nucleus_cross_sections_barn(symbol: str, energy_mev: ArrayLike) -> tuple[NDA
         rows = table.where(element=name)
         logs = np.log(np.asarray(rows["energy_mev"], dtype=float))
         at = np.log(np.clip(energy, 1e-6, None))
-        return tuple(np.interp(at, logs, np.asarray(rows[c], dtype=float)) for c in ("total", "nonelastic"))  # type: ignore[return-value]
+        return tuple(np.interp(at, logs, np.asarray(rows[c], dtype=float)) for c in ("total", "nonelastic"))
 
     if symbol in ("C", "O", "Ca"):
         return tabled(symbol)
@@ -177,8 +181,8 @@ def simulate(
         shells[i], sums = neutron_histories(
             float(energy), histories, seed + i, EDGES_MM, math.log(_GRID_MEV[0]), math.log(_GRID_MEV[1] / _GRID_MEV[0]),
             masses, elastic, other, np.array([n[0] for n in nuclei]), np.array([n[1] for n in nuclei]),
-            np.array([n[2] for n in nuclei]), np.array([n[3] for n in nuclei]), 1.3 * masses ** (1.0 / 3.0) + 0.5, _TUNING,
-            protons.range_mm(_GRID_MEV), deuterons.range_mm(_GRID_MEV), 0.1 * _PHOTON_CM2_G, _CUTOFF_MEV,
+            np.array([n[2] for n in nuclei]), np.array([n[3] for n in nuclei]), 1.3 * masses ** (1.0 / 3.0) + 0.5,
+            _TUNING, protons.range_mm(_GRID_MEV), deuterons.range_mm(_GRID_MEV), 0.1 * _PHOTON_CM2_G, _CUTOFF_MEV,
         )  # fmt: skip
         lost[i] = sums[0]
     return shells, lost

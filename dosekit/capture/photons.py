@@ -3,15 +3,17 @@
 Histories in a uniform medium (`dosekit.capture.kernels.photon_histories`): free flight, then
 
 * incoherent scattering on free electrons, Klein and Nishina, Z. Phys. 52 (1929) 853;
-* photoelectric absorption, per atom 2.47e-28 cm2 Z^4.6 (0.1 MeV / E)^3.2 normalised to water (0.00276 cm2/g at 0.1 MeV, Hubbell and
-  Seltzer, NISTIR 5632 (1995), memory);
+* photoelectric absorption, per atom 2.47e-28 cm2 Z^4.6 (0.1 MeV / E)^3.2 normalised to water (0.00276 cm2/g at 0.1
+  MeV, Hubbell and Seltzer, NISTIR 5632 (1995), memory);
 * pair and triplet production, water values of the same source (memory), per atom as Z (Z + 1).
 
-Electrons run straight with 0.2 MeV/mm at unit density (0.85 of the track, for scattering) and turn E^2 / (E + 220 MeV) into one forward
-photon (radiation yield after ICRU Report 37, memory). Coherent scattering moves no energy and is left out.
+Electrons run straight with 0.2 MeV/mm at unit density (0.85 of the track, for scattering) and turn E^2 / (E + 220
+MeV) into one forward photon (radiation yield after ICRU Report 37, memory). Coherent scattering moves no energy and
+is left out.
 
-A star's photons: X rays of the atomic cascade as K-alpha quanta (3/4 of the Bohr energy; what is left over stays local), de-excitation
-quanta spread over 1 to 7 MeV, radiative capture at 110 to 130 MeV, pi0 as two quanta of about 69 MeV.
+A star's photons: X rays of the atomic cascade as K-alpha quanta (3/4 of the Bohr energy; what is left over stays
+local), de-excitation quanta spread over 1 to 7 MeV, radiative capture at 110 to 130 MeV, pi0 as two quanta of about
+69 MeV.
 """
 
 from __future__ import annotations
@@ -40,7 +42,8 @@ _CUTOFF_MEV = 0.01
 _PHOTO_WATER_CM2_G = 0.00276
 _PAIR_MEV = np.array([1.022, 1.5, 2, 3, 4, 5, 6, 8, 10, 15, 20, 30, 50, 70, 100, 150, 200])
 _PAIR_WATER_CM2_G = np.array(
-    [0, 9.8e-5, 3.92e-4, 1.15e-3, 1.91e-3, 2.6e-3, 3.25e-3, 4.35e-3, 5.25e-3, 7.1e-3, 8.4e-3, 1.02e-2, 1.24e-2, 1.36e-2, 1.48e-2, 1.59e-2, 1.65e-2]
+    [0, 9.8e-5, 3.92e-4, 1.15e-3, 1.91e-3, 2.6e-3, 3.25e-3, 4.35e-3, 5.25e-3, 7.1e-3, 8.4e-3, 1.02e-2, 1.24e-2,
+    1.36e-2, 1.48e-2, 1.59e-2, 1.65e-2]
 )  # fmt: skip
 _RADIATION_MEV = 220.0
 _ELECTRON_MEV_PER_MM = 0.2 / 0.85
@@ -138,9 +141,9 @@ def simulate(medium: Material, energies_mev: NDArray[np.float64], *, histories: 
     return np.array(
         [
             photon_histories(
-                float(energy), histories, seed + i, EDGES_MM, math.log(_GRID_MEV[0]), math.log(_GRID_MEV[1] / _GRID_MEV[0]),
-                parts["compton"], parts["photo"], parts["pair"],
-                _ELECTRON_MEV_PER_MM * medium.electrons_per_gram / (0.5551 * AVOGADRO_PER_MOL), _RADIATION_MEV, _CUTOFF_MEV,
+                float(energy), histories, seed + i, EDGES_MM, math.log(_GRID_MEV[0]), math.log(_GRID_MEV[1] /
+                _GRID_MEV[0]), parts["compton"], parts["photo"], parts["pair"], _ELECTRON_MEV_PER_MM *
+                medium.electrons_per_gram / (0.5551 * AVOGADRO_PER_MOL), _RADIATION_MEV, _CUTOFF_MEV,
             )
             for i, energy in enumerate(energies_mev)
         ]

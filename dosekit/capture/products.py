@@ -1,7 +1,8 @@
 """How far from a stopped pion does its energy go? Kernels in shells, in planes and as sums of exponentials.
 
-`point_kernel` and `planar_kernel` are exact integrals of a profile (`dosekit.capture.profiles`); `cone_kernel` is its best approximation by
-exponentials, for the superposition along directions (A. Ahnesjoe, Med. Phys. 16 (1989) 577).
+`point_kernel` and `planar_kernel` are exact integrals of a profile (`dosekit.capture.profiles`); `cone_kernel` is
+its best approximation by exponentials, for the superposition along directions (A. Ahnesjoe, Med. Phys. 16 (1989)
+577).
 """
 
 from __future__ import annotations
@@ -95,7 +96,8 @@ def planar_kernel(
     Returns
     -------
     ndarray, shape (2 n + 1,)
-        MeV per stop in each slice; stops are spread evenly over the central slice. Read-only. The sum is the energy left within reach.
+        MeV per stop in each slice; stops are spread evenly over the central slice. Read-only. The sum is the energy
+        left within reach.
 
     Raises
     ------
@@ -157,8 +159,8 @@ def planar_neutron_kernel(
 
     Notes
     -----
-    The energy at distance r is taken to lie in the direction of emission, so that a forward bias c weights the slice at z by the
-    mean of 1 + 3 c z / r.
+    The energy at distance r is taken to lie in the direction of emission, so that a forward bias c weights the
+    slice at z by the mean of 1 + 3 c z / r.
     """
     response = neutron_response(material("water"))
     place = float(

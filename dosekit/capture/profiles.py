@@ -1,16 +1,16 @@
 """Energy against distance from a stopped pion: one description for every component.
 
 A profile says how much energy lies beyond a distance r from the stop, in any uniform medium, MeV per stop:
-``beyond(0)`` is what leaves the point, ``beyond(r1) - beyond(r2)`` what a shell gets, and what stays at the point is kept apart.
-For a plane through the stop, a spherical shell spreads evenly along any axis (Archimedes), so that the energy beyond a
-plane at distance z, on one side, is
+``beyond(0)`` is what leaves the point, ``beyond(r1) - beyond(r2)`` what a shell gets, and what stays at the point
+is kept apart. For a plane through the stop, a spherical shell spreads evenly along any axis (Archimedes), so that
+the energy beyond a plane at distance z, on one side, is
 
     P(z) = 1/2 integral_z^inf (1 - z / r) (-d beyond / dr) dr = z / 2 integral_z^inf beyond(r) / r^2 dr.
 
-Light charged products: straight lines in the continuous-slowing-down approximation through the medium, species by species over their
-spectra. Protons that react on the way (0.012 per cm of water, Bortfeld, Med. Phys. 24 (1997) 2024) leave what they have on the spot.
-Helium ions and recoils likewise (they travel 0.1 mm); neutrons and photons from the simulated profiles of `dosekit.capture.neutrons` and
-`dosekit.capture.photons`, scaled by density.
+Light charged products: straight lines in the continuous-slowing-down approximation through the medium, species by
+species over their spectra. Protons that react on the way (0.012 per cm of water, Bortfeld, Med. Phys. 24 (1997)
+2024) leave what they have on the spot. Helium ions and recoils likewise (they travel 0.1 mm); neutrons and photons
+from the simulated profiles of `dosekit.capture.neutrons` and `dosekit.capture.photons`, scaled by density.
 """
 
 from __future__ import annotations
@@ -33,7 +33,7 @@ from dosekit.capture.spectra import Spectrum
 from dosekit.capture.stars import LIGHT_SPECIES, star
 from dosekit.errors import UnknownNameError
 
-__all__ = ["Profile", "element_profile", "neutron_response", "photon_response", "star_profile"]
+__all__ = ["Profile", "charged_profile", "element_profile", "neutron_response", "photon_response", "star_profile"]
 
 _REACTION_PER_MM = 0.0012
 _PARTS = 6
@@ -51,7 +51,8 @@ class Profile:
     radius_mm : ndarray, shape (n,)
         Distances, increasing from 0.
     beyond_mev : ndarray, shape (n,)
-        Energy left beyond each distance, MeV per stop; not increasing. What is left at the last one is never deposited within reach.
+        Energy left beyond each distance, MeV per stop; not increasing. What is left at the last one is never
+        deposited within reach.
     local_mev : float
         Energy that stays at the point, MeV per stop.
     """
@@ -209,13 +210,13 @@ def _element_profile(symbol: str, medium: Material, component: str, yields: str)
         total = _EMPTY
         for species in LIGHT_SPECIES:
             if emitted.energy_mev[species] > 0.0:
-                total = total.added(_charged(emitted.spectra[species], species, medium))
+                total = total.added(charged_profile(emitted.spectra[species], species, medium))
         return total
     if component == "star_heavy":
         total = _EMPTY
         for species, ion in _IONS.items():
             if emitted.energy_mev[species] > 0.0:
-                total = total.added(_charged(emitted.spectra[species], ion, medium))
+                total = total.added(charged_profile(emitted.spectra[species], ion, medium))
         return total
     if component == "star_neutron":
         spectrum = emitted.spectra["neutron"]
@@ -227,8 +228,23 @@ def _element_profile(symbol: str, medium: Material, component: str, yields: str)
     return Profile(profile.radius_mm, profile.beyond_mev, profile.local_mev + local)
 
 
-def _charged(spectrum: Spectrum, projectile: str, medium: Material) -> Profile:
-    """Return the profile of charged particles on straight lines."""
+def charged_profile(spectrum: Spectrum, projectile: str, medium: Material) -> Profile:
+    """Return the profile of charged particles on straight lines.
+
+    Parameters
+    ----------
+    spectrum : Spectrum
+        Particles per stop.
+    projectile : str
+        Name of the particle.
+    medium : Material
+        Where they travel.
+
+    Returns
+    -------
+    Profile
+        Energy against distance.
+    """
     table = range_table(projectile, medium)
     # the bins are wide: a monotone cubic through the cumulative numbers splits each into parts
     cumulative = PchipInterpolator(spectrum.edges_mev, np.concatenate([[0.0], np.cumsum(spectrum.numbers)]))
@@ -292,8 +308,8 @@ def neutron_response(medium: Material) -> NDArray[np.float64]:
     Returns
     -------
     ndarray, shape (m, n)
-        For each node energy, fractions in the shells `EDGES_MM` at unit density; the last element lies beyond. Rows sum to less
-        than 1 by what is lost to nuclear binding.
+        For each node energy, fractions in the shells `EDGES_MM` at unit density; the last element lies beyond. Rows
+        sum to less than 1 by what is lost to nuclear binding.
     """
     return _response(
         "neutron", medium.replace(name="", density_g_cm3=1.0) if medium.name != "water" else material("water", 1.0)

@@ -50,7 +50,7 @@ _HALOGENS = ("F", "Cl")
 def _daniel(symbol: str) -> float:
     """Return Z**(1/3) ln(0.57 Z)."""
     z = element(symbol).atomic_number
-    return z ** (1.0 / 3.0) * math.log(0.57 * z)
+    return float(z ** (1.0 / 3.0) * math.log(0.57 * z))
 
 
 def _fermi_teller(symbol: str) -> float:

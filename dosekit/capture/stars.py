@@ -3,25 +3,27 @@
 Two yield sets, by name:
 
 ``evaluated`` (default)
-    Energies per stop of ``star_energy_balance`` (charged, neutron, photon), split by ``star_charged_species`` (multiplicity
-    and mean energy), neutrons by ``neutron_spectrum_fits``. C, N, O and Ca have rows; F takes that of O, heavier
-    elements that of Ca (with the neutron spectrum of Al). One standard deviation for each energy comes along.
+    Energies per stop of ``star_energy_balance`` (charged, neutron, photon), split by ``star_charged_species``
+    (multiplicity and mean energy), neutrons by ``neutron_spectrum_fits``. C, N, O and Ca have rows; F takes that of
+    O, heavier elements that of Ca (with the neutron spectrum of Al). One standard deviation for each energy comes
+    along.
 ``cascade``
     ``star_totals`` and ``star_spectra`` as they are, for comparison with results of the same origin. Elements without
     a row take the nearest by atomic number.
 
-In both sets the binding energy is what closes the balance to the pion's rest energy, 139.57 MeV; it must come out positive
-and, in the evaluated set, within 0.1 MeV of the tabled one. Charged energies in a row are brought to the row's total.
+In both sets the binding energy is what closes the balance to the pion's rest energy, 139.57 MeV; it must come out
+positive and, in the evaluated set, within 0.1 MeV of the tabled one. Charged energies in a row are brought to the
+row's total.
 
-Hydrogen captures to pi0 n or gamma n in the Panofsky ratio 1.546 (Spuller et al., Phys. Lett. B 67 (1977) 479); energies
-follow from the masses of the PDG for capture at rest.
+Hydrogen captures to pi0 n or gamma n in the Panofsky ratio 1.546 (Spuller et al., Phys. Lett. B 67 (1977) 479);
+energies follow from the masses of the PDG for capture at rest.
 
 Photons of a nucleus have up to four parts: atomic cascade (X rays, Z**2 times 3.7 keV in all, the Bohr energy of
-the 1s pion), de-excitation, radiative capture and pi0. Radiative capture per stop: O 2.27 % (Strassner et al., Phys. Rev. C 20
-(1979) 248), C 1.9, N 2.1, Ca 1.8 % (memory), mean photon energy 110 MeV (memory).
+the 1s pion), de-excitation, radiative capture and pi0. Radiative capture per stop: O 2.27 % (Strassner et al.,
+Phys. Rev. C 20 (1979) 248), C 1.9, N 2.1, Ca 1.8 % (memory), mean photon energy 110 MeV (memory).
 
-``star_scale`` multiplies the charged energies (p, d, t, 3He, 4He, recoils) of every element alike; neutrons and photons stay
-as they are, because they are better known, and the binding energy takes what is left.
+``star_scale`` multiplies the charged energies (p, d, t, 3He, 4He, recoils) of every element alike; neutrons and
+photons stay as they are, because they are better known, and the binding energy takes what is left.
 """
 
 from __future__ import annotations

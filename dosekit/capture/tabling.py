@@ -70,12 +70,16 @@ def table_text(kind: str, fractions: NDArray[np.float64], *, histories: int, see
         CSV.
     """
     nodes = neutrons.NODE_ENERGIES_MEV if kind == "neutron" else photons.NODE_PHOTON_MEV
+    sources = ", ".join(f"{energy:g}" for energy in nodes)
     lines = [
-        f"# source: made by dosekit.capture.tabling with the {kind} histories of dosekit.capture.kernels; seed {seed}, {histories} histories per energy",
+        f"# source: made by dosekit.capture.tabling, {kind} histories; seed {seed}, {histories} per energy",
         "# status: computed, a model",
-        f"# units: r_inner_mm mm of water at 1 g/cm3; e0, e1, ... fraction of the source energy in the shell from r_inner_mm to the next, for sources of {', '.join(f'{e:g}' for e in nodes)} MeV; the last row lies beyond",
-        "# validity: water, isotropic point source",
-        "# uncertainty: statistical 1 % per shell near 100 mm; the model itself 10 to 20 % for neutrons, 5 to 10 % for photons",
+        (
+            "# units: r_inner_mm mm of water; e0, e1, ... fraction of the source energy from r_inner_mm to the next row "
+            f"(the last row lies beyond), for sources of {sources} MeV"
+        ),
+        "# validity: water at 1 g/cm3, isotropic point source",
+        "# uncertainty: statistical 1 % per shell near 100 mm; the model 10 to 20 % (neutrons), 5 to 10 % (photons)",
         "# permission: made here, free to use",
         "r_inner_mm," + ",".join(f"e{i}" for i in range(len(nodes))),
     ]

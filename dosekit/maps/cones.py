@@ -1,10 +1,11 @@
 """Along which directions do products travel, and how are exponentials carried along them?
 
-Superposition after A. Ahnesjoe (Med. Phys. 16 (1989) 577): all that is emitted into the cone about a direction goes straight along that
-direction. The directions and their weights are quadratures of the sphere with the symmetry of the cube, after V. I. Lebedev, Zh.
-Vychisl. Mat. Mat. Fiz. 16 (1976) 293; sets of 26, 50, 86, 110 and 194. Every kernel is a sum of exponentials in scaled distance (path times
-the local ``scale``), so that each mode needs one recursion per direction (`dosekit.maps.kernels_stars`). The cost is voxels times
-directions times modes; no table of distances is kept, and density scaling (J. E. O'Connor, Phys. Med. Biol. 1 (1957) 352) holds exactly.
+Superposition after A. Ahnesjoe (Med. Phys. 16 (1989) 577): all that is emitted into the cone about a direction goes
+straight along that direction. The directions and their weights are quadratures of the sphere with the symmetry of
+the cube, after V. I. Lebedev, Zh. Vychisl. Mat. Mat. Fiz. 16 (1976) 293; sets of 26, 50, 86, 110 and 194. Every
+kernel is a sum of exponentials in scaled distance (path times the local ``scale``), so that each mode needs one
+recursion per direction (`dosekit.maps.kernels_stars`). The cost is voxels times directions times modes; no table of
+distances is kept, and density scaling (J. E. O'Connor, Phys. Med. Biol. 1 (1957) 352) holds exactly.
 """
 
 from __future__ import annotations
@@ -23,7 +24,8 @@ from dosekit.errors import InputError
 __all__ = ["DIRECTION_SETS", "WIDENING_MM", "Cones", "direction_set"]
 
 WIDENING_MM = 100.0
-"""Distance at which the widening of `Cones.carry_widening` equals the width of a cone: a cone's rms half-width on one axis is r / sqrt(n), mm."""
+"""Distance at which the widening of `Cones.carry_widening` equals the width of a cone: a cone's rms half-width on
+one axis is r / sqrt(n), mm."""
 
 FAINT = 1e-10
 """A mode that has fallen below this part of its brightest emission is put down where it is."""
@@ -187,7 +189,8 @@ class Cones:
     ) -> NDArray[np.float64]:
         """Carry energy along directions that widen as cones do.
 
-        The state is handed from plane to plane by linear interpolation and smoothed, so that its lateral variance grows by
+        The state is handed from plane to plane by linear interpolation and smoothed, so that its lateral variance
+        grows by
         ``WIDENING_MM / directions`` (or what interpolation makes, if more) per mm of path. This closes the gaps between
         directions far from small sources. Meant for coarse lattices and smooth kernels.
 
@@ -213,7 +216,7 @@ class Cones:
             turned = np.ascontiguousarray(scale.transpose(order), dtype=float)
             sources = np.ascontiguousarray(np.asarray(sources_mev, dtype=float).transpose(0, *(a + 1 for a in order)))
             out = np.zeros((len(batch), *turned.shape))
-            sweep_widening(sources, turned, rates, *self._widening(batch, order), out)
+            sweep_widening(sources, turned, rates, *self._widening(batch, order), out)  # type: ignore[call-arg]
             total += out.sum(axis=0).transpose(np.argsort(order))
         return total
 
@@ -242,12 +245,14 @@ class Cones:
             turned = np.ascontiguousarray(scale.transpose(order), dtype=float)
             asked = np.ascontiguousarray(wanted.transpose(order), dtype=float)
             out = np.zeros((len(batch), len(rates), *turned.shape))
-            sweep_widening_transposed(asked, turned, rates, *self._widening(batch, order), out)
+            sweep_widening_transposed(asked, turned, rates, *self._widening(batch, order), out)  # type: ignore[call-arg]
             total += out.sum(axis=0).transpose(0, *(np.argsort(order) + 1))
         return total
 
     def _batches(self) -> list[tuple[tuple[int, int, int], list[_Line]]]:
-        """Return the lines of each main axis in batches of fixed size, so that memory is bounded and sums keep their order."""
+        """Return the lines of each main axis in batches of fixed size, so that memory is bounded and sums keep
+        their order.
+        """
         return [
             (_AXES[axis], lines[start : start + _BATCH])
             for axis, lines in enumerate(self.lines())
@@ -321,7 +326,9 @@ class Cones:
             order = _AXES[axis]
             turned = np.ascontiguousarray(scale.transpose(order))
             if sources_mev is None:
-                assert stops is not None and material is not None and energies_mev is not None
+                assert stops is not None
+                assert material is not None
+                assert energies_mev is not None
                 emitted = np.ascontiguousarray(stops.transpose(order), dtype=float)
                 index = np.ascontiguousarray(material.transpose(order))
                 table = np.ascontiguousarray(energies_mev, dtype=float)
@@ -380,7 +387,8 @@ class Cones:
                 index, table = np.zeros((1, 1, 1), np.uint16), np.zeros((1, len(rates)))
                 out, out_modes = np.zeros((1, 1, 1)), np.zeros((len(rates), *turned.shape))
             else:
-                assert material is not None and energies_mev is not None
+                assert material is not None
+                assert energies_mev is not None
                 index = np.ascontiguousarray(material.transpose(order))
                 table = np.ascontiguousarray(energies_mev, dtype=float)
                 out, out_modes = np.zeros(turned.shape), np.zeros((1, 1, 1, 1))

@@ -1,12 +1,12 @@
 """Compiled sweeps of exponentials along the straight lines of one direction, forward and transposed.
 
-A direction crosses the voxels plane by plane along its main axis (array axis 0 here). Seen from one plane, the line that
-starts at ray (r, q) lies in voxel (r + shift_j, q + shift_i), with shifts rounded to whole voxels, so that in every
-plane each voxel belongs to exactly one line: rays never share a voxel, no energy is made or lost, and rows of rays
-can run at the same time in any order with the same result.
+A direction crosses the voxels plane by plane along its main axis (array axis 0 here). Seen from one plane, the line
+that starts at ray (r, q) lies in voxel (r + shift_j, q + shift_i), with shifts rounded to whole voxels, so that in
+every plane each voxel belongs to exactly one line: rays never share a voxel, no energy is made or lost, and rows of
+rays can run at the same time in any order with the same result.
 
-In a voxel of optical thickness a, with h = (e^a - 1)/a to sixth order and T = 1 / (1 + a h), a mode that enters with s and is emitted
-evenly with e leaves s (1 - T) + e (1 - h T) there and goes on with (s + h e) T.
+In a voxel of optical thickness a, with h = (e^a - 1)/a to sixth order and T = 1 / (1 + a h), a mode that enters
+with s and is emitted evenly with e leaves s (1 - T) + e (1 - h T) there and goes on with (s + h e) T.
 """
 
 from __future__ import annotations
@@ -79,7 +79,8 @@ def sweep(  # type: ignore[no-untyped-def]
 ):
     """Carry all modes along one direction and add what they leave to ``out``.
 
-    ``energies[material, mode]`` times ``stops`` is emitted, or ``sources[mode]`` if there is any. Where a mode has fallen below
+    ``energies[material, mode]`` times ``stops`` is emitted, or ``sources[mode]`` if there is any. Where a mode has
+    fallen below
     ``faint`` of its brightest emission on the ray row, what is left is put down at once.
     """
     nk, nj, ni = scale.shape
@@ -174,8 +175,8 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
 ):
     """Carry values back along one direction: the exact transpose of `sweep`.
 
-    ``wanted`` is what each voxel's energy counts. The result per stop is added to ``out`` (through ``energies``), or per mode
-    to ``out_modes`` if ``by_mode``.
+    ``wanted`` is what each voxel's energy counts. The result per stop is added to ``out`` (through ``energies``),
+    or per mode to ``out_modes`` if ``by_mode``.
     """
     nk, nj, ni = scale.shape
     modes = len(rates)

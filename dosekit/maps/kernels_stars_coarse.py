@@ -26,7 +26,9 @@ def block_sources(stops, material, table, fz, fy, fx, out):  # type: ignore[no-u
 
 @njit(cache=True, parallel=True, error_model="numpy")
 def spread_blocks(energy, dose, block_mass, mass, fz, fy, fx, out):  # type: ignore[no-untyped-def]
-    """Spread block energies over voxels: linear dose between block centres, then one dose per block that closes the sum."""
+    """Spread block energies over voxels: linear dose between block centres, then one dose per block that closes the
+    sum.
+    """
     nz, ny, nx = mass.shape
     bz, by, bx = energy.shape
     for block in prange(bz):

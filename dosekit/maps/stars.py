@@ -1,16 +1,17 @@
 """Where do capture stars leave their energy in a body?
 
-Each stopped pion becomes a star of the element that captures it there; shares and yields follow from the local composition
-(`dosekit.capture`). Its products travel along a fixed set of directions (`dosekit.maps.cones`):
+Each stopped pion becomes a star of the element that captures it there; shares and yields follow from the local
+composition (`dosekit.capture`). Its products travel along a fixed set of directions (`dosekit.maps.cones`):
 
 * p, d, t on the voxels themselves, in distance scaled by the local relative stopping power;
 * helium ions and recoils stay in the voxel (they travel 0.1 mm in tissue);
 * neutrons, scaled by density and composition, and photons, scaled by electron density, on blocks of about 8 mm
   (`dosekit.maps.stars_coarse`).
 
-Energy that reaches the edge of the volume has escaped; neutron energy that goes into separation of nucleons is bound. `star_balance`
-reports both. All steps are linear in the stops; `carry_stars_transposed` is the exact transpose of `carry_stars`. `reweight` changes the yield set or the
-scale of a finished run from its stops, without folding again.
+Energy that reaches the edge of the volume has escaped; neutron energy that goes into separation of nucleons is
+bound. `star_balance` reports both. All steps are linear in the stops; `carry_stars_transposed` is the exact
+transpose of `carry_stars`. `reweight` changes the yield set or the scale of a finished run from its stops, without
+folding again.
 """
 
 from __future__ import annotations
@@ -167,8 +168,8 @@ def star_scales(grid: VoxelGrid, component: str) -> NDArray[np.float32]:
     Returns
     -------
     ndarray [z, y, x]
-        Relative stopping power (of a 20 MeV proton) for light products, density times `neutron_scale` for neutrons, relative electron
-        density for photons.
+        Relative stopping power (of a 20 MeV proton) for light products, density times `neutron_scale` for neutrons,
+        relative electron density for photons.
     """
     if component in _CHARGED:
         return grid.relative_stopping_power("proton", 20.0)
@@ -203,9 +204,10 @@ def star_balance(
     Returns
     -------
     dict of str to dict
-        For each component: ``emitted``, ``deposited``, ``bound`` (neutron energy lost to separation of nucleons if all were stopped in matter) and
-        ``escaped``, MeV. One more entry, ``binding``, holds what the capturing nuclei keep. All emitted and binding energy sums to
-        139.57 MeV per stop.
+        For each component: ``emitted``, ``deposited``, ``bound`` (neutron energy lost to separation of nucleons if
+        all were stopped in matter) and
+        ``escaped``, MeV. One more entry, ``binding``, holds what the capturing nuclei keep. All emitted and binding
+        energy sums to 139.57 MeV per stop.
     """
     stops = _checked(stops_per_voxel, grid)
     per_material = np.array([float(stops[grid.material_index == n].sum()) for n in range(len(grid.materials))])

@@ -1,8 +1,9 @@
 """Neutrons and photons vary slowly: how are they carried on a coarser lattice without losing energy?
 
-Sources are summed over blocks of voxels, scales averaged by volume. What comes back per block is spread over its voxels as
-a dose that is linear between block centres, times each voxel's mass, and then corrected by one constant dose per block so that
-the block keeps its energy to the last digit. Both ways are linear; both transposes are exact.
+Sources are summed over blocks of voxels, scales averaged by volume. What comes back per block is spread over its
+voxels as a dose that is linear between block centres, times each voxel's mass, and then corrected by one constant
+dose per block so that the block keeps its energy to the last digit. Both ways are linear; both transposes are
+exact.
 """
 
 from __future__ import annotations
