@@ -1,7 +1,8 @@
 """From first weights to final ones: a search in three dimensions where the study asks for it, and the prescription.
 
-The search is that of :mod:`dosekit.modulation.weights` on the fold's operator: uniform dose in the target, limits in
-organs, and no more than the prescription in a shell around the target. Then all weights are multiplied by one number
+The search is that of :mod:`dosekit.modulation.corrections` (a quick stand-in set right by the fold), or with errors
+to stand that of :mod:`dosekit.modulation.weights` on the fold itself: uniform dose in the target, limits in organs, and
+no more than the prescription in a shell around the target. Then all weights are multiplied by one number
 so that the mean target dose (physical or effect-weighted, as the goal says) is the prescribed one.
 """
 
@@ -9,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -57,45 +58,98 @@ def search_weights(
     searches : tuple of FoundWeights
         One search, or one for each field.
     """
-    from dosekit.modulation.weights import find_weights, find_weights_each_field
-
     goal = study.goal
     goals, voxels = _goals(study, grid, target)
-    fields = [plan.field for plan in planned]
+    groups = [[plan] for plan in planned] if goal.weights == "each_field" else [list(planned)]
+    what = "weights in three dimensions"
+    found: list[FoundWeights] = []
+    changed: list[PlannedField] = []
+    for count, group in enumerate(groups):
+        share = len(group) / len(planned)
 
-    def tell(step: int, cost: float) -> None:
-        del cost
-        if progress is not None:
-            progress("weights in three dimensions", min(step / goal.iterations, 1.0))
+        def tell(step: int, cost: float, *, count: int = count) -> None:
+            del cost
+            if progress is not None:
+                progress(what, (count + min(step / (1.0 + step), 0.95)) / len(groups))
 
-    tell(0, 0.0)
-    if goal.weights == "each_field":
-        responses = [_response(study, [plan], grid, voxels) for plan in planned]
-        found = find_weights_each_field(
-            responses, goals, scale_gy=goal.dose_gy, largest_steps=goal.iterations, progress=tell
-        )
-        parts = [one.weights.reshape(field.shape) for one, field in zip(found, fields, strict=True)]
-    else:
-        start = np.concatenate([np.asarray(field.weights).ravel() for field in fields]) / len(fields)
-        one = find_weights(
-            _response(study, planned, grid, voxels),
+        tell(0, 0.0)
+        one = _search(study, group, grid, voxels, _scaled_goals(goals, share), share, tell)
+        found.append(one)
+        sizes = np.cumsum([int(np.prod(plan.field.shape)) for plan in group])[:-1]
+        changed += [
+            replace(plan, field=plan.field.replace(weights=part.reshape(plan.field.shape)))
+            for plan, part in zip(group, np.split(one.weights, sizes), strict=True)
+        ]
+    if progress is not None:
+        progress(what, 1.0)
+    return changed, tuple(found)
+
+
+def _search(
+    study: Study,
+    group: Sequence[PlannedField],
+    grid: VoxelGrid,
+    voxels: NDArray[np.int64],
+    goals: Sequence[Goal],
+    share: float,
+    tell: Callable[[int, float], None],
+) -> FoundWeights:
+    """Search with the quick stand-in corrected by the fold; with errors to stand, with the fold itself."""
+    from dosekit.modulation.corrections import find_weights_corrected
+    from dosekit.modulation.weights import find_weights
+
+    goal = study.goal
+    start = np.concatenate([np.asarray(plan.field.weights).ravel() for plan in group])
+    exact = _response(study, group, grid, voxels)
+    scale = goal.dose_gy * share
+    if goal.robust is not None:
+        return find_weights(
+            exact,
             goals,
-            scale_gy=goal.dose_gy,
+            scale_gy=scale,
             start=start,
-            scenarios=_scenarios(study, planned, grid, voxels),
-            robust="worst" if goal.robust is None else goal.robust.join,
+            scenarios=_scenarios(study, group, grid, voxels),
+            robust=goal.robust.join,
             largest_steps=goal.iterations,
             progress=tell,
         )
-        found = [one]
-        sizes = np.cumsum([int(np.prod(field.shape)) for field in fields])[:-1]
-        parts = [part.reshape(field.shape) for part, field in zip(np.split(one.weights, sizes), fields, strict=True)]
-    if progress is not None:
-        progress("weights in three dimensions", 1.0)
-    changed = [
-        replace(plan, field=plan.field.replace(weights=weights)) for plan, weights in zip(planned, parts, strict=True)
+    return find_weights_corrected(
+        exact,
+        _stand_in(study, group, grid, voxels),
+        goals,
+        scale_gy=scale,
+        start=start,
+        largest_steps=goal.iterations,
+        progress=tell,
+    )
+
+
+def _scaled_goals(goals: Sequence[Goal], share: float) -> list[Goal]:
+    """Return the goals for a share of the dose."""
+    return [replace(goal, level_gy=goal.level_gy * share) for goal in goals]
+
+
+def _stand_in(study: Study, group: Sequence[PlannedField], grid: VoxelGrid, voxels: NDArray[np.int64]) -> Response:
+    """Return the quick stand-in for the dose of some fields, as sparse matrices."""
+    from scipy.sparse import hstack
+
+    from dosekit.basis.components import COMPONENTS
+    from dosekit.modulation.responses import EffectResponse, LinearResponse
+    from dosekit.modulation.surrogates import pencil_matrices
+
+    factors: list[dict[str, Any]] = [dict.fromkeys(COMPONENTS, 1.0)]
+    model = effect_model_of(study, group[0].field.beam.particle)
+    if study.goal.quantity == "effect":
+        constants = model.constants()
+        factors = [{name: constants[name][place] for name in COMPONENTS} for place in (0, 1)]
+    columns = [
+        pencil_matrices(plan.field, plan.library, grid, voxels, factors=factors, star_scale=study.stars.scale)
+        for plan in group
     ]
-    return changed, tuple(found)
+    joined = [hstack([matrices[place] for matrices in columns], format="csr") for place in range(len(factors))]
+    if study.goal.quantity == "effect":
+        return EffectResponse(joined[0], joined[1], model.tissue, study.goal.fractions)
+    return LinearResponse(joined[0])
 
 
 def _goals(study: Study, grid: VoxelGrid, target: str) -> tuple[list[Goal], NDArray[np.int64]]:
