@@ -336,6 +336,7 @@ class _Lookup:
         self.depth = np.concatenate([[0.0], np.cumsum(_middle(total)) * self.step])
         # integral of LET over energy for the energy-weighted LET, d(int S dT)
         self.let_energy = np.concatenate([[0.0], np.cumsum(_middle(self.let) * np.diff(self.energy))])
+        self.let_integral = np.concatenate([[0.0], np.cumsum(_middle(self.let_energy)) * self.step])
 
     def _at(self, values: NDArray[np.float64], r: NDArray[np.float64]) -> NDArray[np.float64]:
         """Interpolate linearly on the even grid, constant outside."""
@@ -345,6 +346,16 @@ class _Lookup:
         lower = values[low]
         return np.asarray(lower + part * (values[low + 1] - lower))
 
+    def _integral_at(
+        self, values: NDArray[np.float64], running: NDArray[np.float64], r: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """Return the integral from 0 to r of a function that is linear between grid points."""
+        place = np.clip(r / self.step, 0.0, len(self.grid) - 1.001)
+        low = place.astype(np.int64)
+        part = place - low
+        lower = values[low]
+        return np.asarray(running[low] + self.step * part * (lower + 0.5 * part * (values[low + 1] - lower)))
+
     def bins(self, edges: NDArray[np.float64], survival: NDArray[np.float64]) -> _Bins:
         """Return what classes with these edges (classes + 1, depths) do between the depths."""
         upper, lower = edges[1:], edges[:-1]
@@ -352,7 +363,7 @@ class _Lookup:
         thin = width < 1e-6
         above = np.maximum(edges, 0.0)
         centre = np.maximum(0.5 * (upper + lower), 0.0)
-        integral = self._at(self.integral, above)
+        integral = self._integral_at(self.energy, self.integral, above)
         mean = np.where(thin, self._at(self.energy, centre), (integral[1:] - integral[:-1]) / width)
         fraction = np.where(thin, (upper > 0.0).astype(float), np.clip(upper / width, 0.0, 1.0))
         depth = self._at(self.depth, np.maximum(0.5 * (np.maximum(lower, 0.0) + np.maximum(upper, 0.0)), 0.0))
@@ -368,12 +379,9 @@ class _Lookup:
         energy = np.where(f_mid > 1e-12, t_mid / np.where(f_mid > 1e-12, f_mid, 1.0), 0.0)
         r_mid = 0.5 * (centre[:, 1:] + centre[:, :-1])
         shares = np.stack([self._at(row, r_mid) for row in self.shares])
-        let = np.stack([self._at(self.let_energy, above)])[0]
         # LET averaged over the energy given in the bin: mean over the class of int S dT
-        cumulative = np.concatenate([[0.0], np.cumsum(_middle(self.let_energy)) * self.step])
-        spread = self._at(cumulative, above)
+        spread = self._integral_at(self.let_energy, self.let_integral, above)
         level = np.where(thin, self._at(self.let_energy, centre), (spread[1:] - spread[:-1]) / width)
-        del let
         let_weighted = w_mid * (level[:, :-1] - level[:, 1:])
         return _Bins(
             deposit, let_weighted, stops, events, energy, shares, alive * fraction, flux, alive[:, -1]

@@ -95,8 +95,11 @@ def test_leptons_do_not_react():
 
 
 def test_elastic_scattering_turns_forward_with_momentum_and_size():
-    cosine = elastic_mean_cosine("O", "pi-", np.array([5.0, 20.0, 80.0, 150.0]))
+    cosine = elastic_mean_cosine("O", "pi-", np.array([5.0, 20.0, 80.0, 150.0]), yields="cascade")
     assert np.all(np.diff(cosine) > 0.0)
+    # s and p waves cancel ahead at low energy and add there above 50 MeV
+    waves = elastic_mean_cosine("O", "pi-", np.array([20.0, 80.0]))
+    assert waves[0] < 0.0 < waves[1]
     assert float(elastic_mean_cosine("Ca", "pi-", 80.0)) > float(elastic_mean_cosine("C", "pi-", 80.0))
 
 
