@@ -8,8 +8,9 @@ the energy beyond a plane at distance z, on one side, is
     P(z) = 1/2 integral_z^inf (1 - z / r) (-d beyond / dr) dr = z / 2 integral_z^inf beyond(r) / r^2 dr.
 
 Light charged products: straight lines in the continuous-slowing-down approximation through the medium, species by
-species over their spectra. Protons that react on the way (0.012 per cm of water, Bortfeld, Med. Phys. 24 (1997)
-2024) leave what they have on the spot. Helium ions and recoils likewise (they travel 0.1 mm); neutrons and photons
+species over their spectra. Protons react on the way (0.012 per cm of water, Bortfeld, Med. Phys. 24 (1997) 2024); half of
+what they have then goes on with secondary protons, half stays on the spot (ICRU Report 63 (2000), memory).
+Helium ions and recoils likewise (they travel 0.1 mm); neutrons and photons
 from the simulated profiles of `dosekit.capture.neutrons` and `dosekit.capture.photons`, scaled by density.
 """
 
@@ -20,7 +21,6 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.interpolate import PchipInterpolator
 
 from dosekit.basis.components import STAR_COMPONENTS
 from dosekit.basis.materials import Material, element, material
@@ -35,8 +35,8 @@ from dosekit.errors import UnknownNameError
 
 __all__ = ["Profile", "charged_profile", "element_profile", "neutron_response", "photon_response", "star_profile"]
 
-_REACTION_PER_MM = 0.0012
-_PARTS = 6
+_REACTION_PER_MM = 0.5 * 0.0012
+_PARTS = 8
 _HISTORIES = 6000
 _SEED = 20240501
 _IONS = {"helium3": "helium3", "alpha": "alpha", "heavy": "carbon12"}
@@ -246,17 +246,18 @@ def charged_profile(spectrum: Spectrum, projectile: str, medium: Material) -> Pr
         Energy against distance.
     """
     table = range_table(projectile, medium)
-    # the bins are wide: a monotone cubic through the cumulative numbers splits each into parts
-    cumulative = PchipInterpolator(spectrum.edges_mev, np.concatenate([[0.0], np.cumsum(spectrum.numbers)]))
+    # the bins are wide: each is split, in proportions that follow the logarithm of dN/dE from centre to centre
     width = np.diff(spectrum.edges_mev)
-    edges = (spectrum.edges_mev[:-1, None] + width[:, None] * (np.arange(_PARTS) / _PARTS)).ravel()
-    edges = np.concatenate([edges, spectrum.edges_mev[-1:]])
-    energy, number = 0.5 * (edges[1:] + edges[:-1]), np.diff(cumulative(edges))
+    parts = (np.arange(_PARTS) + 0.5) / _PARTS
+    energy = (spectrum.edges_mev[:-1, None] + width[:, None] * parts).ravel()
+    logs = np.log(np.maximum(spectrum.per_mev, 1e-9 * spectrum.per_mev.max()))
+    shape = np.exp(np.interp(energy, spectrum.centres_mev, logs)).reshape(-1, _PARTS)
+    number = (spectrum.numbers[:, None] * shape / shape.sum(axis=1, keepdims=True)).ravel()
     keep = number > 0.0
     energy, number = energy[keep], number[keep]
     ranges = table.range_mm(energy)
     longest = float(ranges.max()) * 1.0001
-    radius = np.concatenate([[0.0], np.geomspace(min(1e-3, 0.1 * longest), longest, 160)])
+    radius = np.union1d(np.geomspace(min(1e-3, 0.1 * longest), longest, 120), np.linspace(0.0, longest, 240))
     left = table.energy_mev(np.maximum(ranges[None, :] - radius[:, None], 0.0)) @ number
     if projectile == "proton":
         left = left * np.exp(-_REACTION_PER_MM * medium.density_g_cm3 * radius)

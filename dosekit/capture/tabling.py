@@ -75,7 +75,7 @@ def table_text(kind: str, fractions: NDArray[np.float64], *, histories: int, see
         f"# source: made by dosekit.capture.tabling, {kind} histories; seed {seed}, {histories} per energy",
         "# status: computed, a model",
         (
-            "# units: r_inner_mm mm of water; e0, e1, ... fraction of the source energy from r_inner_mm to the next row "
+            "# units: r_inner_mm mm of water; e0, e1, ... fraction of the source energy from r_inner_mm to the next "
             f"(the last row lies beyond), for sources of {sources} MeV"
         ),
         "# validity: water at 1 g/cm3, isotropic point source",
