@@ -97,25 +97,31 @@ class Beam:
         name = self.particle.name if isinstance(self.particle, Particle) else self.particle
         if name not in BEAM_SPECIES:
             raise UnknownNameError("beam particle", name, BEAM_SPECIES)
-        put = lambda key, value: object.__setattr__(self, key, value)  # noqa: E731
+
+        def put(key: str, value: Any) -> None:
+            """Set an attribute of the frozen object while it is made."""
+            object.__setattr__(self, key, value)
+
         put("particle", name)
-        put("momentum_mev_c", _number(self.momentum_mev_c, "momentum", "MeV/c"))
-        put("kinetic_energy_mev", _number(self.kinetic_energy_mev, "kinetic energy", "MeV"))
-        if (self.momentum_mev_c is None) == (self.kinetic_energy_mev is None):
+        momentum = _number(self.momentum_mev_c, "momentum", "MeV/c")
+        energy = _number(self.kinetic_energy_mev, "kinetic energy", "MeV")
+        if (momentum is None) == (energy is None):
             raise BeamError(
                 "momentum and kinetic energy are both given, or both missing",
                 allowed="exactly one of momentum_mev_c and kinetic_energy_mev",
             )
         for value, what, top, unit in (
-            (self.momentum_mev_c, "momentum", 2000.0, "MeV/c"),
-            (self.kinetic_energy_mev, "kinetic energy", 1000.0, "MeV"),
+            (momentum, "momentum", 2000.0, "MeV/c"),
+            (energy, "kinetic energy", 1000.0, "MeV"),
         ):
             if value is not None and not 0.0 < value <= top:
                 raise BeamError(f"{what} of {value:g} {unit}", allowed=f"more than 0, at most {top:g} {unit}")
-        if self.momentum_mev_c is None:
-            put("momentum_mev_c", float(_momentum(name, self.kinetic_energy_mev)))
-        else:
-            put("kinetic_energy_mev", float(_kinetic(name, self.momentum_mev_c)))
+        if energy is not None:
+            momentum = float(_momentum(name, energy))
+        elif momentum is not None:
+            energy = float(_kinetic(name, momentum))
+        put("momentum_mev_c", momentum)
+        put("kinetic_energy_mev", energy)
         self._check_spread(put)
         self._check_optics(put)
         self._check_contaminants(put)
@@ -125,7 +131,7 @@ class Beam:
         reach = float(csda_range_mm(name, "water", self.kinetic_energy_mev))
         if reach < SHORTEST_RANGE_MM:
             raise BeamError(
-                f"{name} of {self.momentum_mev_c:.4g} MeV/c ({self.kinetic_energy_mev:.3g} MeV) go {reach:.2g} mm in water",
+                f"{name} of {self.momentum_mev_c:.4g} MeV/c ({self.kinetic_energy_mev:.3g} MeV) go {reach:.2g} mm in water",  # noqa: E501
                 allowed=f"a range of at least {SHORTEST_RANGE_MM:g} mm",
                 remedy="raise the momentum (MeV/c)",
             )
@@ -134,9 +140,9 @@ class Beam:
         """Check the momentum spread, given in one of two ways."""
         put("momentum_sigma", _number(self.momentum_sigma, "momentum_sigma", ""))
         put("momentum_fwhm", _number(self.momentum_fwhm, "momentum_fwhm", ""))
-        if self.momentum_sigma is not None and self.momentum_fwhm is not None:
-            if abs(self.momentum_fwhm / _FWHM_PER_SIGMA - self.momentum_sigma) > 1e-12:
-                raise BeamError("momentum_sigma and momentum_fwhm are both given", allowed="one of them")
+        both = self.momentum_sigma is not None and self.momentum_fwhm is not None
+        if both and abs((self.momentum_fwhm or 0.0) / _FWHM_PER_SIGMA - (self.momentum_sigma or 0.0)) > 1e-12:
+            raise BeamError("momentum_sigma and momentum_fwhm are both given", allowed="one of them")
         sigma = self.momentum_sigma
         if sigma is None:
             sigma = 0.0 if self.momentum_fwhm is None else self.momentum_fwhm / _FWHM_PER_SIGMA
@@ -162,7 +168,9 @@ class Beam:
             clean = tuple(_required(item, what, unit) for item in pair)
             for item in clean:
                 if not low <= item <= high:
-                    raise BeamError(f"{what} of {item:g} {unit}".rstrip(), allowed=f"{low:g} to {high:g} {unit}".rstrip())
+                    raise BeamError(
+                        f"{what} of {item:g} {unit}".rstrip(), allowed=f"{low:g} to {high:g} {unit}".rstrip()
+                    )
             put(key, clean if len(clean) == 2 else clean[0])
         gap = _required(self.range_shifter_gap_mm, "range shifter gap", "mm")
         if not 0.0 <= gap <= 3000.0:
@@ -242,7 +250,11 @@ class Beam:
         sigma_mm, divergence_rad, correlation : float
             Standard deviations of position (mm) and angle (rad), and their correlation.
         """
-        pick = lambda value: float(value[number] if isinstance(value, tuple) else value)  # noqa: E731
+
+        def pick(value: Any) -> float:
+            """Return the number of this axis."""
+            return float(value[number] if isinstance(value, tuple) else value)
+
         return pick(self.spot_sigma_mm), 1e-3 * pick(self.divergence_sigma_mrad), pick(self.correlation)
 
     def replace(self, **changes: Any) -> Beam:

@@ -73,9 +73,7 @@ def electron_stopping_powers(
     else:
         shape = 1.0 - beta2 + (tau**2 / 8.0 - (2.0 * tau + 1.0) * math.log(2.0)) / (tau + 1.0) ** 2
     bracket = (
-        np.log(tau**2 * (tau + 2.0) / (2.0 * excitation**2))
-        + shape
-        - density_effect(stuff, np.sqrt(tau * (tau + 2.0)))
+        np.log(tau**2 * (tau + 2.0) / (2.0 * excitation**2)) + shape - density_effect(stuff, np.sqrt(tau * (tau + 2.0)))
     )
     collision = 0.5 * BETHE_CONSTANT_MEV_CM2_MOL * stuff.z_over_a / beta2 * np.maximum(bracket, 0.5)
     factor = np.interp(np.log(energy), np.log(_FACTOR_ENERGY_MEV), _FACTOR)

@@ -103,9 +103,7 @@ class RangeTable:
         ndarray
             Stopping power, MeV/mm.
         """
-        energy = np.clip(
-            np.asarray(kinetic_energy_mev, dtype=float), self.grid_energy_mev[0], self.grid_energy_mev[-1]
-        )
+        energy = np.clip(np.asarray(kinetic_energy_mev, dtype=float), self.grid_energy_mev[0], self.grid_energy_mev[-1])
         return np.asarray(np.exp(self._to_stopping(np.log(energy))))
 
 

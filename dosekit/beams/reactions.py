@@ -12,10 +12,11 @@ Cross sections by element and channel, summed over a material to probabilities p
   hydrogen; elastic on other nuclei is left out because it turns protons by a few degrees only.
 - Elements without a row take the nearest row times (A/A')^(3/4), the rule of Barashenkov.
 
-What comes out, per reaction: number, mean and rms energy, mean cosine by species, as functions of energy. Binding energy
-closes the balance: T + m(pi, if it is gone) = kinetic energies + pi0 energies + binding.
+What comes out, per reaction: number, mean and rms energy, mean cosine by species, as functions of energy. Binding
+energy closes the balance: T + m(pi, if it is gone) = kinetic energies + pi0 energies + binding.
 
-Valid up to 150 MeV (pions) and 250 MeV (protons); constant cross sections beyond. Below 5 MeV pion cross sections go as 1/v.
+Valid up to 150 MeV (pions) and 250 MeV (protons); constant cross sections beyond. Below 5 MeV pion cross sections
+go as 1/v.
 """
 
 from __future__ import annotations
@@ -30,6 +31,7 @@ from numpy.typing import ArrayLike, NDArray
 from dosekit.basis.materials import Material, element, material
 from dosekit.basis.particles import Particle, particle
 from dosekit.basis.tables import read_table
+from dosekit.beams.emissions import PRODUCT_SPECIES, inflight_table, nearest_row, products_of
 from dosekit.errors import UnknownNameError
 
 __all__ = [
@@ -49,11 +51,6 @@ CHANNELS: tuple[str, ...] = ("absorption", "inelastic", "charge_exchange", "elas
 
 YIELDS: tuple[str, ...] = ("evaluated", "cascade")
 """Yield sets."""
-
-PRODUCT_SPECIES: tuple[str, ...] = (
-    "proton", "deuteron", "triton", "helium3", "alpha", "heavy", "neutron", "photon", "pi0", "pi-", "pi+",
-)  # fmt: skip
-"""Species that come out of reactions."""
 
 ENERGY_GRID_MEV: NDArray[np.float64] = np.array(
     [0.5, 1, 2, 3.5, 5, 7.5, 10, 15, 20, 25, 30, 35, 40, 45, 50, 55, 60, 65, 70, 75, 80, 90, 100, 110, 120, 135, 150,
@@ -226,9 +223,9 @@ def element_cross_sections_mb(
         table = read_table("pion_hydrogen_plus", "beams")
         value = np.interp(energy, table["kinetic_energy_mev"], table["elastic_mb"])
         return {"absorption": zero, "inelastic": zero, "charge_exchange": zero, "elastic": np.asarray(value)}
-    row = _row(projectile, symbol)
+    row = nearest_row(projectile, symbol)
     grow = (element(symbol).atomic_weight / element(row).atomic_weight) ** 0.75
-    data = _inflight(projectile, row)
+    data = inflight_table(projectile, row)
     grid = data["kinetic_energy_mev"]
     slow = np.sqrt(np.where(energy < grid[0], grid[0] / np.maximum(energy, 0.05), 1.0)) if symbol != "H" else 1.0
     inelastic = grow * slow * np.interp(energy, grid, data["inelastic_mb"])
@@ -256,12 +253,12 @@ def elastic_mean_cosine(
     """Return the mean cosine of elastic scattering on a nucleus.
 
     Impulse approximation for pions on nuclei, |b0 + c0 k^2 cos|^2 exp(kappa cos), with the isoscalar s- and p-wave
-    parameters b0 = -0.061 / m_pi and c0 = 0.21 / m_pi^3 of T. Ericson & T.E.O. Ericson, Ann. Phys. 36 (1966) 323 and K. Stricker,
-    H. McManus & J.A. Carr, Phys. Rev. C 19 (1979) 929 (from memory), and the form factor exp(-q^2 r^2 / 3), so kappa =
-    2 k^2 r^2 / 3 with the rms radius r = 0.82 A^(1/3) + 0.58 fm (L.R.B. Elton, Nuclear Sizes (1961)). At 20 MeV the waves nearly
-    cancel ahead and pions come backwards; over 50 MeV they go ahead. Hydrogen: isotropic in the centre of mass, turned forward in
-    the laboratory by the recoil. Other projectiles, and the ``"cascade"`` set, which stands for codes with one diffraction
-    law for all hadrons: form factor alone.
+    parameters b0 = -0.061 / m_pi and c0 = 0.21 / m_pi^3 of T. Ericson & T.E.O. Ericson, Ann. Phys. 36 (1966) 323
+    and K. Stricker, H. McManus & J.A. Carr, Phys. Rev. C 19 (1979) 929 (from memory), and the form factor exp(-q^2
+    r^2 / 3), so kappa = 2 k^2 r^2 / 3 with the rms radius r = 0.82 A^(1/3) + 0.58 fm (L.R.B. Elton, Nuclear Sizes
+    (1961)). At 20 MeV the waves nearly cancel ahead and pions come backwards; over 50 MeV they go ahead. Hydrogen:
+    isotropic in the centre of mass, turned forward in the laboratory by the recoil. Other projectiles, and the
+    ``"cascade"`` set, which stands for codes with one diffraction law for all hadrons: form factor alone.
 
     Parameters
     ----------
@@ -300,37 +297,6 @@ def _cosine_of(kappa: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.asarray(np.sign(kappa) * (1.0 / np.tanh(safe) - 1.0 / safe))
 
 
-def _row(projectile: str, symbol: str) -> str:
-    """Return the element of the table nearest in mass."""
-    table = read_table("inflight_products")
-    known = set(table["element"][table["projectile"] == projectile])
-    if symbol in known:
-        return symbol
-    mass = element(symbol).atomic_weight
-    heavy = sorted(known - {"H"}, key=lambda name: abs(math.log(element(str(name)).atomic_weight / mass)))
-    return str(heavy[0])
-
-
-@lru_cache(maxsize=64)
-def _inflight(projectile: str, symbol: str) -> dict[str, NDArray[np.float64]]:
-    """Return cross sections and products of one element, by energy."""
-    table = read_table("inflight_products").where(projectile=projectile, element=symbol)
-    grid = np.unique(table["kinetic_energy_mev"])
-    place = np.searchsorted(grid, table["kinetic_energy_mev"])
-    data: dict[str, NDArray[np.float64]] = {"kinetic_energy_mev": grid}
-    for column in ("inelastic_mb", "elastic_mb", "no_pion", "neutral_pion", "charged_pion"):
-        values = np.zeros(len(grid))
-        values[place] = table[column]
-        data[column] = values
-    for species in PRODUCT_SPECIES:
-        keep = table["species"] == species
-        for column in ("multiplicity", "energy_mev", "mean_cosine", "rms_energy_mev"):
-            values = np.zeros(len(grid))
-            values[place[keep]] = table[column][keep]
-            data[f"{species}:{column}"] = values
-    return data
-
-
 def _barashenkov(
     symbol: str, row: str, energy: NDArray[np.float64], inelastic: NDArray[np.float64], elastic: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -342,7 +308,7 @@ def _barashenkov(
     grow = (mass / element(base).atomic_weight) ** 0.75
     rows = table.where(element=base)
     grid = rows["kinetic_energy_mev"]
-    data = _inflight("pi-", row)
+    data = inflight_table("pi-", row)
 
     def along(values: NDArray[np.float64], other: str, shape: NDArray[np.float64]) -> NDArray[np.float64]:
         """Use the table inside its range; outside, the other table times the ratio at the end."""
@@ -370,7 +336,12 @@ def _proton_cross_sections(symbol: str, energy: NDArray[np.float64]) -> dict[str
     low = 1.0 - 0.62 * np.exp(-safe / 200.0) * np.sin(10.9 * safe**-0.28)
     # falls to zero at the Coulomb barrier and the first levels
     threshold = np.clip((energy - 4.0) / 8.0, 0.0, 1.0)
-    return {"absorption": zero, "inelastic": np.asarray(high * low * threshold), "charge_exchange": zero, "elastic": zero}
+    return {
+        "absorption": zero,
+        "inelastic": np.asarray(high * low * threshold),
+        "charge_exchange": zero,
+        "elastic": zero,
+    }
 
 
 @lru_cache(maxsize=512)
@@ -393,7 +364,7 @@ def _reactions(projectile: str, stuff: Material, yields: str) -> Reactions:
             per_mm[channel] += atoms_per_mm * sections[channel]
         weight = atoms_per_mm * (sections["absorption"] + sections["inelastic"] + sections["charge_exchange"])
         if np.any(weight > 0.0):
-            out = _products(projectile, symbol, grid, sections, yields)
+            out = products_of(projectile, symbol, grid, sections, yields)
             for species, (count, mean, rms, cosine) in out.items():
                 number[species] += weight * count
                 energy[species] += weight * count * mean
@@ -427,81 +398,3 @@ def _reactions(projectile: str, stuff: Material, yields: str) -> Reactions:
         projectile, stuff, yields, per_mm, number, result_energy, result_rms, result_cosine, binding,
         elastic_cosine / bounces, elastic_loss / bounces,
     )  # fmt: skip
-
-
-_Product = tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]
-
-
-def _products(
-    projectile: str, symbol: str, grid: NDArray[np.float64], sections: dict[str, NDArray[np.float64]], yields: str
-) -> dict[str, _Product]:
-    """Return number, mean energy, rms energy and mean cosine per reaction of one element."""
-    if projectile == "proton":
-        return _proton_products(grid)
-    row = _row(projectile, symbol)
-    data = _inflight(projectile, row)
-    axis = data["kinetic_energy_mev"]
-    at = lambda name: np.interp(grid, axis, data[name])  # noqa: E731
-    total = sections["absorption"] + sections["inelastic"] + sections["charge_exchange"]
-    out: dict[str, _Product] = {}
-    for species in PRODUCT_SPECIES:
-        count = at(f"{species}:multiplicity")
-        held = at(f"{species}:energy_mev")
-        mean = np.where(count > 0.0, held / np.where(count > 0.0, count, 1.0), 0.0)
-        rms = np.maximum(at(f"{species}:rms_energy_mev"), mean)
-        if species in ("pi-", "pi+", "pi0"):
-            top = np.maximum(grid - 1.0, 0.1)
-            mean = np.minimum(mean, 0.95 * top)
-            rms = np.clip(rms, mean, np.sqrt(mean * top))
-            if yields == "evaluated" and symbol != "H":
-                wanted = sections["charge_exchange" if species == "pi0" else "inelastic"] / np.where(total > 0, total, 1.0)
-                present = at("neutral_pion" if species == "pi0" else "charged_pion")
-                count = count * np.where(present > 0.0, wanted / np.where(present > 0.0, present, 1.0), 0.0)
-        out[species] = (count, mean, rms, at(f"{species}:mean_cosine"))
-    if yields == "evaluated" and symbol != "H":
-        _rescale_nucleons(out, grid, sections, at)
-    return out
-
-
-def _rescale_nucleons(
-    out: dict[str, _Product], grid: NDArray[np.float64], sections: dict[str, NDArray[np.float64]], at: object
-) -> None:
-    """Keep the share of the available energy that goes to nucleons when the channel split changes."""
-    look = at  # type: ignore[assignment]
-    total = np.maximum(sum(sections[channel] for channel in CHANNELS[:3]), 1e-12)  # type: ignore[call-overload]
-    now = grid + _PION_REST_MEV * (1.0 - sections["inelastic"] / total)
-    was = grid + _PION_REST_MEV * (1.0 - look("charged_pion"))  # type: ignore[operator]
-    for name in ("pi-", "pi+", "pi0"):
-        rest = _PI0_REST_MEV if name == "pi0" else 0.0
-        count, mean, _, _ = out[name]
-        now = now - count * (mean + rest)
-        was = was - look(f"{name}:energy_mev") - rest * look(f"{name}:multiplicity")  # type: ignore[operator]
-    factor = np.clip(now / np.maximum(was, 1.0), 0.0, 3.0)
-    for name in PRODUCT_SPECIES[:8]:
-        count, mean, rms, cosine = out[name]
-        out[name] = (count * factor, mean, rms, cosine)
-
-
-@lru_cache(maxsize=1)
-def _proton_table() -> dict[str, tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]]:
-    """Return energies, shares and multiplicities of proton reactions by species."""
-    table = read_table("proton_reactions", "beams")
-    found = {}
-    for species in dict.fromkeys(table["species"]):
-        rows = table.where(species=species)
-        found[str(species)] = (rows["kinetic_energy_mev"], rows["energy_share"], rows["multiplicity"])
-    return found
-
-
-def _proton_products(grid: NDArray[np.float64]) -> dict[str, _Product]:
-    """Return products of proton reactions; forward for nucleons, nearly isotropic for the rest."""
-    cosines = {"proton": 0.75, "neutron": 0.70, "deuteron": 0.55, "triton": 0.4, "helium3": 0.4, "alpha": 0.25, "heavy": 0.5}
-    zero = np.zeros(len(grid))
-    out: dict[str, _Product] = {species: (zero, zero, zero, zero) for species in PRODUCT_SPECIES}
-    for species, (energies, shares, multiplicities) in _proton_table().items():
-        count = np.interp(grid, energies, multiplicities)
-        mean = np.interp(grid, energies, shares) * grid / count
-        spread = 1.35 if species in ("proton", "neutron") else 1.25
-        rms = np.minimum(spread * mean, np.sqrt(mean * np.maximum(grid - 1.0, 0.1)))
-        out[species] = (count, mean, np.maximum(rms, mean), np.full(len(grid), cosines[species]))
-    return out

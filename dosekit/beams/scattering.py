@@ -10,7 +10,8 @@ eqs. 46 to 48), which knows how much the beam has scattered already through the 
 
 (X_S the scattering length, Bragg additivity; 46.9 cm in water). Moments of L. Eyges, Phys. Rev. 74 (1948) 1534:
 A0 = integral T, A1 = integral T (z - z'), A2 = integral T (z - z')^2 dz'. Valid for singly charged particles above
-about 1 MeV in matter thick enough to scatter many times; the core is Gaussian, single large-angle scattering is not in it.
+about 1 MeV in matter thick enough to scatter many times; the core is Gaussian, single large-angle scattering is not
+in it.
 """
 
 from __future__ import annotations
@@ -200,12 +201,5 @@ def fermi_eyges_moments(
     mixed = correlation * sigma_mm * divergence_sigma_rad
     a0 = divergence_sigma_rad**2 + t0
     a1 = mixed + divergence_sigma_rad**2 * depth + depth * t0 - t1
-    a2 = (
-        sigma_mm**2
-        + 2.0 * mixed * depth
-        + divergence_sigma_rad**2 * depth**2
-        + depth**2 * t0
-        - 2.0 * depth * t1
-        + t2
-    )
+    a2 = sigma_mm**2 + 2.0 * mixed * depth + divergence_sigma_rad**2 * depth**2 + depth**2 * t0 - 2.0 * depth * t1 + t2
     return np.asarray(a0), np.asarray(a1), np.asarray(np.maximum(a2, 0.0))

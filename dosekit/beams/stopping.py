@@ -105,13 +105,9 @@ def mass_stopping_power(
     per_proton_mass = energy * (PROTON_MASS_MEV / moving.mass_mev)
     high = _bethe(moving, stuff, np.maximum(energy, _at_proton_speed(JOIN_LOW_MEV, moving)))
     join = np.array([_at_proton_speed(JOIN_HIGH_MEV, moving)])
-    factor = float(
-        _bethe(moving, stuff, join)[0] / _low_energy(moving, stuff, np.array([JOIN_HIGH_MEV]))[0]
-    )
+    factor = float(_bethe(moving, stuff, join)[0] / _low_energy(moving, stuff, np.array([JOIN_HIGH_MEV]))[0])
     low = factor * _low_energy(moving, stuff, np.minimum(per_proton_mass, JOIN_HIGH_MEV))
-    blend = np.clip(
-        np.log(per_proton_mass / JOIN_LOW_MEV) / math.log(JOIN_HIGH_MEV / JOIN_LOW_MEV), 0.0, 1.0
-    )
+    blend = np.clip(np.log(per_proton_mass / JOIN_LOW_MEV) / math.log(JOIN_HIGH_MEV / JOIN_LOW_MEV), 0.0, 1.0)
     blend = blend * blend * (3.0 - 2.0 * blend)
     return np.asarray((1.0 - blend) * low + blend * high)
 
@@ -228,7 +224,14 @@ def _density_parameters(stuff: Material) -> tuple[float, float, float, float, fl
             return c_bar, float(row["a"]), float(row["m"]), float(row["x0"]), float(row["x1"])
     m = 3.0
     if stuff.density_g_cm3 < 0.02:
-        gas = ((10.0, 1.6, 4.0), (10.5, 1.7, 4.0), (11.0, 1.8, 4.0), (11.5, 1.9, 4.0), (12.25, 2.0, 4.0), (13.804, 2.0, 5.0))
+        gas = (
+            (10.0, 1.6, 4.0),
+            (10.5, 1.7, 4.0),
+            (11.0, 1.8, 4.0),
+            (11.5, 1.9, 4.0),
+            (12.25, 2.0, 4.0),
+            (13.804, 2.0, 5.0),
+        )
         x0, x1 = next(((lo, hi) for top, lo, hi in gas if c_bar < top), (0.326 * c_bar - 2.5, 5.0))
     elif stuff.mean_excitation_ev < 100.0:
         x0, x1 = (0.2 if c_bar < 3.681 else 0.326 * c_bar - 1.0), 2.0
@@ -265,10 +268,7 @@ def _bethe(moving: Particle, stuff: Material, energy: NDArray[np.float64]) -> ND
     excitation = stuff.mean_excitation_ev * 1e-6
     shell = _electron_kinetic_ev(stuff) * 1e-6 / (0.5 * me * beta2)
     l0 = (
-        0.5 * np.log(2.0 * me * bg2 * w_max / excitation**2)
-        - beta2
-        - shell
-        - 0.5 * density_effect(stuff, np.sqrt(bg2))
+        0.5 * np.log(2.0 * me * bg2 * w_max / excitation**2) - beta2 - shell - 0.5 * density_effect(stuff, np.sqrt(bg2))
     )
     charge = effective_charge(moving, beta)
     barkas = 1.5 * math.pi * FINE_STRUCTURE * (excitation / me) / beta**3
@@ -280,9 +280,7 @@ def _bethe(moving: Particle, stuff: Material, energy: NDArray[np.float64]) -> ND
     return np.asarray(front * np.maximum(l0 + l1 + bloch, 0.05 * l0))
 
 
-def _low_energy(
-    moving: Particle, stuff: Material, energy_per_proton_mass: NDArray[np.float64]
-) -> NDArray[np.float64]:
+def _low_energy(moving: Particle, stuff: Material, energy_per_proton_mass: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return the proton fit of Andersen & Ziegler (1977) at equal speed, Bragg additivity, MeV cm2/g."""
     table = read_table("low_energy_stopping", "beams")
     rows = {str(row["symbol"]): row for row in table.rows()}

@@ -6,9 +6,10 @@ Bohr's variance with the relativistic correction (N. Bohr 1915; form of ICRU Rep
 
 carried to the range: sigma_R^2 = integral of (d sigma_E^2/dx) / S^3 dT.
 
-The shape is not quite Gaussian: a few hard collisions make a tail to short ranges (skewness -0.3 for 80 MeV pions). It is
-that of P.V. Vavilov, Sov. Phys. JETP 5 (1957) 749, carried to the range: each collision of energy e at kinetic energy T
-shortens the range by e / S(T); collisions are independent, so the logarithm of the characteristic function is
+The shape is not quite Gaussian: a few hard collisions make a tail to short ranges (skewness -0.3 for 80 MeV pions).
+It is that of P.V. Vavilov, Sov. Phys. JETP 5 (1957) 749, carried to the range: each collision of energy e at
+kinetic energy T shortens the range by e / S(T); collisions are independent, so the logarithm of the characteristic
+function is
 
     ln phi(u) = int dT/S int_0^Wmax de xi'/e^2 (1 - beta^2 e/Wmax) [exp(i u e/S) - 1 - i u e/S]
 
@@ -121,9 +122,7 @@ def range_sigma_mm(
     return np.asarray(np.sqrt(range_variance_mm2(projectile, medium, kinetic_energy_mev)))
 
 
-def mean_range_excess_mm(
-    projectile: str | Particle, medium: str | Material, kinetic_energy_mev: float
-) -> float:
+def mean_range_excess_mm(projectile: str | Particle, medium: str | Material, kinetic_energy_mev: float) -> float:
     """Return by how much the mean range exceeds the CSDA range because losses fluctuate.
 
     Parameters

@@ -1,9 +1,9 @@
 """Which directions does the one-dimensional transport know, and how are angles shared among them?
 
-Sixteen direction cosines, Gauss-Legendre in each hemisphere. Every scattering or emission law here is exp(kappa cos chi)
-with kappa set by the mean cosine L(kappa) = coth kappa - 1/kappa; averaged over azimuth it is
-exp(kappa mu mu') I0(kappa sqrt(1 - mu^2) sqrt(1 - mu'^2)), exactly. Multiple scattering is diffusion on the sphere,
-d psi/ds = (T/2) d/dmu (1 - mu^2) d psi/dmu, by finite volumes: the mean cosine falls as exp(-T s).
+Sixteen direction cosines, Gauss-Legendre in each hemisphere. Every scattering or emission law here is exp(kappa cos
+chi) with kappa set by the mean cosine L(kappa) = coth kappa - 1/kappa; averaged over azimuth it is exp(kappa mu
+mu') I0(kappa sqrt(1 - mu^2) sqrt(1 - mu'^2)), exactly. Multiple scattering is diffusion on the sphere, d psi/ds =
+(T/2) d/dmu (1 - mu^2) d psi/dmu, by finite volumes: the mean cosine falls as exp(-T s).
 """
 
 from __future__ import annotations

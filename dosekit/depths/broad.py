@@ -1,7 +1,7 @@
 """Where do neutrons and high-energy photons from reactions in flight leave their energy?
 
-Both reach decimetres; in one dimension their energy is spread by a plane kernel, a mixture over source energies of kernels
-about a plane of emission, pushed forward by the mean cosine g of the emission (1 + 3 g mu).
+Both reach decimetres; in one dimension their energy is spread by a plane kernel, a mixture over source energies of
+kernels about a plane of emission, pushed forward by the mean cosine g of the emission (1 + 3 g mu).
 """
 
 from __future__ import annotations
@@ -52,8 +52,8 @@ def plane_from_shells(
     mean_cosine : float
         Mean cosine g of the emission, -1/3 to 1/3; energy at distance r lies in the direction of emission, 1 + 3 g mu.
     width_mm : float, optional
-        Only what lies inside a square of this width, centred on the axis, counts: of a ring of radius rho beyond the half
-        width a, the share 1 - (4 / pi) arccos(a / rho). None: no end.
+        Only what lies inside a square of this width, centred on the axis, counts: of a ring of radius rho beyond
+        the half width a, the share 1 - (4 / pi) arccos(a / rho). None: no end.
 
     Returns
     -------
@@ -183,9 +183,7 @@ def star_plane_kernel(
     )
 
 
-def _mix(
-    response: NDArray[np.float64], nodes: NDArray[np.float64], energies: tuple[float, ...]
-) -> NDArray[np.float64]:
+def _mix(response: NDArray[np.float64], nodes: NDArray[np.float64], energies: tuple[float, ...]) -> NDArray[np.float64]:
     """Average shells over energies, energy as weight."""
     place = np.interp(np.log(np.maximum(energies, 1e-6)), np.log(nodes), np.arange(len(nodes)))
     low = np.minimum(place.astype(np.int64), len(nodes) - 2)
@@ -214,9 +212,9 @@ def _scaled_plane(
 def neutron_kerma_ratio(medium: Material) -> float:
     """Return what neutrons of some 20 MeV leave per mass in a material, relative to water.
 
-    Kerma factors at 20 MeV: hydrogen 45, other light elements 2.4 (1e-15 Gy m2; ICRU Report 63 (2000), from memory), so that
-    hydrogen takes 0.70 of the energy in water. Energy that a material poor in hydrogen does not take goes on and is counted
-    as escaped.
+    Kerma factors at 20 MeV: hydrogen 45, other light elements 2.4 (1e-15 Gy m2; ICRU Report 63 (2000), from
+    memory), so that hydrogen takes 0.70 of the energy in water. Energy that a material poor in hydrogen does not
+    take goes on and is counted as escaped.
 
     Parameters
     ----------
@@ -233,7 +231,10 @@ def neutron_kerma_ratio(medium: Material) -> float:
     >>> neutron_kerma_ratio(material("water"))
     1.0
     """
-    kerma = [_KERMA_H * stuff.fraction("H") + _KERMA_REST * (1.0 - stuff.fraction("H")) for stuff in (medium, material("water"))]
+    kerma = [
+        _KERMA_H * stuff.fraction("H") + _KERMA_REST * (1.0 - stuff.fraction("H"))
+        for stuff in (medium, material("water"))
+    ]
     return kerma[0] / kerma[1]
 
 

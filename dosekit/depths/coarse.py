@@ -156,7 +156,7 @@ def coarse_grid(
     base = range_table(species, reference).stopping_mev_mm(probe)
     ratio = np.array([float(range_table(species, stuff).stopping_mev_mm(probe) / base) for stuff, _ in layers])
     equivalent = np.concatenate([[0.0], np.cumsum(np.diff(edges_mm) * ratio[layer])])
-    cells = max(int(round(equivalent[-1] / step_mm)), 2)
+    cells = max(round(equivalent[-1] / step_mm), 2)
     place = equivalent / step_mm
     border_place = np.cumsum(np.array([thickness for _, thickness in layers]) * ratio) / step_mm
     layer_of_cell = np.minimum(np.searchsorted(border_place, np.arange(cells) + 0.5), len(layers) - 1)

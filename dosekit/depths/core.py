@@ -4,8 +4,9 @@ The beam is cut into classes by quantile of residual range, each a stretch of re
 edges move down together: r(z) = r(0) - s(z) + D (sd(z) - sd(0)). Here s is the mean path to depth z, longer than z by
 multiple scattering (ds = dz exp(A0), A0 the Fermi-Eyges angle variance); sd(z) is the standard deviation of residual
 range, from momentum spread at the start and growing by straggling; D is the change of a quantile per change of sd, from
-the exact shapes at both ends (:func:`dosekit.beams.straggling.range_shape` and a Gaussian of momentum). At a boundary the
-edges keep their energy. Energy flux and number at each depth are exact for the classes, so that nothing is lost:
+the exact shapes at both ends (:func:`dosekit.beams.straggling.range_shape` and a Gaussian of momentum). At a
+boundary the edges keep their energy. Energy flux and number at each depth are exact for the classes, so that
+nothing is lost:
 
     deposit of a bin = mean over the bin's ends of survival * (T at the front - T at the back)
 
@@ -21,7 +22,7 @@ from numpy.typing import NDArray
 from scipy.special import ndtri
 
 from dosekit.basis.materials import Material
-from dosekit.basis.particles import kinetic_energy_mev, momentum_mev_c
+from dosekit.basis.particles import kinetic_energy_mev
 from dosekit.beams.decay import decay_per_mm
 from dosekit.beams.ranges import RangeTable, range_table
 from dosekit.beams.reactions import CHANNELS, ENERGY_GRID_MEV, reactions
@@ -141,15 +142,19 @@ def solve_core(
     walk = mean_energy
     stuff = layers[0][0]
     energy_in = 0.0
-    for m, (stuff, thickness) in enumerate(layers):
+    for m, (stuff, _thickness) in enumerate(layers):
         table = range_table(species, stuff)
         inside = np.flatnonzero(layer == m)
         first_bin = int(inside[0])
         z = edges[first_bin : first_bin + len(inside) + 1] - edges[first_bin]
-        path, angles, walk_out, detour_variance = _trajectory(species, table, walk, angle, mean_energy, z, detour=detour)
+        path, angles, walk_out, detour_variance = _trajectory(
+            species, table, walk, angle, mean_energy, z, detour=detour
+        )
         start_range = float(table.range_mm(walk))
         left = np.maximum(start_range - path, 0.0)
-        grown = np.maximum(range_variance_mm2(species, stuff, walk) - range_variance_mm2(species, stuff, table.energy_mev(left)), 0.0)
+        grown = np.maximum(
+            range_variance_mm2(species, stuff, walk) - range_variance_mm2(species, stuff, table.energy_mev(left)), 0.0
+        )
         deviation = np.sqrt(sd**2 + grown + detour_variance)
         total_variance = max(float(range_variance_mm2(species, stuff, walk)), 1e-12)
         excess = mean_range_excess_mm(species, stuff, walk) * grown / total_variance if walk > 0.1 else 0.0 * grown
@@ -191,9 +196,7 @@ def solve_core(
     )  # fmt: skip
 
 
-def _edges(
-    layers: tuple[tuple[Material, float], ...], bin_mm: float
-) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+def _edges(layers: tuple[tuple[Material, float], ...], bin_mm: float) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
     """Return bin edges that hold all multiples of the bin and all boundaries, and the layer of each bin."""
     borders = np.concatenate([[0.0], np.cumsum([thickness for _, thickness in layers])])
     regular = bin_mm * np.arange(int(np.ceil(borders[-1] / bin_mm - 1e-9)) + 1)
@@ -270,8 +273,8 @@ def _trajectory(
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], float, NDArray[np.float64]]:
     """Return path and angle variance at depths in a layer, the mean energy behind it, and the variance of the path.
 
-    The path exceeds the depth by half the integral of the squared angle; for two Gaussian angles with independent increments
-    its variance is 2 int ds int_0^s A0(s')^2 ds'.
+    The path exceeds the depth by half the integral of the squared angle; for two Gaussian angles with independent
+    increments its variance is 2 int ds int_0^s A0(s')^2 ds'.
     """
     total = float(table.range_mm(energy))
     nodes = total * (1.0 - (1.0 - np.linspace(0.0, 1.0, 301)) ** 2)
@@ -383,6 +386,4 @@ class _Lookup:
         spread = self._integral_at(self.let_energy, self.let_integral, above)
         level = np.where(thin, self._at(self.let_energy, centre), (spread[1:] - spread[:-1]) / width)
         let_weighted = w_mid * (level[:, :-1] - level[:, 1:])
-        return _Bins(
-            deposit, let_weighted, stops, events, energy, shares, alive * fraction, flux, alive[:, -1]
-        )
+        return _Bins(deposit, let_weighted, stops, events, energy, shares, alive * fraction, flux, alive[:, -1])

@@ -32,7 +32,7 @@ STAR_LET_KEV_UM: dict[str, float] = {"star_light": 12.0, "star_heavy": 140.0, "s
 """Dose-averaged LET of star components where stars have not been followed by species, keV/um."""
 
 _SOURCES = (
-    "stopping: Bethe with shell, density, Barkas and Bloch terms; straggling: Bohr, Vavilov shape; scattering: Gottschalk 2010; "
+    "stopping: Bethe with shell, density, Barkas and Bloch terms; straggling: Bohr, Vavilov shape; scattering: Gottschalk 2010; "  # noqa: E501
     "reactions: Barashenkov 1990 and tables named in dosekit.beams.reactions; stars: dosekit.capture"
 )
 
@@ -66,9 +66,9 @@ def depth_curve(
     star_scale : float
         Factor on the charged energy of stars.
     width_mm : float, optional
-        Width of the square medium, centred on the beam, over which energy is summed. It matters to neutrons and photons, part
-        of which leaves sideways and counts as escaped; None means without end. What a wider medium would scatter back is
-        not taken off.
+        Width of the square medium, centred on the beam, over which energy is summed. It matters to neutrons and
+        photons, part of which leaves sideways and counts as escaped; None means without end. What a wider medium
+        would scatter back is not taken off.
     nuclear, decays : bool
         Switch reactions in flight and stars, or decays, off (for comparisons).
 
@@ -99,7 +99,13 @@ def depth_curve(
     if yields not in YIELDS:
         raise UnknownNameError("yield set", yields, YIELDS)
     check_star_scale(star_scale)
-    settings: dict[str, Any] = {"layers": layers, "bin_mm": bin_width, "yields": yields, "nuclear": nuclear, "decays": decays}
+    settings: dict[str, Any] = {
+        "layers": layers,
+        "bin_mm": bin_width,
+        "yields": yields,
+        "nuclear": nuclear,
+        "decays": decays,
+    }
     settings["width_mm"] = None if width_mm is None else _width(width_mm)
     main = solve(beam.particle, beam.momentum_mev_c, spread=beam.momentum_spread, **settings)
     edges, layer = main.core.edges_mm, main.core.layer
@@ -109,7 +115,12 @@ def depth_curve(
     stops = main.stops["core"] + main.stops["scattered"]
     if beam.particle == "pi-" and nuclear:
         stars = star_deposits(
-            stops, edges_mm=edges, layer=layer, materials=materials, yields=yields, star_scale=star_scale,
+            stops,
+            edges_mm=edges,
+            layer=layer,
+            materials=materials,
+            yields=yields,
+            star_scale=star_scale,
             width_mm=settings["width_mm"],
         )
         by_material: dict[Material, float] = {}
@@ -126,7 +137,9 @@ def depth_curve(
         stopped = sum(by_material.values())
         balance["escaped"] += math.fsum(emitted.values()) - inside
         balance["star"] -= stopped * 139.57039
-        balance["binding"] += stopped * 139.57039 - (math.fsum(emitted.values()) + _star_binding(by_material, yields, star_scale))
+        balance["binding"] += stopped * 139.57039 - (
+            math.fsum(emitted.values()) + _star_binding(by_material, yields, star_scale)
+        )
     for name, fraction in beam.contaminant_fractions.items():
         if fraction <= 0.0:
             continue
@@ -162,7 +175,11 @@ def depth_curve(
     balance["deposited"] = deposited
     return xr.Dataset(
         {
-            "energy": (("component", "depth"), table, {"units": "MeV/mm", "long_name": "energy deposit per incident particle"}),
+            "energy": (
+                ("component", "depth"),
+                table,
+                {"units": "MeV/mm", "long_name": "energy deposit per incident particle"},
+            ),
             "stops": (("depth",), binned(stops), {"units": "1/mm", "long_name": "particles brought to rest"}),
             "decays": (
                 ("depth",),
@@ -174,7 +191,11 @@ def depth_curve(
                 np.stack([binned(main.channels[name]) for name in CHANNELS]),
                 {"units": "1/mm", "long_name": "reactions in flight"},
             ),
-            "fluence": (("depth",), number, {"units": "1", "long_name": "particles before their first nuclear scattering"}),
+            "fluence": (
+                ("depth",),
+                number,
+                {"units": "1", "long_name": "particles before their first nuclear scattering"},
+            ),
             "mean_energy": (("depth",), flux_energy, {"units": "MeV", "long_name": "mean kinetic energy of these"}),
             "let_dose": (("component", "depth"), quality, {"units": "keV/um", "long_name": "dose-averaged LET"}),
         },

@@ -2,10 +2,11 @@
 
 Collisions give electrons of energy e with a spectrum close to 1/e^2 up to W_max, so that each logarithmic interval of e
 takes the same share of the loss, 1/(2 L) with L the stopping number of Bethe. An electron of energy e starts at
-cos = sqrt(e (W_max + 2 m) / (W_max (e + 2 m))) to the beam (two-body kinematics) and leaves its energy evenly along a mean
-penetration of 0.6 of its range (scattering included; L. Katz & A.S. Penfold, Rev. Mod. Phys. 24 (1952) 28 for the range,
-R = 412 e^(1.265 - 0.0954 ln e) mg/cm2). The energy is moved, none is made; where stopping power changes slowly the shift is
-not seen, so that this matters in the first 3 mm and behind boundaries only. Electrons that come backwards are left out.
+cos = sqrt(e (W_max + 2 m) / (W_max (e + 2 m))) to the beam (two-body kinematics) and leaves its energy evenly along
+a mean penetration of 0.6 of its range (scattering included; L. Katz & A.S. Penfold, Rev. Mod. Phys. 24 (1952) 28
+for the range, R = 412 e^(1.265 - 0.0954 ln e) mg/cm2). The energy is moved, none is made; where stopping power
+changes slowly the shift is not seen, so that this matters in the first 3 mm and behind boundaries only. Electrons
+that come backwards are left out.
 """
 
 from __future__ import annotations

@@ -1,10 +1,11 @@
 """Which beam made a measured depth-dose curve?
 
 Momentum, momentum spread, contaminant fractions and an offset of depth are fitted to points of relative dose by least
-squares (``scipy.optimize.least_squares``); the scale of the dose is eliminated in each step. Dose is taken as energy per mm
-of a broad beam (the laterally integrated curve). The covariance is that of the linearised problem, scaled by the mean
-square residual where no uncertainties are given. An offset of depth and the momentum nearly stand for each other (only the
-plateau tells them apart): leave the offset out where the zero of depth is known. Someone who reconstructs a historic beam from a printed figure starts here.
+squares (``scipy.optimize.least_squares``); the scale of the dose is eliminated in each step. Dose is taken as
+energy per mm of a broad beam (the laterally integrated curve). The covariance is that of the linearised problem,
+scaled by the mean square residual where no uncertainties are given. An offset of depth and the momentum nearly
+stand for each other (only the plateau tells them apart): leave the offset out where the zero of depth is known.
+Someone who reconstructs a historic beam from a printed figure starts here.
 """
 
 from __future__ import annotations
@@ -67,8 +68,8 @@ def read_depth_dose(path: str | Path) -> tuple[NDArray[np.float64], NDArray[np.f
     Parameters
     ----------
     path : str or Path
-        File whose first line names the columns, one beginning with ``depth`` (mm) and one with ``dose``; lines that start
-        with ``#`` are skipped.
+        File whose first line names the columns, one beginning with ``depth`` (mm) and one with ``dose``; lines that
+        start with ``#`` are skipped.
 
     Returns
     -------
@@ -84,14 +85,16 @@ def read_depth_dose(path: str | Path) -> tuple[NDArray[np.float64], NDArray[np.f
     try:
         text = place.read_text(encoding="utf-8-sig")
     except (OSError, UnicodeDecodeError) as error:
-        raise InputError(f"{place.name} cannot be read ({error.__class__.__name__})", allowed="a CSV text file") from None
+        raise InputError(
+            f"{place.name} cannot be read ({error.__class__.__name__})", allowed="a CSV text file"
+        ) from None
     lines = [(n, line) for n, line in enumerate(text.splitlines(), 1) if line.strip() and not line.startswith("#")]
     if len(lines) < 2:
         raise InputError(f"{place.name} holds no points", allowed="a header and at least six rows")
     names = [name.strip().lower() for name in next(csv.reader([lines[0][1]]))]
     found = {}
     for want in ("depth", "dose"):
-        match = [i for i, name in enumerate(names) if name.startswith(want) or name.startswith(f"relative_{want}")]
+        match = [i for i, name in enumerate(names) if name.startswith((want, f"relative_{want}"))]
         if len(match) != 1:
             raise InputError(
                 f"{place.name}: columns {', '.join(names)}",
@@ -158,8 +161,8 @@ def fit_beam(
     medium : str or Material or Layers
         What the curve was measured in.
     free : tuple of str
-        What is fitted: ``momentum_mev_c``, ``momentum_sigma``, ``offset_mm`` (depth of the model at measured depth 0, added to
-        measured depths) and contaminant species, e.g. ``"e-"``.
+        What is fitted: ``momentum_mev_c``, ``momentum_sigma``, ``offset_mm`` (depth of the model at measured depth
+        0, added to measured depths) and contaminant species, e.g. ``"e-"``.
     uncertainty : array_like, optional
         Standard deviations of the doses.
     yields, star_scale : str, float
@@ -182,7 +185,9 @@ def fit_beam(
     depth, value = np.asarray(depth_mm, dtype=float), np.asarray(dose, dtype=float)
     _check_points(depth, value, "depth-dose points")
     if not free or len(set(free)) < len(free) or len(free) >= len(depth):
-        raise InputError(f"{len(free)} free parameters for {len(depth)} points", allowed="different ones, fewer than points")
+        raise InputError(
+            f"{len(free)} free parameters for {len(depth)} points", allowed="different ones, fewer than points"
+        )
     known = ("momentum_mev_c", "momentum_sigma", "offset_mm", "mu-", "mu+", "e-", "e+")
     for name in free:
         if name not in known:
@@ -190,7 +195,9 @@ def fit_beam(
     peak = float(np.max(value))
     sigma = np.full(len(depth), peak) if uncertainty is None else np.asarray(uncertainty, dtype=float)
     if sigma.shape != depth.shape or not np.all(sigma > 0.0):
-        raise InputError("uncertainties that do not match the points or are not positive", allowed="one positive number each")
+        raise InputError(
+            "uncertainties that do not match the points or are not positive", allowed="one positive number each"
+        )
     fractions = beam.contaminant_fractions
     start = {
         "momentum_mev_c": beam.momentum_mev_c,
@@ -236,7 +243,7 @@ def fit_beam(
 
     def residual(point: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return weighted residuals."""
-        return (model(point) - value) / sigma
+        return np.asarray((model(point) - value) / sigma)
 
     def slope(point: NDArray[np.float64], factor: float = 1.0) -> NDArray[np.float64]:
         """Return the Jacobian by central differences with steps that the bins allow."""

@@ -1,8 +1,9 @@
 """Compiled loops of the one-dimensional transport.
 
-A population is kept by residual range and direction cosine. Each step takes all of it down by one node of residual range
-and along its direction by the same length. For each direction the population lives in a frame that moves with it, so that
-nothing is smeared by the stepping; only sources and scores are shared between the two nearest cells of depth.
+A population is kept by residual range and direction cosine. Each step takes all of it down by one node of residual
+range and along its direction by the same length. For each direction the population lives in a frame that moves with
+it, so that nothing is smeared by the stepping; only sources and scores are shared between the two nearest cells of
+depth.
 """
 
 from __future__ import annotations
@@ -19,8 +20,9 @@ __all__ = ["gather_products", "march", "score_events", "stream_photons"]
 def score_events(number, energy, cell, parts, node_energy, group_energy, by_node, by_group):  # type: ignore[no-untyped-def]
     """Sort events of classes (q, i) into cells of depth, energy nodes and energy groups.
 
-    parts (3, q, i) are the shares of elastic, reaction and decay in `number`; by_node (2, cells, nodes) takes elastic and
-    reaction, by_group (2, cells, groups) reaction and decay. Weights linear in energy keep number and energy.
+    parts (3, q, i) are the shares of elastic, reaction and decay in `number`; by_node (2, cells, nodes) takes
+    elastic and reaction, by_group (2, cells, groups) reaction and decay. Weights linear in energy keep number and
+    energy.
     """
     nodes = len(node_energy)
     groups = len(group_energy)
@@ -32,20 +34,16 @@ def score_events(number, energy, cell, parts, node_energy, group_energy, by_node
             t = energy[q, i]
             u = cell[i]
             lo = np.searchsorted(node_energy, t) - 1
-            if lo < 0:
-                lo = 0
-            if lo > nodes - 2:
-                lo = nodes - 2
+            lo = max(lo, 0)
+            lo = min(lo, nodes - 2)
             w = (t - node_energy[lo]) / (node_energy[lo + 1] - node_energy[lo])
             for which in range(2):
                 m = n * parts[which, q, i]
                 by_node[which, u, lo] += m * (1.0 - w)
                 by_node[which, u, lo + 1] += m * w
             g = np.searchsorted(group_energy, t) - 1
-            if g < 0:
-                g = 0
-            if g > groups - 2:
-                g = groups - 2
+            g = max(g, 0)
+            g = min(g, groups - 2)
             v = (t - group_energy[g]) / (group_energy[g + 1] - group_energy[g])
             v = min(max(v, 0.0), 1.0)
             for which in range(2):
@@ -58,8 +56,8 @@ def score_events(number, energy, cell, parts, node_energy, group_energy, by_node
 def gather_products(events, stuff, spread, angular, out):  # type: ignore[no-untyped-def]
     """Add products of events to the sources of a species.
 
-    events (cells, groups), stuff (cells) material number, spread (materials, groups, nodes) particles per event by node,
-    angular (materials, groups, directions) shares by direction, out (nodes, cells, directions).
+    events (cells, groups), stuff (cells) material number, spread (materials, groups, nodes) particles per event by
+    node, angular (materials, groups, directions) shares by direction, out (nodes, cells, directions).
     """
     cells, groups = events.shape
     nodes = spread.shape[2]
@@ -109,15 +107,16 @@ def march(  # type: ignore[no-untyped-def]
 ):
     """Carry a population down in residual range, with events and angular diffusion.
 
-    source (nodes, cells, directions) is used up and changed. node_energy (nodes); let (materials, nodes) keV/um on the way
-    down from a node; stuff (cells); chance (materials, nodes) of an event on the way down from a node; parts
-    (materials, nodes, 3) elastic, reaction, decay; elastic_to (materials, nodes) energy after elastic scattering; reemit
-    (materials, nodes, nodes) particles of the same kind per reaction; turn_* (materials, nodes, directions, directions);
-    turn (nodes, directions, directions) angular diffusion per step or of length 0; radiated (nodes) share of the loss that
-    is bremsstrahlung. Sideways displacement (variance of one axis since emission) is carried along as a sum over particles;
-    sideways (cells) receives it times the deposit. Scores: deposit, let_weighted, stops, counts (3, cells) of events, reactions and decays (cells, groups),
-    forward (2, cells) sum of cosine times events, escaped (4): energy and number through the front and the back,
-    bremsstrahlung (cells, directions). Returns the energy that elastic scattering gave to nuclei, by cell.
+    source (nodes, cells, directions) is used up and changed. node_energy (nodes); let (materials, nodes) keV/um on
+    the way down from a node; stuff (cells); chance (materials, nodes) of an event on the way down from a node;
+    parts (materials, nodes, 3) elastic, reaction, decay; elastic_to (materials, nodes) energy after elastic
+    scattering; reemit (materials, nodes, nodes) particles of the same kind per reaction; turn_* (materials, nodes,
+    directions, directions); turn (nodes, directions, directions) angular diffusion per step or of length 0;
+    radiated (nodes) share of the loss that is bremsstrahlung. Sideways displacement (variance of one axis since
+    emission) is carried along as a sum over particles; sideways (cells) receives it times the deposit. Scores:
+    deposit, let_weighted, stops, counts (3, cells) of events, reactions and decays (cells, groups), forward (2,
+    cells) sum of cosine times events, escaped (4): energy and number through the front and the back, bremsstrahlung
+    (cells, directions). Returns the energy that elastic scattering gave to nuclei, by cell.
     """
     nodes, cells, directions = source.shape
     width = cells + 2 * nodes + 6
@@ -140,7 +139,7 @@ def march(  # type: ignore[no-untyped-def]
                 n = source[k, u, j]
                 if n != 0.0:
                     c = u + shift - step * cosine[j]
-                    low = int(math.floor(c))
+                    low = math.floor(c)
                     w = c - low
                     state[j, low] += n * (1.0 - w)
                     state[j, low + 1] += n * w
@@ -166,7 +165,7 @@ def march(  # type: ignore[no-untyped-def]
                 x = c - shift + step * cosine[j]
                 middle = x + 0.5 * cosine[j]
                 end = x + cosine[j]
-                low = int(math.floor(middle))
+                low = math.floor(middle)
                 w = middle - low
                 first = min(max(low, 0), cells - 1)
                 second = min(max(low + 1, 0), cells - 1)
@@ -266,7 +265,7 @@ def march(  # type: ignore[no-untyped-def]
                     way[j, c] *= stay
                     aside[j, c] *= stay
                     x = c - shift + (step + 1) * cosine[j]
-                    low = int(math.floor(x))
+                    low = math.floor(x)
                     w = x - low
                     first = min(max(low, 0), cells - 1)
                     second = min(max(low + 1, 0), cells - 1)
@@ -285,7 +284,7 @@ def march(  # type: ignore[no-untyped-def]
             n = state[j, c]
             if n > 0.0:
                 x = c - shift + step * cosine[j]
-                low = int(math.floor(x))
+                low = math.floor(x)
                 w = x - low
                 first = min(max(low, 0), cells - 1)
                 second = min(max(low + 1, 0), cells - 1)

@@ -1,9 +1,9 @@
 """Depth curves of one beam over residual range, as the fold and the range steps need them.
 
-Everything is in water, against water-equivalent depth behind the surface. With ``mode="shifter"`` the beam keeps its momentum
-and a water-equivalent thickness in front takes range away, so that one solution serves all steps. With
-``mode="momentum"`` each step has its own momentum and nothing in front. The residual range is the mean depth at which
-unscattered particles stop.
+Everything is in water, against water-equivalent depth behind the surface. With ``mode="shifter"`` the beam keeps
+its momentum and a water-equivalent thickness in front takes range away, so that one solution serves all steps. With
+``mode="momentum"`` each step has its own momentum and nothing in front. The residual range is the mean depth at
+which unscattered particles stop.
 """
 
 from __future__ import annotations
@@ -240,7 +240,9 @@ def depth_library(
         raise UnknownNameError("yield set", yields, YIELDS)
     residual = np.atleast_1d(np.asarray(residual_ranges_mm, dtype=float))
     if residual.ndim != 1 or len(residual) == 0 or not np.all(np.isfinite(residual)) or np.any(residual <= 1.0):
-        raise InputError("residual ranges that are empty, not finite or not over 1 mm", allowed="mm of water, more than 1")
+        raise InputError(
+            "residual ranges that are empty, not finite or not over 1 mm", allowed="mm of water, more than 1"
+        )
     if not (math.isfinite(bin_mm) and 0.05 <= bin_mm <= 20.0):
         raise InputError(f"bin of {bin_mm} mm", allowed="0.05 to 20 mm")
     longest = float(np.max(residual))
@@ -279,7 +281,11 @@ def _by_shifter(beam: Beam, residual: NDArray[np.float64], bins: int, bin_mm: fl
 
     centres = base[:-1] + 0.5 * bin_mm
     at = bin_mm * (np.arange(len(parts.energy)) + 0.5)
-    look = lambda values: np.stack([np.interp(centres + front, at, values) for front in in_front])  # noqa: E731
+
+    def look(values: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Return values at depths behind each thickness."""
+        return np.stack([np.interp(centres + front, at, values) for front in in_front])
+
     return DepthLibrary(
         beam, yields, "shifter", residual, shift, np.full(len(residual), beam.momentum_mev_c), bin_mm, centres,
         {name: moved(name) for name in QUANTITIES}, {name: look(values) for name, values in parts.sigma.items()},
@@ -304,7 +310,7 @@ def _by_momentum(beam: Beam, residual: NDArray[np.float64], bins: int, bin_mm: f
     keep = slice(front, front + bins)
     return DepthLibrary(
         beam, yields, "momentum", residual, np.zeros(len(residual)), np.array(momenta), bin_mm,
-        bin_mm * (np.arange(bins) + 0.5),
+        np.asarray(bin_mm * (np.arange(bins) + 0.5), dtype=np.float64),
         {name: np.stack([row.amount[name][keep] for row in rows]) / bin_mm for name in QUANTITIES},
         {name: np.stack([row.sigma[name][keep] for row in rows]) for name in rows[0].sigma},
         np.stack([row.energy[keep] for row in rows]),
@@ -326,7 +332,13 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
     """Solve for main species and contaminants and sort into library quantities."""
     water = material("water")
     layers = ((water, bins * bin_mm),)
-    settings = {"spread": beam.momentum_spread, "layers": layers, "bin_mm": bin_mm, "yields": yields, "width_mm": _WIDTH_MM}
+    settings = {
+        "spread": beam.momentum_spread,
+        "layers": layers,
+        "bin_mm": bin_mm,
+        "yields": yields,
+        "width_mm": _WIDTH_MM,
+    }
     main = solve(beam.particle, momentum, **settings)  # type: ignore[arg-type]
     names = ("core", "scattered", "in_flight_charged", "in_flight_neutral", "decay")
     amount = {name: main.deposit[name] for name in names}
@@ -339,8 +351,10 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
                 total > 1e-15, total, 1.0
             )
             amount["decay"] = total
-    depth = bin_mm * (np.arange(bins) + 0.5)
-    sigma = {name: main.extra_sigma_mm.get(name, np.zeros(bins)) for name in ("scattered", "in_flight_charged", "decay")}
+    depth = np.asarray(bin_mm * (np.arange(bins) + 0.5), dtype=np.float64)
+    sigma = {
+        name: main.extra_sigma_mm.get(name, np.zeros(bins)) for name in ("scattered", "in_flight_charged", "decay")
+    }
     sigma["in_flight_neutral"] = np.full(bins, _NEUTRAL_SIGMA_MM)
     core = _core_variance(beam.particle, momentum, depth)
     for target, first in (("contaminant_muon", "mu"), ("contaminant_electron", "e")):
@@ -351,7 +365,9 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
             extra: Solution = solve(name, momentum, **settings)  # type: ignore[arg-type]
             here = fraction * np.sum(list(extra.deposit.values()), axis=0)
             amount[target] = amount[target] + here
-            weighted = weighted + fraction * np.sum([extra.deposit[key] * extra.let[key] for key in extra.deposit], axis=0)
+            weighted = weighted + fraction * np.sum(
+                [extra.deposit[key] * extra.let[key] for key in extra.deposit], axis=0
+            )
             variance = variance + here * np.maximum(_core_variance(name, momentum, depth) - core, 0.0)
         safe = np.where(amount[target] > 1e-15, amount[target], 1.0)
         let[target] = weighted / safe

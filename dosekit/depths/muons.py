@@ -23,7 +23,7 @@ __all__ = ["MuonCapture", "muon_capture_products", "muon_capture_share"]
 
 _FREE_NS = 2197.0
 _LIFE_NS = {
-    "H": 2195.0, "C": 2026.0, "N": 1907.0, "O": 1795.0, "F": 1463.0, "Na": 1204.0, "Mg": 1067.0, "Al": 864.0, "Si": 756.0,
+    "H": 2195.0, "C": 2026.0, "N": 1907.0, "O": 1795.0, "F": 1463.0, "Na": 1204.0, "Mg": 1067.0, "Al": 864.0, "Si": 756.0,  # noqa: E501
     "P": 611.0, "S": 554.0, "Cl": 560.0, "Ar": 537.0, "K": 435.0, "Ca": 333.0, "Fe": 206.0, "Zn": 159.0,
 }  # fmt: skip
 _MUON_REST = 105.6583755
@@ -102,7 +102,8 @@ def muon_capture_products(
     """
     number = float(np.sum(caught))
     neutron = convolve_planes(
-        caught * _NEUTRON, neutron_plane_kernel(grid.reference, (2.0, 5.0, 12.0), bin_mm=grid.step_mm, width_mm=width_mm)
+        caught * _NEUTRON,
+        neutron_plane_kernel(grid.reference, (2.0, 5.0, 12.0), bin_mm=grid.step_mm, width_mm=width_mm),
     )
     photon = convolve_planes(
         caught * _PHOTON, photon_plane_kernel(grid.reference, 2.0, bin_mm=grid.step_mm, width_mm=width_mm)

@@ -1,7 +1,8 @@
 """What do the products of reactions and decays in flight leave, and where?
 
-Protons, deuterons and tritons run on their own ranges in sixteen directions, muons from decays on theirs; heavier ions stay.
-Neutrons, photons and neutral pions are broad. Electrons from muons at rest run with multiple scattering and radiate.
+Protons, deuterons and tritons run on their own ranges in sixteen directions, muons from decays on theirs; heavier
+ions stay. Neutrons, photons and neutral pions are broad. Electrons from muons at rest run with multiple scattering
+and radiate.
 """
 
 from __future__ import annotations
@@ -116,10 +117,10 @@ def _march(
     """Call the compiled loop without events."""
     march(
         source, COSINES, grid.step_mm, nodes_mev, let, grid.stuff, np.zeros((len(grid.materials), 0)),
-        np.zeros((0, 0, 3)), _NO_EVENTS, np.zeros((0, 0, 0)), np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0, 0)), turn, radiated,
-        np.zeros(nodes, dtype=np.int64), np.zeros(nodes), scores.deposit, scores.let_weighted, scores.stops,
-        np.zeros((3, grid.cells)), np.zeros((grid.cells, 2)), np.zeros((grid.cells, 2)), np.zeros((2, grid.cells)),
-        scores.escaped, brems, scores.sideways,
+        np.zeros((0, 0, 3)), _NO_EVENTS, np.zeros((0, 0, 0)), np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0, 0)), turn,
+        radiated, np.zeros(nodes, dtype=np.int64), np.zeros(nodes), scores.deposit, scores.let_weighted,
+        scores.stops, np.zeros((3, grid.cells)), np.zeros((grid.cells, 2)), np.zeros((grid.cells, 2)), np.zeros((2,
+        grid.cells)), scores.escaped, brems, scores.sideways,
     )  # fmt: skip
 
 
@@ -254,7 +255,9 @@ def neutral_products(
         for index, anchor in enumerate(_ANCHORS_MEV):
             source = by_group @ _anchor_weights()[:, index]
             if np.any(source > 0.0):
-                kernel = _neutral_kernel(projectile, species, anchor, grid.reference, grid.materials[0], grid.step_mm, yields, width_mm)
+                kernel = _neutral_kernel(
+                    projectile, species, anchor, grid.reference, grid.materials[0], grid.step_mm, yields, width_mm
+                )
                 left = convolve_planes(source, kernel)
                 if species == "neutron":
                     left *= np.array([neutron_kerma_ratio(stuff) for stuff in grid.materials])[grid.stuff]

@@ -1,8 +1,8 @@
 """What does one species of a beam do in a stack of layers? All parts together, before stars.
 
-1. the beam until its first nuclear scattering (:mod:`dosekit.depths.core`), 2. particles of the same kind that come out of
-elastic and inelastic collisions, all generations, 3. charged and neutral products of reactions in flight, 4. muons and
-electrons from decays in flight and at rest. Everything per particle at depth 0, in fine bins.
+1. the beam until its first nuclear scattering (:mod:`dosekit.depths.core`), 2. particles of the same kind that come
+out of elastic and inelastic collisions, all generations, 3. charged and neutral products of reactions in flight, 4.
+muons and electrons from decays in flight and at rest. Everything per particle at depth 0, in fine bins.
 """
 
 from __future__ import annotations
@@ -22,7 +22,7 @@ from dosekit.depths.coarse import CoarseGrid, coarse_grid, regrid
 from dosekit.depths.core import Core, solve_core
 from dosekit.depths.deltas import carry_deltas
 from dosekit.depths.kernels import gather_products, march, score_events
-from dosekit.depths.muons import muon_capture_share, muon_capture_products
+from dosekit.depths.muons import muon_capture_products, muon_capture_share
 from dosekit.depths.products import (
     Carried,
     carry_electrons,
@@ -184,9 +184,9 @@ def _solve(
     weighted = {"core": core.let_weighted, **{name: to_bins(part.let_weighted) for name, part in parts.items()}}
     weighted["decay"] = wide.to_bins(decayed.let_weighted) + 1.5 * at_rest
     weighted["in_flight_neutral"] = 15.0 * deposit["in_flight_neutral"]
-    for name, (amount, let) in rest.capture.items():
+    for name, (amount, quality) in rest.capture.items():
         deposit[name] = wide.to_bins(amount)
-        weighted[name] = let * deposit[name]
+        weighted[name] = quality * deposit[name]
     let = {name: weighted[name] / np.where(deposit[name] > 1e-15, deposit[name], 1.0) for name in deposit}
     let["core"] = core.let_weighted / np.where(core.deposit > 1e-15, core.deposit, 1.0)
     channels = {name: core.channels[name].copy() for name in (*CHANNELS, "decay")}
@@ -195,8 +195,15 @@ def _solve(
     rest_energy = particle(species).mass_mev if species != "proton" else 0.0
     stars = float(np.sum(core.stops) + np.sum(scattered.carried.stops)) * _PION_REST if species == "pi-" else 0.0
     out = scattered.carried.escaped
-    escaped = float(np.sum(core.deposit) - np.sum(built_up)) + core.energy_out + float(core.number[-1]) * rest_energy + float(out[0] + out[2] + (out[1] + out[3]) * rest_energy)
-    escaped += float(charged.escaped[0] + charged.escaped[2]) + float(sum(np.sum(v) for v in emitted.values()) - np.sum(neutral))
+    escaped = (
+        float(np.sum(core.deposit) - np.sum(built_up))
+        + core.energy_out
+        + float(core.number[-1]) * rest_energy
+        + float(out[0] + out[2] + (out[1] + out[3]) * rest_energy)
+    )
+    escaped += float(charged.escaped[0] + charged.escaped[2]) + float(
+        sum(np.sum(v) for v in emitted.values()) - np.sum(neutral)
+    )
     ledger = {
         "in": core.energy_in + rest_energy,
         "escaped": escaped + rest.escaped,
@@ -234,12 +241,26 @@ class _Scattered:
         reach = float(range_table(species, grid.reference).range_mm(top))
         nodes = 8 * (int(np.ceil(reach / grid.step_mm / 8.0)) + 1)
         table = species_table(
-            species, grid.reference, grid.materials, step_mm=grid.step_mm, nodes=nodes, yields=yields, nuclear=nuclear, decays=decays
+            species,
+            grid.reference,
+            grid.materials,
+            step_mm=grid.step_mm,
+            nodes=nodes,
+            yields=yields,
+            nuclear=nuclear,
+            decays=decays,
         )
         by_node = np.zeros((2, grid.cells, nodes))
         by_group = np.zeros((2, grid.cells, groups))
         score_events(
-            core.events, core.event_energy, grid.cell_of_bin, core.event_parts, table.energy, GROUP_ENERGY_MEV, by_node, by_group
+            core.events,
+            core.event_energy,
+            grid.cell_of_bin,
+            core.event_parts,
+            table.energy,
+            GROUP_ENERGY_MEV,
+            by_node,
+            by_group,
         )
         source = np.zeros((nodes, grid.cells, len(COSINES)))
         self.recoil = np.zeros(grid.cells)
@@ -262,11 +283,11 @@ class _Scattered:
     def _run(self, table: SpeciesTable, grid: CoarseGrid, source: NDArray[np.float64]) -> NDArray[np.float64]:
         """Carry all generations."""
         result: NDArray[np.float64] = march(
-            source, COSINES, grid.step_mm, table.energy, table.let, grid.stuff, table.chance, table.parts, table.elastic_to,
-            table.reemit, table.turn_elastic, table.turn_reemit, np.zeros((0, 0, 0)), np.zeros(0), table.group_low,
-            table.group_weight, self.carried.deposit, self.carried.let_weighted, self.carried.stops, self.counts,
-            self.later_reactions, self.later_decays, self.forward, self.carried.escaped, np.zeros((0, 0)),
-            self.carried.sideways,
+            source, COSINES, grid.step_mm, table.energy, table.let, grid.stuff, table.chance, table.parts,
+            table.elastic_to, table.reemit, table.turn_elastic, table.turn_reemit, np.zeros((0, 0, 0)), np.zeros(0),
+            table.group_low, table.group_weight, self.carried.deposit, self.carried.let_weighted,
+            self.carried.stops, self.counts, self.later_reactions, self.later_decays, self.forward,
+            self.carried.escaped, np.zeros((0, 0)), self.carried.sideways,
         )  # fmt: skip
         return result
 
@@ -378,7 +399,15 @@ def _electrons(
 ) -> Solution:
     """Follow an electron beam: no unscattered part, only the coarse transport."""
     silent = solve_core(
-        "mu-", momentum, spread=0.0, layers=layers, bin_mm=bin_mm, yields=yields, nuclear=False, decays=False, detour=False
+        "mu-",
+        momentum,
+        spread=0.0,
+        layers=layers,
+        bin_mm=bin_mm,
+        yields=yields,
+        nuclear=False,
+        decays=False,
+        detour=False,
     )
     energy = float(kinetic_energy_mev(species, momentum))
     total_mm = float(silent.edges_mm[-1])
@@ -398,7 +427,7 @@ def _electrons(
     empty = np.zeros(bins)
     mean = float(np.sum(energies * weight) / np.sum(weight))
     core = Core(
-        silent.edges_mm, silent.layer, empty, empty, empty, {name: empty for name in (*CHANNELS, "decay")},
+        silent.edges_mm, silent.layer, empty, empty, empty, dict.fromkeys((*CHANNELS, "decay"), empty),
         np.zeros(bins + 1), np.zeros(bins + 1), np.zeros((1, bins)), np.zeros((1, bins)), np.zeros((3, 1, bins)),
         np.zeros(bins + 1), mean, 0.0,
     )  # fmt: skip
@@ -417,5 +446,5 @@ def _electrons(
         deposit[name], let[name] = empty, empty
     return Solution(
         species, core, grid, deposit, let, {"core": empty, "scattered": grid.to_bins(run.stops)},
-        {name: empty for name in (*CHANNELS, "decay")}, empty, ledger, {"scattered": _width(run, grid)},
+        dict.fromkeys((*CHANNELS, "decay"), empty), empty, ledger, {"scattered": _width(run, grid)},
     )  # fmt: skip

@@ -1,11 +1,11 @@
 """What do capture stars leave in one dimension?
 
-The density of stops is folded with the plane kernels of the capture room, material by material. In a stack the folding is
-done along a stretched depth: water-equivalent depth for charged products, mass thickness for neutrons and photons; the
-charged kernel is that of the capturing material brought to unit stretching. For neutrons and photons in a stack it is the
-kernel of water times the energy that the capturing material emits over that of water: tissues differ little per mass. Where
-layers differ this is the first order of density scaling; what neutrons leave follows the local hydrogen
-(:func:`dosekit.depths.broad.neutron_kerma_ratio`).
+The density of stops is folded with the plane kernels of the capture room, material by material. In a stack the
+folding is done along a stretched depth: water-equivalent depth for charged products, mass thickness for neutrons
+and photons; the charged kernel is that of the capturing material brought to unit stretching. For neutrons and
+photons in a stack it is the kernel of water times the energy that the capturing material emits over that of water:
+tissues differ little per mass. Where layers differ this is the first order of density scaling; what neutrons leave
+follows the local hydrogen (:func:`dosekit.depths.broad.neutron_kerma_ratio`).
 """
 
 from __future__ import annotations
@@ -94,9 +94,7 @@ def star_deposits(
     return result
 
 
-def star_ledger(
-    stops_by_material: dict[Material, float], *, yields: str, star_scale: float = 1.0
-) -> dict[str, float]:
+def star_ledger(stops_by_material: dict[Material, float], *, yields: str, star_scale: float = 1.0) -> dict[str, float]:
     """Return the energy of stars by component and in binding, before transport.
 
     Parameters
@@ -125,9 +123,7 @@ def _stretch(stuff: Material, component: str) -> float:
     return relative_stopping_power(stuff) if component in ("star_light", "star_heavy") else stuff.density_g_cm3
 
 
-def _kernel(
-    stuff: Material, component: str, yields: str, bin_mm: float, width_mm: float | None
-) -> NDArray[np.float64]:
+def _kernel(stuff: Material, component: str, yields: str, bin_mm: float, width_mm: float | None) -> NDArray[np.float64]:
     """Return a plane kernel, MeV per stop and bin."""
     if component in ("star_neutron", "star_photon"):
         return star_plane_kernel(stuff, component, yields=yields, bin_mm=bin_mm, width_mm=width_mm)

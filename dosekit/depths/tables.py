@@ -18,7 +18,6 @@ from numpy.typing import NDArray
 from scipy.special import betaincinv
 
 from dosekit.basis.materials import Material
-from dosekit.basis.particles import particle
 from dosekit.beams.decay import decay_per_mm
 from dosekit.beams.ranges import range_table
 from dosekit.beams.reactions import Reactions, reactions

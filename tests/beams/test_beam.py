@@ -22,7 +22,14 @@ def test_momentum_and_energy_say_the_same():
 @pytest.mark.published
 def test_kinematics_of_a_report(evidence):
     ours = Beam("pi-", kinetic_energy_mev=82.0).momentum_mev_c
-    evidence(what="momentum of an 82 MeV pion", source="capture_and_beam_facts", value=172.0, ours=ours, unit="MeV/c", bar="0.5")
+    evidence(
+        what="momentum of an 82 MeV pion",
+        source="capture_and_beam_facts",
+        value=172.0,
+        ours=ours,
+        unit="MeV/c",
+        bar="0.5",
+    )
     assert ours == pytest.approx(172.0, abs=0.5)
 
 
@@ -35,7 +42,9 @@ def test_spread_as_sigma_or_width():
 
 
 def test_replace_keeps_the_rest():
-    beam = Beam("pi-", momentum_mev_c=170, momentum_fwhm=0.05, contaminants={"mu-": 0.1, "e-": 0.2}, spot_sigma_mm=(3, 4))
+    beam = Beam(
+        "pi-", momentum_mev_c=170, momentum_fwhm=0.05, contaminants={"mu-": 0.1, "e-": 0.2}, spot_sigma_mm=(3, 4)
+    )
     other = beam.replace(momentum_mev_c=180.0)
     assert other.momentum_spread == beam.momentum_spread
     assert other.contaminant_fractions == {"mu-": 0.1, "e-": 0.2}
@@ -53,7 +62,7 @@ def test_range_shifter():
 
 
 @pytest.mark.parametrize(
-    "changes, word",
+    ("changes", "word"),
     [
         ({"momentum_sigma": -0.01}, "spread"),
         ({"momentum_sigma": 0.5}, "spread"),
@@ -103,8 +112,8 @@ def test_unknown_particles_are_named():
 def test_anything_else_is_refused_in_our_own_words(momentum, spread, contaminants):
     try:
         beam = Beam("pi-", momentum_mev_c=momentum, momentum_sigma=spread, contaminants=contaminants)
-    except DosekitError as error:
-        assert str(error)
+    except DosekitError:
+        return
     else:
         assert beam.momentum_mev_c > 0.0
         assert sum(beam.contaminant_fractions.values()) <= 1.0

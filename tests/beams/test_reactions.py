@@ -10,8 +10,8 @@ from dosekit.basis.tables import read_table
 from dosekit.beams.reactions import (
     CHANNELS,
     ENERGY_GRID_MEV,
-    element_cross_sections_mb,
     elastic_mean_cosine,
+    element_cross_sections_mb,
     macroscopic_cross_sections_mm,
     reactions,
 )
@@ -48,11 +48,15 @@ def test_both_sets_agree_on_how_often(row, yields):
 
 
 @pytest.mark.model
-@pytest.mark.parametrize("row", POINTS, ids=lambda r: f"{r['projectile']}-{r['target']}-{r['kinetic_energy_mev']:g}-{r['channel']}")
+@pytest.mark.parametrize(
+    "row", POINTS, ids=lambda r: f"{r['projectile']}-{r['target']}-{r['kinetic_energy_mev']:g}-{r['channel']}"
+)
 def test_measured_points(row, evidence):
-    sections = element_cross_sections_mb(row["projectile"], row["target"], row["kinetic_energy_mev"], yields="evaluated")
+    sections = element_cross_sections_mb(
+        row["projectile"], row["target"], row["kinetic_energy_mev"], yields="evaluated"
+    )
     ours = total(sections) if row["channel"] == "reaction" else float(sections[row["channel"]])
-    evidence(what=f"{row['channel']}, {row['projectile']} {row['target']} {row['kinetic_energy_mev']:g} MeV", source=row["source"],
+    evidence(what=f"{row['channel']}, {row['projectile']} {row['target']} {row['kinetic_energy_mev']:g} MeV", source=row["source"],  # noqa: E501
              value=row["value_mb"], ours=ours, unit="mb", bar="3 sigma + 10 %", kind="model")  # fmt: skip
     bar = 3.0 * row["sigma_mb"] + 0.10 * row["value_mb"]
     key = (row["projectile"], row["target"], row["kinetic_energy_mev"], row["channel"])
@@ -79,7 +83,14 @@ def test_energy_closes(projectile, yields, name):
 @pytest.mark.published
 def test_proton_loss_in_water(evidence):
     ours = 10.0 * float(macroscopic_cross_sections_mm("proton", "water", 100.0)["inelastic"])
-    evidence(what="proton fluence loss in water", source="Bortfeld (1997), beta", value=0.012, ours=ours, unit="1/cm", bar="0.002")
+    evidence(
+        what="proton fluence loss in water",
+        source="Bortfeld (1997), beta",
+        value=0.012,
+        ours=ours,
+        unit="1/cm",
+        bar="0.002",
+    )
     assert ours == pytest.approx(0.012, abs=0.0025)
 
 

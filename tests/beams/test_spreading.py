@@ -46,7 +46,7 @@ def test_range_straggling_of_pions(row, evidence):
 def test_lateral_sigma_at_the_range(row, evidence):
     variance = fermi_eyges_moments("pi-", "water", row["kinetic_energy_mev"], depth_mm=[1e4])[2]
     ours = float(np.sqrt(variance[0])) / 10.0
-    evidence(what=f"lateral sigma at the range, pi- {row['momentum_mev_c']:g} MeV/c", source="Gottschalk T_dM, derived table",
+    evidence(what=f"lateral sigma at the range, pi- {row['momentum_mev_c']:g} MeV/c", source="Gottschalk T_dM, derived table",  # noqa: E501
              value=row["sigma_lateral_at_range_cm"], ours=ours, unit="cm", bar="5 %")  # fmt: skip
     assert ours == pytest.approx(row["sigma_lateral_at_range_cm"], rel=0.05)
 
@@ -56,11 +56,18 @@ CATIMA = {"proton": {50: 0.0263, 100: 0.0860, 150: 0.1695, 200: 0.2712}, "pi+": 
 
 
 @pytest.mark.published
-@pytest.mark.parametrize("name, energy", [(n, e) for n, rows in CATIMA.items() for e in rows])
+@pytest.mark.parametrize(("name", "energy"), [(n, e) for n, rows in CATIMA.items() for e in rows])
 def test_range_straggling_against_a_library(name, energy, evidence):
     ours = float(range_sigma_mm(name, material("water").replace(mean_excitation_ev=75.0), energy)) / 10.0
     value = CATIMA[name][energy]
-    evidence(what=f"sigma of range, {name} {energy} MeV", source="CATIMA 1.7", value=value, ours=ours, unit="g/cm2", bar="5 %")
+    evidence(
+        what=f"sigma of range, {name} {energy} MeV",
+        source="CATIMA 1.7",
+        value=value,
+        ours=ours,
+        unit="g/cm2",
+        bar="5 %",
+    )
     assert ours == pytest.approx(value, rel=0.05)
 
 
@@ -73,7 +80,7 @@ def test_variance_adds_along_the_path():
     assert whole == pytest.approx(float(parts[1]) + float(between), rel=1e-3)
 
 
-@pytest.mark.parametrize("name, energy", [("pi-", 80.0), ("mu-", 94.0), ("proton", 150.0)])
+@pytest.mark.parametrize(("name", "energy"), [("pi-", 80.0), ("mu-", 94.0), ("proton", 150.0)])
 def test_shape_of_the_range_distribution(name, energy):
     x, density = range_shape(name, "water", energy)
     dx = x[1] - x[0]
@@ -123,7 +130,9 @@ def test_moments_agree_with_direct_integrals():
 
 def test_start_values_drift_as_in_vacuum():
     bare = fermi_eyges_moments("pi-", "water", 80.0, depth_mm=[50.0])
-    wide = fermi_eyges_moments("pi-", "water", 80.0, depth_mm=[50.0], sigma_mm=4.0, divergence_sigma_rad=0.01, correlation=-0.5)
+    wide = fermi_eyges_moments(
+        "pi-", "water", 80.0, depth_mm=[50.0], sigma_mm=4.0, divergence_sigma_rad=0.01, correlation=-0.5
+    )
     drift = 4.0**2 + 2 * 50.0 * (-0.5 * 4.0 * 0.01) + (0.01 * 50.0) ** 2
     assert wide[2][0] - bare[2][0] == pytest.approx(drift, rel=1e-9)
 

@@ -53,7 +53,7 @@ def test_stopping_power_of_proton_and_muon(row, evidence):
 
 
 @pytest.mark.published
-@pytest.mark.parametrize("column, excitation", [("range_i78", 78.0), ("range_i75", 75.0)])
+@pytest.mark.parametrize(("column", "excitation"), [("range_i78", 78.0), ("range_i75", 75.0)])
 @pytest.mark.parametrize("row", PIONS, ids=lambda r: f"{r['momentum_mev_c']:g}")
 def test_range_of_pion(row, column, excitation, evidence):
     ours = float(csda_range_mm("pi-", water(excitation), row["kinetic_energy_mev"])) / 10.0
@@ -90,10 +90,7 @@ def test_pions_against_a_reference_library(name, evidence):
     from dosekit.basis.materials import element
 
     medium = material(name)
-    parts = [
-        [element(s).atomic_weight, element(s).atomic_number, w]
-        for s, w in medium.mass_fractions
-    ]
+    parts = [[element(s).atomic_weight, element(s).atomic_number, w] for s, w in medium.mass_fractions]
     judge = pc.Material(parts, density=medium.density_g_cm3)
     judge.I(medium.mean_excitation_ev)
     judge.thickness(1.0)
@@ -108,8 +105,6 @@ def test_pions_against_a_reference_library(name, evidence):
             evidence(what=f"{what}, pi+ {energy:g} MeV, {name}", source="pycatima (CATIMA 1.7), I set equal",
                      value=value, ours=mine, unit="", bar="1 %")  # fmt: skip
             assert mine == pytest.approx(value, rel=0.01), what
-
-
 
 
 @pytest.mark.published

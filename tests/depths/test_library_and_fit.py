@@ -55,7 +55,9 @@ def test_stops_lie_at_the_residual_range(mode):
 
 
 def test_momentum_mode_has_sharper_shallow_peaks():
-    wide, sharp = (depth_library(BEAM, [60.0], mode=mode).quantities["core_stops"][0] for mode in ("shifter", "momentum"))
+    wide, sharp = (
+        depth_library(BEAM, [60.0], mode=mode).quantities["core_stops"][0] for mode in ("shifter", "momentum")
+    )
     assert np.max(sharp) > 1.3 * np.max(wide)
 
 
@@ -112,14 +114,16 @@ def test_an_offset_moves_with_the_momentum():
 
 def test_read_depth_dose(tmp_path):
     place = tmp_path / "curve.csv"
-    place.write_text("# scanned\ndepth_mm,dose_percent\n" + "".join(f"{z},{50 + z}\n" for z in (30, 10, 20, 40, 60, 50)))
+    place.write_text(
+        "# scanned\ndepth_mm,dose_percent\n" + "".join(f"{z},{50 + z}\n" for z in (30, 10, 20, 40, 60, 50))
+    )
     depth, dose = read_depth_dose(place)
     assert list(depth) == [10, 20, 30, 40, 50, 60]
     assert list(dose) == [60, 70, 80, 90, 100, 110]
 
 
 @pytest.mark.parametrize(
-    "text, word",
+    ("text", "word"),
     [
         ("a,b\n1,2\n", "columns"),
         ("depth_mm,dose\n1,nan\n2,3\n3,4\n4,5\n5,6\n6,7\n", "finite"),

@@ -22,7 +22,14 @@ BEAMS = {
     "e-": dk.Beam("e-", momentum_mev_c=60),
     "mixed": dk.Beam("pi-", momentum_mev_c=150, momentum_sigma=0.02, contaminants={"mu-": 0.1, "e-": 0.2}),
 }
-STACK = dk.Layers([("muscle_skeletal", 40), ("bone_cortical", 12), (dk.material("lung_tissue", density_g_cm3=0.3), 60), ("water", 200)])
+STACK = dk.Layers(
+    [
+        ("muscle_skeletal", 40),
+        ("bone_cortical", 12),
+        (dk.material("lung_tissue", density_g_cm3=0.3), 60),
+        ("water", 200),
+    ]
+)
 MEDIA = {"water": "water", "bone_cortical": "bone_cortical", "adipose": "adipose", "stack": STACK}
 
 
@@ -95,7 +102,9 @@ def test_density_scales_depth():
 def test_equal_layers_are_one_medium():
     whole = dk.depth_curve(BEAMS["pi-"], "water", depth_mm=260.0)
     parts = dk.depth_curve(BEAMS["pi-"], dk.Layers([("water", 60), ("water", 40), ("water", 160)]))
-    assert float(np.max(np.abs(whole["energy"] - parts["energy"]))) < 2e-3 * float(whole["energy"].sum("component").max())
+    assert float(np.max(np.abs(whole["energy"] - parts["energy"]))) < 2e-3 * float(
+        whole["energy"].sum("component").max()
+    )
 
 
 def test_fixed_range_shifter_takes_range_away():
@@ -123,8 +132,12 @@ def test_star_scale_is_linear_in_charged_components():
     more = dk.depth_curve(BEAMS["pi-"], "water", star_scale=1.2)
     light = ["star_light", "star_heavy"]
     # a little of these components comes from captured decay muons, which the factor leaves alone
-    np.testing.assert_allclose(1.2 * one["energy"].sel(component=light), more["energy"].sel(component=light), rtol=2e-4, atol=2e-5)
-    np.testing.assert_allclose(one["energy"].sel(component="star_neutron"), more["energy"].sel(component="star_neutron"))
+    np.testing.assert_allclose(
+        1.2 * one["energy"].sel(component=light), more["energy"].sel(component=light), rtol=2e-4, atol=2e-5
+    )
+    np.testing.assert_allclose(
+        one["energy"].sel(component="star_neutron"), more["energy"].sel(component="star_neutron")
+    )
     assert abs(balance(more)) < 2e-3
 
 
@@ -138,7 +151,8 @@ def test_same_input_same_bytes():
 
 def test_wider_media_hold_more():
     narrow, wide, endless = (
-        float(dk.depth_curve(BEAMS["pi-"], "water", width_mm=w)["energy"].sel(component="star_neutron").sum()) for w in (200.0, 600.0, None)
+        float(dk.depth_curve(BEAMS["pi-"], "water", width_mm=w)["energy"].sel(component="star_neutron").sum())
+        for w in (200.0, 600.0, None)
     )
     assert narrow < wide < endless
 
@@ -152,7 +166,7 @@ def test_let_of_primaries_is_between_slow_and_fast():
 
 
 @pytest.mark.parametrize(
-    "options, error",
+    ("options", "error"),
     [
         ({"bin_mm": 0.0}, InputError),
         ({"bin_mm": float("nan")}, InputError),
@@ -218,7 +232,9 @@ def test_planes_from_shells_keep_energy():
     assert float(np.sum(plane)) == pytest.approx(10.0, rel=1e-9)
     np.testing.assert_allclose(plane, plane[::-1], rtol=1e-9)
     ahead = plane_from_shells(energy, edges, bin_mm=1.0, half_length_mm=90.0, mean_cosine=0.2)
-    assert float(np.sum(ahead[91:]) - np.sum(ahead[:90])) == pytest.approx(3.0, rel=0.1)  # 3/2 g of 10 MeV, less what lies in the centre bin
+    assert float(np.sum(ahead[91:]) - np.sum(ahead[:90])) == pytest.approx(
+        3.0, rel=0.1
+    )  # 3/2 g of 10 MeV, less what lies in the centre bin
     narrow = plane_from_shells(energy, edges, bin_mm=1.0, half_length_mm=90.0, width_mm=40.0)
     assert float(np.sum(narrow)) < 10.0
     source = np.zeros(50)
