@@ -105,7 +105,7 @@ def console_line(summary: RunSummary) -> str:
     str
         One line without a newline.
     """
-    where = ""
+    where = f" in {summary.target} (D98 to D2)"
     if np.isfinite(summary.flat_from_mm):
         where = f" from {summary.flat_from_mm:.0f} to {summary.flat_to_mm:.0f} mm water (field '{summary.flat_field}')"
     spread = ""
@@ -134,7 +134,8 @@ def key_lines(summary: RunSummary) -> list[tuple[str, str]]:
         Name and value with unit.
     """
     unit = summary.unit
-    lines = [(f"{summary.quantity}, flat in water to", f"±{summary.flatness_percent:.1f} %")]
+    judged = "in water" if np.isfinite(summary.flat_from_mm) else "in the target (D98 to D2)"
+    lines = [(f"{summary.quantity}, flat {judged} to", f"±{summary.flatness_percent:.1f} %")]
     if np.isfinite(summary.flat_from_mm):
         name = f"judged in water, field '{summary.flat_field}'"
         lines.append((name, f"{summary.flat_from_mm:.0f} to {summary.flat_to_mm:.0f} mm"))

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosekit.errors import GridError
+from dosekit.modulation.spots import spots_over_shadow
 
 if TYPE_CHECKING:
     from dosekit.grids.voxels import VoxelGrid
@@ -76,7 +77,9 @@ def aim(frame: BeamFrame, grid: VoxelGrid, target: str, *, spacing_mm: float, ma
     shadow = frame.to_beam(_centres(grid, coverage >= _EDGE))
     if not len(shadow):
         raise GridError(f"target {target!r} covers no voxel by half or more", remedy="use a finer grid")
-    spots = _lattice(shadow[:, :2], spacing_mm, margin_mm)
+    spots = spots_over_shadow(
+        shadow[:, :2], spacing_mm=spacing_mm, margin_mm=margin_mm, point_mm=float(min(grid.spacing_mm))
+    )
     reach = float(np.linalg.norm(np.array(grid.upper_mm) - np.array(grid.lower_mm)))
     middle = frame.to_beam(0.5 * (np.array(grid.upper_mm) + np.array(grid.lower_mm)))[2]
     along = np.arange(middle - 0.5 * reach, middle + 0.5 * reach, _STEP_MM) + 0.5 * _STEP_MM
@@ -97,20 +100,6 @@ def _centres(grid: VoxelGrid, mask: NDArray[np.bool_]) -> NDArray[np.float64]:
     """Return the centres (x, y, z) of the voxels in a mask."""
     k, j, i = np.nonzero(mask)
     return np.stack([grid.centres_mm("x")[i], grid.centres_mm("y")[j], grid.centres_mm("z")[k]], axis=1)
-
-
-def _lattice(shadow: NDArray[np.float64], spacing_mm: float, margin_mm: float) -> NDArray[np.float64]:
-    """Return lattice points within the margin of the shadow, in rows along u."""
-    from scipy.spatial import cKDTree
-
-    low = np.floor((shadow.min(axis=0) - margin_mm) / spacing_mm)
-    high = np.ceil((shadow.max(axis=0) + margin_mm) / spacing_mm)
-    u = np.arange(low[0], high[0] + 1) * spacing_mm
-    v = np.arange(low[1], high[1] + 1) * spacing_mm
-    points = np.stack(np.meshgrid(u, v, indexing="xy"), axis=-1).reshape(-1, 2)
-    distance, _ = cKDTree(shadow).query(points)
-    slack = 1e-9 + 0.5 * _STEP_MM
-    return np.asarray(points[distance <= margin_mm + slack])
 
 
 def _nearest(points: NDArray[np.float64], among: NDArray[np.float64]) -> NDArray[np.int64]:

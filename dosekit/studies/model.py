@@ -135,7 +135,7 @@ class FieldSection(_Section):
     isocentre_mm: Point | None = None
     source_distance_mm: float | None = Field(default=None, gt=200, le=100000)
     spot_spacing_mm: float = Field(default=6.0, gt=0.5, le=50)
-    margin_mm: float = Field(default=4.0, ge=0, le=50)
+    margin_mm: float = Field(default=8.0, ge=0, le=50)
     step_mm: float = Field(default=6.0, gt=0.5, le=50)
     beam: BeamSection | None = None
 

@@ -15,9 +15,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosekit.basis.components import COMPONENTS, STAR_COMPONENTS
-from dosekit.errors import DosekitWarning, ReachError, StudyError
+from dosekit.errors import DosekitWarning, ReachError
 from dosekit.studies.model import Study, read_study
 from dosekit.studies.planning import PlannedField, effect_model_of, plan_field
+from dosekit.studies.quality import let_maps
 from dosekit.studies.result import Result
 from dosekit.studies.volume import input_files, load_volume
 from dosekit.studies.weighing import search_weights
@@ -26,6 +27,7 @@ if TYPE_CHECKING:
     import xarray as xr
 
     from dosekit.effects.histograms import VolumeHistogram
+    from dosekit.effects.mixed_field import EffectModel
     from dosekit.grids.voxels import VoxelGrid
     from dosekit.outputs.record import InputFile
     from dosekit.outputs.summary import RunSummary
@@ -129,18 +131,25 @@ def _compute(study: Study, base: Path, tell: Progress) -> Result:
     shares = 1.0 / len(planned)
     planned = [_times(plan, shares) for plan in planned]
     searches: tuple[Any, ...] = ()
-    if study.goal.weights != "range_steps":
-        planned, searches = search_weights(study, grid, target, planned, progress=tell)
-    per_field, total = _folded(study, grid, planned, tell)
-    coverage = grid.structure(target)
     model = effect_model_of(study, planned[0].field.beam.particle)
-    scale = _prescription_scale(study, total, coverage, model)
+    if study.goal.weights != "range_steps":
+        let = None
+        if study.goal.quantity == "effect" and model.needs_let:
+            _, first = _folded(study, grid, planned, tell)
+            let = _let(study, grid, planned, first, tell)
+        planned, searches = search_weights(study, grid, target, planned, let=let, progress=tell)
+    per_field, total = _folded(study, grid, planned, tell)
+    let = _let(study, grid, planned, total, tell)
+    constants = model.constants(let)
+    coverage = grid.structure(target)
+    scale = _prescription_scale(study, total, coverage, model, constants)
     planned = [_times(plan, scale) for plan in planned]
     per_field = {name: _scaled(dataset, scale) for name, dataset in per_field.items()}
     total = _scaled(total, scale)
     tell("effect and measures", 0.0)
-    effect = _effect_dose(study, total, model)
+    effect = _effect_dose(study, total, model, constants)
     physical = np.asarray(total["dose"].sum("component", dtype=np.float64), dtype=np.float32)
+    total["let"] = _total_let(total, let)
     names = _structures(study, grid, target)
     histograms = _histograms(grid, physical, names)
     effect_histograms = _histograms(grid, effect, names)
@@ -214,16 +223,52 @@ def _mean(values: NDArray[Any], coverage: NDArray[Any]) -> float:
     return float(np.average(np.asarray(values)[inside].astype(np.float64), weights=coverage[inside]))
 
 
-def _prescription_scale(study: Study, total: xr.Dataset, coverage: NDArray[Any], model: Any) -> float:
+def _let(
+    study: Study, grid: VoxelGrid, planned: Sequence[PlannedField], total: xr.Dataset, tell: Progress
+) -> dict[str, NDArray[np.float32]]:
+    """Return the LET of each component in every voxel."""
+    tell("LET", 0.0)
+    found = let_maps(planned, grid, total, yields=study.stars.yields, dose_to=study.outputs.dose_to)
+    tell("LET", 1.0)
+    return found
+
+
+def _total_let(total: xr.Dataset, let: Mapping[str, NDArray[np.float32]]) -> Any:
+    """Return the LET averaged over the dose of all components, as a labelled map."""
+    from dosekit.effects.radiation_quality import total_let
+
+    dose = {name: total["dose"].values[row] for row, name in enumerate(COMPONENTS)}
+    values = total_let(dose, let).astype(np.float32)
+    return (("z", "y", "x"), values, {"units": "keV/um", "long_name": "dose-averaged LET of all components"})
+
+
+def _weighted(
+    study: Study, parts: Mapping[str, NDArray[Any]], model: EffectModel, constants: Mapping[str, tuple[Any, Any]]
+) -> NDArray[np.float64]:
+    """Return effect-weighted dose from the dose of the components."""
+    from dosekit.effects.mixed_field import effect_sums, weighted_dose_gy
+
+    linear, root = effect_sums(parts, dict(constants))
+    return weighted_dose_gy(linear, root, tissue=model.tissue, fractions=study.goal.fractions)
+
+
+def _prescription_scale(
+    study: Study,
+    total: xr.Dataset,
+    coverage: NDArray[Any],
+    model: EffectModel,
+    constants: Mapping[str, tuple[Any, Any]],
+) -> float:
     """Return the factor that brings the mean target dose to the prescription."""
     inside = coverage > 0.0
     weights = coverage[inside].astype(np.float64)
     parts = {name: total["dose"].values[row][inside].astype(np.float64) for row, name in enumerate(COMPONENTS)}
+    local = {name: tuple(_at(value, inside) for value in pair) for name, pair in constants.items()}
     factor = 1.0
     for _ in range(40):
         scaled = {name: factor * part for name, part in parts.items()}
         if study.goal.quantity == "effect":
-            values = model.weighted_dose_gy(scaled, fractions=study.goal.fractions)
+            values = _weighted(study, scaled, model, local)
         else:
             values = np.sum(list(scaled.values()), axis=0)
         mean = float(np.average(values, weights=weights))
@@ -235,16 +280,18 @@ def _prescription_scale(study: Study, total: xr.Dataset, coverage: NDArray[Any],
     return factor
 
 
-def _effect_dose(study: Study, total: xr.Dataset, model: Any) -> NDArray[np.float32]:
+def _at(value: Any, inside: NDArray[np.bool_]) -> Any:
+    """Return a constant, or a map's values inside a structure."""
+    array = np.asarray(value)
+    return array[inside] if array.shape == inside.shape else array
+
+
+def _effect_dose(
+    study: Study, total: xr.Dataset, model: EffectModel, constants: Mapping[str, tuple[Any, Any]]
+) -> NDArray[np.float32]:
     """Return the effect-weighted dose per fraction."""
-    if model.needs_let:
-        raise StudyError(
-            f"effect model {study.effect.model!r} needs maps of LET",
-            allowed="'constant' or 'physical' in a study file",
-            remedy="set effect.model = 'constant'; other models are there in Python (dosekit.effects)",
-        )
-    parts = {name: total["dose"].values[row] for row, name in enumerate(COMPONENTS)}
-    return np.asarray(model.weighted_dose_gy(parts, fractions=study.goal.fractions), dtype=np.float32)
+    parts = {name: total["dose"].values[row].astype(np.float64) for row, name in enumerate(COMPONENTS)}
+    return np.asarray(_weighted(study, parts, model, constants), dtype=np.float32)
 
 
 def _structures(study: Study, grid: VoxelGrid, target: str) -> list[str]:
@@ -319,15 +366,20 @@ def _summary(
     worst = max(planned, key=lambda plan: plan.settings.flatness)
     chosen = (effect_histograms if effective else histograms)[target]
     d98, d2 = chosen.dose_at_volume_gy(98.0), chosen.dose_at_volume_gy(2.0)
+    flat = {
+        "flatness_percent": 100.0 * worst.settings.flatness,
+        "flat_from_mm": worst.settings.measures.judged_mm[0],
+        "flat_to_mm": worst.settings.measures.judged_mm[1],
+        "flat_field": worst.field.name,
+    }
+    if study.goal.weights != "range_steps":
+        flat = {"flatness_percent": 100.0 * max(d2 - chosen.mean_gy, chosen.mean_gy - d98) / chosen.mean_gy}
     seconds = sum(plan.field.particles for plan in planned) / study.machine.particles_per_s
     summary = RunSummary(
         title=study.title,
         target=target,
         quantity="effect-weighted dose" if effective else "physical dose",
-        flatness_percent=100.0 * worst.settings.flatness,
-        flat_from_mm=worst.settings.measures.judged_mm[0],
-        flat_to_mm=worst.settings.measures.judged_mm[1],
-        flat_field=worst.field.name,
+        **flat,  # type: ignore[arg-type]
         target_d98_percent=100.0 * d98 / study.goal.dose_gy,
         target_d2_percent=100.0 * d2 / study.goal.dose_gy,
         peak_depth_mm=deepest.peak_depth_mm,

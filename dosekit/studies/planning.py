@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from dosekit.errors import ReachError, SettingsWarning, StudyError
+from dosekit.errors import ReachError, SettingsWarning
 from dosekit.studies.aiming import AimedSpots, aim
 
 if TYPE_CHECKING:
@@ -354,18 +354,9 @@ def _beam_for(section: BeamSection, far_mm: float, name: str) -> Beam:
 
 def _effect_curves(study: Study, particle: str, library: DepthLibrary, gray: float) -> EffectCurves:
     """Return the sums of alpha times dose and of root beta times dose for each step."""
-    from dosekit.basis.components import COMPONENTS
     from dosekit.modulation.flattening import EffectCurves
+    from dosekit.modulation.stacks import GRAY_PER_MEV_MM, library_curves
 
-    model = effect_model_of(study, particle)
-    if model.needs_let:
-        raise StudyError(
-            f"effect model {study.effect.model!r} needs LET, which range steps do not carry",
-            allowed="model 'constant' with goal quantity 'effect'",
-            remedy="set effect.model = 'constant' or goal.quantity = 'physical'",
-        )
-    constants = model.constants()
-    parts = library.depth_dose(star_scale=study.stars.scale) * gray
-    linear = sum(float(constants[name][0]) * parts[:, row] for row, name in enumerate(COMPONENTS))
-    root = sum(float(constants[name][1]) * parts[:, row] for row, name in enumerate(COMPONENTS))
-    return EffectCurves(np.asarray(linear), np.asarray(root), model.tissue)  # type: ignore[arg-type]
+    dose, let = library_curves(library, star_scale=study.stars.scale)
+    scaled = {name: values * (gray / GRAY_PER_MEV_MM) for name, values in dose.items()}
+    return EffectCurves.from_components(scaled, effect_model_of(study, particle), let)

@@ -8,46 +8,31 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from dosekit.basis.components import COMPONENTS
 from dosekit.caution import BANNER
 from dosekit.errors import InputError
 from dosekit.studies.places import made_folder
 
 if TYPE_CHECKING:
-    from numpy.typing import NDArray
+    from dosekit.modulation.stacks import BeamSteps
 
-    from dosekit.beams.beam import Beam
-    from dosekit.modulation.steps import StepSettings
-
-__all__ = [
-    "FoundSteps",
-    "range_steps_of",
-    "steps_summary",
-    "write_steps",
-]
+__all__ = ["FoundSteps", "range_steps_of", "steps_summary", "write_steps"]
 
 _HASH_OF_NO_RUN = "not part of a run"
 
 
 @dataclass(frozen=True)
 class FoundSteps:
-    """Range steps for an interval in water, with the curves they were found from.
+    """Range steps for an interval in water, and the rate that times rest on.
 
     Attributes
     ----------
-    beam : Beam
-        The beam.
-    settings : StepSettings
-        Ranges, weights and measures.
-    curves_gy : ndarray
-        Depth dose of every candidate for 1e9 particles on 1 cm2, shape (K, N), Gy.
+    steps : BeamSteps
+        Beam, settings, dose and LET by component; weights in 1e9 particles per cm2 for 1 Gy.
     particles_per_s : float
-        Rate that times rest on.
+        Particles of the main species per second.
     """
 
-    beam: Beam
-    settings: StepSettings
-    curves_gy: NDArray[np.float64]
+    steps: BeamSteps
     particles_per_s: float
 
 
@@ -84,41 +69,21 @@ def range_steps_of(
     Returns
     -------
     FoundSteps
-        The steps; weights in 1e9 particles per cm2.
+        The steps.
     """
-    from dosekit.depths.library import depth_library
+    from dosekit.beams.beam import Beam
     from dosekit.effects.mixed_field import EffectModel
-    from dosekit.modulation.flattening import EffectCurves
-    from dosekit.modulation.steps import candidate_ranges_mm, range_steps
-    from dosekit.studies.model import BeamSection
-    from dosekit.studies.planning import GRAY_PER_UNIT, chosen_momentum, make_beam, reach_mm
+    from dosekit.modulation.stacks import beam_for_depth, steps_for_beam
 
-    if not rate > 0.0:
+    if not (np.isfinite(rate) and rate > 0.0):
         raise InputError(f"a rate of {rate:g} particles per second", allowed="above 0")
-    section = BeamSection.model_validate({"particle": particle, "momentum_sigma": spread})
-    beam = make_beam(section, momentum_mev_c=chosen_momentum(section, far_mm) if momentum is None else momentum)
-    full = reach_mm(beam)
-    offset = min(max(full - far_mm, 0.0), 5.0)
-    ranges = candidate_ranges_mm((near_mm, far_mm), full_range_mm=full, step_mm=step_mm, peak_offset_mm=offset)
-    library = depth_library(beam, ranges, mode="shifter")
-    parts = library.depth_dose() * GRAY_PER_UNIT / 100.0
-    effect = None
-    if flatten == "effect":
-        model = EffectModel("constant", beam_particle=particle)
-        pairs = model.constants()
-        linear = sum(np.asarray(pairs[name][0]) * parts[:, row] for row, name in enumerate(COMPONENTS))
-        root = sum(np.asarray(pairs[name][1]) * parts[:, row] for row, name in enumerate(COMPONENTS))
-        effect = EffectCurves(np.asarray(linear), np.asarray(root), model.tissue)  # type: ignore[arg-type]
-    curves = np.maximum(parts.sum(axis=1), 0.0)
-    settings = range_steps(
-        curves,
-        library.depth_mm,
-        (near_mm, far_mm),
-        residual_range_mm=ranges,
-        shift_mm=library.shift_mm,
-        effect=effect,
-    )
-    return FoundSteps(beam, settings, curves, rate)
+    if not 0.0 <= near_mm < far_mm:
+        raise InputError(f"an interval from {near_mm:g} to {far_mm:g} mm", allowed="0 <= near < far")
+    beam = Beam(particle, momentum_mev_c=momentum or 200.0 + 600.0 * (particle == "proton"), momentum_sigma=spread)
+    if momentum is None:
+        beam = beam_for_depth(beam, far_mm)
+    effect = EffectModel("constant", beam_particle=particle) if flatten == "effect" else None
+    return FoundSteps(steps_for_beam(beam, (near_mm, far_mm), step_mm=step_mm, dose_gy=1.0, effect=effect), rate)
 
 
 def steps_summary(found: FoundSteps) -> str:
@@ -134,20 +99,21 @@ def steps_summary(found: FoundSteps) -> str:
     str
         A line on flatness and a table, the research-only words at the end.
     """
-    settings = found.settings
+    settings = found.steps.settings
     measures = settings.measures
     low, high = measures.judged_mm
-    beam = f"{found.beam.particle} {found.beam.momentum_mev_c:.1f} MeV/c"
+    beam = f"{found.steps.beam.particle} {found.steps.beam.momentum_mev_c:.1f} MeV/c"
     flat = f"{settings.quantity} dose flat to ±{100 * settings.flatness:.1f} % from {low:.0f} to {high:.0f} mm water"
     shape = f"peak to entrance {measures.peak_to_entrance:.2f}, 80 to 20 % in {measures.distal_fall_mm:.1f} mm"
     lines = [
         f"{beam}: {flat}; {shape}",
         "  step  thickness_mm  residual_range_mm  weight_1e9_per_cm2  share_percent  time_s_per_cm2",
     ]
-    for number, (shift, left, weight, share) in enumerate(
-        zip(settings.shift_mm, settings.residual_range_mm, settings.weights, settings.share, strict=True), start=1
+    dwell = found.steps.dwell(area_cm2=1.0, particles_per_s=found.particles_per_s)
+    for number, (shift, left, weight, share, seconds) in enumerate(
+        zip(settings.shift_mm, settings.residual_range_mm, settings.weights, settings.share, dwell.time_s, strict=True),
+        start=1,
     ):
-        seconds = weight * 1e9 / found.particles_per_s
         lines.append(
             f"  {number:4d}  {shift:12.1f}  {left:17.1f}  {weight:18.4f}  {100 * share:13.1f}  {seconds:14.2f}"
         )
@@ -156,7 +122,7 @@ def steps_summary(found: FoundSteps) -> str:
 
 
 def write_steps(found: FoundSteps, folder: str | Path) -> list[Path]:
-    """Write range steps as a table and a figure.
+    """Write range steps as a table, with figures of the steps and of a ridge filter that gives them.
 
     Parameters
     ----------
@@ -170,33 +136,68 @@ def write_steps(found: FoundSteps, folder: str | Path) -> list[Path]:
     list of Path
         The files.
     """
-    from dosekit.outputs.figures_modulation import range_steps_figure
+    from dosekit.modulation.devices import ridge_profile
+    from dosekit.outputs.figures_modulation import range_steps_figure, ridge_profile_figure
+    from dosekit.outputs.output_table import OutputTable
     from dosekit.outputs.style import write_figure
-    from dosekit.outputs.tables import OutputTable
 
     where = made_folder(folder)
-    settings = found.settings
+    steps, settings = found.steps, found.steps.settings
+    dwell = steps.dwell(area_cm2=1.0, particles_per_s=found.particles_per_s)
+    ridge = ridge_profile(settings.shift_mm, settings.weights)
+    widths = dict(zip(np.round(ridge.thickness_mm, 6).tolist(), ridge.width_mm.tolist(), strict=True))
     rows = tuple(
-        (number, float(shift), float(left), float(weight), 100.0 * float(share))
-        for number, (shift, left, weight, share) in enumerate(
-            zip(settings.shift_mm, settings.residual_range_mm, settings.weights, settings.share, strict=True), start=1
+        (number, float(shift), float(left), float(weight), 100.0 * float(share), float(seconds),
+         widths.get(round(float(shift), 6), float("nan")))
+        for number, (shift, left, weight, share, seconds) in enumerate(
+            zip(
+                settings.shift_mm, settings.residual_range_mm, settings.weights, settings.share, dwell.time_s,
+                strict=True,
+            ),
+            start=1,
         )
-    )
+    )  # fmt: skip
     table = OutputTable(
-        f"range steps of {found.beam.particle} {found.beam.momentum_mev_c:.1f} MeV/c in water",
-        ("step", "water_equivalent_thickness_mm", "residual_range_mm", "weight_1e9_per_cm2", "share_percent"),
-        "mm of water; 1e9 particles per cm2 for 1 Gy; %",
+        f"range steps of {steps.beam.particle} {steps.beam.momentum_mev_c:.1f} MeV/c in water",
+        (
+            "step",
+            "water_equivalent_thickness_mm",
+            "residual_range_mm",
+            "weight_1e9_per_cm2",
+            "share_percent",
+            "time_s_per_cm2",
+            "ridge_width_mm",
+        ),
+        f"mm of water; 1e9 particles per cm2 for 1 Gy; %; s per cm2 at {found.particles_per_s:g} particles per second; "
+        f"width of a ridge filter's step, mm, at a pitch of {ridge.pitch_mm:g} mm",
         rows,
     ).write(where / "range_steps.csv", run_hash=_HASH_OF_NO_RUN)
     figure = range_steps_figure(
         settings.depth_mm,
-        found.curves_gy[settings.index],
+        _step_curves(found),
         interval_mm=settings.interval_mm,
         residual_range_mm=settings.residual_range_mm,
         weights=settings.weights,
         flatness=settings.flatness,
         flat_interval_mm=settings.measures.judged_mm,
-        title=f"{found.beam.particle} {found.beam.momentum_mev_c:.1f} MeV/c",
+        title=f"{steps.beam.particle} {steps.beam.momentum_mev_c:.1f} MeV/c",
     )
     files = write_figure(figure, where / "range_steps")
-    return [table, files.pdf, files.png]
+    profile = write_figure(
+        ridge_profile_figure(ridge.width_mm, ridge.thickness_mm, material="water", pitch_mm=ridge.pitch_mm),
+        where / "ridge_profile",
+    )
+    return [table, files.pdf, files.png, profile.pdf, profile.png]
+
+
+def _step_curves(found: FoundSteps) -> np.ndarray:
+    """Return the depth dose of each step in use for one unit of weight, shape (k, n), Gy."""
+    from dosekit.depths.library import depth_library
+    from dosekit.modulation.stacks import library_curves
+
+    settings = found.steps.settings
+    library = depth_library(
+        found.steps.beam, settings.residual_range_mm, depth_mm=float(settings.depth_mm[-1] + settings.depth_mm[0])
+    )
+    dose, _ = library_curves(library)
+    return np.asarray(sum(dose.values(), np.zeros_like(dose["primary"])))

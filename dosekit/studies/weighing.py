@@ -8,8 +8,8 @@ so that the mean target dose (physical or effect-weighted, as the goal says) is 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import replace
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -34,6 +34,7 @@ def search_weights(
     target: str,
     planned: Sequence[PlannedField],
     *,
+    let: Mapping[str, NDArray[np.float32]] | None = None,
     progress: Callable[[str, float], None] | None = None,
 ) -> tuple[list[PlannedField], tuple[FoundWeights, ...]]:
     """Find the weights of all spots and steps in three dimensions.
@@ -48,6 +49,8 @@ def search_weights(
         The target's structure.
     planned : sequence of PlannedField
         Fields with first weights.
+    let : mapping of str to ndarray, optional
+        LET of each component in every voxel with the first weights, for effect models that need it.
     progress : callable, optional
         Told what is being done.
 
@@ -60,6 +63,8 @@ def search_weights(
     """
     goal = study.goal
     goals, voxels = _goals(study, grid, target)
+    local = None if let is None else {name: values.reshape(-1)[voxels] for name, values in let.items()}
+    constants = effect_model_of(study, planned[0].field.beam.particle).constants(local)
     groups = [[plan] for plan in planned] if goal.weights == "each_field" else [list(planned)]
     what = "weights in three dimensions"
     found: list[FoundWeights] = []
@@ -73,7 +78,7 @@ def search_weights(
                 progress(what, (count + min(step / (1.0 + step), 0.95)) / len(groups))
 
         tell(0, 0.0)
-        one = _search(study, group, grid, voxels, _scaled_goals(goals, share), share, tell)
+        one = _search(_Task(study, grid, voxels, constants), group, _scaled_goals(goals, share), share, tell)
         found.append(one)
         sizes = np.cumsum([int(np.prod(plan.field.shape)) for plan in group])[:-1]
         changed += [
@@ -85,11 +90,19 @@ def search_weights(
     return changed, tuple(found)
 
 
+@dataclass(frozen=True)
+class _Task:
+    """What all responses of a search share."""
+
+    study: Study
+    grid: VoxelGrid
+    voxels: NDArray[np.int64]
+    constants: Mapping[str, tuple[Any, Any]]
+
+
 def _search(
-    study: Study,
+    task: _Task,
     group: Sequence[PlannedField],
-    grid: VoxelGrid,
-    voxels: NDArray[np.int64],
     goals: Sequence[Goal],
     share: float,
     tell: Callable[[int, float], None],
@@ -98,9 +111,9 @@ def _search(
     from dosekit.modulation.corrections import find_weights_corrected
     from dosekit.modulation.weights import find_weights
 
-    goal = study.goal
+    goal = task.study.goal
     start = np.concatenate([np.asarray(plan.field.weights).ravel() for plan in group])
-    exact = _response(study, group, grid, voxels)
+    exact = _response(task, group)
     scale = goal.dose_gy * share
     if goal.robust is not None:
         return find_weights(
@@ -108,14 +121,14 @@ def _search(
             goals,
             scale_gy=scale,
             start=start,
-            scenarios=_scenarios(study, group, grid, voxels),
+            scenarios=_scenarios(task, group),
             robust=goal.robust.join,
             largest_steps=goal.iterations,
             progress=tell,
         )
     return find_weights_corrected(
         exact,
-        _stand_in(study, group, grid, voxels),
+        _stand_in(task, group),
         goals,
         scale_gy=scale,
         start=start,
@@ -129,7 +142,7 @@ def _scaled_goals(goals: Sequence[Goal], share: float) -> list[Goal]:
     return [replace(goal, level_gy=goal.level_gy * share) for goal in goals]
 
 
-def _stand_in(study: Study, group: Sequence[PlannedField], grid: VoxelGrid, voxels: NDArray[np.int64]) -> Response:
+def _stand_in(task: _Task, group: Sequence[PlannedField]) -> Response:
     """Return the quick stand-in for the dose of some fields, as sparse matrices."""
     from scipy.sparse import hstack
 
@@ -137,13 +150,13 @@ def _stand_in(study: Study, group: Sequence[PlannedField], grid: VoxelGrid, voxe
     from dosekit.modulation.responses import EffectResponse, LinearResponse
     from dosekit.modulation.surrogates import pencil_matrices
 
+    study = task.study
     factors: list[dict[str, Any]] = [dict.fromkeys(COMPONENTS, 1.0)]
     model = effect_model_of(study, group[0].field.beam.particle)
     if study.goal.quantity == "effect":
-        constants = model.constants()
-        factors = [{name: constants[name][place] for name in COMPONENTS} for place in (0, 1)]
+        factors = [{name: task.constants[name][place] for name in COMPONENTS} for place in (0, 1)]
     columns = [
-        pencil_matrices(plan.field, plan.library, grid, voxels, factors=factors, star_scale=study.stars.scale)
+        pencil_matrices(plan.field, plan.library, task.grid, task.voxels, factors=factors, star_scale=study.stars.scale)
         for plan in group
     ]
     joined = [hstack([matrices[place] for matrices in columns], format="csr") for place in range(len(factors))]
@@ -191,22 +204,22 @@ def _goals(study: Study, grid: VoxelGrid, target: str) -> tuple[list[Goal], NDAr
 
 
 def _response(
-    study: Study,
+    task: _Task,
     planned: Sequence[PlannedField],
-    grid: VoxelGrid,
-    voxels: NDArray[np.int64],
     *,
+    grid: VoxelGrid | None = None,
     moved_mm: tuple[float, float, float] = (0.0, 0.0, 0.0),
 ) -> Response:
     """Return dose, or effect-weighted dose, in the chosen voxels as a function of the weights."""
     from dosekit.maps.operator import FoldOperator
     from dosekit.modulation.responses import FoldEffectResponse, LinearResponse
 
+    study = task.study
     fields = [_moved(plan.field, moved_mm) for plan in planned]
     operator = FoldOperator(
         fields,
-        grid,
-        voxels=voxels,
+        grid or task.grid,
+        voxels=task.voxels,
         yields=study.stars.yields,
         star_scale=study.stars.scale,
         dose_to=study.outputs.dose_to,
@@ -215,28 +228,26 @@ def _response(
     if study.goal.quantity == "physical":
         return LinearResponse(operator)
     model = effect_model_of(study, fields[0].beam.particle)
-    return FoldEffectResponse(operator, model.constants(), model.tissue, study.goal.fractions)
+    return FoldEffectResponse(operator, task.constants, model.tissue, study.goal.fractions)
 
 
-def _scenarios(
-    study: Study, planned: Sequence[PlannedField], grid: VoxelGrid, voxels: NDArray[np.int64]
-) -> list[Response]:
+def _scenarios(task: _Task, planned: Sequence[PlannedField]) -> list[Response]:
     """Return the responses with an error of range or position, none where the study does not ask for them."""
-    said = study.goal.robust
+    said = task.study.goal.robust
     if said is None:
         return []
     found: list[Response] = []
     if said.range_percent > 0.0:
         for sign in (-1.0, 1.0):
             factor = np.float32(1.0 + sign * said.range_percent / 100.0)
-            denser = grid.replace(density_g_cm3=grid.density_g_cm3 * factor)
-            found.append(_response(study, planned, denser, voxels))
+            denser = task.grid.replace(density_g_cm3=task.grid.density_g_cm3 * factor)
+            found.append(_response(task, planned, grid=denser))
     if said.position_mm > 0.0:
         for axis in range(3):
             for sign in (-1.0, 1.0):
                 moved = [0.0, 0.0, 0.0]
                 moved[axis] = sign * said.position_mm
-                found.append(_response(study, planned, grid, voxels, moved_mm=(moved[0], moved[1], moved[2])))
+                found.append(_response(task, planned, moved_mm=(moved[0], moved[1], moved[2])))
     return found
 
 

@@ -133,7 +133,7 @@ def test_the_record_names_every_output_with_its_hash(finished):
         (("centre_mm = [0, 100, 0]", "centre_mm = [900, 0, 0]"), GridError, "outside the volume"),
         (('phantom = "small_block"', 'ct = "nowhere"'), StudyError, "does not exist"),
         (('phantom = "small_block"', 'phantom = "smal_block"'), UnknownNameError, "small_block"),
-        (("[goal]", "[effect]\nmodel = 'wedenberg'\n[goal]"), StudyError, "LET"),
+        (("[goal]", "[effect]\nmodel = 'wedenburg'\n[goal]"), UnknownNameError, "wedenberg"),
     ],
 )
 def test_bad_studies_end_in_a_clear_error_and_nothing_written(change, error, words, study_text, tmp_path):
