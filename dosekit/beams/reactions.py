@@ -300,7 +300,7 @@ def _cosine_of(kappa: NDArray[np.float64]) -> NDArray[np.float64]:
 def _barashenkov(
     symbol: str, row: str, energy: NDArray[np.float64], inelastic: NDArray[np.float64], elastic: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return reaction and elastic cross sections of the evaluated table, scaled from the other table outside its range."""
+    """Return reaction and elastic cross sections of the evaluated table, scaled from the other one outside its range."""
     table = read_table("pion_minus_cross_sections")
     known = list(dict.fromkeys(table["element"]))
     mass = element(symbol).atomic_weight
