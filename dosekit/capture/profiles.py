@@ -36,7 +36,7 @@ from dosekit.errors import UnknownNameError
 __all__ = ["Profile", "charged_profile", "element_profile", "neutron_response", "photon_response", "star_profile"]
 
 _REACTION_PER_MM = 0.5 * 0.0012
-_PARTS = 8
+_PARTS = 16
 _HISTORIES = 6000
 _SEED = 20240501
 _IONS = {"helium3": "helium3", "alpha": "alpha", "heavy": "carbon12"}

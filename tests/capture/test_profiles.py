@@ -126,20 +126,7 @@ def test_charged_stars_at_a_point(case, component, evidence):
 
 
 @pytest.mark.reference
-@pytest.mark.parametrize(
-    "case",
-    [
-        "point_water",
-        pytest.param(
-            "point_lung",
-            marks=pytest.mark.xfail(
-                strict=True,
-                reason="measured up to 45 % too much at 130 to 165 mm of lung (protons over 75 MeV, 0.3 % of the maximum), "
-                "where the tabled spectra have bins of 9 MeV",
-            ),
-        ),
-    ],
-)
+@pytest.mark.parametrize("case", ["point_water", "point_lung"])
 def test_charged_stars_far_from_a_point(case):
     """The far tail (over 0.1 % of the maximum) within 30 %, in groups of 5 mm."""
     ours, theirs = compared(case, "star_light", np.arange(0, 201, 5))
@@ -170,8 +157,8 @@ def test_neutral_stars_at_a_point_coarsely(case, component, radius_mm, evidence)
 @pytest.mark.reference
 @pytest.mark.xfail(
     strict=True,
-    reason="measured 12 to 21 % more than the transport results in water: hydrogen kerma alone from the published n-p "
-    "cross-sections makes nine tenths of what they show",
+    reason="measured 12 to 21 % more than the transport results in water; hydrogen alone, from published n-p "
+    "cross-sections, makes nine tenths of what they show",
 )
 def test_neutrons_at_a_point_within_three_percent():
     ours, theirs = compared("point_water", "star_neutron", np.arange(0, 201, 20))
