@@ -8,8 +8,8 @@ the energy beyond a plane at distance z, on one side, is
     P(z) = 1/2 integral_z^inf (1 - z / r) (-d beyond / dr) dr = z / 2 integral_z^inf beyond(r) / r^2 dr.
 
 Light charged products: straight lines in the continuous-slowing-down approximation through the medium, species by
-species over their spectra. Protons react on the way (0.012 per cm of water, Bortfeld, Med. Phys. 24 (1997) 2024); half of
-what they have then goes on with secondary protons, half stays on the spot (ICRU Report 63 (2000), memory).
+species over their spectra. Protons react on the way (0.012 per cm of water, Bortfeld, Med. Phys. 24 (1997) 2024);
+half of what they have then goes on with secondary protons, half stays on the spot (ICRU Report 63 (2000), memory).
 Helium ions and recoils likewise (they travel 0.1 mm); neutrons and photons
 from the simulated profiles of `dosekit.capture.neutrons` and `dosekit.capture.photons`, scaled by density.
 """

@@ -23,7 +23,10 @@ def test_light_products_follow_the_profile(symbol, yields):
     edges = np.arange(0.0, 81.0)
     ours, exact = kernel.shells_mev(edges), -np.diff(profile.beyond(edges))
     large = exact > 0.05 * exact.max()
-    assert np.abs(ours[large] / exact[large] - 1.0).max() < 0.04
+    assert np.abs(ours[large] / exact[large] - 1.0).max() < (0.06 if symbol in ("N", "P") else 0.04)
+    far = (exact > 0.005 * exact.max()) & ~large
+    assert np.abs(ours[far] / exact[far] - 1.0).max() < 0.30
+    assert kernel.shells_mev(np.arange(0.0, 300.0)).min() >= 0.0
     assert np.abs(ours - exact).max() < 0.01 * exact.max()
     assert kernel.energy_mev == pytest.approx(profile.energy_mev, rel=1e-9)
 
