@@ -80,22 +80,3 @@ def mixed_grid(shape_zyx, rng, spacing_mm=(3.0, 2.5, 4.0)):
     density = np.array([stuff.density_g_cm3 for stuff in stuffs])[index] * rng.uniform(0.5, 1.0, shape_zyx)
     origin = tuple(-0.5 * s * (n - 1) for s, n in zip(spacing_mm, shape_zyx[::-1], strict=True))
     return VoxelGrid(origin, spacing_mm, density.astype(np.float32), index, stuffs)
-
-
-def ball_grid(rotation, *, half=26, spacing_mm=2.0, edge_mm=60.0):
-    """A cube of water with a bone insert, turned by a rotation (columns: the cube's axes), in vacuum; sub-sampled edges."""
-    n = 2 * half + 1
-    sub = 4
-    centres = (np.arange(n) - half) * spacing_mm
-    fine = (np.arange(n * sub) - 0.5 * (n * sub - 1)) * spacing_mm / sub
-    z, y, x = np.meshgrid(fine, fine, fine, indexing="ij")
-    local = np.tensordot(np.asarray(rotation).T, np.stack([x, y, z]), axes=1)
-    inside = np.all(np.abs(local) <= 0.5 * edge_mm, axis=0).astype(np.float32)
-    share = inside.reshape(n, sub, n, sub, n, sub).mean(axis=(1, 3, 5))
-    return VoxelGrid(
-        (centres[0],) * 3,
-        (spacing_mm,) * 3,
-        share.astype(np.float32),
-        np.zeros((n, n, n), dtype=np.uint16),
-        (material("water"),),
-    )

@@ -188,11 +188,11 @@ def lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weight
 
 
 @njit(inline="always", error_model="numpy")
-def _advance(state, r, c, j, dl, wet_before, wet, local, inverse_bin, power, last):  # type: ignore[no-untyped-def]
+def _advance(state, r, c, j, dl, wet_before, wet, local, inverse_bin, power, alive, last):  # type: ignore[no-untyped-def]
     """Carry the Fermi-Eyges moments of every step of one ray to the next plane."""
     i, f = _row(0.5 * (wet_before + wet), inverse_bin, last)
     scatter = local if j > 0 else 0.0
-    for k in range(power.shape[1]):
+    for k in range(alive[i]):
         t = scatter * ((1.0 - f) * power[i, k] + f * power[i + 1, k])
         a0 = state[r, c, 0, k]
         a1 = state[r, c, 1, k]
@@ -207,63 +207,78 @@ def _split(variance, inverse_width_step, ladder):  # type: ignore[no-untyped-def
     if variance <= 0.0:
         return 0, 0.0
     g = min(int(np.sqrt(variance) * inverse_width_step), ladder.size - 2)
-    share = (variance - ladder[g]) / (ladder[g + 1] - ladder[g])
+    share = (variance * inverse_width_step * inverse_width_step - g * g) / (2.0 * g + 1.0)
     return g, min(max(share, 0.0), 1.0)
 
 
 @njit(error_model="numpy", cache=True)
 def _fill_row(  # type: ignore[no-untyped-def]
-    j, r, gap, fluence, wet, local, slant, inverse_bin, power, survivors, narrow, state, reference, growth, ladder,
-    inverse_width_step, broad, column, share_u, source, touched, gathered,
+    j, r, gap, fluence, wet, local, slant, inverse_bin, power, alive, survivors, narrow, state, reference, growth,
+    ladder, inverse_width_step, broad, column, share_u, source, touched, gathered,
 ):  # fmt: skip
     """Take one row of rays to plane j and share out what they leave there: widths of the core, coarse columns."""
     steps = power.shape[1]
     last = power.shape[0] - 1
     parts = broad.shape[2]
-    total = np.zeros(parts)
+    rungs = ladder.size
+    total = np.empty(parts)
+    energy, stops = np.empty(steps), np.empty(steps)
+    rung, upper = np.empty(steps, dtype=np.int64), np.empty(steps)
+    here = np.zeros((rungs + 1, 2))
     touched[r, :] = 0
-    source[:, :, r, :] = 0.0
     gathered[r] = 0.0
     for c in range(wet.shape[2]):
         depth = wet[j, r, c]
         before = wet[j - 1, r, c] if j > 0 else 0.0
-        _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, last)
+        _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, alive, last)
         i, f = _row(depth, inverse_bin, last)
         total[:] = 0.0
         some = False
+        n = min(int(depth * inverse_bin * 4.0), broad.shape[0] - 1)
         for k in range(steps):
             number = fluence[r, c, k] * slant[r, c]
             if number == 0.0:
                 continue
             some = True
-            low = (1.0 - f) * number
-            high = f * number
             for b in range(parts):
-                total[b] += low * broad[i, k, b] + high * broad[i + 1, k, b]
-            energy = low * narrow[i, k, 0] + high * narrow[i + 1, k, 0]
-            stops = low * narrow[i, k, 1] + high * narrow[i + 1, k, 1]
-            if energy == 0.0 and stops == 0.0:
-                continue
+                total[b] += number * broad[n, k, b]
+        if not some:
+            continue
+        for k in range(alive[i]):
+            number = fluence[r, c, k] * slant[r, c]
+            energy[k] = number * ((1.0 - f) * narrow[i, 0, k] + f * narrow[i + 1, 0, k])
+            stops[k] = number * ((1.0 - f) * narrow[i, 1, k] + f * narrow[i + 1, 1, k])
             left = (1.0 - f) * survivors[i, k] + f * survivors[i + 1, k]
-            variance = (state[r, c, 2, k] - reference[k] * growth) * left
-            g, share = _split(variance, inverse_width_step, ladder)
-            source[g, 0, r, c] += (1.0 - share) * energy
-            source[g, 1, r, c] += (1.0 - share) * stops
-            touched[r, g] = 1
-            if share > 0.0:
-                source[g + 1, 0, r, c] += share * energy
-                source[g + 1, 1, r, c] += share * stops
-                touched[r, g + 1] = 1
-        if some:
-            n = column[c] - column[0]
-            for b in range(parts):
-                gathered[r, n, b] += (1.0 - share_u[c]) * total[b]
-                gathered[r, n + 1, b] += share_u[c] * total[b]
+            variance = max((state[r, c, 2, k] - reference[k] * growth) * left, 0.0)
+            g = min(int(np.sqrt(variance) * inverse_width_step), rungs - 2)
+            rung[k] = g
+            upper[k] = min((variance * inverse_width_step * inverse_width_step - g * g) / (2.0 * g + 1.0), 1.0)
+        for k in range(alive[i]):
+            if energy[k] == 0.0 and stops[k] == 0.0:
+                continue
+            g = rung[k]
+            here[g, 0] += (1.0 - upper[k]) * energy[k]
+            here[g, 1] += (1.0 - upper[k]) * stops[k]
+            here[g + 1, 0] += upper[k] * energy[k]
+            here[g + 1, 1] += upper[k] * stops[k]
+        for g in range(rungs):
+            if here[g, 0] != 0.0 or here[g, 1] != 0.0:
+                if touched[r, g] == 0:
+                    source[g, :, r] = 0.0
+                source[g, 0, r, c] = here[g, 0]
+                source[g, 1, r, c] = here[g, 1]
+                touched[r, g] = 1
+                here[g, 0] = 0.0
+                here[g, 1] = 0.0
+        n = column[c] - column[0]
+        for b in range(parts):
+            gathered[r, n, b] += (1.0 - share_u[c]) * total[b]
+            gathered[r, n + 1, b] += share_u[c] * total[b]
 
 
 @njit(error_model="numpy", cache=True)
 def _touch_row(  # type: ignore[no-untyped-def]
-    j, r, gap, wet, local, slant, inverse_bin, power, survivors, narrow, state, reference, growth, ladder,
+    j, r, gap, wet, local, slant, inverse_bin, power, alive, survivors, narrow, state, reference, growth, ladder,
     inverse_width_step, touched, variances,
 ):  # fmt: skip
     """Take one row of rays to plane j; keep their variances and note which widths they use."""
@@ -272,11 +287,11 @@ def _touch_row(  # type: ignore[no-untyped-def]
     for c in range(wet.shape[2]):
         depth = wet[j, r, c]
         before = wet[j - 1, r, c] if j > 0 else 0.0
-        _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, last)
+        _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, alive, last)
         i, f = _row(depth, inverse_bin, last)
-        for k in range(power.shape[1]):
-            energy = (1.0 - f) * narrow[i, k, 0] + f * narrow[i + 1, k, 0]
-            stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
+        for k in range(alive[i]):
+            energy = (1.0 - f) * narrow[i, 0, k] + f * narrow[i + 1, 0, k]
+            stops = (1.0 - f) * narrow[i, 1, k] + f * narrow[i + 1, 1, k]
             if energy == 0.0 and stops == 0.0:
                 continue
             left = (1.0 - f) * survivors[i, k] + f * survivors[i + 1, k]
@@ -288,46 +303,56 @@ def _touch_row(  # type: ignore[no-untyped-def]
 
 
 @njit(error_model="numpy", cache=True)
-def _spread_plane(source, touched, taps_u, taps_v, radius, first_row, first_column, per_area, out):  # type: ignore[no-untyped-def]
-    """Spread every width of one plane along u and v: out[row, column, part] from source[rung, part, v, u]."""
-    rungs, parts, nv, nu = source.shape
-    rows, columns = out.shape[0], out.shape[1]
-    across = np.empty((parts, nv, columns))
-    total = np.zeros((parts, rows, columns))
-    for g in range(rungs):
+def _spread_plane(  # type: ignore[no-untyped-def]
+    source, touched, taps_u, taps_v, radius, first_row, first_column, component, per_area, out
+):
+    """Spread every width of one plane along u and v: out[row, column, component] from source[width, part, v, u]."""
+    widths, parts, nv, nu = source.shape
+    rows, columns, components = out.shape
+    across = np.empty((nv, columns))
+    total = np.zeros((components, rows, columns))
+    for g in range(widths):
         if not touched[:, g].any():
             continue
         reach = radius[g]
         for part in range(parts):
+            target = total[component[g] + part]
             for r in range(nv):
-                across[part, r, :] = 0.0
+                line = across[r]
+                line[:] = 0.0
                 if touched[r, g] == 0:
                     continue
+                given = source[g, part, r]
                 for t in range(-reach, reach + 1):
                     tap = taps_u[g, abs(t)]
-                    shift = first_column + t
-                    for c in range(max(0, -shift), min(nu, columns - shift)):
-                        across[part, r, shift + c] += tap * source[g, part, r, c]
+                    begin = first_column + t
+                    c0, c1 = max(0, -begin), min(nu, columns - begin)
+                    if c1 > c0:
+                        _add_scaled(line[begin + c0 : begin + c1], given[c0:c1], tap)
             for row in range(rows):
                 for r in range(max(0, row - first_row - reach), min(nv, row - first_row + reach + 1)):
-                    if touched[r, g] == 0:
-                        continue
-                    tap = taps_v[g, abs(row - first_row - r)]
-                    for c in range(columns):
-                        total[part, row, c] += tap * across[part, r, c]
+                    if touched[r, g]:
+                        _add_scaled(target[row], across[r], taps_v[g, abs(row - first_row - r)])
     for row in range(rows):
         for c in range(columns):
-            for part in range(parts):
-                out[row, c, part] = total[part, row, c] * per_area
+            for m in range(components):
+                out[row, c, m] = total[m, row, c] * per_area
 
 
 @njit(error_model="numpy", cache=True)
-def _gather_plane(plane, touched, taps_u, taps_v, radius, first_row, first_column, per_area, source):  # type: ignore[no-untyped-def]
+def _gather_plane(  # type: ignore[no-untyped-def]
+    plane, touched, taps_u, taps_v, radius, first_row, first_column, component, per_area, source
+):
     """Transpose of `_spread_plane`."""
-    rungs, parts, nv, nu = source.shape
-    rows, columns = plane.shape[0], plane.shape[1]
+    widths, parts, nv, nu = source.shape
+    rows, columns, components = plane.shape
+    wanted = np.empty((components, rows, columns))
+    for row in range(rows):
+        for c in range(columns):
+            for m in range(components):
+                wanted[m, row, c] = plane[row, c, m] * per_area
     line = np.empty(columns)
-    for g in range(rungs):
+    for g in range(widths):
         reach = radius[g]
         for r in range(nv):
             if touched[r, g] == 0:
@@ -335,82 +360,39 @@ def _gather_plane(plane, touched, taps_u, taps_v, radius, first_row, first_colum
             for part in range(parts):
                 line[:] = 0.0
                 for row in range(max(0, first_row + r - reach), min(rows, first_row + r + reach + 1)):
-                    tap = taps_v[g, abs(row - first_row - r)] * per_area
-                    for c in range(columns):
-                        line[c] += tap * plane[row, c, part]
-                source[g, part, r, :] = 0.0
+                    _add_scaled(line, wanted[component[g] + part, row], taps_v[g, abs(row - first_row - r)])
+                given = source[g, part, r]
+                given[:] = 0.0
                 for t in range(-reach, reach + 1):
-                    tap = taps_u[g, abs(t)]
-                    shift = first_column + t
-                    for c in range(max(0, -shift), min(nu, columns - shift)):
-                        source[g, part, r, c] += tap * line[shift + c]
+                    begin = first_column + t
+                    c0, c1 = max(0, -begin), min(nu, columns - begin)
+                    if c1 > c0:
+                        _add_scaled(given[c0:c1], line[begin + c0 : begin + c1], taps_u[g, abs(t)])
 
 
 @njit(error_model="numpy", cache=True)
-def _spread_coarse(  # type: ignore[no-untyped-def]
-    gathered, coarse_row, share_v, taps_u, taps_v, reach, first_row, first_column, component, per_area, out
-):
-    """Spread the broad parts of one plane: out[row, column, component] from gathered[v, column of rays, part]."""
+def _add_scaled(target, values, factor):  # type: ignore[no-untyped-def]
+    """Add a multiple of one line to another."""
+    for c in range(target.size):
+        target[c] += factor * values[c]
+
+
+@njit(error_model="numpy", cache=True)
+def _to_coarse_rows(gathered, coarse_row, share_v, source):  # type: ignore[no-untyped-def]
+    """Share out rows of rays among coarse rows: source[part, 0, row, column] from gathered[v, column, part]."""
     nv, active, parts = gathered.shape
-    rows, columns = out.shape[0], out.shape[1]
-    lines = coarse_row[nv - 1] - coarse_row[0] + 2
-    source = np.zeros((lines, active, parts))
-    across = np.zeros((lines, columns, parts))
-    cell = np.zeros(parts)
+    source[:] = 0.0
     for r in range(nv):
         n = coarse_row[r] - coarse_row[0]
-        for m in range(active):
-            for b in range(parts):
-                source[n, m, b] += (1.0 - share_v[r]) * gathered[r, m, b]
-                source[n + 1, m, b] += share_v[r] * gathered[r, m, b]
-    for n in range(lines):
-        for column in range(columns):
+        for b in range(parts):
             for m in range(active):
-                offset = abs(column - first_column - m)
-                for b in range(reach[offset]):
-                    across[n, column, b] += taps_u[offset, b] * source[n, m, b]
-    for row in range(rows):
-        for column in range(columns):
-            cell[:] = 0.0
-            for n in range(lines):
-                offset = abs(row - first_row - n)
-                for b in range(reach[offset]):
-                    cell[b] += taps_v[offset, b] * across[n, column, b]
-            for m in range(out.shape[2]):
-                out[row, column, m] = 0.0
-            for b in range(parts):
-                out[row, column, component[b]] += cell[b] * per_area
-
-
-@njit(error_model="numpy", cache=True)
-def _gather_coarse(plane, taps_u, taps_v, reach, first_row, first_column, component, per_area, source):  # type: ignore[no-untyped-def]
-    """Transpose of `_spread_coarse`, up to the coarse rows of rays."""
-    lines, active, parts = source.shape
-    rows, columns = plane.shape[0], plane.shape[1]
-    cell = np.zeros(parts)
-    across = np.zeros((columns, parts))
-    for n in range(lines):
-        for column in range(columns):
-            cell[:] = 0.0
-            for row in range(rows):
-                offset = abs(row - first_row - n)
-                for b in range(reach[offset]):
-                    cell[b] += taps_v[offset, b] * plane[row, column, component[b]]
-            for b in range(parts):
-                across[column, b] = cell[b] * per_area
-        for m in range(active):
-            cell[:] = 0.0
-            for column in range(columns):
-                offset = abs(column - first_column - m)
-                for b in range(reach[offset]):
-                    cell[b] += taps_u[offset, b] * across[column, b]
-            for b in range(parts):
-                source[n, m, b] = cell[b]
+                source[b, 0, n, m] += (1.0 - share_v[r]) * gathered[r, m, b]
+                source[b, 0, n + 1, m] += share_v[r] * gathered[r, m, b]
 
 
 @njit(error_model="numpy", cache=True)
 def _read_row(  # type: ignore[no-untyped-def]
-    j, r, wet, slant, inverse_bin, narrow, variances, ladder, inverse_width_step, broad, column, share_u, row,
+    j, r, wet, slant, inverse_bin, alive, narrow, variances, ladder, inverse_width_step, broad, column, share_u, row,
     share_v, source, coarse, fluence,
 ):  # fmt: skip
     """Transpose of `_fill_row`: what each particle on a row of rays is worth at plane j."""
@@ -421,22 +403,25 @@ def _read_row(  # type: ignore[no-untyped-def]
     for c in range(wet.shape[2]):
         m = column[c] - column[0]
         for b in range(parts):
-            total[b] = (1.0 - share_v[r]) * (
-                (1.0 - share_u[c]) * coarse[n, m, b] + share_u[c] * coarse[n, m + 1, b]
-            ) + share_v[r] * ((1.0 - share_u[c]) * coarse[n + 1, m, b] + share_u[c] * coarse[n + 1, m + 1, b])
+            near = (1.0 - share_u[c]) * coarse[b, 0, n, m] + share_u[c] * coarse[b, 0, n, m + 1]
+            far = (1.0 - share_u[c]) * coarse[b, 0, n + 1, m] + share_u[c] * coarse[b, 0, n + 1, m + 1]
+            total[b] = (1.0 - share_v[r]) * near + share_v[r] * far
         i, f = _row(wet[j, r, c], inverse_bin, last)
-        for k in range(narrow.shape[1]):
+        n_row = min(int(wet[j, r, c] * inverse_bin * 4.0), broad.shape[0] - 1)
+        for k in range(narrow.shape[2]):
             value = 0.0
             for b in range(parts):
-                value += total[b] * ((1.0 - f) * broad[i, k, b] + f * broad[i + 1, k, b])
-            energy = (1.0 - f) * narrow[i, k, 0] + f * narrow[i + 1, k, 0]
-            stops = (1.0 - f) * narrow[i, k, 1] + f * narrow[i + 1, k, 1]
+                value += total[b] * broad[n_row, k, b]
+            fluence[r, c, k] += value * slant[r, c]
+        for k in range(alive[i]):
+            energy = (1.0 - f) * narrow[i, 0, k] + f * narrow[i + 1, 0, k]
+            stops = (1.0 - f) * narrow[i, 1, k] + f * narrow[i + 1, 1, k]
             if energy != 0.0 or stops != 0.0:
                 g, share = _split(variances[r, c, k], inverse_width_step, ladder)
-                value += (1.0 - share) * (energy * source[g, 0, r, c] + stops * source[g, 1, r, c])
+                value = (1.0 - share) * (energy * source[g, 0, r, c] + stops * source[g, 1, r, c])
                 if share > 0.0:
                     value += share * (energy * source[g + 1, 0, r, c] + stops * source[g + 1, 1, r, c])
-            fluence[r, c, k] += value * slant[r, c]
+                fluence[r, c, k] += value * slant[r, c]
 
 
 @njit(error_model="numpy", cache=True)
@@ -449,9 +434,9 @@ def _begin(start, state):  # type: ignore[no-untyped-def]
 
 @njit(parallel=True, error_model="numpy", cache=True)
 def spread(  # type: ignore[no-untyped-def]
-    fluence, wet, local, slant, w, inverse_bin, power, survivors, narrow, start, ahead, reference, growth, ladder,
-    inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
-    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_reach,
+    fluence, wet, local, slant, w, inverse_bin, power, alive, survivors, narrow, start, ahead, reference, growth,
+    ladder, inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
+    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_radius,
     broad_component, coarse_first_row, coarse_first_column, coarse_per_area, block, fine_map, coarse_map,
 ):  # fmt: skip
     """Fold the fluence on rays into maps on the planes: fine_map[j, v, u, 2] and coarse_map[j, v, u, component].
@@ -466,32 +451,37 @@ def spread(  # type: ignore[no-untyped-def]
     source = np.empty((block, ladder.size, 2, nv, nu))
     touched = np.zeros((block, nv, ladder.size), dtype=np.uint8)
     gathered = np.empty((block, nv, active_columns, parts))
+    lines = coarse_row[nv - 1] - coarse_row[0] + 2
+    every_part = np.ones((lines, parts), dtype=np.uint8)
+    no_component = np.zeros(ladder.size, dtype=np.int64)
     for begin in range(0, nw, block):
         end = min(begin + block, nw)
         for r in prange(nv):
             for j in range(begin, end):
                 _fill_row(
                     j, r, ahead if j == 0 else w[j] - w[j - 1], fluence, wet, local, slant, inverse_bin, power,
-                    survivors, narrow, state, reference, growth[j], ladder, inverse_width_step, broad, coarse_column,
-                    coarse_share_u, source[j - begin], touched[j - begin], gathered[j - begin],
+                    alive, survivors, narrow, state, reference, growth[j], ladder, inverse_width_step, broad,
+                    coarse_column, coarse_share_u, source[j - begin], touched[j - begin], gathered[j - begin],
                 )  # fmt: skip
         for j in prange(begin, end):
             n = kernel_of_plane[j]
             _spread_plane(
                 source[j - begin], touched[j - begin], taps_u[n], taps_v[n], radius[n], first_row, first_column,
-                per_area[j], fine_map[j],
+                no_component, per_area[j], fine_map[j],
             )  # fmt: skip
-            _spread_coarse(
-                gathered[j - begin], coarse_row, coarse_share_v, broad_taps_u[n], broad_taps_v[n], broad_reach[n],
-                coarse_first_row, coarse_first_column, broad_component, coarse_per_area[j], coarse_map[j],
+            coarse_source = np.empty((parts, 1, lines, active_columns))
+            _to_coarse_rows(gathered[j - begin], coarse_row, coarse_share_v, coarse_source)
+            _spread_plane(
+                coarse_source, every_part, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_first_row,
+                coarse_first_column, broad_component, coarse_per_area[j], coarse_map[j],
             )  # fmt: skip
 
 
 @njit(parallel=True, error_model="numpy", cache=True)
 def spread_transposed(  # type: ignore[no-untyped-def]
-    fine_map, coarse_map, wet, local, slant, w, inverse_bin, power, survivors, narrow, start, ahead, reference,
+    fine_map, coarse_map, wet, local, slant, w, inverse_bin, power, alive, survivors, narrow, start, ahead, reference,
     growth, ladder, inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
-    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_reach,
+    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_radius,
     broad_component, coarse_first_row, coarse_first_column, coarse_per_area, block, fluence,
 ):  # fmt: skip
     """Transpose of `spread`: maps on the planes to fluence on rays."""
@@ -505,13 +495,15 @@ def spread_transposed(  # type: ignore[no-untyped-def]
     source = np.empty((block, ladder.size, 2, nv, nu))
     touched = np.zeros((block, nv, ladder.size), dtype=np.uint8)
     variances = np.zeros((block, nv, nu, steps))
-    coarse_source = np.empty((block, lines, active_columns, broad.shape[2]))
+    coarse_source = np.empty((block, broad.shape[2], 1, lines, active_columns))
+    every_part = np.ones((lines, broad.shape[2]), dtype=np.uint8)
+    no_component = np.zeros(ladder.size, dtype=np.int64)
     for begin in range(0, nw, block):
         end = min(begin + block, nw)
         for r in prange(nv):
             for j in range(begin, end):
                 _touch_row(
-                    j, r, ahead if j == 0 else w[j] - w[j - 1], wet, local, slant, inverse_bin, power, survivors,
+                    j, r, ahead if j == 0 else w[j] - w[j - 1], wet, local, slant, inverse_bin, power, alive, survivors,
                     narrow, state, reference, growth[j], ladder, inverse_width_step, touched[j - begin],
                     variances[j - begin],
                 )  # fmt: skip
@@ -519,17 +511,17 @@ def spread_transposed(  # type: ignore[no-untyped-def]
             n = kernel_of_plane[j]
             _gather_plane(
                 fine_map[j], touched[j - begin], taps_u[n], taps_v[n], radius[n], first_row, first_column,
-                per_area[j], source[j - begin],
+                no_component, per_area[j], source[j - begin],
             )  # fmt: skip
-            _gather_coarse(
-                coarse_map[j], broad_taps_u[n], broad_taps_v[n], broad_reach[n], coarse_first_row,
+            _gather_plane(
+                coarse_map[j], every_part, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_first_row,
                 coarse_first_column, broad_component, coarse_per_area[j], coarse_source[j - begin],
             )  # fmt: skip
         for r in prange(nv):
             for j in range(begin, end):
                 _read_row(
-                    j, r, wet, slant, inverse_bin, narrow, variances[j - begin], ladder, inverse_width_step, broad,
-                    coarse_column, coarse_share_u, coarse_row, coarse_share_v, source[j - begin],
+                    j, r, wet, slant, inverse_bin, alive, narrow, variances[j - begin], ladder, inverse_width_step,
+                    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, source[j - begin],
                     coarse_source[j - begin], fluence,
                 )  # fmt: skip
 
@@ -570,8 +562,8 @@ def deposit(  # type: ignore[no-untyped-def]
     """
     ny, nx = shape[1], shape[2]
     share = 1.0 / (sub[0] * sub[1] * sub[2])
-    parts = fine_map.shape[3]
-    components = coarse_map.shape[3]
+    parts = 2  # of fine_map: energy and stops; written out so that the loops over it vanish
+    components = 6  # of coarse_map: all targets
     chunk = 4096
     for piece in prange((voxels.size + chunk - 1) // chunk):
         value = np.zeros(parts + components)
@@ -610,8 +602,9 @@ def deposit(  # type: ignore[no-untyped-def]
                                         weight = wv * weights_u[dk]
                                         if weight == 0.0:
                                             continue
+                                        cell = fine_map[j + dj, i + di, k + dk]
                                         for m in range(parts):
-                                            value[m] += weight * fine_map[j + dj, i + di, k + dk, m]
+                                            value[m] += weight * cell[m]
                         k, fu, inside_u = _corner(u, coarse_u0, coarse_inverse_h, coarse_map.shape[2])
                         i, fv, inside_v = _corner(v, coarse_v0, coarse_inverse_h, coarse_map.shape[1])
                         if inside_u and inside_v:
@@ -622,8 +615,9 @@ def deposit(  # type: ignore[no-untyped-def]
                                     wv = ww * (fv if di else 1.0 - fv)
                                     for dk in range(2):
                                         weight = wv * (fu if dk else 1.0 - fu) * share
+                                        cell = coarse_map[j + dj, i + di, k + dk]
                                         for m in range(components):
-                                            value[parts + m] += weight * coarse_map[j + dj, i + di, k + dk, m]
+                                            value[parts + m] += weight * cell[m]
             if some:
                 place = places[n]
                 matter = index[flat]
@@ -647,8 +641,8 @@ def deposit_transposed(  # type: ignore[no-untyped-def]
     """
     ny, nx = shape[1], shape[2]
     share = 1.0 / (sub[0] * sub[1] * sub[2])
-    parts = fine_map.shape[3]
-    components = coarse_map.shape[3]
+    parts = 2  # of fine_map: energy and stops; written out so that the loops over it vanish
+    components = 6  # of coarse_map: all targets
     count = slabs.size - 1
     for colour in range(2):
         for half in prange((count - colour + 1) // 2):

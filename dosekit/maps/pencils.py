@@ -36,7 +36,7 @@ __all__ = ["FieldPencils", "field_bytes", "field_pencils"]
 BODY_RSP = 0.05
 """Relative stopping power above which a ray counts as having met something."""
 
-PLANES_AT_ONCE = 16
+PLANES_AT_ONCE = 8
 _COARSEST_MM = 8.0
 _LINEAR_VARIANCE = 1.0 / 6.0  # mean variance that linear interpolation adds, squared lattice steps
 _SPLINE_VARIANCE = 1.0 / 4.0  # variance that interpolation by a quadratic B-spline adds, anywhere
@@ -109,7 +109,6 @@ class FieldPencils:
     coarse: _Lattice
     profiles: tuple[NDArray[Any], ...]
     arguments: tuple[Any, ...]
-    component_targets: NDArray[np.int64]
 
     def fluence(self, weights: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return particles on each ray.
@@ -249,7 +248,7 @@ class FieldPencils:
         """Return maps of nothing."""
         planes = len(self.planes.w_mm)
         fine = np.zeros((planes, len(self.fine.v_mm), len(self.fine.u_mm), 2))
-        coarse = np.zeros((planes, len(self.coarse.v_mm), len(self.coarse.u_mm), len(self.component_targets)))
+        coarse = np.zeros((planes, len(self.coarse.v_mm), len(self.coarse.u_mm), len(TARGETS)))
         return fine, coarse
 
     def _voxel_arguments(
@@ -285,7 +284,7 @@ class FieldPencils:
             1.0 / self.coarse.spacing_mm,
             coarse,
             rows[[TARGETS.index("primary"), TARGETS.index("stops")]],
-            rows[self.component_targets],
+            rows,
             matter.index.reshape(-1),
             matter.rsp.reshape(-1),
         )
@@ -410,10 +409,19 @@ def field_pencils(
     length = max(t.shape[-1] for t, _ in taps)
     taps_u, taps_v = (_padded(t, length) for t, _ in taps)
     radius = np.maximum(taps[0][1], taps[1][1])
-    broad_taps, broad_reach = _broad_taps(part_sigma, extra, scale, factor, fine=fine, coarse=coarse)
+    # spreading rays over coarse nodes and interpolating between them add a sixth each
+    broad_variances = [
+        np.maximum(
+            (part_sigma[None, :] ** 2 + extra[axis][:, None]) / (scale[:, None] * factor**2) - 2.0 * _LINEAR_VARIANCE,
+            0.0,
+        )
+        for axis in range(2)
+    ]
+    broad_taps = [gaussian_taps(v, largest=len(coarse.u_mm) + len(coarse.v_mm)) for v in broad_variances]
+    length = max(t.shape[-1] for t, _ in broad_taps)
+    broad_taps_u, broad_taps_v = (_padded(t, length) for t, _ in broad_taps)
     columns, share_u = _coarse_places(rays.u_mm, coarse.u_mm, coarse.spacing_mm)
     lines, share_v = _coarse_places(rays.v_mm, coarse.v_mm, coarse.spacing_mm)
-    component_targets = np.unique(part_target)
     arguments = (
         rays.wet_mm,
         rays.scatter,
@@ -421,6 +429,7 @@ def field_pencils(
         planes.w_mm,
         1.0 / tables.bin_mm,
         tables.power,
+        tables.alive(),
         tables.survivors,
         tables.narrow,
         tables.start,
@@ -441,10 +450,10 @@ def field_pencils(
         share_u,
         lines,
         share_v,
-        broad_taps[0],
-        broad_taps[1],
-        broad_reach,
-        np.searchsorted(component_targets, part_target),
+        broad_taps_u,
+        broad_taps_v,
+        np.maximum(broad_taps[0][1], broad_taps[1][1]),
+        part_target,
         int(lines[0]),
         int(columns[0]),
         1.0 / (coarse.spacing_mm * magnified) ** 2,
@@ -462,7 +471,6 @@ def field_pencils(
         coarse=coarse,
         profiles=(profiles[0][0], profiles[1][0], profiles[0][1], profiles[1][1]),
         arguments=arguments,
-        component_targets=component_targets,
     )
 
 
@@ -513,14 +521,14 @@ def _air_variance(optics: tuple[float, float, float], distance_mm: NDArray[np.fl
 
 
 def _widest(rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, reference: NDArray[np.float64]) -> float:
-    """Return the largest scatter variance behind the surface, from every second ray, with room for the others."""
+    """Return the largest scatter variance behind the surface, from every third ray, with room for the others."""
     from dosekit.maps import kernels
 
-    counts = np.ascontiguousarray(tables.narrow[:, :, 0] > _SIGNIFICANT * tables.narrow[:, :, 0].max(axis=0))
+    counts = np.ascontiguousarray(tables.narrow[:, 0] > _SIGNIFICANT * tables.narrow[:, 0].max(axis=0))
     variance = kernels.widest_spread(
-        np.ascontiguousarray(rays.wet_mm[:, ::2, ::2]),
-        np.ascontiguousarray(rays.scatter[:, ::2, ::2]),
-        np.ascontiguousarray(rays.slant[::2, ::2]),
+        np.ascontiguousarray(rays.wet_mm[:, ::3, ::3]),
+        np.ascontiguousarray(rays.scatter[:, ::3, ::3]),
+        np.ascontiguousarray(rays.slant[::3, ::3]),
         planes.w_mm,
         1.0 / tables.bin_mm,
         tables.power,
@@ -550,36 +558,12 @@ def _widened(
 
 
 def _parts(tables: StepTables) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.float64]]:
-    """Return the broad parts; one of nothing when there are none."""
-    if len(tables.part_sigma_mm):
-        return tables.part_sigma_mm, tables.part_target, tables.broad
-    rows, steps, _ = tables.broad.shape
-    return np.array([10.0]), np.zeros(1, dtype=np.int64), np.zeros((rows, steps, 1))
-
-
-def _broad_taps(
-    part_sigma: NDArray[np.float64],
-    extra: NDArray[np.float64],
-    scale: NDArray[np.float64],
-    factor: int,
-    *,
-    fine: _Lattice,
-    coarse: _Lattice,
-) -> tuple[list[NDArray[np.float64]], NDArray[np.int64]]:
-    """Return taps [plane, distance, part] along u and v, and how many parts reach each distance."""
-    del fine
-    longest = max(len(coarse.u_mm), len(coarse.v_mm))
-    taps, reaches = [], []
-    for axis in range(2):
-        variance = (part_sigma[None, :] ** 2 + extra[axis][:, None]) / (scale[:, None] * factor**2)
-        # spreading rays over coarse nodes and interpolating between them add a sixth each
-        made, reach = gaussian_taps(np.maximum(variance - 2.0 * _LINEAR_VARIANCE, 0.0), largest=longest)
-        taps.append(np.ascontiguousarray(_padded(made, longest + 1).transpose(0, 2, 1)))
-        reaches.append(reach)
-    reach = np.maximum(reaches[0], reaches[1])
-    reach = np.maximum.accumulate(reach[:, ::-1], axis=1)[:, ::-1]  # parts are in falling order of width
-    distance = np.arange(longest + 1)
-    return taps, (reach[:, None, :] >= distance[None, :, None]).sum(axis=2)
+    """Return the broad parts, with empty ones up to a multiple of eight: loops over parts then run in full vectors."""
+    count = len(tables.part_sigma_mm)
+    more = 8 - count % 8 if count % 8 or not count else 0
+    sigma = np.concatenate([tables.part_sigma_mm, np.full(more, tables.part_sigma_mm.min(initial=10.0))])
+    target = np.concatenate([tables.part_target, np.full(more, tables.part_target.min(initial=0))])
+    return sigma, target, np.ascontiguousarray(np.pad(tables.broad, [(0, 0), (0, 0), (0, more)]))
 
 
 def _coarse_places(

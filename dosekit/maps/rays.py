@@ -6,7 +6,7 @@ split into rays and the edge of a bone inside a spot divides it. Where a lattice
 voxels, the nodes are laid on the points at which voxels are sampled.
 
 Along each ray the relative stopping power and the scattering power are sampled by linear interpolation between voxel
-centres at several points for each plane, and summed to the water-equivalent path.
+centres at two points or more for each voxel, and summed to the water-equivalent path.
 """
 
 from __future__ import annotations
@@ -29,7 +29,7 @@ __all__ = ["Matter", "Planes", "RayTrace", "matter_of", "plane_lattice", "ray_sp
 LARGEST_RAY_SPACING_MM = 2.5
 SMALLEST_RAY_SPACING_MM = 0.8
 RAYS_PER_SPOT_SIGMA = 2.0
-SAMPLES_PER_PLANE = 4
+SAMPLES_PER_VOXEL = 2
 _NEAREST_TO_SOURCE = 0.1  # part of the source distance that is never entered
 
 
@@ -329,6 +329,8 @@ def trace(planes: Planes, matter: Matter, u_mm: NDArray[np.float64], v_mm: NDArr
     frame = planes.frame
     inverse = 0.0 if frame.source_distance_mm is None else 1.0 / frame.source_distance_mm
     shape = (len(planes.w_mm), len(v_mm), len(u_mm))
+    step = float(planes.w_mm[1] - planes.w_mm[0])
+    samples = int(np.ceil(SAMPLES_PER_VOXEL * step / float(matter.spacing_mm.min()) - 1e-9))
     wet, scatter = np.zeros(shape), np.zeros(shape)
     kernels.trace_rays(
         matter.rsp,
@@ -342,7 +344,7 @@ def trace(planes: Planes, matter: Matter, u_mm: NDArray[np.float64], v_mm: NDArr
         v_mm,
         planes.w_mm,
         planes.lead_mm,
-        SAMPLES_PER_PLANE,
+        samples,
         wet,
         scatter,
     )

@@ -8,7 +8,8 @@ The library says, for each range step, what a broad beam leaves in water at each
             fixed widths so that the variance is kept exactly at every depth (a sum of Gaussians);
 ``power``   the core's scattering power in water, rad2 per mm, by differential Moliere (Gottschalk 2010).
 
-Depth rows are bin centres; a row of zeros follows the last.
+Depth rows are bin centres; a row of zeros follows the last. ``broad`` varies slowly and is read from the nearest of
+four rows to a bin.
 """
 
 from __future__ import annotations
@@ -39,8 +40,8 @@ BROAD_TARGETS: dict[str, str] = {
 }
 """Quantities of the library that are spread by fixed widths, and where they go."""
 
-_MOST_WIDTHS = 5
-_WIDTH_RATIO = 1.5
+_MOST_WIDTHS = 3
+_WIDTH_RATIO = 2.0
 _SIGNIFICANT = 1e-4
 _NEGLIGIBLE = 1e-10
 _GONE = 1e-3
@@ -57,13 +58,13 @@ class StepTables:
     bin_mm : float
         Width of a depth row, mm of water.
     narrow : ndarray
-        Energy (MeV/mm) and stops (1/mm) of the core per particle, shape (rows, K, 2).
+        Energy (MeV/mm) and stops (1/mm) of the core per particle, shape (rows, 2, K).
     power : ndarray
         Scattering power of the core in water, rad2/mm, shape (rows, K).
     survivors : ndarray
         Scatter variance of those that reach a depth over that of the mean particle, shape (rows, K).
     broad : ndarray
-        Energy or stops per part, shape (rows, K, parts).
+        Energy or stops per part, shape (4 rows, K, parts): four rows to a depth bin.
     part_sigma_mm : ndarray
         Width of each part, falling, shape (parts,), mm.
     part_target : ndarray
@@ -89,6 +90,20 @@ class StepTables:
         """Spread from the range shifter and the gap at the surface, shape (K,), mm2."""
         a0, a1, a2 = self.start
         return np.asarray(a2 + 2.0 * a1 * self.gap_mm + a0 * self.gap_mm**2)
+
+    def alive(self) -> NDArray[np.int64]:
+        """Return how many steps must be followed at each row: up to the last whose core is still needed.
+
+        Returns
+        -------
+        ndarray
+            Number of steps, shape (rows,).
+        """
+        exists = (self.power > 0.0) | (self.narrow > 0.0).any(axis=1)
+        exists[:-1] |= exists[1:]
+        exists = np.logical_or.accumulate(exists[::-1], axis=0)[::-1]
+        last = exists.shape[1] - exists[:, ::-1].argmax(axis=1)
+        return np.where(exists.any(axis=1), last, 0).astype(np.int64)
 
 
 def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
@@ -137,10 +152,10 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     broad = np.stack([values[n] for n in order], axis=2) if len(order) else np.zeros(shape)
     return StepTables(
         bin_mm=bin_mm,
-        narrow=_rows(narrow),
+        narrow=np.ascontiguousarray(_rows(narrow).transpose(0, 2, 1)),
         power=_rows(power),
         survivors=_rows(survivors),
-        broad=_rows(broad),
+        broad=_quarter_rows(broad),
         part_sigma_mm=np.array([sigmas[n] for n in order], dtype=np.float64),
         part_target=np.array([targets[n] for n in order], dtype=np.int64),
         start=start,
@@ -242,3 +257,12 @@ def _rows(table: NDArray[np.float64]) -> NDArray[np.float64]:
     """Turn (K, N, ...) into rows of depth (N + 1, K, ...), the last one zero."""
     rows = np.moveaxis(table, 1, 0)
     return np.ascontiguousarray(np.concatenate([rows, np.zeros((1, *rows.shape[1:]))]))
+
+
+def _quarter_rows(table: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Turn (K, N, parts) into rows at the middles of quarter bins, the last one zero."""
+    rows = _rows(table)
+    place = np.clip((np.arange(4 * table.shape[1]) + 0.5) / 4.0 - 0.5, 0.0, table.shape[1] - 1.0)
+    low = np.minimum(place.astype(int), table.shape[1] - 2)
+    part = (place - low)[:, None, None]
+    return np.concatenate([(1.0 - part) * rows[low] + part * rows[low + 1], rows[-1:]])
