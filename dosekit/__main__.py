@@ -193,15 +193,18 @@ def export(phantom: str, out: Path, spacing: float | None) -> None:
 
 
 @cli.command()
-@click.argument("dose", type=click.Path(path_type=Path))
-@click.option("--star-scale", type=float, default=1.0, show_default=True, help="Factor on the charged star energy.")
-@click.option("--yields", type=click.Choice(["evaluated", "cascade"]), help="Change the star yield set.")
+@click.argument("folder", type=click.Path(path_type=Path))
+@click.option("--star-scale", type=float, help="Another factor on the charged star energy.")
+@click.option("--yields", type=click.Choice(["evaluated", "cascade"]), help="Another star yield set.")
+@click.option(
+    "--beside", type=click.Path(path_type=Path), default=Path(), help="Folder that paths in the study are relative to."
+)
 @click.option("-o", "--out", type=click.Path(path_type=Path), required=True, help="NetCDF file to write.")
-def reweigh(dose: Path, star_scale: float, yields: str | None, out: Path) -> None:
-    """Change star yields on a finished run's DOSE (NetCDF) without folding again."""
+def reweigh(folder: Path, star_scale: float | None, yields: str | None, beside: Path, out: Path) -> None:
+    """Change star yields on a finished run's FOLDER without folding again."""
     from dosekit.studies.small_volumes import reweigh_file
 
-    click.echo(reweigh_file(dose, out, star_scale=star_scale, yields=yields))
+    click.echo(reweigh_file(folder, out, star_scale=star_scale, yields=yields, beside=beside))
 
 
 def _contaminants(particle: str, muons: float, electrons: float) -> dict[str, float]:

@@ -19,9 +19,11 @@ from dosekit.errors import StudyError
 
 __all__ = [
     "BeamSection",
+    "ComparisonSection",
     "EffectSection",
     "FieldSection",
     "GoalSection",
+    "ImportedSection",
     "MachineSection",
     "OrganSection",
     "OutputsSection",
@@ -183,6 +185,20 @@ class MachineSection(_Section):
     particles_per_s: float = Field(default=1.0e8, gt=0)
 
 
+class ImportedSection(_Section):
+    """A depth curve of another particle, brought in as CSV with its source in the file."""
+
+    file: str
+    name: str | None = None
+
+
+class ComparisonSection(_Section):
+    """Other particles for the same anatomy and goals; momentum, weights and effect are found anew for each."""
+
+    particles: tuple[Literal["pi-", "pi+", "mu-", "mu+", "proton"], ...] = Field(default=(), max_length=4)
+    curve: tuple[ImportedSection, ...] = ()
+
+
 class OutputsSection(_Section):
     """What is written."""
 
@@ -209,6 +225,7 @@ class Study(_Section):
     effect: EffectSection = Field(default_factory=EffectSection)
     stars: StarsSection = Field(default_factory=StarsSection)
     machine: MachineSection = Field(default_factory=MachineSection)
+    comparison: ComparisonSection = Field(default_factory=ComparisonSection)
     outputs: OutputsSection = Field(default_factory=OutputsSection)
 
     @model_validator(mode="after")

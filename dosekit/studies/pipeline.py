@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from dosekit.basis.components import COMPONENTS, STAR_COMPONENTS
 from dosekit.errors import DosekitWarning, ReachError
+from dosekit.studies.comparing import study_for
 from dosekit.studies.model import Study, read_study
 from dosekit.studies.planning import PlannedField, effect_model_of, plan_field
 from dosekit.studies.quality import let_maps
@@ -114,11 +115,20 @@ def compute(study: Study, *, base: str | Path = ".", progress: Progress | None =
     with warnings.catch_warnings(record=True) as caught:
         warnings.simplefilter("ignore")
         warnings.simplefilter("always", DosekitWarning)
-        result = _compute(study, Path(base), tell)
+        result = replace(_compute(study, Path(base), tell), base=Path(base))
+        others = tuple(
+            _compute(study_for(study, particle), Path(base), _prefixed(tell, particle))
+            for particle in study.comparison.particles
+        )
     told = tuple(dict.fromkeys(str(item.message) for item in caught if issubclass(item.category, DosekitWarning)))
     for item in caught:
         warnings.warn_explicit(item.message, item.category, item.filename, item.lineno)
-    return replace(result, warnings=told, summary=replace(result.summary, warnings=told))
+    return replace(result, warnings=told, summary=replace(result.summary, warnings=told), others=others)
+
+
+def _prefixed(tell: Progress, particle: str) -> Progress:
+    """Return a progress function that names the particle."""
+    return lambda what, fraction: tell(f"{particle}: {what}", fraction)
 
 
 def _compute(study: Study, base: Path, tell: Progress) -> Result:

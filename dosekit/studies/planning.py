@@ -33,6 +33,9 @@ __all__ = ["GRAY_PER_UNIT", "PlannedField", "chosen_momentum", "effect_model_of"
 GRAY_PER_UNIT = 1.602176634e-10 * 1e3 * 1e9
 """Dose in water (Gy) of 1e9 particles per mm2 that leave 1 MeV/mm each: 1e9 x 1e3 mm3/g x 1.602e-10 Gy g/MeV."""
 
+PROTON_FACTOR = 1.1
+"""Constant effectiveness of a proton beam (ICRU Report 78 (2007); common practice)."""
+
 _REACH_SIGMAS = 0.6
 _BIN_MM = 1.0
 _EDGE_BINS = 2.0
@@ -195,7 +198,10 @@ def effect_model_of(study: Study, particle: str) -> EffectModel:
 
     said = study.effect
     tissue = Tissue("study", said.alpha_per_gy, said.alpha_beta_gy)
-    return EffectModel(said.model, tissue=tissue, factors=dict(said.factors), beam_particle=particle)
+    factors = dict(said.factors)
+    if particle == "proton" and said.model == "constant":
+        factors = {"primary": PROTON_FACTOR, "in_flight": PROTON_FACTOR, **factors}
+    return EffectModel(said.model, tissue=tissue, factors=factors, beam_particle=particle)
 
 
 def plan_field(

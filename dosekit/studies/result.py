@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -60,6 +61,10 @@ class Result:
         The searches for weights in three dimensions, where the study asks for them.
     warnings : tuple of str
         What was warned of.
+    others : tuple of Result
+        The same study with other particles, where it asks for a comparison.
+    base : Path
+        Folder that paths in the study are relative to.
     """
 
     study: Study
@@ -78,3 +83,5 @@ class Result:
     scale: float
     searches: tuple[FoundWeights, ...] = ()
     warnings: tuple[str, ...] = ()
+    others: tuple[Result, ...] = ()
+    base: Path = Path()

@@ -170,32 +170,56 @@ def export_phantom(name: str, folder: str | Path, *, spacing_mm: float | None = 
     return len(slices)
 
 
-def reweigh_file(dose: str | Path, out: str | Path, *, star_scale: float = 1.0, yields: str | None = None) -> str:
+def reweigh_file(
+    folder: str | Path,
+    out: str | Path,
+    *,
+    star_scale: float | None = None,
+    yields: str | None = None,
+    beside: str | Path = ".",
+) -> str:
     """Change star yields on a finished run without folding again.
 
     Parameters
     ----------
-    dose : str or Path
-        NetCDF of the run.
+    folder : str or Path
+        Folder of the run.
     out : str or Path
-        NetCDF to write.
-    star_scale : float
-        Factor on the charged star energy.
+        NetCDF to write; must not exist.
+    star_scale : float, optional
+        Another factor on the charged star energy.
     yields : str, optional
-        Another yield set.
+        Another yield set; the stops are then carried anew through the run's volume.
+    beside : str or Path
+        Folder that paths in the run's study are relative to.
 
     Returns
     -------
     str
         What changed, in a line.
-    """
-    from dosekit.maps.stars import reweight
-    from dosekit.outputs.netcdf import read_dataset, write_dataset
 
-    before = read_dataset(dose)
-    after = reweight(before, star_scale=star_scale, yields=yields)
-    write_dataset(
-        after, out, run_hash=str(before.attrs.get("run", _HASH_OF_NO_RUN)), title=str(before.attrs.get("title", ""))
-    )
+    Raises
+    ------
+    OutputError
+        If the file to be written exists.
+    """
+    from dosekit.maps.stars_reweight import reweight
+    from dosekit.outputs.netcdf import read_dataset, write_dataset
+    from dosekit.outputs.record import read_record
+    from dosekit.studies.model import parse_study
+    from dosekit.studies.volume import load_volume
+
+    where = Path(folder)
+    if Path(out).exists():
+        raise OutputError(f"{Path(out).name} exists", remedy="choose another name")
+    record = read_record(where / "record.json")
+    before = read_dataset(where / "dose.nc")
+    grid = None
+    if yields is not None and yields != before.attrs.get("yields"):
+        grid, _ = load_volume(parse_study(record.study_text), Path(beside))
+    after = reweight(before, grid, star_scale=star_scale, yields=yields)
+    if "effect_dose" in after:
+        after = after.drop_vars("effect_dose")  # belongs to the old yields
+    write_dataset(after, out, run_hash=record.run_hash, title=str(before.attrs.get("title", "")))
     old, new = (float(item["dose"].sum("component").max()) for item in (before, after))
-    return f"largest dose {old:.4g} Gy before, {new:.4g} Gy after; wrote {out}. {BANNER}"
+    return f"largest dose {old:.4g} Gy before, {new:.4g} Gy after; wrote {Path(out).name}. {BANNER}"

@@ -142,6 +142,16 @@ def _write_tables(result: Result, folder: Path) -> list[tuple[str, OutputTable]]
             unit="Gy (effect-weighted)",
             sources=sources,
         )
+    if result.others:
+        from dosekit.studies.comparing import comparison_rows
+
+        rows = {one.planned[0].field.beam.particle: comparison_rows(one) for one in (result, *result.others)}
+        tables["comparison"] = measures_table(
+            rows,
+            units="Gy, J, s, MeV/c, keV/um, shares as fractions; as the names say",
+            first="particle",
+            sources=sources,
+        )
     for name, table in tables.items():
         table.write(folder / f"{name}.csv", run_hash=result.run_hash)
     write_text(folder / "summary.txt", summary_text(result.summary, settings=settings))
@@ -275,6 +285,8 @@ def _write_figures(result: Result, folder: Path, tell: Progress) -> list[ReportF
             f"convergence_{number}",
             "Cost of the goals against the steps of the search for weights.",
         )
+    if result.others or result.study.comparison.curve:
+        _add_comparison(result, add)
     _add_calibration(result, add)
     tell("figures", 1.0)
     return shown
@@ -285,6 +297,28 @@ def _beam_curve(result: Result, beam: Any) -> xr.Dataset:
     from dosekit.depths.curves import depth_curve
 
     return depth_curve(beam, "water", yields=result.study.stars.yields, star_scale=result.study.stars.scale)
+
+
+def _add_comparison(result: Result, add: Callable[[Any, str, str], None]) -> None:
+    """Draw the page that sets particles side by side."""
+    from dosekit.outputs.figures_comparison import comparison_figure
+    from dosekit.studies.comparing import particle_results
+
+    effective = result.study.goal.quantity == "effect"
+    results = [result, *result.others]
+    page = comparison_figure(
+        particle_results(results, result.base),
+        result.grid,
+        target=result.target,
+        prescribed_gy=result.study.goal.dose_gy,
+        quantity="effect-weighted dose" if effective else "dose",
+    )
+    add(
+        page,
+        "comparison",
+        "Particles on the same anatomy with the same goals; momentum, range steps and weights found anew for each. "
+        "A calculation with the models named in the sources; it does not show which particle treats a patient better.",
+    )
 
 
 def _add_calibration(result: Result, add: Callable[[Any, str, str], None]) -> None:
