@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 
 # ---------------------------------------------------------------- effects: volume histograms and agreement
 
@@ -161,3 +163,97 @@ def share_inside(inside, origin, spacing, shape, rays):
                     found += bool(inside(*point))
         result[z, y, x] = found / rays**3
     return result
+
+
+# ---------------------------------------------------------------- depths: slowing down
+
+
+def carried_straight(source, cosines, step_mm, node_energy, cells):
+    """Carry particles one by one along straight lines; source (nodes, cells, directions). Deposit and stops by cell.
+
+    Positions lie on a lattice that moves with each direction, so a particle starts on the two lattice points about it.
+    """
+    deposit, stops, escaped = [0.0] * cells, [0.0] * cells, 0.0
+    nodes = len(source)
+
+    def share(place):
+        low = math.floor(place)
+        part = place - low
+        return ((min(max(low, 0), cells - 1), 1.0 - part), (min(max(low + 1, 0), cells - 1), part))
+
+    for node in range(nodes):
+        for cell in range(cells):
+            for direction, cosine in enumerate(cosines):
+                whole = float(source[node][cell][direction])
+                moved = (nodes - 1 - node) * cosine
+                low = math.floor(cell - moved)
+                part = cell - moved - low
+                for number, place in ((whole * (1.0 - part), low + moved), (whole * part, low + 1 + moved)):
+                    if number == 0.0:
+                        continue
+                    left, inside = node, True
+                    while left > 0 and inside:
+                        given = number * (node_energy[left] - node_energy[left - 1])
+                        for target, piece in share(place + 0.5 * cosine):
+                            deposit[target] += given * piece
+                        place += cosine
+                        left -= 1
+                        if place < -0.5 or place > cells - 0.5:
+                            escaped += number * node_energy[left]
+                            inside = False
+                    if inside:
+                        for target, piece in share(place):
+                            stops[target] += number * piece
+    return deposit, stops, escaped
+
+
+def slowing_down(energy_of_range, reach_mm, edges_mm, path_mm, deviation_mm, quantiles, weights):
+    """Deposit of a beam that only slows down: for each quantile of range and each bin, energy ahead less energy behind."""
+    deposit = [0.0] * (len(edges_mm) - 1)
+    for quantile, weight in zip(quantiles, weights, strict=True):
+        energies = []
+        for path, deviation in zip(path_mm, deviation_mm, strict=True):
+            energies.append(float(energy_of_range(max(reach_mm + quantile * deviation - path, 0.0))))
+        for index in range(len(deposit)):
+            deposit[index] += weight * (energies[index] - energies[index + 1])
+    return deposit
+
+
+# ---------------------------------------------------------------- maps: exponentials along straight lines
+
+
+def carry_along(lines_by_axis, scale, rates, emitted):
+    """Energy left in each voxel when every ray of every direction is followed on its own, one mode at a time.
+
+    `emitted[m, z, y, x]` is the energy each voxel sends out; a ray is the list of voxels it meets, plane by plane.
+    """
+    import numpy as np
+
+    orders = ((0, 1, 2), (1, 0, 2), (2, 0, 1))
+    left = np.zeros(scale.shape)
+    for order, lines in zip(orders, lines_by_axis, strict=True):
+        turned = scale.transpose(order)
+        sources = emitted.transpose(0, *(axis + 1 for axis in order))
+        out = np.zeros(turned.shape)
+        nk, nj, ni = turned.shape
+        for line in lines:
+            planes = range(nk - 1, -1, -1) if line.down else range(nk)
+            for r in range(-2 * nk - nj, 2 * nk + 2 * nj):
+                for q in range(-2 * nk - ni, 2 * nk + 2 * ni):
+                    ray = []
+                    for k in planes:
+                        j = r + int(np.rint(line.slope_j * (k - nk // 2)))
+                        i = q + int(np.rint(line.slope_i * (k - nk // 2)))
+                        if 0 <= j < nj and 0 <= i < ni:
+                            ray.append((k, j, i))
+                    for m, rate in enumerate(rates):
+                        carried = 0.0
+                        for voxel in ray:
+                            a = rate * line.step_mm * float(turned[voxel])
+                            h = sum(a**n / f for n, f in enumerate((1, 2, 6, 24, 120, 720)))
+                            passed = 1.0 / (1.0 + a * h)
+                            new = line.weight * sources[(m, *voxel)]
+                            out[voxel] += carried * (1.0 - passed) + new * (1.0 - h * passed)
+                            carried = (carried + new * h) * passed
+        left += out.transpose(np.argsort(order))
+    return left

@@ -56,7 +56,7 @@ def electron_stopping_powers(
     Examples
     --------
     >>> round(float(electron_stopping_powers("water", 10.0)[0]), 2)
-    1.97
+    1.98
     """
     from dosekit.beams.stopping import density_effect
 

@@ -153,7 +153,7 @@ def macroscopic_cross_sections_mm(
     --------
     >>> sigma = macroscopic_cross_sections_mm("pi-", "water", 80.0, yields="cascade")
     >>> round(1.0 / float(sigma["absorption"] + sigma["inelastic"] + sigma["charge_exchange"]))
-    693
+    673
     """
     table = reactions(projectile, medium, yields=yields)
     return {channel: table.at(values, kinetic_energy_mev) for channel, values in table.per_mm.items()}
@@ -300,7 +300,7 @@ def _cosine_of(kappa: NDArray[np.float64]) -> NDArray[np.float64]:
 def _barashenkov(
     symbol: str, row: str, energy: NDArray[np.float64], inelastic: NDArray[np.float64], elastic: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return reaction and elastic cross sections of the evaluated table, scaled from the other one outside its range."""
+    """Return reaction and elastic cross sections of the evaluated table, scaled from the other one outside."""
     table = read_table("pion_minus_cross_sections")
     known = list(dict.fromkeys(table["element"]))
     mass = element(symbol).atomic_weight
