@@ -213,7 +213,7 @@ class Cones:
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         total = np.zeros(scale.shape)
         for order, batch in self._batches():
-            turned = np.ascontiguousarray(scale.transpose(order), dtype=float)
+            turned = _own(scale.transpose(order), float)
             sources = np.ascontiguousarray(np.asarray(sources_mev, dtype=float).transpose(0, *(a + 1 for a in order)))
             out = np.zeros((len(batch), *turned.shape))
             sweep_widening(sources, turned, rates, *self._widening(batch, order), out)  # type: ignore[call-arg]
@@ -242,8 +242,8 @@ class Cones:
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         total = np.zeros((len(rates), *scale.shape))
         for order, batch in self._batches():
-            turned = np.ascontiguousarray(scale.transpose(order), dtype=float)
-            asked = np.ascontiguousarray(wanted.transpose(order), dtype=float)
+            turned = _own(scale.transpose(order), float)
+            asked = _own(wanted.transpose(order), float)
             out = np.zeros((len(batch), len(rates), *turned.shape))
             sweep_widening_transposed(asked, turned, rates, *self._widening(batch, order), out)  # type: ignore[call-arg]
             total += out.sum(axis=0).transpose(0, *(np.argsort(order) + 1))
@@ -324,13 +324,13 @@ class Cones:
             if not lines:
                 continue
             order = _AXES[axis]
-            turned = np.ascontiguousarray(scale.transpose(order))
+            turned = _own(scale.transpose(order))
             if sources_mev is None:
                 assert stops is not None
                 assert material is not None
                 assert energies_mev is not None
-                emitted = np.ascontiguousarray(stops.transpose(order), dtype=float)
-                index = np.ascontiguousarray(material.transpose(order))
+                emitted = _own(stops.transpose(order), float)
+                index = _own(material.transpose(order))
                 table = np.ascontiguousarray(energies_mev, dtype=float)
                 sources = np.empty((0, 1, 1, 1))
                 first, last = source_ranges(emitted)
@@ -380,8 +380,8 @@ class Cones:
             if not lines:
                 continue
             order = _AXES[axis]
-            turned = np.ascontiguousarray(scale.transpose(order))
-            asked = np.ascontiguousarray(wanted.transpose(order), dtype=float)
+            turned = _own(scale.transpose(order))
+            asked = _own(wanted.transpose(order), float)
             first, last = source_ranges(asked)
             if by_mode:
                 index, table = np.zeros((1, 1, 1), np.uint16), np.zeros((1, len(rates)))
@@ -389,7 +389,7 @@ class Cones:
             else:
                 assert material is not None
                 assert energies_mev is not None
-                index = np.ascontiguousarray(material.transpose(order))
+                index = _own(material.transpose(order))
                 table = np.ascontiguousarray(energies_mev, dtype=float)
                 out, out_modes = np.zeros(turned.shape), np.zeros((1, 1, 1, 1))
             for line in lines:
@@ -400,3 +400,8 @@ class Cones:
             back = np.argsort(order)
             total += out_modes.transpose(0, *(back + 1)) if by_mode else out.transpose(back)
         return total
+
+
+def _own(array: NDArray[Any], dtype: Any = None) -> NDArray[Any]:
+    """Return a contiguous, writable array, so that kernels meet one type and are compiled once."""
+    return np.require(array, dtype, ["C", "W"])

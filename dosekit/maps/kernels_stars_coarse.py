@@ -8,12 +8,12 @@ from numba import njit, prange
 __all__ = ["block_sources", "spread_blocks"]
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
+@njit(cache=True, error_model="numpy")
 def block_sources(stops, material, table, fz, fy, fx, out):  # type: ignore[no-untyped-def]
     """Sum stops times their material's energy in each mode over blocks."""
     nz, ny, nx = stops.shape
     modes = table.shape[1]
-    for block in prange(out.shape[1]):
+    for block in range(out.shape[1]):
         for z in range(block * fz, min(nz, block * fz + fz)):
             for y in range(ny):
                 for x in range(nx):
