@@ -93,7 +93,7 @@ def mass_attenuation_cm2_g(medium: Material | str, energy_mev: ArrayLike) -> dic
     --------
     >>> parts = mass_attenuation_cm2_g("water", 2.0)
     >>> round(float(sum(parts.values())), 4)
-    0.0494
+    0.0493
     """
     medium = material(medium)
     energy = np.asarray(energy_mev, dtype=float)
