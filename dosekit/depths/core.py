@@ -170,8 +170,9 @@ def solve_core(
         event_energy[:, keep] = result.event_energy
         for index, name in enumerate((*CHANNELS, "decay")):
             channels[name][keep] = np.sum(events[:, keep] * result.shares[index], axis=0)
+        channels["elastic"][keep] += np.sum(events[:, keep] * result.shares[5], axis=0)
         parts[0, :, keep] = result.shares[3]
-        parts[1, :, keep] = result.shares[0] + result.shares[1] + result.shares[2]
+        parts[1, :, keep] = result.shares[0] + result.shares[1] + result.shares[2] + result.shares[5]
         parts[2, :, keep] = result.shares[4]
         edges_here = slice(first_bin, first_bin + len(inside) + 1)
         number[edges_here] = np.sum(w * result.alive, axis=0)
@@ -326,11 +327,12 @@ class _Lookup:
         self.integral = np.concatenate([[0.0], np.cumsum(middle) * self.step])
         energy = np.maximum(self.energy, 0.02 * mass / 938.3)
         self.let = table.stopping_mev_mm(energy)
-        rates = np.zeros((5, len(self.grid)))
+        rates = np.zeros((6, len(self.grid)))
         if nuclear:
             reaction = reactions(species, table.material, yields=yields)
             for index, channel in enumerate(CHANNELS):
                 rates[index] = np.interp(energy, ENERGY_GRID_MEV, reaction.per_mm[channel])
+            rates[5] = np.interp(energy, ENERGY_GRID_MEV, reaction.struck_hydrogen_per_mm)
         if decays:
             rates[4] = decay_per_mm(species, np.maximum(energy, 0.05))
         self.rates = rates

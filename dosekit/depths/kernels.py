@@ -104,6 +104,8 @@ def march(  # type: ignore[no-untyped-def]
     escaped,
     bremsstrahlung,
     sideways,
+    ahead,
+    near,
 ):
     """Carry a population down in residual range, with events and angular diffusion.
 
@@ -113,10 +115,11 @@ def march(  # type: ignore[no-untyped-def]
     scattering; reemit (materials, nodes, nodes) particles of the same kind per reaction; turn_* (materials, nodes,
     directions, directions); turn (nodes, directions, directions) angular diffusion per step or of length 0;
     radiated (nodes) share of the loss that is bremsstrahlung. Sideways displacement (variance of one axis since
-    emission) is carried along as a sum over particles; sideways (cells) receives it times the deposit. Scores:
-    deposit, let_weighted, stops, counts (3, cells) of events, reactions and decays (cells, groups), forward (2,
-    cells) sum of cosine times events, escaped (4): energy and number through the front and the back, bremsstrahlung
-    (cells, directions). Returns the energy that elastic scattering gave to nuclei, by cell.
+    emission) is carried along as a sum over particles; sideways (cells) receives it times the deposit; near (3,
+    cells) holds deposit, stops and sideways of directions over `ahead`. Scores: deposit, let_weighted, stops,
+    counts (3, cells) of events, reactions and decays (cells, groups), forward (2, cells) sum of cosine times
+    events, escaped (4): energy and number through the front and the back, bremsstrahlung (cells, directions).
+    Returns the energy that elastic scattering gave to nuclei, by cell.
     """
     nodes, cells, directions = source.shape
     width = cells + 2 * nodes + 6
@@ -198,6 +201,11 @@ def march(  # type: ignore[no-untyped-def]
                 let_weighted[second] += given * let[m, k] * w
                 sideways[first] += given * per_particle * (1.0 - w)
                 sideways[second] += given * per_particle * w
+                if cosine[j] > ahead:
+                    near[0, first] += given * (1.0 - w)
+                    near[0, second] += given * w
+                    near[2, first] += given * per_particle * (1.0 - w)
+                    near[2, second] += given * per_particle * w
                 if brems > 0.0:
                     bremsstrahlung[first, j] += n * loss * brems * (1.0 - w)
                     bremsstrahlung[second, j] += n * loss * brems * w
@@ -290,6 +298,9 @@ def march(  # type: ignore[no-untyped-def]
                 second = min(max(low + 1, 0), cells - 1)
                 stops[first] += n * (1.0 - w)
                 stops[second] += n * w
+                if cosine[j] > ahead:
+                    near[1, first] += n * (1.0 - w)
+                    near[1, second] += n * w
     return recoil
 
 

@@ -37,8 +37,13 @@ MODES: tuple[str, ...] = ("shifter", "momentum")
 QUANTITIES: tuple[str, ...] = (
     "core", "scattered", "in_flight_charged", "in_flight_neutral", "decay", "contaminant_muon", "contaminant_electron",
     "core_stops", "scattered_stops", "reactions",
+    "scattered_near", "scattered_wide", "scattered_near_stops", "scattered_wide_stops",
 )  # fmt: skip
-"""Keys of the quantities: MeV/mm per incident particle, or 1/mm for stops and reactions."""
+"""Keys of the quantities: MeV/mm per incident particle, or 1/mm for stops and reactions.
+
+``scattered_near`` (direction cosine over 0.9) and ``scattered_wide`` are two classes that sum to ``scattered``, with
+widths of their own; likewise their stops.
+"""
 
 _COMPONENT_OF = {
     "core": "primary",
@@ -372,6 +377,8 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
         safe = np.where(amount[target] > 1e-15, amount[target], 1.0)
         let[target] = weighted / safe
         sigma[target] = np.sqrt(variance / safe)
+    for name, (given, stopped, width) in main.classes.items():
+        amount[name], amount[f"{name}_stops"], sigma[name] = given, stopped, width
     amount["core_stops"], amount["scattered_stops"] = main.stops["core"], main.stops["scattered"]
     amount["reactions"] = main.channels["absorption"] + main.channels["inelastic"] + main.channels["charge_exchange"]
     mean = 0.5 * (main.core.mean_energy[1:] + main.core.mean_energy[:-1])

@@ -31,6 +31,7 @@ from dosekit.depths.kernels import gather_products, march, stream_photons
 from dosekit.depths.tables import GROUP_ENERGY_MEV, beta_samples, node_spread, product_spread
 
 __all__ = [
+    "NEAR_COSINE",
     "Carried",
     "carry",
     "carry_electrons",
@@ -39,6 +40,9 @@ __all__ = [
     "michel_electrons",
     "neutral_products",
 ]
+
+NEAR_COSINE = 0.9
+"""Directions over this cosine count as near the beam."""
 
 _NO_EVENTS = np.zeros((0, 0))
 _GAMMA_CM2_G = 0.0170
@@ -60,6 +64,7 @@ class Carried:
         self.stops = np.zeros(cells)
         self.escaped = np.zeros(4)
         self.sideways = np.zeros(cells)
+        self.near = np.zeros((3, cells))
 
     def add(self, other: Carried) -> None:
         """Add the scores of another population.
@@ -74,6 +79,7 @@ class Carried:
         self.stops += other.stops
         self.escaped += other.escaped
         self.sideways += other.sideways
+        self.near += other.near
 
 
 def carry(
@@ -120,7 +126,7 @@ def _march(
         np.zeros((0, 0, 3)), _NO_EVENTS, np.zeros((0, 0, 0)), np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0, 0)), turn,
         radiated, np.zeros(nodes, dtype=np.int64), np.zeros(nodes), scores.deposit, scores.let_weighted,
         scores.stops, np.zeros((3, grid.cells)), np.zeros((grid.cells, 2)), np.zeros((grid.cells, 2)), np.zeros((2,
-        grid.cells)), scores.escaped, brems, scores.sideways,
+        grid.cells)), scores.escaped, brems, scores.sideways, NEAR_COSINE, scores.near,
     )  # fmt: skip
 
 
@@ -201,7 +207,8 @@ def _energy_by_group(
     for stuff in materials:
         table = reactions(projectile, stuff, yields=yields)
         extra = 134.9768 if species == "pi0" else 0.0
-        rows.append(table.at(table.number[species] * (table.mean_energy_mev[species] + extra), GROUP_ENERGY_MEV))
+        held = table.reaction_share * table.number[species] * (table.mean_energy_mev[species] + extra)
+        rows.append(table.at(held, GROUP_ENERGY_MEV))
     return np.stack(rows)
 
 

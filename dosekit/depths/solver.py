@@ -24,6 +24,7 @@ from dosekit.depths.deltas import carry_deltas
 from dosekit.depths.kernels import gather_products, march, score_events
 from dosekit.depths.muons import muon_capture_products, muon_capture_share
 from dosekit.depths.products import (
+    NEAR_COSINE,
     Carried,
     carry_electrons,
     charged_products,
@@ -66,6 +67,9 @@ class Solution:
     extra_sigma_mm : dict of str to ndarray, shape (bins,)
         Standard deviation of one transverse axis since the particle left the beam, mm: scattered, in_flight_charged,
         decay.
+    classes : dict of str to (deposit, stops, sigma)
+        Scattered particles in two classes of direction, ``scattered_near`` (cosine over 0.9) and ``scattered_wide``: MeV
+        and number per bin, and standard deviation as above, mm. They sum to ``scattered``.
     ledger : dict of str to float
         Energy, MeV: in, escaped, neutrino, binding, electron_rest and, for negative pions, star (rest energy given to
         captures).
@@ -81,6 +85,7 @@ class Solution:
     decays_at_rest: NDArray[np.float64] = field(repr=False)
     ledger: dict[str, float] = field(repr=False)
     extra_sigma_mm: dict[str, NDArray[np.float64]] = field(repr=False)
+    classes: dict[str, tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]] = field(repr=False)
 
 
 def solve(
@@ -149,14 +154,8 @@ def _solve(
     parts: dict[str, Carried] = {"scattered": scattered.carried}
     charged = charged_products(species, scattered.core_reactions, grid, yields=yields)
     charged.add(charged_products(species, scattered.later_reactions, grid, yields=yields, isotropic=True))
-    if species == "proton":
-        # a struck hydrogen nucleus is a beam proton too; it stops within centimetres, here at once
-        scattered.carried.deposit += scattered.recoil
-        scattered.carried.let_weighted += scattered.recoil * 2.0
-        scattered.carried.stops += scattered.struck
-    else:
-        charged.deposit += scattered.recoil
-        charged.let_weighted += scattered.recoil * 100.0
+    charged.deposit += scattered.recoil
+    charged.let_weighted += scattered.recoil * 100.0
     parts["in_flight_charged"] = charged
     reacted = scattered.core_reactions + scattered.later_reactions
     # neutral products and decays vary slowly: twice the step
@@ -216,13 +215,32 @@ def _solve(
         species, core, grid, deposit, let, stopped, channels,
         wide.to_bins(rest.at_rest), ledger,
         {"decay": _width(decayed, wide), **{name: _width(part, grid) for name, part in parts.items()}},
+        _classes(scattered.carried, grid),
     )  # fmt: skip
+
+
+def _classes(
+    part: Carried, grid: CoarseGrid
+) -> dict[str, tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]]:
+    """Split scattered particles by direction."""
+    given, stopped = grid.to_bins(part.deposit), grid.to_bins(part.stops)
+    near = np.clip(grid.to_bins(part.near[0]), 0.0, given), np.clip(grid.to_bins(part.near[1]), 0.0, stopped)
+    wide = part.sideways - part.near[2]
+    return {
+        "scattered_near": (near[0], near[1], _spread(part.near[2], part.near[0], grid)),
+        "scattered_wide": (given - near[0], stopped - near[1], _spread(wide, part.deposit - part.near[0], grid)),
+    }
 
 
 def _width(part: Carried, grid: CoarseGrid) -> NDArray[np.float64]:
     """Return the standard deviation of one transverse axis in fine bins, mm."""
-    variance = part.sideways / np.where(part.deposit > 1e-15, part.deposit, 1.0)
-    known = np.flatnonzero(part.deposit > 1e-9 * max(float(np.max(part.deposit)), 1e-300))
+    return _spread(part.sideways, part.deposit, grid)
+
+
+def _spread(sideways: NDArray[np.float64], deposit: NDArray[np.float64], grid: CoarseGrid) -> NDArray[np.float64]:
+    """Return the root of the mean variance in fine bins, mm; cells without deposit take their neighbours'."""
+    variance = sideways / np.where(deposit > 1e-15, deposit, 1.0)
+    known = np.flatnonzero(deposit > 1e-9 * max(float(np.max(deposit)), 1e-300))
     if len(known) == 0:
         return np.zeros(len(grid.place_of_edge) - 1)
     middle = 0.5 * (grid.place_of_edge[1:] + grid.place_of_edge[:-1]) - 0.5
@@ -264,7 +282,6 @@ class _Scattered:
         )
         source = np.zeros((nodes, grid.cells, len(COSINES)))
         self.recoil = np.zeros(grid.cells)
-        self.struck = np.zeros(grid.cells)
         self.carried = Carried(grid.cells)
         self.core_reactions, self.core_decays = by_group[0], by_group[1]
         self.later_reactions, self.later_decays = np.zeros((grid.cells, groups)), np.zeros((grid.cells, groups))
@@ -274,11 +291,9 @@ class _Scattered:
             spread = np.stack([node_spread(row[:, None], table.energy) for row in table.elastic_to])
             gather_products(by_node[0], grid.stuff, spread, table.start_elastic, source)
             gather_products(by_node[1], grid.stuff, table.reemit, table.start_reemit, source)
-            self.struck = np.sum(by_node[0], axis=1)
             loss = table.energy[None, :] - table.elastic_to
             self.recoil += np.sum(by_node[0] * loss[grid.stuff], axis=1)
             self.recoil += self._run(table, grid, source)
-            self.struck += self.counts[0]
 
     def _run(self, table: SpeciesTable, grid: CoarseGrid, source: NDArray[np.float64]) -> NDArray[np.float64]:
         """Carry all generations."""
@@ -288,6 +303,7 @@ class _Scattered:
             table.group_low, table.group_weight, self.carried.deposit, self.carried.let_weighted,
             self.carried.stops, self.counts, self.later_reactions, self.later_decays, self.forward,
             self.carried.escaped, np.zeros((0, 0)), self.carried.sideways,
+            NEAR_COSINE, self.carried.near,
         )  # fmt: skip
         return result
 
@@ -367,7 +383,7 @@ def _binding(species: str, reacted: NDArray[np.float64], grid: CoarseGrid, yield
     for index, stuff in enumerate(grid.materials):
         table = reactions(species, stuff, yields=yields)
         here = np.sum(reacted[grid.stuff == index], axis=0)
-        total += float(np.sum(here * table.at(table.binding_mev, GROUP_ENERGY_MEV)))
+        total += float(np.sum(here * table.at(table.reaction_share * table.binding_mev, GROUP_ENERGY_MEV)))
     return total
 
 
@@ -377,10 +393,11 @@ def _add_later(
     """Add events of scattered particles, split by channel at their energy groups."""
     channels["elastic"] += grid.to_bins(scattered.counts[0])
     channels["decay"] += grid.to_bins(scattered.counts[2])
-    split = {name: np.zeros(grid.cells) for name in CHANNELS[:3]}
+    split = {name: np.zeros(grid.cells) for name in CHANNELS}
     for index, stuff in enumerate(grid.materials):
         table = reactions(species, stuff, yields=yields)
-        rows = {name: table.at(table.per_mm[name], GROUP_ENERGY_MEV) for name in split}
+        rows = {name: table.at(table.per_mm[name], GROUP_ENERGY_MEV) for name in CHANNELS[:3]}
+        rows["elastic"] = table.at(table.struck_hydrogen_per_mm, GROUP_ENERGY_MEV)
         total = np.maximum(sum(rows.values()), 1e-30)
         here = grid.stuff == index
         for name, row in rows.items():
@@ -447,4 +464,5 @@ def _electrons(
     return Solution(
         species, core, grid, deposit, let, {"core": empty, "scattered": grid.to_bins(run.stops)},
         dict.fromkeys((*CHANNELS, "decay"), empty), empty, ledger, {"scattered": _width(run, grid)},
+        _classes(run, grid),
     )  # fmt: skip

@@ -177,8 +177,9 @@ def product_spread(
         Shares by direction, about the direction of the beam.
     """
     group = GROUP_ENERGY_MEV
-    number = table.at(table.number[species], group)
-    held = table.at(table.number[species] * table.mean_energy_mev[species], group)
+    share = table.reaction_share
+    number = table.at(share * table.number[species], group)
+    held = table.at(share * table.number[species] * table.mean_energy_mev[species], group)
     mean = held / np.where(number > 0.0, number, 1.0)
     rms = table.at(table.rms_energy_mev[species], group)
     available = group + (139.57 if table.projectile in ("pi-", "pi+") else 0.0)
@@ -263,17 +264,26 @@ def _species_table(
         if nuclear and name in ("pi-", "pi+", "proton"):
             table = reactions(name, stuff, yields=yields)
             rates[:, 0] = table.at(table.per_mm["elastic"], middle)
-            rates[:, 1] = table.at(table.reaction_per_mm, middle)
+            struck = table.at(table.struck_hydrogen_per_mm, middle)
+            rates[:, 1] = table.at(table.reaction_per_mm, middle) + struck
             elastic_to[m] = np.maximum(energy - table.at(table.elastic_loss_mev, energy), 0.0)
             top = np.maximum(energy - 1.0, 0.05)
             number = table.at(table.number[name], energy)
             mean = np.clip(table.at(table.mean_energy_mev[name], energy), 1e-3, 0.97 * top)
             rms = np.clip(table.at(table.rms_energy_mev[name], energy), mean, np.sqrt(mean * top))
-            reemit[m] = node_spread(beta_samples(mean, rms, top), energy) * number[:, None]
+            share = table.at(table.reaction_share, energy)
+            reemit[m] = node_spread(beta_samples(mean, rms, top), energy) * (share * number)[:, None]
+            cosine = table.at(table.mean_cosine[name], energy)
+            if name == "proton":
+                # two protons share the energy evenly between nothing and all, at cos = sqrt(E / T)
+                pair = energy[:, None] * (np.arange(_SAMPLES) + 0.5)[None, :] / _SAMPLES
+                reemit[m] += 2.0 * (1.0 - share)[:, None] * node_spread(pair, energy)
+                made = np.maximum(share * number + 2.0 * (1.0 - share), 1e-12)
+                cosine = (share * number * cosine + 2.0 * (1.0 - share) * 2.0 / 3.0) / made
             kappa = kappa_of(table.at(table.elastic_cosine, energy))
             turn_elastic[m] = shares(kappa[:, None], COSINES[None, :])
             start_elastic[m] = shares(kappa)
-            kappa = kappa_of(table.at(table.mean_cosine[name], energy))
+            kappa = kappa_of(cosine)
             turn_reemit[m] = shares(kappa[:, None], COSINES[None, :])
             start_reemit[m] = shares(kappa)
         total = np.sum(rates, axis=1)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import naive
 import numpy as np
 import pytest
 
@@ -13,6 +12,8 @@ from dosekit.depths.angles import COSINES
 from dosekit.depths.coarse import coarse_grid
 from dosekit.depths.core import solve_core
 from dosekit.depths.products import carry
+
+import naive
 
 pytestmark = pytest.mark.naive
 

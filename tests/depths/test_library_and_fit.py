@@ -152,3 +152,15 @@ def test_fit_refusals(tmp_path):
         fit_beam(depth, dose, BEAM, free=())
     with pytest.raises(InputError):
         fit_beam(depth, dose, BEAM, uncertainty=-np.ones(6))
+
+
+@pytest.mark.parametrize("beam", [BEAM, dk.Beam("proton", kinetic_energy_mev=140)], ids=["pi-", "proton"])
+def test_scattered_particles_in_two_classes(beam):
+    library = depth_library(beam, [90.0])
+    q, sigma = library.quantities, library.extra_sigma_mm
+    np.testing.assert_allclose(q["scattered_near"] + q["scattered_wide"], q["scattered"], rtol=1e-6, atol=1e-9)
+    both = q["scattered_near_stops"] + q["scattered_wide_stops"]
+    np.testing.assert_allclose(both, q["scattered_stops"], rtol=1e-6, atol=1e-9)
+    middle = slice(30, 80)
+    assert np.all(sigma["scattered_near"][0, middle] < sigma["scattered"][0, middle])
+    assert np.all(sigma["scattered"][0, middle] < sigma["scattered_wide"][0, middle])
