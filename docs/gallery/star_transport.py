@@ -11,7 +11,7 @@ from dosekit.basis.components import STAR_COMPONENTS
 from dosekit.basis.materials import material
 from dosekit.capture.exponentials import material_kernel
 from dosekit.grids.voxels import VoxelGrid
-from dosekit.maps.cones import DIRECTION_SETS
+from dosekit.maps.cones_directions import DIRECTION_SETS
 from dosekit.maps.stars import DIRECTIONS, carry_stars
 from dosekit.outputs.style import letter_panel, new_figure, styled, write_figure
 

@@ -229,7 +229,7 @@ def star_balance(
     return report
 
 
-# ---------------------------------------------------------------- helpers
+# ---------------------------------------------------------------- parts
 
 
 def _wanted(components: Iterable[str] | None) -> tuple[str, ...]:

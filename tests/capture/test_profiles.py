@@ -138,9 +138,9 @@ def test_charged_stars_far_from_a_point(case):
 @pytest.mark.reference
 @pytest.mark.parametrize("case", list(MEDIA))
 @pytest.mark.parametrize("component", ["star_neutron", "star_photon"])
-@pytest.mark.parametrize("radius_mm", [50, 100, 200])
+@pytest.mark.parametrize("radius_mm", [10, 50, 100, 200])
 def test_neutral_stars_at_a_point_coarsely(case, component, radius_mm, evidence):
-    """Energy inside 5, 10 and 20 cm within the models' own uncertainty of 25 %."""
+    """Energy inside 1, 5, 10 and 20 cm within the models' own uncertainty of 25 %."""
     ours, theirs = compared(case, component, np.array([0, radius_mm, radius_mm + 1]))
     evidence(
         what=f"{case} {component} inside {radius_mm} mm",

@@ -252,7 +252,8 @@ def test_reweighting_needs_what_it_needs(rng):
 
 @pytest.mark.parametrize("cosine", [-0.4, 0.0, 0.3, 0.6])
 def test_forward_push_has_the_wanted_mean_cosine(cosine):
-    from dosekit.maps.cones import Cones, direction_set
+    from dosekit.maps.cones import Cones
+    from dosekit.maps.cones_directions import direction_set
 
     bias = forward_bias((0.0, 2.0, 0.0), cosine)
     units, weights = direction_set(194)

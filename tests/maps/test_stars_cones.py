@@ -7,7 +7,8 @@ import numpy as np
 import pytest
 
 from dosekit.errors import InputError
-from dosekit.maps.cones import DIRECTION_SETS, Cones, direction_set
+from dosekit.maps.cones import Cones
+from dosekit.maps.cones_directions import DIRECTION_SETS, direction_set
 from dosekit.maps.stars_coarse import Blocks, block_factors
 
 import naive
