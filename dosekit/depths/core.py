@@ -64,6 +64,10 @@ class Core:
         Shares of elastic, reaction and decay.
     angle_variance : ndarray, shape (bins + 1,)
         Fermi-Eyges A0 along the mean trajectory, rad2.
+    class_number : ndarray, shape (classes, bins + 1)
+        Particles of each class at the edges of bins.
+    class_energy : ndarray, shape (classes + 1, bins + 1)
+        Energies of the class edges there, MeV; between them the density is taken as even.
     energy_in, energy_out : float
         Kinetic energy at depth 0 and behind the last edge, MeV.
     """
@@ -80,6 +84,8 @@ class Core:
     event_energy: NDArray[np.float64] = field(repr=False)
     event_parts: NDArray[np.float64] = field(repr=False)
     angle_variance: NDArray[np.float64] = field(repr=False)
+    class_number: NDArray[np.float64] = field(repr=False)
+    class_energy: NDArray[np.float64] = field(repr=False)
     energy_in: float = 0.0
     energy_out: float = 0.0
 
@@ -135,6 +141,7 @@ def solve_core(
     events, event_energy = np.zeros((classes, bins)), np.zeros((classes, bins))
     parts = np.zeros((3, classes, bins))
     variance = np.zeros(bins + 1)
+    class_number, class_energy = np.zeros((classes, bins + 1)), np.zeros((classes + 1, bins + 1))
 
     ranges = front.copy()
     survival = np.ones(classes)
@@ -178,6 +185,8 @@ def solve_core(
         number[edges_here] = np.sum(w * result.alive, axis=0)
         flux_energy[edges_here] = np.sum(w * result.flux, axis=0)
         variance[edges_here] = angles
+        class_number[:, edges_here] = w * result.alive
+        class_energy[:, edges_here] = lookup.energies(now)
         if m == 0:
             energy_in = float(flux_energy[0])
         # hand over to the next layer at equal energy
@@ -193,6 +202,7 @@ def solve_core(
     return Core(
         edges, layer, deposit, let_weighted, stops, channels, number,
         np.where(number > 1e-12, flux_energy / safe, 0.0), events, event_energy, parts, variance,
+        class_number, class_energy,
         energy_in, float(flux_energy[-1]),
     )  # fmt: skip
 
@@ -360,6 +370,10 @@ class _Lookup:
         part = place - low
         lower = values[low]
         return np.asarray(running[low] + self.step * part * (lower + 0.5 * part * (values[low + 1] - lower)))
+
+    def energies(self, ranges: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Return energies at residual ranges; 0 where nothing is left."""
+        return self._at(self.energy, np.maximum(ranges, 0.0))
 
     def bins(self, edges: NDArray[np.float64], survival: NDArray[np.float64]) -> _Bins:
         """Return what classes with these edges (classes + 1, depths) do between the depths."""

@@ -18,6 +18,7 @@ from dosekit.beams.ranges import range_table
 from dosekit.beams.reactions import CHANNELS, YIELDS
 from dosekit.caution import CAUTION
 from dosekit.depths.layers import Layers, as_layers
+from dosekit.depths.quality import star_let_kev_um
 from dosekit.depths.solver import Solution, solve
 from dosekit.depths.stars import star_deposits, star_ledger
 from dosekit.errors import BeamError, InputError, SizeError, UnknownNameError
@@ -29,7 +30,7 @@ __all__ = ["STAR_LET_KEV_UM", "check_star_scale", "depth_curve"]
 
 _MOST_BINS = 20000
 STAR_LET_KEV_UM: dict[str, float] = {"star_light": 12.0, "star_heavy": 140.0, "star_neutron": 30.0, "star_photon": 0.3}
-"""Dose-averaged LET of star components where stars have not been followed by species, keV/um."""
+"""Round values of the LET of star components, keV/um; by spectra: :func:`dosekit.depths.quality.star_let_kev_um`."""
 
 _SOURCES = (
     "stopping: Bethe with shell, density, Barkas and Bloch terms; straggling: Bohr, Vavilov shape; scattering: Gottschalk 2010; "  # noqa: E501
@@ -131,7 +132,8 @@ def depth_curve(
         inside = 0.0
         for name in STAR_COMPONENTS:
             energy[name] = energy[name] + stars[name]
-            let[name] = np.full(len(layer), STAR_LET_KEV_UM[name])
+            per_layer = np.array([star_let_kev_um(stuff, yields=yields)[name] for stuff in materials])
+            let[name] = per_layer[layer]
             inside += float(np.sum(stars[name]))
         # capture outside of the pion's sight: nothing; what stars emit and is not left inside has escaped
         stopped = sum(by_material.values())

@@ -24,7 +24,8 @@ from dosekit.beams.reactions import YIELDS
 from dosekit.beams.scattering import fermi_eyges_moments
 from dosekit.beams.stopping import relative_stopping_power
 from dosekit.beams.straggling import mean_range_excess_mm
-from dosekit.depths.curves import STAR_LET_KEV_UM, check_star_scale
+from dosekit.depths.curves import check_star_scale
+from dosekit.depths.quality import star_let_kev_um
 from dosekit.depths.solver import Solution, solve
 from dosekit.depths.stars import star_deposits
 from dosekit.errors import InputError, ReachError, SizeError, UnknownNameError
@@ -149,7 +150,7 @@ class DepthLibrary:
         Returns
         -------
         ndarray, shape (K, component, N)
-            keV/um; stars at their tabled means.
+            keV/um; stars at the mean of their slowing-down spectra.
         """
         shape = (len(self.residual_range_mm), len(COMPONENTS), len(self.depth_mm))
         energy, weighted = np.zeros(shape), np.zeros(shape)
@@ -158,7 +159,7 @@ class DepthLibrary:
             energy[:, place] += self.quantities[name]
             weighted[:, place] += self.quantities[name] * self.let[name]
         result = weighted / np.where(energy > 1e-15, energy, 1.0)
-        for name, value in STAR_LET_KEV_UM.items():
+        for name, value in star_let_kev_um("water", yields=self.yields).items():
             result[:, COMPONENTS.index(name)] = value
         return result
 

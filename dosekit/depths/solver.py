@@ -68,8 +68,8 @@ class Solution:
         Standard deviation of one transverse axis since the particle left the beam, mm: scattered, in_flight_charged,
         decay.
     classes : dict of str to (deposit, stops, sigma)
-        Scattered particles in two classes of direction, ``scattered_near`` (cosine over 0.9) and ``scattered_wide``: MeV
-        and number per bin, and standard deviation as above, mm. They sum to ``scattered``.
+        Scattered particles in two classes of direction, ``scattered_near`` (cosine over 0.9) and ``scattered_wide``:
+        MeV and number per bin, and standard deviation as above, mm. They sum to ``scattered``.
     ledger : dict of str to float
         Energy, MeV: in, escaped, neutrino, binding, electron_rest and, for negative pions, star (rest energy given to
         captures).
@@ -446,7 +446,7 @@ def _electrons(
     core = Core(
         silent.edges_mm, silent.layer, empty, empty, empty, dict.fromkeys((*CHANNELS, "decay"), empty),
         np.zeros(bins + 1), np.zeros(bins + 1), np.zeros((1, bins)), np.zeros((1, bins)), np.zeros((3, 1, bins)),
-        np.zeros(bins + 1), mean, 0.0,
+        np.zeros(bins + 1), np.zeros((1, bins + 1)), np.zeros((2, bins + 1)), mean, 0.0,
     )  # fmt: skip
     deposit = {"core": empty, "scattered": grid.to_bins(run.deposit)}
     weighted = grid.to_bins(run.let_weighted)

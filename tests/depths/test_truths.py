@@ -240,3 +240,39 @@ def test_planes_from_shells_keep_energy():
     source = np.zeros(50)
     source[[3, 30]] = 1.0, 2.0
     np.testing.assert_allclose(convolve_planes(source, plane), np.convolve(source, plane)[90:140], atol=1e-12)
+
+
+def test_spectra_hold_the_beam():
+    from dosekit.depths.quality import fluence_spectrum
+
+    beam = dk.Beam("pi-", momentum_mev_c=150, momentum_sigma=0.02)
+    edges = np.linspace(0.0, 80.0, 161)
+    spectrum = fluence_spectrum(beam, "water", depth_mm=[0.0, 60.0, 120.0], energy_edges_mev=edges)
+    number = (spectrum * 0.5).sum("energy").to_numpy()
+    mean = (spectrum * spectrum["energy"] * 0.5).sum("energy").to_numpy() / number
+    curve = dk.depth_curve(beam, "water", depth_mm=200.0)
+    at = lambda name, z: float(np.interp(z, curve["depth"], curve[name]))  # noqa: E731
+    assert number[0] == pytest.approx(1.0, abs=1e-6)
+    assert mean[0] == pytest.approx(beam.kinetic_energy_mev, rel=5e-3)
+    for index, z in ((1, 60.0), (2, 120.0)):
+        assert number[index] == pytest.approx(at("fluence", z), rel=2e-3)
+        assert mean[index] == pytest.approx(at("mean_energy", z), rel=1e-2)
+    for bad in ({"depth_mm": [-1.0], "energy_edges_mev": edges}, {"depth_mm": [1.0], "energy_edges_mev": [2.0, 1.0]}):
+        with pytest.raises(InputError):
+            fluence_spectrum(beam, "water", **bad)
+
+
+def test_let_of_stars_follows_their_spectra():
+    from dosekit.beams.ranges import range_table
+    from dosekit.depths.quality import _integral_of_stopping, star_let_kev_um
+
+    # a proton that stops: energy-averaged stopping power, by itself
+    water = dk.material("water")
+    t = np.linspace(1e-3, 10.0, 20001)
+    alone = np.trapezoid(range_table("proton", water).stopping_mev_mm(t), t)
+    assert float(_integral_of_stopping("proton", water, np.array([10.0]))[0]) == pytest.approx(alone, rel=5e-3)
+    for yields in ("evaluated", "cascade"):
+        let = star_let_kev_um("water", yields=yields)
+        assert 5.0 < let["star_light"] < 30.0
+        assert 60.0 < let["star_heavy"] < 300.0
+        assert let["star_photon"] < let["star_neutron"] < let["star_heavy"]
