@@ -15,9 +15,11 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from dosekit.effects.tissues import Tissue
 from dosekit.studies.planning import PlannedField, effect_model_of
 
 if TYPE_CHECKING:
+    from dosekit.effects.mixed_field import EffectModel
     from dosekit.grids.voxels import VoxelGrid
     from dosekit.maps.fields import Field
     from dosekit.modulation.goals import Goal
@@ -99,6 +101,26 @@ class _Task:
     voxels: NDArray[np.int64]
     constants: Mapping[str, tuple[Any, Any]]
 
+    def plain_factors(self, model: EffectModel) -> dict[str, float] | None:
+        """Return one factor for each component where the dose asked for is a plain sum, else None.
+
+        Physical dose is one; so is effect-weighted dose when a model multiplies alpha and the root of beta of a
+        component by the same number everywhere.
+        """
+        if self.study.goal.quantity == "physical":
+            return dict.fromkeys(self.constants, 1.0)
+        tissue = model.tissue
+        if not isinstance(tissue, Tissue):
+            return None
+        factors = {}
+        for name, (alpha, root) in self.constants.items():
+            by_alpha = np.asarray(alpha) / tissue.alpha_per_gy
+            by_root = np.asarray(root) / np.sqrt(tissue.beta_per_gy2)
+            if by_alpha.ndim or by_root.ndim or abs(float(by_alpha - by_root)) > 1e-9:
+                return None
+            factors[name] = float(by_alpha)
+        return factors
+
 
 def _search(
     task: _Task,
@@ -151,16 +173,18 @@ def _stand_in(task: _Task, group: Sequence[PlannedField]) -> Response:
     from dosekit.modulation.surrogates import pencil_matrices
 
     study = task.study
-    factors: list[dict[str, Any]] = [dict.fromkeys(COMPONENTS, 1.0)]
     model = effect_model_of(study, group[0].field.beam.particle)
-    if study.goal.quantity == "effect":
+    plain = task.plain_factors(model)
+    if plain is not None:
+        factors: list[dict[str, Any]] = [dict(plain)]
+    else:
         factors = [{name: task.constants[name][place] for name in COMPONENTS} for place in (0, 1)]
     columns = [
         pencil_matrices(plan.field, plan.library, task.grid, task.voxels, factors=factors, star_scale=study.stars.scale)
         for plan in group
     ]
     joined = [hstack([matrices[place] for matrices in columns], format="csr") for place in range(len(factors))]
-    if study.goal.quantity == "effect":
+    if plain is None:
         return EffectResponse(joined[0], joined[1], model.tissue, study.goal.fractions)
     return LinearResponse(joined[0])
 
@@ -225,9 +249,10 @@ def _response(
         dose_to=study.outputs.dose_to,
         libraries={plan.field.name: plan.library for plan in planned},
     )
-    if study.goal.quantity == "physical":
-        return LinearResponse(operator)
     model = effect_model_of(study, fields[0].beam.particle)
+    plain = task.plain_factors(model)
+    if plain is not None:
+        return LinearResponse(operator.with_factors(plain))
     return FoldEffectResponse(operator, task.constants, model.tissue, study.goal.fractions)
 
 

@@ -100,3 +100,25 @@ def test_thigh_59_structures_with_its_own_structure_as_target(ct_dir, tmp_path):
     offset = (centre - np.array([float(v) for v in dose.ImagePositionPatient])) / np.array([3.0, 3.0, 5.0])
     x, y, z = np.rint(offset).astype(int)
     assert dose.pixel_array[z, y, x] * float(dose.DoseGridScaling) > 1.5
+
+
+@pytest.mark.slow
+def test_thigh_59_structures_with_weights_found_in_three_dimensions(ct_dir):
+    from dosekit.studies.model import parse_study
+    from dosekit.studies.pipeline import compute
+
+    folder = ct_dir / "thigh_59_structures"
+    text = BASE.format(
+        title="Three fields on a structure in a thigh",
+        ct=folder / "ct",
+        more=f'structures = "{folder / "rtstruct.dcm"}"',
+        target='structure = "GTV_Mass_CT"',
+        angle=90,
+    ).replace("spacing_mm = [3.0, 3.0, 5.0]", "spacing_mm = 4.0")
+    text += 'quantity = "effect"\nweights = "all_fields"\n[[field]]\nname = "back"\ngantry_deg = 180\n'
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", DosekitWarning)
+        result = compute(parse_study(text))
+    target = result.effect_histograms[result.target]
+    assert target.dose_at_volume_gy(95.0) >= 0.95 * 2.0
+    assert target.dose_at_volume_gy(2.0) <= 1.07 * 2.0
