@@ -22,14 +22,12 @@ from dosekit.depths.coarse import CoarseGrid, coarse_grid, regrid
 from dosekit.depths.core import Core, solve_core
 from dosekit.depths.deltas import carry_deltas
 from dosekit.depths.kernels import gather_products, march, score_events
+from dosekit.depths.leptons import carry_electrons, decay_muons, michel_electrons
 from dosekit.depths.muons import muon_capture_products, muon_capture_share
 from dosekit.depths.products import (
     NEAR_COSINE,
     Carried,
-    carry_electrons,
     charged_products,
-    decay_muons,
-    michel_electrons,
     neutral_products,
 )
 from dosekit.depths.tables import GROUP_ENERGY_MEV, SpeciesTable, node_spread, species_table
