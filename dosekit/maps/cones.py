@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 
 from dosekit.errors import InputError
 from dosekit.maps.cones_directions import direction_set
+from dosekit.maps.cones_threads import Threads
 
 __all__ = ["FAINT", "WIDENING_MM", "Cones"]
 
@@ -123,12 +124,15 @@ class Cones:
 
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         total = np.zeros(scale.shape)
-        for order, batch in self._batches():
-            turned = _own(scale.transpose(order), float)
-            sources = np.ascontiguousarray(np.asarray(sources_mev, dtype=float).transpose(0, *(a + 1 for a in order)))
-            out = np.zeros((len(batch), *turned.shape))
-            sweep_widening(sources, turned, rates, *self._widening(batch, order), out)  # type: ignore[call-arg]
-            total += out.sum(axis=0).transpose(np.argsort(order))
+        with Threads() as pool:
+            for order, batch in self._batches():
+                turned = _own(scale.transpose(order), float)
+                sources = np.ascontiguousarray(
+                    np.asarray(sources_mev, dtype=float).transpose(0, *(a + 1 for a in order))
+                )
+                out = np.zeros((len(batch), *turned.shape))
+                pool.run(sweep_widening, (sources, turned, rates, *self._widening(batch, order), out), len(batch))
+                total += out.sum(axis=0).transpose(np.argsort(order))
         return total
 
     def gather_widening(
@@ -152,12 +156,15 @@ class Cones:
 
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         total = np.zeros((len(rates), *scale.shape))
-        for order, batch in self._batches():
-            turned = _own(scale.transpose(order), float)
-            asked = _own(wanted.transpose(order), float)
-            out = np.zeros((len(batch), len(rates), *turned.shape))
-            sweep_widening_transposed(asked, turned, rates, *self._widening(batch, order), out)  # type: ignore[call-arg]
-            total += out.sum(axis=0).transpose(0, *(np.argsort(order) + 1))
+        with Threads() as pool:
+            for order, batch in self._batches():
+                turned = _own(scale.transpose(order), float)
+                asked = _own(wanted.transpose(order), float)
+                out = np.zeros((len(batch), len(rates), *turned.shape))
+                pool.run(
+                    sweep_widening_transposed, (asked, turned, rates, *self._widening(batch, order), out), len(batch)
+                )
+                total += out.sum(axis=0).transpose(0, *(np.argsort(order) + 1))
         return total
 
     def _batches(self) -> list[tuple[tuple[int, int, int], list[_Line]]]:
@@ -231,30 +238,31 @@ class Cones:
 
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         total = np.zeros(scale.shape)
-        for axis, lines in enumerate(self.lines()):
-            if not lines:
-                continue
-            order = _AXES[axis]
-            turned = _own(scale.transpose(order))
-            if sources_mev is None:
-                assert stops is not None
-                assert material is not None
-                assert energies_mev is not None
-                emitted = _own(stops.transpose(order), float)
-                index = _own(material.transpose(order))
-                table = np.ascontiguousarray(energies_mev, dtype=float)
-                sources = np.empty((0, 1, 1, 1))
-                first, last = source_ranges(emitted)
-            else:
-                sources = np.ascontiguousarray(sources_mev.transpose(0, *(a + 1 for a in order)))
-                emitted, index, table = np.empty((1, 1, 1)), np.zeros((1, 1, 1), np.uint16), np.zeros((1, 1))
-                first, last = source_ranges(np.abs(sources).sum(axis=0))
-            out = np.zeros(turned.shape)
-            for line in lines:
-                sweep(
-                    emitted, index, table, sources, turned, rates, line.slope_j, line.slope_i, line.down, line.step_mm,
-                    line.weight, first, last, FAINT, out)  # fmt: skip
-            total += out.transpose(np.argsort(order))
+        with Threads() as pool:
+            for axis, lines in enumerate(self.lines()):
+                if not lines:
+                    continue
+                order = _AXES[axis]
+                turned = _own(scale.transpose(order))
+                if sources_mev is None:
+                    assert stops is not None
+                    assert material is not None
+                    assert energies_mev is not None
+                    emitted = _own(stops.transpose(order), float)
+                    index = _own(material.transpose(order))
+                    table = np.ascontiguousarray(energies_mev, dtype=float)
+                    sources = np.empty((0, 1, 1, 1))
+                    first, last = source_ranges(emitted)
+                else:
+                    sources = np.ascontiguousarray(sources_mev.transpose(0, *(a + 1 for a in order)))
+                    emitted, index, table = np.empty((1, 1, 1)), np.zeros((1, 1, 1), np.uint16), np.zeros((1, 1))
+                    first, last = source_ranges(np.abs(sources).sum(axis=0))
+                out = np.zeros(turned.shape)
+                for line in lines:
+                    common = (emitted, index, table, sources, turned, rates, line.slope_j, line.slope_i, line.down)
+                    rest = (line.step_mm, line.weight, first, last, FAINT, out)
+                    pool.run(sweep, (*common, *rest), _rows(line, turned.shape))
+                total += out.transpose(np.argsort(order))
         return total
 
     def gather(
@@ -287,30 +295,37 @@ class Cones:
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         by_mode = energies_mev is None
         total = np.zeros((len(rates), *scale.shape)) if by_mode else np.zeros(scale.shape)
-        for axis, lines in enumerate(self.lines()):
-            if not lines:
-                continue
-            order = _AXES[axis]
-            turned = _own(scale.transpose(order))
-            asked = _own(wanted.transpose(order), float)
-            first, last = source_ranges(asked)
-            if by_mode:
-                index, table = np.zeros((1, 1, 1), np.uint16), np.zeros((1, len(rates)))
-                out, out_modes = np.zeros((1, 1, 1)), np.zeros((len(rates), *turned.shape))
-            else:
-                assert material is not None
-                assert energies_mev is not None
-                index = _own(material.transpose(order))
-                table = np.ascontiguousarray(energies_mev, dtype=float)
-                out, out_modes = np.zeros(turned.shape), np.zeros((1, 1, 1, 1))
-            for line in lines:
-                sweep_transposed(
-                    asked, index, table, by_mode, turned, rates, line.slope_j, line.slope_i, line.down, line.step_mm,
-                    line.weight, first, last, out, out_modes,
-                )  # fmt: skip
-            back = np.argsort(order)
-            total += out_modes.transpose(0, *(back + 1)) if by_mode else out.transpose(back)
+        with Threads() as pool:
+            for axis, lines in enumerate(self.lines()):
+                if not lines:
+                    continue
+                order = _AXES[axis]
+                turned = _own(scale.transpose(order))
+                asked = _own(wanted.transpose(order), float)
+                first, last = source_ranges(asked)
+                if by_mode:
+                    index, table = np.zeros((1, 1, 1), np.uint16), np.zeros((1, len(rates)))
+                    out, out_modes = np.zeros((1, 1, 1)), np.zeros((len(rates), *turned.shape))
+                else:
+                    assert material is not None
+                    assert energies_mev is not None
+                    index = _own(material.transpose(order))
+                    table = np.ascontiguousarray(energies_mev, dtype=float)
+                    out, out_modes = np.zeros(turned.shape), np.zeros((1, 1, 1, 1))
+                for line in lines:
+                    common = (asked, index, table, by_mode, turned, rates, line.slope_j, line.slope_i, line.down)
+                    rest = (line.step_mm, line.weight, first, last, out, out_modes)
+                    pool.run(sweep_transposed, (*common, *rest), _rows(line, turned.shape))
+                back = np.argsort(order)
+                total += out_modes.transpose(0, *(back + 1)) if by_mode else out.transpose(back)
         return total
+
+
+def _rows(line: _Line, shape: tuple[int, ...]) -> int:
+    """Return how many rows of rays cross a volume."""
+    nk, nj, _ = shape
+    ends = [int(np.rint(line.slope_j * (k - nk // 2))) for k in (0, nk - 1)]
+    return nj + max(ends) - min(ends)
 
 
 def _own(array: NDArray[Any], dtype: Any = None) -> NDArray[Any]:

@@ -3,7 +3,7 @@
 A direction crosses the voxels plane by plane along its main axis (array axis 0 here). Seen from one plane, the line
 that starts at ray (r, q) lies in voxel (r + shift_j, q + shift_i), with shifts rounded to whole voxels, so that in
 every plane each voxel belongs to exactly one line: rays never share a voxel, no energy is made or lost, and rows of
-rays can run at the same time in any order with the same result.
+rays can run at the same time in any order with the same result (`dosekit.maps.cones_threads`).
 
 In a voxel of optical thickness a, with h = (e^a - 1)/a to sixth order and T = 1 / (1 + a h), a mode that enters
 with s and is emitted evenly with e leaves s (1 - T) + e (1 - h T) there and goes on with (s + h e) T.
@@ -12,7 +12,7 @@ with s and is emitted evenly with e leaves s (1 - T) + e (1 - h T) there and goe
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 _C3, _C4, _C5, _C6 = 1.0 / 6.0, 1.0 / 24.0, 1.0 / 120.0, 1.0 / 720.0
 
@@ -73,9 +73,25 @@ def _step_back(thick, b, here, asked, weight, worth):  # type: ignore[no-untyped
         here[q] = y + (s - y) * passed
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy")
 def sweep(  # type: ignore[no-untyped-def]
-    stops, material, energies, sources, scale, rates, slope_j, slope_i, down, step_mm, weight, first, last, faint, out
+    stops,
+    material,
+    energies,
+    sources,
+    scale,
+    rates,
+    slope_j,
+    slope_i,
+    down,
+    step_mm,
+    weight,
+    first,
+    last,
+    faint,
+    out,
+    row_begin,
+    row_end,
 ):
     """Carry all modes along one direction and add what they leave to ``out``.
 
@@ -93,7 +109,7 @@ def sweep(  # type: ignore[no-untyped-def]
     width = ni + high_i - low_i
     rows = nj + high_j - low_j
     by_material = sources.shape[0] == 0
-    for row in prange(rows):
+    for row in range(row_begin, min(rows, row_end)):
         state = np.zeros((modes, width))
         left = np.empty(ni)
         emitted = np.empty(ni)
@@ -155,7 +171,7 @@ def sweep(  # type: ignore[no-untyped-def]
                 target[q] += given[q]
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy")
 def sweep_transposed(  # type: ignore[no-untyped-def]
     wanted,
     material,
@@ -172,6 +188,8 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
     last,
     out,
     out_modes,
+    row_begin,
+    row_end,
 ):
     """Carry values back along one direction: the exact transpose of `sweep`.
 
@@ -187,7 +205,7 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
     high_i = max(int(np.rint(slope_i * (0 - middle))), int(np.rint(slope_i * (nk - 1 - middle))))
     width = ni + high_i - low_i
     rows = nj + high_j - low_j
-    for row in prange(rows):
+    for row in range(row_begin, min(rows, row_end)):
         state = np.zeros((modes, width))
         value = np.empty(ni)
         start = width
@@ -255,12 +273,14 @@ def _shift(old, middle, new, taps_j, start_j, taps_i, start_i):  # type: ignore[
                         to[q] += weight * be[q]
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def sweep_widening(sources, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out):  # type: ignore[no-untyped-def]
+@njit(cache=True, nogil=True, error_model="numpy")
+def sweep_widening(
+    sources, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out, line_begin, line_end
+):  # type: ignore[no-untyped-def]
     """Carry all modes along several directions, widening on the way; each direction has its own ``out[line]``."""
     nk, nj, ni = scale.shape
     modes = len(rates)
-    for line in prange(len(weights)):
+    for line in range(line_begin, min(len(weights), line_end)):
         state = np.zeros((modes, nj, ni))
         moved = np.zeros((modes, nj, ni))
         middle = np.zeros((nj, ni))
@@ -280,12 +300,14 @@ def sweep_widening(sources, scale, rates, taps_j, start_j, taps_i, start_i, down
                     _step_shining(thick, rates[m] * steps_mm[line], state[m, j], emitted, given)
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def sweep_widening_transposed(wanted, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out):  # type: ignore[no-untyped-def]
+@njit(cache=True, nogil=True, error_model="numpy")
+def sweep_widening_transposed(
+    wanted, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out, line_begin, line_end
+):  # type: ignore[no-untyped-def]
     """Apply the exact transpose of `sweep_widening`; results per mode in ``out[line, mode]``."""
     nk, nj, ni = scale.shape
     modes = len(rates)
-    for line in prange(len(weights)):
+    for line in range(line_begin, min(len(weights), line_end)):
         state = np.zeros((modes, nj, ni))
         moved = np.zeros((modes, nj, ni))
         middle = np.zeros((nj, ni))
