@@ -33,9 +33,9 @@ def cli() -> None:
 @cli.command()
 @click.argument("study", type=click.Path(path_type=Path))
 @click.option("-o", "--out", type=click.Path(path_type=Path), help="Folder for the results [default: results_STUDY].")
-@click.option("--anonymize", is_flag=True, help="Replace patient identifiers in the DICOM objects.")
+@click.option("--anonymous", is_flag=True, help="Replace patient identifiers in the DICOM objects.")
 @click.option("-q", "--quiet", is_flag=True, help="No progress, no closing lines; warnings and errors only.")
-def run(study: Path, out: Path | None, anonymize: bool, quiet: bool) -> None:
+def run(study: Path, out: Path | None, anonymous: bool, quiet: bool) -> None:
     """Run a whole STUDY (a TOML file, or the name of a shipped one): dose, settings, figures, DICOM, record."""
     from dosekit.studies.pipeline import run as run_study
     from dosekit.studies.shipped import study_path
@@ -43,7 +43,7 @@ def run(study: Path, out: Path | None, anonymize: bool, quiet: bool) -> None:
     path = study_path(study)
     folder = out if out is not None else Path(f"results_{path.stem}")
     with _progress(quiet) as tell:
-        result = run_study(path, folder, anonymize=anonymize or None, progress=tell)
+        result = run_study(path, folder, anonymous=anonymous or None, progress=tell)
     if not quiet:
         click.echo(result.line)
         click.echo(f"results: {folder}")

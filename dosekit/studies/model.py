@@ -208,7 +208,7 @@ class OutputsSection(_Section):
     dicom: bool = True
     dicom_volume: bool = True
     secondary_capture: bool = False
-    anonymize: bool = False
+    anonymous: bool = False
     report: bool = True
 
 

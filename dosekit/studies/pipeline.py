@@ -54,7 +54,7 @@ def run(
     study: str | Path,
     out: str | Path,
     *,
-    anonymize: bool | None = None,
+    anonymous: bool | None = None,
     progress: Progress | None = None,
 ) -> Result:
     """Run a study and write its folder of results, complete or not at all.
@@ -65,7 +65,7 @@ def run(
         The study file.
     out : str or Path
         Folder for the results; must not exist, be empty, or hold an earlier run as it was left.
-    anonymize : bool, optional
+    anonymous : bool, optional
         Replace patient identifiers in DICOM objects; as the study says if not given.
     progress : callable, optional
         Told what is being done and how far it is, 0 to 1.
@@ -86,8 +86,8 @@ def run(
     from dosekit.studies.writing import write_results
 
     said, text = read_study(study)
-    if anonymize is not None:
-        said = said.model_copy(update={"outputs": said.outputs.model_copy(update={"anonymize": anonymize})})
+    if anonymous is not None:
+        said = said.model_copy(update={"outputs": said.outputs.model_copy(update={"anonymous": anonymous})})
     with output_folder(out) as folder:
         result = compute(said, base=Path(study).resolve().parent, progress=progress)
         write_results(result, folder, study_text=text, progress=progress)

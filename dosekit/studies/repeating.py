@@ -77,7 +77,7 @@ def repeat(
         file.write(before.study_text)
     study = Path(file.name)
     try:
-        run(study, out, anonymize=bool(before.results.get("anonymize", False)) or None, progress=progress)
+        run(study, out, anonymous=bool(before.results.get("anonymous", False)) or None, progress=progress)
     finally:
         study.unlink(missing_ok=True)
     after = read_record(Path(out) / "record.json")

@@ -95,7 +95,7 @@ def _numbers(result: Result) -> dict[str, Any]:
         "beam_time_s": summary.beam_time_s,
         "weight_scale": result.scale,
         "momentum_mev_c": {plan.field.name: plan.field.beam.momentum_mev_c for plan in result.planned},
-        "anonymize": result.study.outputs.anonymize,
+        "anonymous": result.study.outputs.anonymous,
     }
 
 
@@ -361,7 +361,7 @@ def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
 
     folder.mkdir()
     outputs = result.study.outputs
-    reference = reference_of(result.grid, run_hash=result.run_hash, anonymous=outputs.anonymize)
+    reference = reference_of(result.grid, run_hash=result.run_hash, anonymous=outputs.anonymous)
     if result.study.volume.phantom is not None and outputs.dicom_volume:
         volume = folder / "volume"
         volume.mkdir()
