@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-
+from functools import cache
 
 # ---------------------------------------------------------------- effects: volume histograms and agreement
 
@@ -257,3 +257,94 @@ def carry_along(lines_by_axis, scale, rates, emitted):
                             carried = (carried + new * h) * passed
         left += out.transpose(np.argsort(order))
     return left
+
+
+# ---------------------------------------------------------------- maps: one field folded ray by ray
+
+
+@cache
+def gaussian_weights(variance, count):
+    """Weights of a Gaussian at whole distances 0..count - 1 (both sides add to one), as the fold cuts it."""
+    from math import ceil, exp, sqrt
+
+    from scipy.special import ive
+
+    reach = ceil(4.0 * sqrt(variance) + 1.0 - 1e-9) if variance > 1e-9 else 0
+    raw = [
+        0.0 if n > reach else float(ive(n, variance)) if variance < 1.0 else exp(-n * n / (2.0 * variance))
+        for n in range(count)
+    ]
+    total = raw[0] + 2.0 * sum(raw[1:])
+    return [weight / total for weight in raw]
+
+
+def fold_core_on_planes(pencils, weights):
+    """Core energy on the field's planes [w, v, u]: every ray and step by itself, spread over all nodes by itself."""
+    import numpy as np
+
+    rays, tables, planes = pencils.rays, pencils.tables, pencils.planes
+    fluence = pencils.fluence(weights)
+    step = planes.spacing_mm
+    w = planes.w_mm
+    magnification = planes.frame.magnification(w)
+    surface = float(planes.frame.magnification(pencils.surface_mm))
+    fine = pencils.fine
+    out = np.zeros((len(w), len(fine.v_mm), len(fine.u_mm)))
+    last = len(tables.power) - 1
+    width_step = 1.0 / pencils.width_steps_per_mm
+
+    def rows(depth):
+        place = max(depth / tables.bin_mm - 0.5, 0.0)
+        row = min(int(place), last - 1)
+        return row, min(place - row, 1.0)
+
+    for r, v in enumerate(rays.v_mm):
+        for c, u in enumerate(rays.u_mm):
+            for k in range(fluence.shape[2]):
+                a0, a1, a2 = tables.start[:, k]
+                before = 0.0
+                for j in range(len(w)):
+                    length = w[j] - w[j - 1] if j else w[0] - pencils.surface_mm + tables.gap_mm
+                    length *= rays.slant[r, c]
+                    depth = rays.wet_mm[j, r, c]
+                    row, part = rows(0.5 * (before + depth))
+                    power = (1 - part) * tables.power[row, k] + part * tables.power[row + 1, k]
+                    power *= rays.scatter[j, r, c] if j else 0.0
+                    a2 += 2 * a1 * length + a0 * length**2 + power * length**3 / 3
+                    a1 += a0 * length + power * length**2 / 2
+                    a0 += power * length
+                    before = depth
+                    row, part = rows(depth)
+                    energy = (1 - part) * tables.narrow[row, 0, k] + part * tables.narrow[row + 1, 0, k]
+                    energy *= fluence[r, c, k] * rays.slant[r, c]
+                    left = (1 - part) * tables.survivors[row, k] + part * tables.survivors[row + 1, k]
+                    gained = a2 - tables.surface_variance_mm2[k] * (magnification[j] / surface) ** 2
+                    variance = max(gained * left, 0.0)
+                    if energy == 0.0:
+                        continue
+                    rung = int(np.sqrt(variance) / width_step)
+                    low, high = (rung * width_step) ** 2, ((rung + 1) * width_step) ** 2
+                    share = (variance - low) / (high - low)
+                    for weight, spread in ((1 - share, low), (share, high)):
+                        along_u, along_v = (
+                            gaussian_weights((spread + extra[j]) / (step * magnification[j]) ** 2, 400)
+                            for extra in pencils.optics_variance_mm2
+                        )
+                        to_u = [along_u[round(abs(place - u) / step)] for place in fine.u_mm]
+                        to_v = [along_v[round(abs(place - v) / step)] for place in fine.v_mm]
+                        out[j] += weight * energy * np.outer(to_v, to_u)
+    return out / ((step * magnification) ** 2)[:, None, None]
+
+
+def sample_by_spline(maps, position):
+    """A map [w, v, u] between its nodes (index units): linear along w, a quadratic B-spline along v and u."""
+    from math import floor
+
+    j = floor(position[0])
+    along = [(j, 1 - (position[0] - j)), (j + 1, position[0] - j)]
+    across = []
+    for place in position[1:]:
+        near = floor(place + 0.5)
+        t = place - near
+        across.append([(near - 1, (0.5 - t) ** 2 / 2), (near, 0.75 - t * t), (near + 1, (0.5 + t) ** 2 / 2)])
+    return sum(a * b * c * maps[k, i, m] for k, a in along for i, b in across[0] for m, c in across[1])

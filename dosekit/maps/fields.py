@@ -66,7 +66,7 @@ class Field:
     couch_deg: float = 0.0
     spots_mm: NDArray[np.float64] = field(default_factory=lambda: np.zeros((1, 2)))
     shift_mm: NDArray[np.float64] = field(default_factory=lambda: np.zeros(1))
-    weights: NDArray[np.float64] | None = None  # type: ignore[assignment]
+    weights: NDArray[np.float64] = None  # type: ignore[assignment]  # ones when not given
     source_distance_mm: float | None = None
 
     def __post_init__(self) -> None:
@@ -83,7 +83,9 @@ class Field:
                 allowed=f"at most {_MOST_SPOTS}",
                 remedy="place the spots further apart",
             )
-        given = np.ones((len(spots), len(shift))) if self.weights is None else self.weights
+        given: Any = self.weights
+        if given is None:
+            given = np.ones((len(spots), len(shift)))
         weights = np.array(given, dtype=np.float64)
         if weights.shape != (len(spots), len(shift)):
             self._refuse(f"weights of shape {weights.shape}", f"shape {(len(spots), len(shift))}, spots by steps")

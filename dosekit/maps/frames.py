@@ -99,7 +99,7 @@ class BeamFrame:
         """
         beam = (np.asarray(points_mm, dtype=np.float64) - np.asarray(self.isocentre_mm)) @ self.rotation.T
         beam[..., :2] /= self.magnification(beam[..., 2])[..., None]
-        return beam
+        return np.asarray(beam)
 
     def to_patient(self, beam_mm: ArrayLike) -> NDArray[np.float64]:
         """Return points from their fan positions, the inverse of `to_beam`.
@@ -116,7 +116,7 @@ class BeamFrame:
         """
         beam = np.array(beam_mm, dtype=np.float64)
         beam[..., :2] *= self.magnification(beam[..., 2])[..., None]
-        return beam @ self.rotation + np.asarray(self.isocentre_mm)
+        return np.asarray(beam @ self.rotation + np.asarray(self.isocentre_mm))
 
 
 def beam_frame(

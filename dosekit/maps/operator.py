@@ -42,7 +42,7 @@ _DIRECT = tuple(name for name in COMPONENTS if name not in STAR_COMPONENTS)
 _LARGEST_MATRIX = 50_000_000
 
 
-class FoldOperator(LinearOperator):  # type: ignore[misc]
+class FoldOperator(LinearOperator):
     """Weights of spots and steps to dose in chosen voxels.
 
     Parameters
@@ -105,7 +105,7 @@ class FoldOperator(LinearOperator):  # type: ignore[misc]
             np.any(self.factors[name]) for name in STAR_COMPONENTS
         )
         count = sum(int(np.prod(field.shape)) for field in self.fields)
-        super().__init__(dtype=np.dtype(np.float64), shape=(len(self.voxels), count))
+        super().__init__(dtype=np.dtype(np.float64), shape=(len(self.voxels), count))  # type: ignore[call-arg]
 
     def split(self, weights: ArrayLike) -> list[NDArray[np.float64]]:
         """Divide a vector of weights into one array for each field.

@@ -96,6 +96,14 @@ class FieldPencils:
         Where the first ray enters something, along w, mm.
     misses : bool
         Whether no ray meets anything.
+    fine, coarse : lattice
+        Nodes on which the core and the broad parts are formed.
+    optics_variance_mm2 : ndarray
+        Variance that size and divergence of the beam add after the surface, shape (2, planes), mm2.
+    width_steps_per_mm : float
+        Rungs of the ladder of widths per mm of sigma.
+    profiles, arguments : tuple
+        What the kernels take: spots on rays, and everything else.
     """
 
     field: Field
@@ -107,6 +115,8 @@ class FieldPencils:
     misses: bool
     fine: _Lattice
     coarse: _Lattice
+    optics_variance_mm2: NDArray[np.float64]
+    width_steps_per_mm: float
     profiles: tuple[NDArray[Any], ...]
     arguments: tuple[Any, ...]
 
@@ -149,7 +159,7 @@ class FieldPencils:
         from dosekit.maps import kernels
 
         fine, coarse = self._empty_maps()
-        kernels.spread(self.fluence(weights), *self.arguments, fine, coarse)
+        kernels.spread(self.fluence(weights), *self.arguments, fine, coarse)  # type: ignore[call-arg]
         return fine, coarse
 
     def weights_of(self, fine: NDArray[np.float64], coarse: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -169,7 +179,7 @@ class FieldPencils:
 
         first_u, first_v, profile_u, profile_v = self.profiles
         fluence = np.zeros((*self.rays.slant.shape, self.field.shape[1]))
-        kernels.spread_transposed(fine, coarse, *self.arguments, fluence)
+        kernels.spread_transposed(fine, coarse, *self.arguments, fluence)  # type: ignore[call-arg]
         weights = np.zeros(self.field.shape)
         kernels.lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weights)
         return weights * PARTICLES_PER_UNIT
@@ -204,7 +214,8 @@ class FieldPencils:
         """
         from dosekit.maps import kernels
 
-        kernels.deposit(voxels, places, *self._voxel_arguments(fine, coarse, rows), factor, out)
+        where = self._voxel_arguments(fine, coarse, rows)
+        kernels.deposit(voxels, places, *where, factor, out)  # type: ignore[call-arg]
 
     def gather(
         self,
@@ -241,7 +252,8 @@ class FieldPencils:
         layers = max(int(np.ceil(thickness / self.matter.spacing_mm[2])), 1)
         starts = np.arange(0, nz + layers, layers, dtype=np.int64) * (ny * nx)
         slabs = np.searchsorted(voxels, starts)
-        kernels.deposit_transposed(slabs, voxels, places, *self._voxel_arguments(fine, coarse, rows), factor, values)
+        where = self._voxel_arguments(fine, coarse, rows)
+        kernels.deposit_transposed(slabs, voxels, places, *where, factor, values)  # type: ignore[call-arg]
         return fine, coarse
 
     def _empty_maps(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -469,6 +481,8 @@ def field_pencils(
         misses=misses,
         fine=fine,
         coarse=coarse,
+        optics_variance_mm2=optics_variance,
+        width_steps_per_mm=1.0 / width_step,
         profiles=(profiles[0][0], profiles[1][0], profiles[0][1], profiles[1][1]),
         arguments=arguments,
     )

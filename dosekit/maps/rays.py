@@ -72,7 +72,7 @@ class Matter:
     @property
     def upper_mm(self) -> NDArray[np.float64]:
         """Upper corner (x, y, z), mm."""
-        return self.lower_mm + self.spacing_mm * np.array(self.shape[::-1])
+        return np.asarray(self.lower_mm + self.spacing_mm * np.array(self.shape[::-1]))
 
     def corners_mm(self) -> NDArray[np.float64]:
         """Return the eight corners of the volume.
@@ -135,7 +135,7 @@ class Planes:
         phase = (self.u_phase_mm, self.v_phase_mm)[axis]
         first = int(np.floor((low_mm - phase) / self.spacing_mm + 1e-9))
         last = max(int(np.ceil((high_mm - phase) / self.spacing_mm - 1e-9)), first + 1)
-        return phase + self.spacing_mm * np.arange(first, last + 1)
+        return np.asarray(phase + self.spacing_mm * np.arange(first, last + 1), dtype=np.float64)
 
 
 @dataclass(frozen=True, eq=False)
@@ -248,7 +248,7 @@ def ray_spacing_mm(spot_sigma_mm: float, voxel_mm: float) -> float:
     wanted = float(np.clip(spot_sigma_mm / RAYS_PER_SPOT_SIGMA, SMALLEST_RAY_SPACING_MM, LARGEST_RAY_SPACING_MM))
     if voxel_mm <= wanted:
         return voxel_mm * max(1, int(wanted / voxel_mm + 1e-9))
-    return voxel_mm / np.ceil(voxel_mm / wanted - 1e-9)
+    return voxel_mm / int(np.ceil(voxel_mm / wanted - 1e-9))
 
 
 def plane_lattice(frame: BeamFrame, matter: Matter, *, spot_sigma_mm: float) -> Planes:
@@ -282,7 +282,7 @@ def plane_lattice(frame: BeamFrame, matter: Matter, *, spot_sigma_mm: float) -> 
     step = float(matter.spacing_mm.min() if along is None else matter.spacing_mm[along])
     step = step * max(1, int(2.0 / step + 1e-9)) if step <= 2.0 else step / np.ceil(step / 2.0 - 1e-9)
     count = max(int(np.ceil((high - low) / step - 1e-9)), 1)
-    w = low + step * (np.arange(count + 2) - 0.5)
+    w = np.asarray(low + step * (np.arange(count + 2) - 0.5), dtype=np.float64)
     phases, aligned = [], []
     for axis in range(2):
         parallel = None if frame.source_distance_mm is not None else _parallel_axis(axes[axis])

@@ -70,7 +70,7 @@ class DoseGrid:
             Positions, mm.
         """
         a = "xyz".index(axis)
-        return self.origin_mm[a] + self.spacing_mm[a] * np.arange(self.shape[2 - a])
+        return np.asarray(self.origin_mm[a] + self.spacing_mm[a] * np.arange(self.shape[2 - a]), dtype=np.float64)
 
     def edges_mm(self, axis: str) -> NDArray[np.float64]:
         """Return the edges of the voxels along an axis.
@@ -86,7 +86,8 @@ class DoseGrid:
             Positions, one more than voxels, mm.
         """
         a = "xyz".index(axis)
-        return self.origin_mm[a] + self.spacing_mm[a] * (np.arange(self.shape[2 - a] + 1) - 0.5)
+        edges = self.origin_mm[a] + self.spacing_mm[a] * (np.arange(self.shape[2 - a] + 1) - 0.5)
+        return np.asarray(edges, dtype=np.float64)
 
 
 def dose_grid_of(wanted: DoseGrid | VoxelGrid | float | tuple[float, float, float], grid: VoxelGrid) -> DoseGrid:

@@ -38,7 +38,7 @@ def width_ladder(widest_mm: float) -> tuple[NDArray[np.float64], float]:
     """
     step = max(_SMALLEST_RUNG_MM, widest_mm / (_MOST_RUNGS - 2))
     count = int(np.ceil(widest_mm / step)) + 2
-    return (step * np.arange(count)) ** 2, float(step)
+    return np.asarray((step * np.arange(count)) ** 2, dtype=np.float64), float(step)
 
 
 def gaussian_taps(

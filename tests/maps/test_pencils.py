@@ -11,7 +11,7 @@ from dosekit.errors import GeometryWarning, SizeError
 from dosekit.maps.fields import Field, spot_lattice
 from dosekit.maps.pencils import field_pencils
 from dosekit.maps.rays import matter_of, plane_lattice, ray_spacing_mm, trace
-from dosekit.maps.tables import TARGETS, step_tables
+from dosekit.maps.tables import TARGETS, moliere_tail_share, step_tables
 
 from invented_fields import BEAM, box_grid, invented_library, mixed_grid
 
@@ -107,12 +107,14 @@ def test_sigma_in_water_follows_fermi_eyges():
     for key in library.quantities:
         if not key.startswith("core"):
             library.quantities[key] = library.quantities[key] * 0.0
-    core = energies(Field("f", BEAM, (0, 0, 0), 0, 0, [[0, 0]]), grid, library)[0]
-    x = grid.centres_mm("x")
-    for row in (5, 20, 30):
-        profile = core[:, row].sum(axis=0)
+    field = Field("f", BEAM, (0, 0, 0), 0, 0, [[0, 0]])
+    pencils = field_pencils(field, matter_of(grid), library)
+    core, _ = pencils.maps(field.weights)  # the tail of single scatterings is not in it
+    x = pencils.fine.u_mm
+    for plane in (6, 21, 31):
+        profile = core[plane, :, :, 0].sum(axis=0)
         sigma = np.sqrt((profile * x**2).sum() / profile.sum())
-        depth = grid.centres_mm("y")[row] - grid.edges_mm("y")[0]
+        depth = pencils.planes.w_mm[plane] - pencils.surface_mm
         wanted = np.sqrt(fermi_eyges_moments("pi-", "water", BEAM.kinetic_energy_mev, depth_mm=depth, sigma_mm=4.0)[2])
         assert sigma == pytest.approx(float(wanted), rel=0.01)
 
@@ -224,12 +226,19 @@ def test_maps_have_an_exact_transpose(rng):
 def test_tables_keep_every_quantity():
     library = invented_library(BEAM, [0.0, 25.0])
     tables = step_tables(library, BEAM)
+    tail = moliere_tail_share(BEAM)
+    narrow = tables.narrow[:-1].transpose(1, 2, 0)
+    for part, key in enumerate(("core", "core_stops")):
+        wanted = (1.0 - tail) * library.quantities[key]
+        np.testing.assert_allclose(narrow[part], wanted, rtol=1e-12, atol=1e-9 * wanted.max())
     assert np.all(np.diff(tables.part_sigma_mm) <= 0.0)
     quarter = (np.arange(4 * len(library.depth_mm)) + 0.5) / 4.0
     for n, name in enumerate(TARGETS):
         broad = tables.broad[:-1, :, tables.part_target == n].sum(axis=2)
         for k in range(2):
-            wanted = sum(library.quantities[key][k] for key in KEYS[name] if not key.startswith("core"))
+            # the tail's share of the core is broad, the rest narrow
+            share = {"core": tail, "core_stops": tail}
+            wanted = sum(share.get(key, 1.0) * library.quantities[key][k] for key in KEYS[name])
             read = np.interp(quarter, library.depth_mm, wanted)
             np.testing.assert_allclose(broad[:, k], read, rtol=1e-9, atol=1e-9 * wanted.max())
 
