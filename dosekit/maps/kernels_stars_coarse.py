@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 __all__ = ["block_sources", "spread_blocks"]
 
@@ -24,14 +24,14 @@ def block_sources(stops, material, table, fz, fy, fx, out):  # type: ignore[no-u
                             out[m, block, y // fy, x // fx] += number * table[kind, m]
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def spread_blocks(energy, dose, block_mass, mass, fz, fy, fx, out):  # type: ignore[no-untyped-def]
+@njit(cache=True, nogil=True, error_model="numpy")
+def spread_blocks(energy, dose, block_mass, mass, fz, fy, fx, out, begin, end):  # type: ignore[no-untyped-def]
     """Spread block energies over voxels: linear dose between block centres, then one dose per block that closes the
     sum.
     """
     nz, ny, nx = mass.shape
     bz, by, bx = energy.shape
-    for block in prange(bz):
+    for block in range(begin, min(bz, end)):
         held = np.zeros((by, bx))
         line = np.empty(bx)
         for z in range(block * fz, min(nz, block * fz + fz)):

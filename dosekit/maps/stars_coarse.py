@@ -15,6 +15,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from dosekit.maps.cones_threads import Threads
+
 __all__ = ["Blocks", "block_factors"]
 
 
@@ -94,7 +96,9 @@ class Blocks:
 
         energy = np.ascontiguousarray(energy, dtype=np.float64)
         out = np.empty(self.shape)
-        spread_blocks(energy, energy / self._block_mass, self._block_mass, self.mass, *self.factors, out)
+        with Threads() as pool:
+            arguments = (energy, energy / self._block_mass, self._block_mass, self.mass, *self.factors, out)
+            pool.run(spread_blocks, arguments, self.coarse_shape[0])
         return out
 
     def sources(

@@ -157,7 +157,7 @@ def test_neutral_stars_at_a_point_coarsely(case, component, radius_mm, evidence)
 @pytest.mark.reference
 @pytest.mark.xfail(
     strict=True,
-    reason="measured 12 to 21 % more than the transport results in water; hydrogen alone, from published n-p "
+    reason="measured 5 to 23 % more than the transport results in water; hydrogen alone, from published n-p "
     "cross-sections, makes nine tenths of what they show",
 )
 def test_neutrons_at_a_point_within_three_percent():
@@ -167,7 +167,7 @@ def test_neutrons_at_a_point_within_three_percent():
 
 @pytest.mark.reference
 @pytest.mark.xfail(
-    strict=True, reason="measured 10 to 20 % less: the tables give the energy of photons from stars but no spectrum"
+    strict=True, reason="measured 5 to 21 % less: the tables give the energy of photons from stars but no spectrum"
 )
 def test_photons_at_a_point_within_three_percent():
     ours, theirs = compared("point_water", "star_photon", np.arange(0, 201, 20))
