@@ -26,11 +26,9 @@ from dosekit.errors import BeamError, InputError, SizeError, UnknownNameError
 if TYPE_CHECKING:
     import xarray as xr
 
-__all__ = ["STAR_LET_KEV_UM", "check_star_scale", "depth_curve"]
+__all__ = ["check_star_scale", "depth_curve"]
 
 _MOST_BINS = 20000
-STAR_LET_KEV_UM: dict[str, float] = {"star_light": 12.0, "star_heavy": 140.0, "star_neutron": 30.0, "star_photon": 0.3}
-"""Round values of the LET of star components, keV/um; by spectra: :func:`dosekit.depths.quality.star_let_kev_um`."""
 
 _SOURCES = (
     "stopping: Bethe with shell, density, Barkas and Bloch terms; straggling: Bohr, Vavilov shape; scattering: Gottschalk 2010; "  # noqa: E501

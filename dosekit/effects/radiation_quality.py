@@ -7,7 +7,7 @@ q`` in the place of ``q`` gives ``sum of L D`` in every voxel, and
 
 for each component (ICRU Report 16, 1970: dose-averaged LET; additivity is its definition).  `let_weighted`
 makes the depth library for the second fold; stops are left alone, so that both folds carry the same stars,
-whose components keep their tabled LET.
+whose components have the LET of their slowing-down spectra in water.
 
 Validity: as the depth library's LET; the products of stars have one LET each, wherever they go.
 """
@@ -20,7 +20,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from dosekit.basis.components import COMPONENTS
-from dosekit.depths.curves import STAR_LET_KEV_UM
+from dosekit.depths.quality import star_let_kev_um
 from dosekit.errors import InputError
 
 if TYPE_CHECKING:
@@ -57,7 +57,7 @@ def let_weighted(library: DepthLibrary) -> DepthLibrary:
 
 
 def let_from_folds(
-    dose_gy: Mapping[str, ArrayLike], weighted: Mapping[str, ArrayLike]
+    dose_gy: Mapping[str, ArrayLike], weighted: Mapping[str, ArrayLike], *, yields: str = "evaluated"
 ) -> dict[str, NDArray[np.float64]]:
     """Give the LET of each component from two folds.
 
@@ -68,6 +68,8 @@ def let_from_folds(
     weighted : mapping of str to array_like
         Outcome of the fold with the library of `let_weighted`, Gy times keV/um (star components are not
         used).
+    yields : str
+        Star yields; the LET of star products follows from their spectra, in water.
 
     Returns
     -------
@@ -85,10 +87,11 @@ def let_from_folds(
     [1.5, 0.0]
     """
     out = {}
+    stars = star_let_kev_um("water", yields=yields)
     for name, values in dose_gy.items():
         dose = np.asarray(values, dtype=np.float64)
-        if name in STAR_LET_KEV_UM:
-            out[name] = np.where(dose > 0.0, STAR_LET_KEV_UM[name], 0.0)
+        if name in stars:
+            out[name] = np.where(dose > 0.0, stars[name], 0.0)
             continue
         times = np.asarray(weighted.get(name, np.nan), dtype=np.float64)
         if name not in COMPONENTS or times.shape != dose.shape:

@@ -1,6 +1,7 @@
 """LET of each component in every voxel of a run, from a second fold with LET-weighted depth curves.
 
-The second fold carries no stars: their products keep the LET that :mod:`dosekit.depths.curves` gives them.
+The second fold carries no stars: their products have the LET of their slowing-down spectra in water
+(:mod:`dosekit.depths.quality`).
 """
 
 from __future__ import annotations
@@ -54,7 +55,7 @@ def let_maps(
         part = fold(plan.field, grid, yields=yields, dose_to=dose_to, libraries={plan.field.name: library})
         weighted += part["dose"].values
     dose: Mapping[str, NDArray[np.float32]] = {name: total["dose"].values[row] for row, name in enumerate(COMPONENTS)}
-    found = let_from_folds(dose, {name: weighted[row] for row, name in enumerate(COMPONENTS)})
+    found = let_from_folds(dose, {name: weighted[row] for row, name in enumerate(COMPONENTS)}, yields=yields)
     return {name: values.astype(np.float32) for name, values in found.items()}
 
 

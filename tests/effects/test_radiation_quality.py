@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from dosekit.beams.beam import Beam
-from dosekit.depths.curves import STAR_LET_KEV_UM
+from dosekit.depths.quality import star_let_kev_um
 from dosekit.depths.library import depth_library
 from dosekit.effects.radiation_quality import let_from_folds, let_weighted, total_let
 from dosekit.errors import InputError
@@ -29,9 +29,10 @@ def test_depth_sums_of_two_libraries_give_the_library_let():
         assert np.array_equal(weighted.quantities[name], library.quantities[name])
 
 
-def test_stars_keep_their_tabled_let():
-    let = let_from_folds({"star_heavy": [1.0, 0.0]}, {})
-    assert let["star_heavy"].tolist() == [STAR_LET_KEV_UM["star_heavy"], 0.0]
+@pytest.mark.parametrize("yields", ["evaluated", "cascade"])
+def test_stars_have_the_let_of_their_spectra(yields):
+    let = let_from_folds({"star_heavy": [1.0, 0.0]}, {}, yields=yields)
+    assert let["star_heavy"].tolist() == [star_let_kev_um("water", yields=yields)["star_heavy"], 0.0]
 
 
 def test_total_is_the_dose_average(rng):
