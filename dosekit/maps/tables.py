@@ -53,7 +53,7 @@ _TAIL_TIMES_B = 0.94
 _THOMAS_FERMI_MEV = 4.216e-3  # hbar c over 0.885 Bohr radii
 _HALF_NORMAL = np.square(ndtri(0.5 + (np.arange(8) + 0.5) / 16.0))  # squares of a normal number, equal shares
 _HALF_NORMAL /= _HALF_NORMAL.mean()
-_MIXED_TARGETS = ("primary", "stops", "in_flight", "decay")
+_MIXED = ("scattered", "scattered_stops", "scattered_wide", "scattered_wide_stops", "in_flight_charged", "decay")
 _MOST_MIXED_WIDTHS = 5
 _MOST_WIDTHS = 3
 _WIDTH_RATIO = 2.0
@@ -152,7 +152,7 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     narrow = np.stack([_clean(library.quantities[key]) for key in ("core", "core_stops")], axis=2)
     share = moliere_tail_share(beam)
     tail = TAIL_SIGMAS**2 * in_water
-    parts = [(share * narrow[..., n], tail, 0.0 * tail, name) for n, name in enumerate(("primary", "stops"))]
+    parts = [(share * narrow[..., n], tail, 0.0 * tail, name, False) for n, name in enumerate(("primary", "stops"))]
     narrow *= 1.0 - share
     divided = {"scattered", "scattered_stops"} if "scattered_wide" in library.quantities else set()
     for key, target in BROAD_TARGETS.items():
@@ -160,12 +160,20 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
             continue
         widths = library.extra_sigma_mm
         extra = np.asarray(widths.get(key, widths.get(key.removesuffix("_stops"), 0.0 * energy)), dtype=np.float64)
-        parts.append((_clean(library.quantities.get(key, 0.0 * energy)), in_water, np.nan_to_num(extra) ** 2, target))
+        parts.append(
+            (
+                _clean(library.quantities.get(key, 0.0 * energy)),
+                in_water,
+                np.nan_to_num(extra) ** 2,
+                target,
+                key in _MIXED,
+            )
+        )
     values, sigmas, targets = [], [], []
-    for quantity, variance, extra, target in parts:
+    for quantity, variance, extra, target, mixed in parts:
         if not quantity.any():
             continue
-        for sigma, part in _divide(quantity, np.maximum(variance, 0.0), extra, mixed=target in _MIXED_TARGETS):
+        for sigma, part in _divide(quantity, np.maximum(variance, 0.0), extra, mixed=mixed):
             values.append(quantity * part)
             sigmas.append(sigma)
             targets.append(TARGETS.index(target))
