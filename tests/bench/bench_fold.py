@@ -1,8 +1,8 @@
 """How long does a fold take? Three volumes, three numbers of spots, and ratios.
 
 Run with ``python tests/bench/bench_fold.py``; nothing here is a test. Prints seconds after a warm-up (the best of
-three), voxel-updates per second (voxels reached times range steps), the share of the machine's measured multiply-add peak that
-the counted multiply-adds make up, memory by the stated formula and by the system, and the ratio to the readable
+three), voxel-updates per second (voxels reached times range steps), the share of the machine's measured multiply-add
+peak that the counted multiply-adds make up, memory by the system, and the ratio to the readable
 oracle on a tiny case. ``--plot FILE`` draws how the cost grows.
 """
 
