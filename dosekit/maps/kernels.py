@@ -1,34 +1,37 @@
 """The fold's inner loops: rays through voxels, spots on rays, spread in planes, and back to voxels.
 
-Everything is plain arrays in, plain arrays out. Each output element is summed by one thread in one order, so that the
-result does not depend on the number of threads. Forward loops and their transposes stand side by side. What the
-arguments mean is said where they are made: :mod:`dosekit.maps.rays`, :mod:`dosekit.maps.tables` and
-:mod:`dosekit.maps.pencils`.
+Everything is plain arrays in, plain arrays out. Kernels do the pieces from `begin` to `end`, which plain threads
+share; each output element is summed in one piece and one order, so that the result does not depend on the number of
+threads. Forward loops and their transposes stand side by side. What the arguments mean is said where they are made:
+:mod:`dosekit.maps.rays`, :mod:`dosekit.maps.tables` and :mod:`dosekit.maps.pencils`.
 """
 
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 __all__ = [
     "deposit",
     "deposit_transposed",
+    "follow_rows",
+    "gather_planes",
     "lay_spots",
     "lay_spots_transposed",
     "prepare_matter",
-    "spread",
-    "spread_transposed",
+    "read_rows",
+    "spread_planes",
+    "touch_rows",
     "trace_rays",
     "widest_spread",
 ]
 
 
-@njit(parallel=True, error_model="numpy", cache=True)
-def prepare_matter(density, index, rsp_per_density, scatter_ratio, rsp, scatter):  # type: ignore[no-untyped-def]
+@njit(nogil=True, error_model="numpy", cache=True)
+def prepare_matter(density, index, rsp_per_density, scatter_ratio, rsp, scatter, begin, end):  # type: ignore[no-untyped-def]
     """Fill relative stopping power, and the same times the material's scattering ratio."""
-    nz, ny, nx = density.shape
-    for z in prange(nz):
+    _, ny, nx = density.shape
+    for z in range(begin, end):
         for y in range(ny):
             for x in range(nx):
                 m = index[z, y, x]
@@ -65,15 +68,17 @@ def _sample(rsp, scatter, fx, fy, fz):  # type: ignore[no-untyped-def]
     return a, b
 
 
-@njit(parallel=True, error_model="numpy", cache=True)
-def trace_rays(rsp, scatter, origin, spacing, base, axes, inverse_source, u, v, w, lead, samples, wet, local):  # type: ignore[no-untyped-def]
+@njit(nogil=True, error_model="numpy", cache=True)
+def trace_rays(  # type: ignore[no-untyped-def]
+    rsp, scatter, origin, spacing, base, axes, inverse_source, u, v, w, lead, samples, wet, local, begin, end
+):
     """Add up stopping power along each ray.
 
     ``wet[j, v, u]`` becomes the water-equivalent path up to plane j, ``local[j, v, u]`` the mean of `scatter` between
     planes j - 1 and j. The first stretch begins `lead` before the first plane. `base` is the isocentre.
     """
     nw = w.size
-    for r in prange(v.size):
+    for r in range(begin, end):
         for c in range(u.size):
             # a point on the ray is start + w * step, in index units
             start = np.empty(3)
@@ -98,12 +103,12 @@ def trace_rays(rsp, scatter, origin, spacing, base, axes, inverse_source, u, v, 
             path = 0.0
             for j in range(nw):
                 stretch = lead if j == 0 else w[j] - w[j - 1]
-                begin = w[0] - lead if j == 0 else w[j - 1]
+                before = w[0] - lead if j == 0 else w[j - 1]
                 sum_a = 0.0
                 sum_b = 0.0
                 for s in range(samples):
-                    low = max(begin + stretch * s / samples, enter)
-                    high = min(begin + stretch * (s + 1) / samples, leave)
+                    low = max(before + stretch * s / samples, enter)
+                    high = min(before + stretch * (s + 1) / samples, leave)
                     if high <= low:
                         continue
                     at = 0.5 * (low + high)
@@ -129,18 +134,17 @@ def _row(wet, inverse_bin, last):  # type: ignore[no-untyped-def]
     return i, place - i
 
 
-@njit(parallel=True, error_model="numpy", cache=True)
-def widest_spread(wet, local, slant, w, inverse_bin, power, weight, start, ahead, reference):  # type: ignore[no-untyped-def]
-    """Return the largest scatter variance of any ray and step that still counts, for each row of rays."""
-    nw, nv, nu = wet.shape
+@njit(nogil=True, error_model="numpy", cache=True)
+def widest_spread(wet, local, slant, w, inverse_bin, power, weight, start, ahead, reference, widest, begin, end):  # type: ignore[no-untyped-def]
+    """Find the largest scatter variance of any ray and step that still counts, for each row of rays."""
+    nw, _, nu = wet.shape
     steps = power.shape[1]
     last = power.shape[0] - 1
-    widest = np.zeros(nv)
-    for r in prange(nv):
+    a0, a1, a2 = np.empty(steps), np.empty(steps), np.empty(steps)
+    for r in range(begin, end):
         for c in range(nu):
-            a0 = start[0].copy()
-            a1 = start[1].copy()
-            a2 = start[2].copy()
+            for k in range(steps):
+                a0[k], a1[k], a2[k] = start[0, k], start[1, k], start[2, k]
             before = 0.0
             for j in range(nw):
                 dl = (ahead if j == 0 else w[j] - w[j - 1]) * slant[r, c]
@@ -154,15 +158,14 @@ def widest_spread(wet, local, slant, w, inverse_bin, power, weight, start, ahead
                     a0[k] += t * dl
                     if (1.0 - g) * weight[n, k] + g * weight[n + 1, k] > 0.0:
                         widest[r] = max(widest[r], a2[k] - reference[k])
-    return widest.max()
 
 
-@njit(parallel=True, error_model="numpy", cache=True)
-def lay_spots(weights, first_u, first_v, profile_u, profile_v, fluence):  # type: ignore[no-untyped-def]
+@njit(nogil=True, error_model="numpy", cache=True)
+def lay_spots(weights, first_u, first_v, profile_u, profile_v, fluence, begin, end):  # type: ignore[no-untyped-def]
     """Add the spots' profiles to the rays: fluence[v, u, step] in particles per ray."""
     spots, width_u, steps = profile_u.shape
     width_v = profile_v.shape[1]
-    for r in prange(fluence.shape[0]):
+    for r in range(begin, end):
         for s in range(spots):
             p = r - first_v[s]
             if p < 0 or p >= width_v:
@@ -173,12 +176,12 @@ def lay_spots(weights, first_u, first_v, profile_u, profile_v, fluence):  # type
                     fluence[r, c, k] += weights[s, k] * profile_v[s, p, k] * profile_u[s, q, k]
 
 
-@njit(parallel=True, error_model="numpy", cache=True)
-def lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weights):  # type: ignore[no-untyped-def]
+@njit(nogil=True, error_model="numpy", cache=True)
+def lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weights, begin, end):  # type: ignore[no-untyped-def]
     """Transpose of `lay_spots`."""
-    spots, width_u, steps = profile_u.shape
+    _, width_u, steps = profile_u.shape
     width_v = profile_v.shape[1]
-    for s in prange(spots):
+    for s in range(begin, end):
         for p in range(width_v):
             for q in range(width_u):
                 for k in range(steps):
@@ -225,14 +228,18 @@ def _fill_row(  # type: ignore[no-untyped-def]
     energy, stops = np.empty(steps), np.empty(steps)
     rung, upper = np.empty(steps, dtype=np.int64), np.empty(steps)
     here = np.zeros((rungs + 1, 2))
-    touched[r, :] = 0
-    gathered[r] = 0.0
+    for g in range(rungs):
+        touched[r, g] = 0
+    for m in range(gathered.shape[1]):
+        for b in range(parts):
+            gathered[r, m, b] = 0.0
     for c in range(wet.shape[2]):
         depth = wet[j, r, c]
         before = wet[j - 1, r, c] if j > 0 else 0.0
         _advance(state, r, c, j, gap * slant[r, c], before, depth, local[j, r, c], inverse_bin, power, alive, last)
         i, f = _row(depth, inverse_bin, last)
-        total[:] = 0.0
+        for b in range(parts):
+            total[b] = 0.0
         some = False
         n = min(int(depth * inverse_bin * 4.0), broad.shape[0] - 1)
         for k in range(steps):
@@ -264,7 +271,9 @@ def _fill_row(  # type: ignore[no-untyped-def]
         for g in range(rungs):
             if here[g, 0] != 0.0 or here[g, 1] != 0.0:
                 if touched[r, g] == 0:
-                    source[g, :, r] = 0.0
+                    for m in range(source.shape[3]):
+                        source[g, 0, r, m] = 0.0
+                        source[g, 1, r, m] = 0.0
                 source[g, 0, r, c] = here[g, 0]
                 source[g, 1, r, c] = here[g, 1]
                 touched[r, g] = 1
@@ -283,7 +292,8 @@ def _touch_row(  # type: ignore[no-untyped-def]
 ):  # fmt: skip
     """Take one row of rays to plane j; keep their variances and note which widths they use."""
     last = power.shape[0] - 1
-    touched[r, :] = 0
+    for g in range(ladder.size):
+        touched[r, g] = 0
     for c in range(wet.shape[2]):
         depth = wet[j, r, c]
         before = wet[j - 1, r, c] if j > 0 else 0.0
@@ -312,14 +322,17 @@ def _spread_plane(  # type: ignore[no-untyped-def]
     across = np.empty((nv, columns))
     total = np.zeros((components, rows, columns))
     for g in range(widths):
-        if not touched[:, g].any():
+        used = False
+        for r in range(nv):
+            used = used or touched[r, g] != 0
+        if not used:
             continue
         reach = radius[g]
         for part in range(parts):
             target = total[component[g] + part]
             for r in range(nv):
                 line = across[r]
-                line[:] = 0.0
+                _clear(line)
                 if touched[r, g] == 0:
                     continue
                 given = source[g, part, r]
@@ -358,11 +371,11 @@ def _gather_plane(  # type: ignore[no-untyped-def]
             if touched[r, g] == 0:
                 continue
             for part in range(parts):
-                line[:] = 0.0
+                _clear(line)
                 for row in range(max(0, first_row + r - reach), min(rows, first_row + r + reach + 1)):
                     _add_scaled(line, wanted[component[g] + part, row], taps_v[g, abs(row - first_row - r)])
                 given = source[g, part, r]
-                given[:] = 0.0
+                _clear(given)
                 for t in range(-reach, reach + 1):
                     begin = first_column + t
                     c0, c1 = max(0, -begin), min(nu, columns - begin)
@@ -378,10 +391,19 @@ def _add_scaled(target, values, factor):  # type: ignore[no-untyped-def]
 
 
 @njit(error_model="numpy", cache=True)
+def _clear(target):  # type: ignore[no-untyped-def]
+    """Set a line to nothing."""
+    for c in range(target.size):
+        target[c] = 0.0
+
+
+@njit(error_model="numpy", cache=True)
 def _to_coarse_rows(gathered, coarse_row, share_v, source):  # type: ignore[no-untyped-def]
     """Share out rows of rays among coarse rows: source[part, 0, row, column] from gathered[v, column, part]."""
     nv, active, parts = gathered.shape
-    source[:] = 0.0
+    for b in range(parts):
+        for n in range(source.shape[2]):
+            _clear(source[b, 0, n])
     for r in range(nv):
         n = coarse_row[r] - coarse_row[0]
         for b in range(parts):
@@ -424,106 +446,96 @@ def _read_row(  # type: ignore[no-untyped-def]
                 fluence[r, c, k] += value * slant[r, c]
 
 
-@njit(error_model="numpy", cache=True)
-def _begin(start, state):  # type: ignore[no-untyped-def]
-    """Set the moments of every ray to those at the start."""
-    for r in range(state.shape[0]):
-        for c in range(state.shape[1]):
-            state[r, c] = start
-
-
-@njit(parallel=True, error_model="numpy", cache=True)
-def spread(  # type: ignore[no-untyped-def]
-    fluence, wet, local, slant, w, inverse_bin, power, alive, survivors, narrow, start, ahead, reference, growth,
-    ladder, inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
-    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_radius,
-    broad_component, coarse_first_row, coarse_first_column, coarse_per_area, block, fine_map, coarse_map,
+@njit(nogil=True, error_model="numpy", cache=True)
+def follow_rows(  # type: ignore[no-untyped-def]
+    fluence, wet, local, slant, gaps, inverse_bin, power, alive, survivors, narrow, state, reference, growth, ladder,
+    inverse_width_step, broad, column, share_u, source, touched, gathered, first_plane, last_plane, begin, end,
 ):  # fmt: skip
-    """Fold the fluence on rays into maps on the planes: fine_map[j, v, u, 2] and coarse_map[j, v, u, component].
+    """Follow rows of rays through a block of planes; see `_fill_row`."""
+    for r in range(begin, end):
+        for j in range(first_plane, last_plane):
+            n = j - first_plane
+            _fill_row(
+                j, r, gaps[j], fluence, wet, local, slant, inverse_bin, power, alive, survivors, narrow, state,
+                reference, growth[j], ladder, inverse_width_step, broad, column, share_u, source[n], touched[n],
+                gathered[n],
+            )  # fmt: skip
 
-    Rows of rays are followed through a block of planes at a time; then the planes of the block are spread.
-    """
-    nw, nv, nu = wet.shape
-    parts = broad.shape[2]
-    active_columns = coarse_column[nu - 1] - coarse_column[0] + 2
-    state = np.empty((nv, nu, 3, power.shape[1]))
-    _begin(start, state)
-    source = np.empty((block, ladder.size, 2, nv, nu))
-    touched = np.zeros((block, nv, ladder.size), dtype=np.uint8)
-    gathered = np.empty((block, nv, active_columns, parts))
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def spread_planes(  # type: ignore[no-untyped-def]
+    source, touched, gathered, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, component, per_area,
+    coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_radius, coarse_first_row, coarse_first_column,
+    broad_component, coarse_per_area, fine_map, coarse_map, first_plane, begin, end,
+):  # fmt: skip
+    """Spread planes of a block: fine_map[j, v, u, 2] and coarse_map[j, v, u, component]."""
+    _, nv, active, parts = gathered.shape
     lines = coarse_row[nv - 1] - coarse_row[0] + 2
+    coarse_source = np.empty((parts, 1, lines, active))
     every_part = np.ones((lines, parts), dtype=np.uint8)
-    no_component = np.zeros(ladder.size, dtype=np.int64)
-    for begin in range(0, nw, block):
-        end = min(begin + block, nw)
-        for r in prange(nv):
-            for j in range(begin, end):
-                _fill_row(
-                    j, r, ahead if j == 0 else w[j] - w[j - 1], fluence, wet, local, slant, inverse_bin, power,
-                    alive, survivors, narrow, state, reference, growth[j], ladder, inverse_width_step, broad,
-                    coarse_column, coarse_share_u, source[j - begin], touched[j - begin], gathered[j - begin],
-                )  # fmt: skip
-        for j in prange(begin, end):
-            n = kernel_of_plane[j]
-            _spread_plane(
-                source[j - begin], touched[j - begin], taps_u[n], taps_v[n], radius[n], first_row, first_column,
-                no_component, per_area[j], fine_map[j],
-            )  # fmt: skip
-            coarse_source = np.empty((parts, 1, lines, active_columns))
-            _to_coarse_rows(gathered[j - begin], coarse_row, coarse_share_v, coarse_source)
-            _spread_plane(
-                coarse_source, every_part, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_first_row,
-                coarse_first_column, broad_component, coarse_per_area[j], coarse_map[j],
-            )  # fmt: skip
+    for m in range(begin, end):
+        j = first_plane + m
+        n = kernel_of_plane[j]
+        _spread_plane(
+            source[m], touched[m], taps_u[n], taps_v[n], radius[n], first_row, first_column, component, per_area[j],
+            fine_map[j],
+        )  # fmt: skip
+        _to_coarse_rows(gathered[m], coarse_row, coarse_share_v, coarse_source)
+        _spread_plane(
+            coarse_source, every_part, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_first_row,
+            coarse_first_column, broad_component, coarse_per_area[j], coarse_map[j],
+        )  # fmt: skip
 
 
-@njit(parallel=True, error_model="numpy", cache=True)
-def spread_transposed(  # type: ignore[no-untyped-def]
-    fine_map, coarse_map, wet, local, slant, w, inverse_bin, power, alive, survivors, narrow, start, ahead, reference,
-    growth, ladder, inverse_width_step, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, per_area,
-    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, broad_taps_u, broad_taps_v, broad_radius,
-    broad_component, coarse_first_row, coarse_first_column, coarse_per_area, block, fluence,
+@njit(nogil=True, error_model="numpy", cache=True)
+def touch_rows(  # type: ignore[no-untyped-def]
+    wet, local, slant, gaps, inverse_bin, power, alive, survivors, narrow, state, reference, growth, ladder,
+    inverse_width_step, touched, variances, first_plane, last_plane, begin, end,
 ):  # fmt: skip
-    """Transpose of `spread`: maps on the planes to fluence on rays."""
-    nw, nv, nu = wet.shape
-    steps = power.shape[1]
-    lines = coarse_row[nv - 1] - coarse_row[0] + 2
-    active_columns = coarse_column[nu - 1] - coarse_column[0] + 2
-    state = np.empty((nv, nu, 3, steps))
-    _begin(start, state)
-    fluence[:] = 0.0
-    source = np.empty((block, ladder.size, 2, nv, nu))
-    touched = np.zeros((block, nv, ladder.size), dtype=np.uint8)
-    variances = np.zeros((block, nv, nu, steps))
-    coarse_source = np.empty((block, broad.shape[2], 1, lines, active_columns))
-    every_part = np.ones((lines, broad.shape[2]), dtype=np.uint8)
-    no_component = np.zeros(ladder.size, dtype=np.int64)
-    for begin in range(0, nw, block):
-        end = min(begin + block, nw)
-        for r in prange(nv):
-            for j in range(begin, end):
-                _touch_row(
-                    j, r, ahead if j == 0 else w[j] - w[j - 1], wet, local, slant, inverse_bin, power, alive, survivors,
-                    narrow, state, reference, growth[j], ladder, inverse_width_step, touched[j - begin],
-                    variances[j - begin],
-                )  # fmt: skip
-        for j in prange(begin, end):
-            n = kernel_of_plane[j]
-            _gather_plane(
-                fine_map[j], touched[j - begin], taps_u[n], taps_v[n], radius[n], first_row, first_column,
-                no_component, per_area[j], source[j - begin],
+    """Follow rows of rays through a block of planes without their fluence; see `_touch_row`."""
+    for r in range(begin, end):
+        for j in range(first_plane, last_plane):
+            n = j - first_plane
+            _touch_row(
+                j, r, gaps[j], wet, local, slant, inverse_bin, power, alive, survivors, narrow, state, reference,
+                growth[j], ladder, inverse_width_step, touched[n], variances[n],
             )  # fmt: skip
-            _gather_plane(
-                coarse_map[j], every_part, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_first_row,
-                coarse_first_column, broad_component, coarse_per_area[j], coarse_source[j - begin],
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def gather_planes(  # type: ignore[no-untyped-def]
+    source, touched, coarse_source, kernel_of_plane, taps_u, taps_v, radius, first_row, first_column, component,
+    per_area, broad_taps_u, broad_taps_v, broad_radius, coarse_first_row, coarse_first_column, broad_component,
+    coarse_per_area, fine_map, coarse_map, first_plane, begin, end,
+):  # fmt: skip
+    """Transpose of `spread_planes`, up to the coarse rows."""
+    every_part = np.ones((coarse_source.shape[3], coarse_source.shape[1]), dtype=np.uint8)
+    for m in range(begin, end):
+        j = first_plane + m
+        n = kernel_of_plane[j]
+        _gather_plane(
+            fine_map[j], touched[m], taps_u[n], taps_v[n], radius[n], first_row, first_column, component, per_area[j],
+            source[m],
+        )  # fmt: skip
+        _gather_plane(
+            coarse_map[j], every_part, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_first_row,
+            coarse_first_column, broad_component, coarse_per_area[j], coarse_source[m],
+        )  # fmt: skip
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def read_rows(  # type: ignore[no-untyped-def]
+    wet, slant, inverse_bin, alive, narrow, variances, ladder, inverse_width_step, broad, column, share_u, row,
+    share_v, source, coarse_source, fluence, first_plane, last_plane, begin, end,
+):  # fmt: skip
+    """Transpose of `follow_rows`."""
+    for r in range(begin, end):
+        for j in range(first_plane, last_plane):
+            n = j - first_plane
+            _read_row(
+                j, r, wet, slant, inverse_bin, alive, narrow, variances[n], ladder, inverse_width_step, broad, column,
+                share_u, row, share_v, source[n], coarse_source[n], fluence,
             )  # fmt: skip
-        for r in prange(nv):
-            for j in range(begin, end):
-                _read_row(
-                    j, r, wet, slant, inverse_bin, alive, narrow, variances[j - begin], ladder, inverse_width_step,
-                    broad, coarse_column, coarse_share_u, coarse_row, coarse_share_v, source[j - begin],
-                    coarse_source[j - begin], fluence,
-                )  # fmt: skip
 
 
 @njit(inline="always", error_model="numpy")
@@ -550,11 +562,11 @@ def _three(value, first, inverse_step, count, on_nodes, weights):  # type: ignor
     return i - 1, i >= 1 and i + 1 < count
 
 
-@njit(parallel=True, error_model="numpy", cache=True)
+@njit(nogil=True, error_model="numpy", cache=True)
 def deposit(  # type: ignore[no-untyped-def]
     voxels, places, shape, origin, spacing, base, axes, inverse_source, sub, on_nodes, w0, inverse_dw,
     u0, v0, inverse_h, fine_map, coarse_u0, coarse_v0, coarse_inverse_h, coarse_map, fine_target, coarse_target,
-    index, rsp, factor, out,
+    index, rsp, factor, out, begin, end,
 ):  # fmt: skip
     """Add the maps to voxels: out[target, place] += factor[target, material] * the mean of the map in the voxel.
 
@@ -564,17 +576,104 @@ def deposit(  # type: ignore[no-untyped-def]
     share = 1.0 / (sub[0] * sub[1] * sub[2])
     parts = 2  # of fine_map: energy and stops; written out so that the loops over it vanish
     components = 6  # of coarse_map: all targets
-    chunk = 4096
-    for piece in prange((voxels.size + chunk - 1) // chunk):
+    value = np.zeros(parts + components)
+    weights_u, weights_v = np.empty(3), np.empty(3)
+    for n in range(begin, end):
+        flat = voxels[n]
+        ix = flat % nx
+        iy = (flat // nx) % ny
+        iz = flat // (nx * ny)
+        for m in range(parts + components):
+            value[m] = 0.0
+        some = False
+        for a in range(sub[0]):
+            px = origin[0] + spacing[0] * (ix + (a + 0.5) / sub[0] - 0.5) - base[0]
+            for b in range(sub[1]):
+                py = origin[1] + spacing[1] * (iy + (b + 0.5) / sub[1] - 0.5) - base[1]
+                for c in range(sub[2]):
+                    pz = origin[2] + spacing[2] * (iz + (c + 0.5) / sub[2] - 0.5) - base[2]
+                    w = axes[2, 0] * px + axes[2, 1] * py + axes[2, 2] * pz
+                    j, fw, inside = _corner(w, w0, inverse_dw, fine_map.shape[0])
+                    if not inside:
+                        continue
+                    shrink = 1.0 / (1.0 + w * inverse_source)
+                    u = (axes[0, 0] * px + axes[0, 1] * py + axes[0, 2] * pz) * shrink
+                    v = (axes[1, 0] * px + axes[1, 1] * py + axes[1, 2] * pz) * shrink
+                    k, inside_u = _three(u, u0, inverse_h, fine_map.shape[2], on_nodes, weights_u)
+                    i, inside_v = _three(v, v0, inverse_h, fine_map.shape[1], on_nodes, weights_v)
+                    if inside_u and inside_v:
+                        some = True
+                        for dj in range(2):
+                            ww = (fw if dj else 1.0 - fw) * share
+                            for di in range(3):
+                                wv = ww * weights_v[di]
+                                if wv == 0.0:
+                                    continue
+                                for dk in range(3):
+                                    weight = wv * weights_u[dk]
+                                    if weight == 0.0:
+                                        continue
+                                    cell = fine_map[j + dj, i + di, k + dk]
+                                    for m in range(parts):
+                                        value[m] += weight * cell[m]
+                    k, fu, inside_u = _corner(u, coarse_u0, coarse_inverse_h, coarse_map.shape[2])
+                    i, fv, inside_v = _corner(v, coarse_v0, coarse_inverse_h, coarse_map.shape[1])
+                    if inside_u and inside_v:
+                        some = True
+                        for dj in range(2):
+                            ww = fw if dj else 1.0 - fw
+                            for di in range(2):
+                                wv = ww * (fv if di else 1.0 - fv)
+                                for dk in range(2):
+                                    weight = wv * (fu if dk else 1.0 - fu) * share
+                                    cell = coarse_map[j + dj, i + di, k + dk]
+                                    for m in range(components):
+                                        value[parts + m] += weight * cell[m]
+        if some:
+            place = places[n]
+            matter = index[flat]
+            for m in range(parts + components):
+                t = fine_target[m] if m < parts else coarse_target[m - parts]
+                if t >= 0:
+                    size = factor[t, matter]
+                    out[t, place] += (size if size >= 0.0 else -size * rsp[flat]) * value[m]
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def deposit_transposed(  # type: ignore[no-untyped-def]
+    slabs, voxels, places, shape, origin, spacing, base, axes, inverse_source, sub, on_nodes, w0, inverse_dw,
+    u0, v0, inverse_h, fine_map, coarse_u0, coarse_v0, coarse_inverse_h, coarse_map, fine_target, coarse_target,
+    index, rsp, factor, out, colour, begin, end,
+):  # fmt: skip
+    """Transpose of `deposit`: add voxels to the maps.
+
+    Voxels of one slab ``slabs[s]:slabs[s + 1]`` reach no node that the next slab but one reaches, so that even slabs
+    may be done at once, and then odd ones.
+    """
+    ny, nx = shape[1], shape[2]
+    share = 1.0 / (sub[0] * sub[1] * sub[2])
+    parts = 2  # of fine_map: energy and stops; written out so that the loops over it vanish
+    components = 6  # of coarse_map: all targets
+    for half in range(begin, end):
+        slab = 2 * half + colour
         value = np.zeros(parts + components)
         weights_u, weights_v = np.empty(3), np.empty(3)
-        for n in range(piece * chunk, min((piece + 1) * chunk, voxels.size)):
+        for n in range(slabs[slab], slabs[slab + 1]):
             flat = voxels[n]
+            place = places[n]
             ix = flat % nx
             iy = (flat // nx) % ny
             iz = flat // (nx * ny)
-            value[:] = 0.0
             some = False
+            for m in range(parts + components):
+                t = fine_target[m] if m < parts else coarse_target[m - parts]
+                value[m] = 0.0
+                if t >= 0:
+                    size = factor[t, index[flat]]
+                    value[m] = (size if size >= 0.0 else -size * rsp[flat]) * out[t, place] * share
+                    some = some or value[m] != 0.0
+            if not some:
+                continue
             for a in range(sub[0]):
                 px = origin[0] + spacing[0] * (ix + (a + 0.5) / sub[0] - 0.5) - base[0]
                 for b in range(sub[1]):
@@ -591,9 +690,8 @@ def deposit(  # type: ignore[no-untyped-def]
                         k, inside_u = _three(u, u0, inverse_h, fine_map.shape[2], on_nodes, weights_u)
                         i, inside_v = _three(v, v0, inverse_h, fine_map.shape[1], on_nodes, weights_v)
                         if inside_u and inside_v:
-                            some = True
                             for dj in range(2):
-                                ww = (fw if dj else 1.0 - fw) * share
+                                ww = fw if dj else 1.0 - fw
                                 for di in range(3):
                                     wv = ww * weights_v[di]
                                     if wv == 0.0:
@@ -602,105 +700,16 @@ def deposit(  # type: ignore[no-untyped-def]
                                         weight = wv * weights_u[dk]
                                         if weight == 0.0:
                                             continue
-                                        cell = fine_map[j + dj, i + di, k + dk]
                                         for m in range(parts):
-                                            value[m] += weight * cell[m]
+                                            fine_map[j + dj, i + di, k + dk, m] += weight * value[m]
                         k, fu, inside_u = _corner(u, coarse_u0, coarse_inverse_h, coarse_map.shape[2])
                         i, fv, inside_v = _corner(v, coarse_v0, coarse_inverse_h, coarse_map.shape[1])
                         if inside_u and inside_v:
-                            some = True
                             for dj in range(2):
                                 ww = fw if dj else 1.0 - fw
                                 for di in range(2):
                                     wv = ww * (fv if di else 1.0 - fv)
                                     for dk in range(2):
-                                        weight = wv * (fu if dk else 1.0 - fu) * share
-                                        cell = coarse_map[j + dj, i + di, k + dk]
+                                        weight = wv * (fu if dk else 1.0 - fu)
                                         for m in range(components):
-                                            value[parts + m] += weight * cell[m]
-            if some:
-                place = places[n]
-                matter = index[flat]
-                for m in range(parts + components):
-                    t = fine_target[m] if m < parts else coarse_target[m - parts]
-                    if t >= 0:
-                        size = factor[t, matter]
-                        out[t, place] += (size if size >= 0.0 else -size * rsp[flat]) * value[m]
-
-
-@njit(parallel=True, error_model="numpy", cache=True)
-def deposit_transposed(  # type: ignore[no-untyped-def]
-    slabs, voxels, places, shape, origin, spacing, base, axes, inverse_source, sub, on_nodes, w0, inverse_dw,
-    u0, v0, inverse_h, fine_map, coarse_u0, coarse_v0, coarse_inverse_h, coarse_map, fine_target, coarse_target,
-    index, rsp, factor, out,
-):  # fmt: skip
-    """Transpose of `deposit`: add voxels to the maps.
-
-    Voxels of one slab ``slabs[s]:slabs[s + 1]`` reach no node that the next slab but one reaches, so that even slabs
-    may be done at once, and then odd ones.
-    """
-    ny, nx = shape[1], shape[2]
-    share = 1.0 / (sub[0] * sub[1] * sub[2])
-    parts = 2  # of fine_map: energy and stops; written out so that the loops over it vanish
-    components = 6  # of coarse_map: all targets
-    count = slabs.size - 1
-    for colour in range(2):
-        for half in prange((count - colour + 1) // 2):
-            slab = 2 * half + colour
-            value = np.zeros(parts + components)
-            weights_u, weights_v = np.empty(3), np.empty(3)
-            for n in range(slabs[slab], slabs[slab + 1]):
-                flat = voxels[n]
-                place = places[n]
-                ix = flat % nx
-                iy = (flat // nx) % ny
-                iz = flat // (nx * ny)
-                some = False
-                for m in range(parts + components):
-                    t = fine_target[m] if m < parts else coarse_target[m - parts]
-                    value[m] = 0.0
-                    if t >= 0:
-                        size = factor[t, index[flat]]
-                        value[m] = (size if size >= 0.0 else -size * rsp[flat]) * out[t, place] * share
-                        some = some or value[m] != 0.0
-                if not some:
-                    continue
-                for a in range(sub[0]):
-                    px = origin[0] + spacing[0] * (ix + (a + 0.5) / sub[0] - 0.5) - base[0]
-                    for b in range(sub[1]):
-                        py = origin[1] + spacing[1] * (iy + (b + 0.5) / sub[1] - 0.5) - base[1]
-                        for c in range(sub[2]):
-                            pz = origin[2] + spacing[2] * (iz + (c + 0.5) / sub[2] - 0.5) - base[2]
-                            w = axes[2, 0] * px + axes[2, 1] * py + axes[2, 2] * pz
-                            j, fw, inside = _corner(w, w0, inverse_dw, fine_map.shape[0])
-                            if not inside:
-                                continue
-                            shrink = 1.0 / (1.0 + w * inverse_source)
-                            u = (axes[0, 0] * px + axes[0, 1] * py + axes[0, 2] * pz) * shrink
-                            v = (axes[1, 0] * px + axes[1, 1] * py + axes[1, 2] * pz) * shrink
-                            k, inside_u = _three(u, u0, inverse_h, fine_map.shape[2], on_nodes, weights_u)
-                            i, inside_v = _three(v, v0, inverse_h, fine_map.shape[1], on_nodes, weights_v)
-                            if inside_u and inside_v:
-                                for dj in range(2):
-                                    ww = fw if dj else 1.0 - fw
-                                    for di in range(3):
-                                        wv = ww * weights_v[di]
-                                        if wv == 0.0:
-                                            continue
-                                        for dk in range(3):
-                                            weight = wv * weights_u[dk]
-                                            if weight == 0.0:
-                                                continue
-                                            for m in range(parts):
-                                                fine_map[j + dj, i + di, k + dk, m] += weight * value[m]
-                            k, fu, inside_u = _corner(u, coarse_u0, coarse_inverse_h, coarse_map.shape[2])
-                            i, fv, inside_v = _corner(v, coarse_v0, coarse_inverse_h, coarse_map.shape[1])
-                            if inside_u and inside_v:
-                                for dj in range(2):
-                                    ww = fw if dj else 1.0 - fw
-                                    for di in range(2):
-                                        wv = ww * (fv if di else 1.0 - fv)
-                                        for dk in range(2):
-                                            weight = wv * (fu if dk else 1.0 - fu)
-                                            for m in range(components):
-                                                coarse_map[j + dj, i + di, k + dk, m] += weight * value[parts + m]
+                                            coarse_map[j + dj, i + di, k + dk, m] += weight * value[parts + m]

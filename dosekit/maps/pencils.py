@@ -23,6 +23,7 @@ from numpy.typing import NDArray
 
 from dosekit.errors import GeometryWarning
 from dosekit.grids.memory import check_memory
+from dosekit.maps.cones_threads import Threads
 from dosekit.maps.fields import PARTICLES_PER_UNIT, Field
 from dosekit.maps.rays import Matter, Planes, RayTrace, plane_lattice, trace
 from dosekit.maps.tables import TARGETS, StepTables, step_tables
@@ -50,6 +51,93 @@ class _Lattice:
     u_mm: NDArray[np.float64]
     v_mm: NDArray[np.float64]
     spacing_mm: float
+
+
+@dataclass(frozen=True, eq=False)
+class Loops:
+    """What the kernels take, in arrays.
+
+    Attributes
+    ----------
+    wet, local, slant : ndarray
+        Of the rays, see :class:`dosekit.maps.rays.RayTrace`.
+    gaps : ndarray
+        Distance of each plane from the one before; of the first from the range shifter, mm.
+    inverse_bin, power, alive, survivors, narrow, start, broad : ndarray
+        Of the tables, see :class:`dosekit.maps.tables.StepTables`.
+    reference, growth : ndarray
+        Variance that is in the fluence already, at the surface and by how much it grows to each plane.
+    ladder, inverse_width_step : ndarray, float
+        Variances of the ladder of widths, and rungs per mm.
+    kernel_of_plane, taps_u, taps_v, radius, component : ndarray
+        Which taps a plane uses, the taps, their reach, and the first component of each width.
+    first_row, first_column : int
+        Where the rays begin on the fine lattice.
+    per_area, coarse_per_area : ndarray
+        One over the area of a cell at each plane, 1/mm2.
+    coarse_row, coarse_column, coarse_share_v, coarse_share_u : ndarray
+        Coarse node below each ray and the share of the next.
+    broad_taps_u, broad_taps_v, broad_radius, broad_component : ndarray
+        The same for the broad parts.
+    """
+
+    wet: NDArray[np.float64]
+    local: NDArray[np.float64]
+    slant: NDArray[np.float64]
+    gaps: NDArray[np.float64]
+    inverse_bin: float
+    power: NDArray[np.float64]
+    alive: NDArray[np.int64]
+    survivors: NDArray[np.float64]
+    narrow: NDArray[np.float64]
+    start: NDArray[np.float64]
+    reference: NDArray[np.float64]
+    growth: NDArray[np.float64]
+    ladder: NDArray[np.float64]
+    inverse_width_step: float
+    kernel_of_plane: NDArray[np.int64]
+    taps_u: NDArray[np.float64]
+    taps_v: NDArray[np.float64]
+    radius: NDArray[np.int64]
+    first_row: int
+    first_column: int
+    component: NDArray[np.int64]
+    per_area: NDArray[np.float64]
+    broad: NDArray[np.float64]
+    coarse_column: NDArray[np.int64]
+    coarse_share_u: NDArray[np.float64]
+    coarse_row: NDArray[np.int64]
+    coarse_share_v: NDArray[np.float64]
+    broad_taps_u: NDArray[np.float64]
+    broad_taps_v: NDArray[np.float64]
+    broad_radius: NDArray[np.int64]
+    broad_component: NDArray[np.int64]
+    coarse_per_area: NDArray[np.float64]
+
+    def rays(self) -> tuple[Any, ...]:
+        """Return what says where the rays run."""
+        return self.wet, self.local, self.slant, self.gaps
+
+    def steps(self, state: NDArray[np.float64]) -> tuple[Any, ...]:
+        """Return what says what the steps leave, with the running moments among it."""
+        return (
+            self.inverse_bin, self.power, self.alive, self.survivors, self.narrow, state, self.reference, self.growth,
+            self.ladder, self.inverse_width_step,
+        )  # fmt: skip
+
+    def fine(self) -> tuple[Any, ...]:
+        """Return what spreads the core."""
+        return (
+            self.kernel_of_plane, self.taps_u, self.taps_v, self.radius, self.first_row, self.first_column,
+            self.component, self.per_area,
+        )  # fmt: skip
+
+    def coarse(self) -> tuple[Any, ...]:
+        """Return what spreads the broad parts."""
+        return (
+            self.broad_taps_u, self.broad_taps_v, self.broad_radius, int(self.coarse_row[0]),
+            int(self.coarse_column[0]), self.broad_component, self.coarse_per_area,
+        )  # fmt: skip
 
 
 def field_bytes(*, planes: int, rays: int, nodes: int, coarse_nodes: int, steps: int, parts: int, rungs: int) -> float:
@@ -102,8 +190,10 @@ class FieldPencils:
         Variance that size and divergence of the beam add after the surface, shape (2, planes), mm2.
     width_steps_per_mm : float
         Rungs of the ladder of widths per mm of sigma.
-    profiles, arguments : tuple
-        What the kernels take: spots on rays, and everything else.
+    profiles : tuple of ndarray
+        First ray of each spot along u and v, and what it gives to each ray from there.
+    loops : Loops
+        Everything else the kernels take.
     """
 
     field: Field
@@ -118,7 +208,7 @@ class FieldPencils:
     optics_variance_mm2: NDArray[np.float64]
     width_steps_per_mm: float
     profiles: tuple[NDArray[Any], ...]
-    arguments: tuple[Any, ...]
+    loops: Loops
 
     def fluence(self, weights: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return particles on each ray.
@@ -138,7 +228,8 @@ class FieldPencils:
         first_u, first_v, profile_u, profile_v = self.profiles
         out = np.zeros((*self.rays.slant.shape, self.field.shape[1]))
         particles = np.ascontiguousarray(weights, dtype=np.float64) * PARTICLES_PER_UNIT
-        kernels.lay_spots(particles, first_u, first_v, profile_u, profile_v, out)
+        with Threads() as threads:
+            threads.run(kernels.lay_spots, (particles, first_u, first_v, profile_u, profile_v, out), len(out))
         return out
 
     def maps(self, weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -159,7 +250,26 @@ class FieldPencils:
         from dosekit.maps import kernels
 
         fine, coarse = self._empty_maps()
-        kernels.spread(self.fluence(weights), *self.arguments, fine, coarse)  # type: ignore[call-arg]
+        fluence = self.fluence(weights)
+        work, planes, rows = self.loops, len(self.planes.w_mm), len(self.rays.v_mm)
+        state, source, touched = self._scratch()
+        columns = int(work.coarse_column[-1] - work.coarse_column[0]) + 2
+        gathered = np.empty((PLANES_AT_ONCE, rows, columns, work.broad.shape[2]))
+        with Threads() as threads:
+            for first in range(0, planes, PLANES_AT_ONCE):
+                last = min(first + PLANES_AT_ONCE, planes)
+                threads.run(
+                    kernels.follow_rows,
+                    (fluence, *work.rays(), *work.steps(state), work.broad, work.coarse_column, work.coarse_share_u,
+                     source, touched, gathered, first, last),
+                    rows,
+                )  # fmt: skip
+                threads.run(
+                    kernels.spread_planes,
+                    (source, touched, gathered, *work.fine(), work.coarse_row, work.coarse_share_v, *work.coarse(),
+                     fine, coarse, first),
+                    last - first,
+                )  # fmt: skip
         return fine, coarse
 
     def weights_of(self, fine: NDArray[np.float64], coarse: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -178,11 +288,47 @@ class FieldPencils:
         from dosekit.maps import kernels
 
         first_u, first_v, profile_u, profile_v = self.profiles
-        fluence = np.zeros((*self.rays.slant.shape, self.field.shape[1]))
-        kernels.spread_transposed(fine, coarse, *self.arguments, fluence)  # type: ignore[call-arg]
-        weights = np.zeros(self.field.shape)
-        kernels.lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weights)
+        work, planes = self.loops, len(self.planes.w_mm)
+        rows, columns = self.rays.slant.shape
+        spots, steps = self.field.shape
+        fluence = np.zeros((rows, columns, steps))
+        state, source, touched = self._scratch()
+        variances = np.zeros((PLANES_AT_ONCE, rows, columns, steps))
+        lines = int(work.coarse_row[-1] - work.coarse_row[0]) + 2
+        across = int(work.coarse_column[-1] - work.coarse_column[0]) + 2
+        coarse_source = np.empty((PLANES_AT_ONCE, work.broad.shape[2], 1, lines, across))
+        weights = np.zeros((spots, steps))
+        with Threads() as threads:
+            for first in range(0, planes, PLANES_AT_ONCE):
+                last = min(first + PLANES_AT_ONCE, planes)
+                threads.run(
+                    kernels.touch_rows,
+                    (*work.rays(), *work.steps(state), touched, variances, first, last),
+                    rows,
+                )
+                threads.run(
+                    kernels.gather_planes,
+                    (source, touched, coarse_source, *work.fine(), *work.coarse(), fine, coarse, first),
+                    last - first,
+                )
+                threads.run(
+                    kernels.read_rows,
+                    (work.wet, work.slant, work.inverse_bin, work.alive, work.narrow, variances, work.ladder,
+                     work.inverse_width_step, work.broad, work.coarse_column, work.coarse_share_u, work.coarse_row,
+                     work.coarse_share_v, source, coarse_source, fluence, first, last),
+                    rows,
+                )  # fmt: skip
+            threads.run(kernels.lay_spots_transposed, (fluence, first_u, first_v, profile_u, profile_v, weights), spots)
         return weights * PARTICLES_PER_UNIT
+
+    def _scratch(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.uint8]]:
+        """Return the moments of every ray and step at the start, and room for a block of planes."""
+        work = self.loops
+        rows, columns = self.rays.slant.shape
+        state = np.empty((rows, columns, *work.start.shape))
+        state[:] = work.start
+        source = np.empty((PLANES_AT_ONCE, len(work.ladder), 2, rows, columns))
+        return state, source, np.zeros((PLANES_AT_ONCE, rows, len(work.ladder)), dtype=np.uint8)
 
     def deposit(
         self,
@@ -215,7 +361,8 @@ class FieldPencils:
         from dosekit.maps import kernels
 
         where = self._voxel_arguments(fine, coarse, rows)
-        kernels.deposit(voxels, places, *where, factor, out)  # type: ignore[call-arg]
+        with Threads() as threads:
+            threads.run(kernels.deposit, (voxels, places, *where, factor, out), len(voxels))
 
     def gather(
         self,
@@ -253,7 +400,11 @@ class FieldPencils:
         starts = np.arange(0, nz + layers, layers, dtype=np.int64) * (ny * nx)
         slabs = np.searchsorted(voxels, starts)
         where = self._voxel_arguments(fine, coarse, rows)
-        kernels.deposit_transposed(slabs, voxels, places, *where, factor, values)  # type: ignore[call-arg]
+        with Threads() as threads:
+            for colour in range(2):
+                halves = (len(slabs) - colour) // 2
+                shared = (slabs, voxels, places, *where, factor, values, colour)
+                threads.run(kernels.deposit_transposed, shared, halves)
         return fine, coarse
 
     def _empty_maps(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -434,42 +585,39 @@ def field_pencils(
     broad_taps_u, broad_taps_v = (_padded(t, length) for t, _ in broad_taps)
     columns, share_u = _coarse_places(rays.u_mm, coarse.u_mm, coarse.spacing_mm)
     lines, share_v = _coarse_places(rays.v_mm, coarse.v_mm, coarse.spacing_mm)
-    arguments = (
-        rays.wet_mm,
-        rays.scatter,
-        rays.slant,
-        planes.w_mm,
-        1.0 / tables.bin_mm,
-        tables.power,
-        tables.alive(),
-        tables.survivors,
-        tables.narrow,
-        tables.start,
-        ahead,
-        shift_variance,
-        growth,
-        ladder,
-        1.0 / width_step,
-        which,
-        taps_u,
-        taps_v,
-        radius,
-        _index_of(rays.v_mm[0], fine.v_mm, spacing),
-        _index_of(rays.u_mm[0], fine.u_mm, spacing),
-        1.0 / (spacing * magnified) ** 2,
-        broad,
-        columns,
-        share_u,
-        lines,
-        share_v,
-        broad_taps_u,
-        broad_taps_v,
-        np.maximum(broad_taps[0][1], broad_taps[1][1]),
-        part_target,
-        int(lines[0]),
-        int(columns[0]),
-        1.0 / (coarse.spacing_mm * magnified) ** 2,
-        PLANES_AT_ONCE,
+    loops = Loops(
+        wet=rays.wet_mm,
+        local=rays.scatter,
+        slant=rays.slant,
+        gaps=np.concatenate([[ahead], np.diff(planes.w_mm)]),
+        inverse_bin=1.0 / tables.bin_mm,
+        power=tables.power,
+        alive=tables.alive(),
+        survivors=tables.survivors,
+        narrow=tables.narrow,
+        start=tables.start,
+        reference=shift_variance,
+        growth=growth,
+        ladder=ladder,
+        inverse_width_step=1.0 / width_step,
+        kernel_of_plane=which,
+        taps_u=taps_u,
+        taps_v=taps_v,
+        radius=radius,
+        first_row=_index_of(rays.v_mm[0], fine.v_mm, spacing),
+        first_column=_index_of(rays.u_mm[0], fine.u_mm, spacing),
+        component=np.zeros(len(ladder), dtype=np.int64),
+        per_area=1.0 / (spacing * magnified) ** 2,
+        broad=broad,
+        coarse_column=columns,
+        coarse_share_u=share_u,
+        coarse_row=lines,
+        coarse_share_v=share_v,
+        broad_taps_u=broad_taps_u,
+        broad_taps_v=broad_taps_v,
+        broad_radius=np.maximum(broad_taps[0][1], broad_taps[1][1]),
+        broad_component=part_target,
+        coarse_per_area=1.0 / (coarse.spacing_mm * magnified) ** 2,
     )
     return FieldPencils(
         field=field,
@@ -484,7 +632,7 @@ def field_pencils(
         optics_variance_mm2=optics_variance,
         width_steps_per_mm=1.0 / width_step,
         profiles=(profiles[0][0], profiles[1][0], profiles[0][1], profiles[1][1]),
-        arguments=arguments,
+        loops=loops,
     )
 
 
@@ -539,7 +687,8 @@ def _widest(rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, re
     from dosekit.maps import kernels
 
     counts = np.ascontiguousarray(tables.narrow[:, 0] > _SIGNIFICANT * tables.narrow[:, 0].max(axis=0))
-    variance = kernels.widest_spread(
+    width = np.zeros(len(rays.v_mm[::3]))
+    shared = (
         np.ascontiguousarray(rays.wet_mm[:, ::3, ::3]),
         np.ascontiguousarray(rays.scatter[:, ::3, ::3]),
         np.ascontiguousarray(rays.slant[::3, ::3]),
@@ -550,8 +699,11 @@ def _widest(rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, re
         tables.start,
         ahead,
         reference,
+        width,
     )
-    return 1.1 * float(variance) + 0.01
+    with Threads() as threads:
+        threads.run(kernels.widest_spread, shared, len(width))
+    return 1.1 * float(width.max()) + 0.01
 
 
 def _widened(

@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from dosekit.maps.cones_threads import Threads
 from dosekit.maps.frames import BeamFrame
 
 if TYPE_CHECKING:
@@ -214,7 +215,9 @@ def matter_of(grid: VoxelGrid, particle: str = "pi-", kinetic_energy_mev: float 
     ratio = np.array([scattering_power_ratio(matter) for matter in grid.materials])
     rsp = np.empty(grid.shape, dtype=np.float32)
     scatter = np.empty(grid.shape, dtype=np.float32)
-    kernels.prepare_matter(grid.density_g_cm3, grid.material_index, stopping, ratio, rsp, scatter)
+    with Threads() as threads:
+        shared = (grid.density_g_cm3, grid.material_index, stopping, ratio, rsp, scatter)
+        threads.run(kernels.prepare_matter, shared, grid.shape[0])
     return Matter(
         origin_mm=np.array(grid.origin_mm),
         spacing_mm=np.array(grid.spacing_mm),
@@ -332,7 +335,7 @@ def trace(planes: Planes, matter: Matter, u_mm: NDArray[np.float64], v_mm: NDArr
     step = float(planes.w_mm[1] - planes.w_mm[0])
     samples = int(np.ceil(SAMPLES_PER_VOXEL * step / float(matter.spacing_mm.min()) - 1e-9))
     wet, scatter = np.zeros(shape), np.zeros(shape)
-    kernels.trace_rays(
+    shared = (
         matter.rsp,
         matter.scatter,
         matter.origin_mm,
@@ -348,6 +351,8 @@ def trace(planes: Planes, matter: Matter, u_mm: NDArray[np.float64], v_mm: NDArr
         wet,
         scatter,
     )
+    with Threads() as threads:
+        threads.run(kernels.trace_rays, shared, len(v_mm))
     slant = np.sqrt(1.0 + (u_mm[None, :] ** 2 + v_mm[:, None] ** 2) * inverse**2)
     return RayTrace(u_mm=u_mm, v_mm=v_mm, wet_mm=wet, scatter=scatter, slant=slant)
 
