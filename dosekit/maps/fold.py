@@ -102,8 +102,9 @@ def fold(
         what=f"dose in {' x '.join(str(n) for n in grid.shape)} voxels",
     )
     target = None if dose_grid is None else dose_grid_of(dose_grid, grid)
-    # rows: the components, stops of star makers, stops of others
-    sums = np.zeros((len(COMPONENTS) + 2, voxels), dtype=np.float32)
+    # rows: the components, stops of star makers and, where there are any, stops of others
+    others = any(field.beam.particle != STAR_MAKER for field in several)
+    sums = np.zeros((len(COMPONENTS) + 1 + others, voxels), dtype=np.float32)
     for field in several:
         pencils = pencils_of(field, grid, yields=yields, library=(libraries or {}).get(field.name))
         if pencils.misses or not np.any(field.weights):
@@ -115,7 +116,7 @@ def fold(
             fine, coarse, reached, reached, factor=_factors(pencils.matter, dose_to=dose_to), rows=rows, out=sums
         )
     volumes = sums.reshape(-1, *grid.shape)
-    dose, star_stops, other_stops = volumes[: len(COMPONENTS)], volumes[-2], volumes[-1]
+    dose, star_stops = volumes[: len(COMPONENTS)], volumes[len(COMPONENTS)]
     if star_stops.any():
         from dosekit.maps.stars import carry_stars
 
@@ -124,7 +125,7 @@ def fold(
         per_energy = dose_per_energy(grid, matter_of(grid, several[0].beam.particle), dose_to=dose_to)
         for name, energy in energies.items():
             np.multiply(energy, per_energy, out=dose[COMPONENTS.index(name)], casting="same_kind")
-    stops = star_stops + other_stops
+    stops = star_stops + volumes[-1] if others else star_stops
     lattice: DoseGrid | VoxelGrid = grid
     if target is not None:
         lattice = target

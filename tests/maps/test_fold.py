@@ -143,6 +143,7 @@ def test_bad_dose_grids_are_refused():
         fold(field(), box_grid((4, 4, 4)), libraries=LIBRARIES, dose_grid=-1.0)
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize(("gantry", "couch"), [(40.0, 0.0), (0.0, 35.0), (25.0, 50.0)])
 def test_an_oblique_field_on_a_cube_is_a_straight_field_on_the_turned_cube(gantry, couch):
     """Within 2 % of the maximum or 1 mm, for beam energy and stops together with what they carry."""
