@@ -152,13 +152,13 @@ def field_bytes(*, planes: int, rays: int, nodes: int, coarse_nodes: int, steps:
     Returns
     -------
     float
-        Bytes: 8 [2 planes rays + 4 rays steps + 2 rungs (rays + nodes) + planes (2 nodes + 6 coarse)
-        + 3 coarse parts].
+        Bytes: 8 [2 planes rays + (4 + P) rays steps + 2 P rungs rays + planes (2 nodes + 6 coarse)
+        + 3 coarse parts], with P planes at once.
     """
     return 8.0 * (
         2.0 * planes * rays
-        + 4.0 * rays * steps
-        + 2.0 * rungs * (rays + nodes)
+        + (4.0 + PLANES_AT_ONCE) * rays * steps
+        + 2.0 * PLANES_AT_ONCE * rungs * rays
         + planes * (2.0 * nodes + len(TARGETS) * coarse_nodes)
         + 3.0 * coarse_nodes * parts
     )
