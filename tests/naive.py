@@ -208,7 +208,7 @@ def carried_straight(source, cosines, step_mm, node_energy, cells):
 
 
 def slowing_down(energy_of_range, reach_mm, edges_mm, path_mm, deviation_mm, quantiles, weights):
-    """Deposit of a beam that only slows down: for each quantile of range and each bin, energy ahead less energy behind."""
+    """Deposit of a beam that only slows down: for each quantile of range and bin, energy ahead less energy behind."""
     deposit = [0.0] * (len(edges_mm) - 1)
     for quantile, weight in zip(quantiles, weights, strict=True):
         energies = []

@@ -274,9 +274,9 @@ def _shift(old, middle, new, taps_j, start_j, taps_i, start_i):  # type: ignore[
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def sweep_widening(
+def sweep_widening(  # type: ignore[no-untyped-def]
     sources, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out, line_begin, line_end
-):  # type: ignore[no-untyped-def]
+):
     """Carry all modes along several directions, widening on the way; each direction has its own ``out[line]``."""
     nk, nj, ni = scale.shape
     modes = len(rates)
@@ -301,9 +301,9 @@ def sweep_widening(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def sweep_widening_transposed(
+def sweep_widening_transposed(  # type: ignore[no-untyped-def]
     wanted, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out, line_begin, line_end
-):  # type: ignore[no-untyped-def]
+):
     """Apply the exact transpose of `sweep_widening`; results per mode in ``out[line, mode]``."""
     nk, nj, ni = scale.shape
     modes = len(rates)

@@ -11,7 +11,7 @@ from dosekit.errors import UnknownNameError
 
 
 @pytest.mark.published
-@pytest.mark.parametrize("name", [n for n in particle_names() if n not in ("photon",)])
+@pytest.mark.parametrize("name", [n for n in particle_names() if n != "photon"])
 def test_masses_lives_and_charges_agree_with_the_reference_library(name, evidence):
     library = pytest.importorskip("particle", reason="the particle data library is not installed")
     ours = particle(name)

@@ -43,7 +43,7 @@ def test_a_header_without_a_key_is_refused(key):
     ],
 )
 def test_a_damaged_row_stops_the_load_with_file_and_line(body, line):
-    with pytest.raises(TableError, match=f"broken.csv, {line}"):
+    with pytest.raises(TableError, match=rf"broken\.csv, {line}"):
         parse_table(HEADER + body, name="broken.csv")
 
 
@@ -53,7 +53,7 @@ def test_no_rows_is_an_error():
 
 
 def test_an_absent_table_is_named():
-    with pytest.raises(TableError, match="basis/data/nowhere.csv"):
+    with pytest.raises(TableError, match=r"basis/data/nowhere\.csv"):
         read_table("nowhere")
 
 

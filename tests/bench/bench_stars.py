@@ -52,7 +52,8 @@ def main():
         after = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
         print(
             f"{size}^3: {seconds:.2f} s ({cpu:.2f} s of processor), {per_voxel * 1e9:.0f} ns per voxel, "
-            f"{per_voxel / first:.2f} times the smallest, memory +{(after - before) / 1e6:.2f} GB (peak {after / 1e6:.2f} GB)"
+            f"{per_voxel / first:.2f} times the smallest, "
+            f"memory +{(after - before) / 1e6:.2f} GB (peak {after / 1e6:.2f} GB)"
         )
 
 

@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 
 from dosekit.beams.beam import Beam
-from dosekit.depths.quality import star_let_kev_um
 from dosekit.depths.library import depth_library
+from dosekit.depths.quality import star_let_kev_um
 from dosekit.effects.radiation_quality import let_from_folds, let_weighted, total_let
 from dosekit.errors import InputError
 

@@ -42,8 +42,8 @@ SATURATED = pytest.param(
     "microdosimetric",
     marks=pytest.mark.xfail(
         strict=True,
-        reason="measured 1.28 and 1.29: helium and recoils share one LET of 288 keV/um from their slowing-down spectra, "
-        "which the saturation correction counts for little; alphas alone would count for more",
+        reason="measured 1.28 and 1.29: helium and recoils share one LET of 288 keV/um from their slowing-down "
+        "spectra, which the saturation correction counts for little; alphas alone would count for more",
     ),
 )
 
