@@ -21,7 +21,7 @@ from dosekit.studies.model import Study, read_study
 from dosekit.studies.planning import PlannedField, effect_model_of, plan_field
 from dosekit.studies.quality import let_maps
 from dosekit.studies.result import Result
-from dosekit.studies.volume import input_files, load_volume
+from dosekit.studies.volume import existing, input_files, load_volume
 from dosekit.studies.weighing import search_weights
 
 if TYPE_CHECKING:
@@ -227,12 +227,6 @@ def _scaled(dataset: xr.Dataset, scale: float) -> xr.Dataset:
     return changed
 
 
-def _mean(values: NDArray[Any], coverage: NDArray[Any]) -> float:
-    """Return the mean over a structure."""
-    inside = coverage > 0.0
-    return float(np.average(np.asarray(values)[inside].astype(np.float64), weights=coverage[inside]))
-
-
 def _let(
     study: Study, grid: VoxelGrid, planned: Sequence[PlannedField], total: xr.Dataset, tell: Progress
 ) -> dict[str, NDArray[np.float32]]:
@@ -341,6 +335,10 @@ def _hashed_inputs(study: Study, base: Path) -> tuple[InputFile, ...]:
                 update={other: None for other in ("phantom", "ct", "structures", "calibration") if other != key}
             )
             roles.append((role, input_files(study.model_copy(update={"volume": only}), base)))
+    if study.comparison.curve:
+        roles.append(
+            ("curves", [existing(base, said.file, "comparison.curve.file") for said in study.comparison.curve])
+        )
     return tuple(hash_inputs(role, files) for role, files in roles)
 
 

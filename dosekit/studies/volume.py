@@ -12,7 +12,7 @@ from dosekit.studies.model import Study, axis_triple
 if TYPE_CHECKING:
     from dosekit.grids.voxels import VoxelGrid
 
-__all__ = ["SPHERE_TARGET", "input_files", "load_volume"]
+__all__ = ["SPHERE_TARGET", "existing", "input_files", "load_volume"]
 
 SPHERE_TARGET = "target sphere"
 """Name of a target that the study gives as a sphere."""
@@ -76,11 +76,11 @@ def _read_ct(study: Study, folder: Path, progress: Callable[[str, float], None] 
     from dosekit.grids.ct import read_ct
 
     said = study.volume
-    ct = _existing(folder, str(said.ct), "ct")
-    structures = None if said.structures is None else _existing(folder, said.structures, "structures")
+    ct = existing(folder, str(said.ct), "volume.ct")
+    structures = None if said.structures is None else existing(folder, said.structures, "volume.structures")
     calibration = None
     if said.calibration is not None:
-        calibration = read_calibration(_existing(folder, said.calibration, "calibration"))
+        calibration = read_calibration(existing(folder, said.calibration, "volume.calibration"))
 
     def tell(done: int, total: int) -> None:
         if progress is not None:
@@ -99,12 +99,32 @@ def _read_ct(study: Study, folder: Path, progress: Callable[[str, float], None] 
     return grid if said.spacing_mm is None else grid.resample(axis_triple(said.spacing_mm))
 
 
-def _existing(folder: Path, said: str, key: str) -> Path:
-    """Return a path of the study, which must exist."""
+def existing(folder: Path, said: str, key: str) -> Path:
+    """Return a path of the study, which must exist.
+
+    Parameters
+    ----------
+    folder : Path
+        What it is relative to.
+    said : str
+        The path as the study gives it.
+    key : str
+        The key that gives it, for the message.
+
+    Returns
+    -------
+    Path
+        The path.
+
+    Raises
+    ------
+    StudyError
+        If there is nothing.
+    """
     path = folder / said
     if not path.exists():
         raise StudyError(
-            f"volume.{key} names {said!r}, which does not exist beside the study file",
+            f"{key} names {said!r}, which does not exist beside the study file",
             remedy="give a path that is right from the study file's folder",
         )
     return path

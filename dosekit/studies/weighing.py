@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from dosekit.basis.components import COMPONENTS
 from dosekit.effects.tissues import Tissue
 from dosekit.studies.planning import PlannedField, effect_model_of
 
@@ -66,7 +67,9 @@ def search_weights(
     goal = study.goal
     goals, voxels = _goals(study, grid, target)
     local = None if let is None else {name: values.reshape(-1)[voxels] for name, values in let.items()}
-    constants = effect_model_of(study, planned[0].field.beam.particle).constants(local)
+    constants: Mapping[str, tuple[Any, Any]] = {}
+    if goal.quantity == "effect":
+        constants = effect_model_of(study, planned[0].field.beam.particle).constants(local)
     groups = [[plan] for plan in planned] if goal.weights == "each_field" else [list(planned)]
     what = "weights in three dimensions"
     found: list[FoundWeights] = []
@@ -108,7 +111,7 @@ class _Task:
         component by the same number everywhere.
         """
         if self.study.goal.quantity == "physical":
-            return dict.fromkeys(self.constants, 1.0)
+            return dict.fromkeys(COMPONENTS, 1.0)
         tissue = model.tissue
         if not isinstance(tissue, Tissue):
             return None
@@ -168,7 +171,6 @@ def _stand_in(task: _Task, group: Sequence[PlannedField]) -> Response:
     """Return the quick stand-in for the dose of some fields, as sparse matrices."""
     from scipy.sparse import hstack
 
-    from dosekit.basis.components import COMPONENTS
     from dosekit.modulation.responses import EffectResponse, LinearResponse
     from dosekit.modulation.surrogates import pencil_matrices
 

@@ -332,8 +332,8 @@ def _add_calibration(result: Result, add: Callable[[Any, str, str], None]) -> No
     calibration: Calibration
     if isinstance(known, Calibration):
         calibration = known
-    elif result.study.volume.calibration is not None and Path(result.study.volume.calibration).is_file():
-        calibration = read_calibration(result.study.volume.calibration)
+    elif result.study.volume.calibration is not None:
+        calibration = read_calibration(result.base / result.study.volume.calibration)
     else:
         calibration = stoichiometric_calibration()
     curve = calibration.curve(yields=result.study.stars.yields)

@@ -41,10 +41,22 @@ def test_a_seed_gives_the_same_numbers():
 @pytest.mark.published
 @pytest.mark.parametrize(
     ("energy", "barn", "bar"),
-    [(1.0, 4.26, 0.03), (14.1, 0.689, 0.02), (24.63, 0.386, 0.03), (50.0, 0.168, 0.05), (90.0, 0.076, 0.1)],
+    [
+        (1.0, 4.26, 0.03),
+        (14.1, 0.689, 0.02),
+        pytest.param(
+            22.5,
+            0.398,
+            0.03,
+            marks=pytest.mark.xfail(strict=True, reason="measured 0.428 b; a cell typed from memory, in doubt itself"),
+        ),
+        (24.63, 0.386, 0.03),
+        (50.0, 0.168, 0.05),
+        (90.0, 0.076, 0.1),
+    ],
 )
 def test_np_total(energy, barn, bar, evidence):
-    """Measured n-p totals; typed from memory before the code ran."""
+    """Measured n-p totals, all from memory; that at 24.63 MeV was added after the one at 22.5 MeV was missed."""
     ours = float(np_cross_section_barn(energy))
     evidence(
         what=f"n-p total {energy} MeV",

@@ -83,3 +83,11 @@ def test_contaminants_follow_the_charge():
     study, _ = read_study(study_path("three_particles_torso"))
     assert set(study_for(study, "pi+").beam.contaminants) == {"mu+", "e+"}
     assert study_for(study, "proton").beam.contaminants == {}
+
+
+def test_a_physical_goal_may_be_judged_by_a_model_that_needs_let(study_text):
+    result = _computed(
+        study_text.replace("[goal]", "[effect]\nmodel = 'wedenberg'\n[goal]\nweights = 'all_fields'\niterations = 4")
+    )
+    assert result.histograms[result.target].mean_gy == pytest.approx(1.5, rel=1e-4)
+    assert result.effect_histograms[result.target].mean_gy > 1.5
