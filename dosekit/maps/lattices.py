@@ -1,7 +1,7 @@
 """Maps on another lattice: energy, mass and stops are conserved, dose is what follows from them.
 
 Dose to the medium is averaged with the mass in each overlap of old and new voxels, dose to water with the volume;
-stops per mm3 are shared by volume.
+stops per mm3 are shared by volume; LET is averaged with the dose that it belongs to.
 """
 
 from __future__ import annotations
@@ -29,7 +29,8 @@ def on_lattice(
     Parameters
     ----------
     dataset : Dataset
-        Maps on the volume's own lattice; ``stops`` is a density, everything else is averaged as dose.
+        Maps on the volume's own lattice: ``dose``, and what goes with it. Names that end in ``stops`` are densities,
+        ``let`` and ``let_by_component`` are averaged over dose, everything else is averaged as dose.
     grid : VoxelGrid
         The volume.
     spacing_mm : float or (float, float, float)
@@ -51,15 +52,21 @@ def on_lattice(
     axes = ("z", "y", "x")
     ratio = float(np.prod(grid.spacing_mm) / np.prod(target.spacing_mm))
     variables = {}
+    dose = dataset["dose"].transpose(..., *axes).values.reshape(-1, *grid.shape) if "dose" in dataset else None
     for name, array in dataset.data_vars.items():
         values = array.transpose(..., *axes).values.reshape(-1, *grid.shape)
         new = np.zeros((len(values), *target.shape), dtype=np.float32)
         for row, volume in enumerate(values):
-            if name == "stops":
+            if str(name).endswith("stops"):
                 new[row] = share_by_overlap(volume, matrices) * ratio
-            else:
-                amount = share_by_overlap(volume * weight, matrices)
-                np.divide(amount, whole, out=new[row], where=whole > 0.0, casting="same_kind")
+                continue
+            share, over = weight, whole
+            if dose is not None and name in ("let", "let_by_component"):
+                part = dose[row] if name == "let_by_component" else dose.sum(axis=0)
+                share = weight * np.maximum(part, 0.0)
+                over = share_by_overlap(share, matrices)
+            amount = share_by_overlap(volume * share, matrices)
+            np.divide(amount, over, out=new[row], where=over > 0.0, casting="same_kind")
         dims = array.transpose(..., *axes).dims
         shape = tuple(array.sizes[dim] for dim in dims[:-3]) + target.shape
         variables[name] = (dims, new.reshape(shape), dict(array.attrs))

@@ -204,6 +204,7 @@ class OutputsSection(_Section):
 
     dose_spacing_mm: float | tuple[float, float, float] | None = None
     dose_to: Literal["medium", "water"] = "medium"
+    let_by_component: bool = False
     figures: bool = True
     dicom: bool = True
     dicom_volume: bool = True

@@ -160,6 +160,8 @@ def _compute(study: Study, base: Path, tell: Progress) -> Result:
     effect = _effect_dose(study, total, model, constants)
     physical = np.asarray(total["dose"].sum("component", dtype=np.float64), dtype=np.float32)
     total["let"] = _total_let(total, let)
+    if study.outputs.let_by_component:
+        total["let_by_component"] = _let_by_component(let)
     names = _structures(study, grid, target)
     histograms = _histograms(grid, physical, names)
     effect_histograms = _histograms(grid, effect, names)
@@ -244,6 +246,13 @@ def _total_let(total: xr.Dataset, let: Mapping[str, NDArray[np.float32]]) -> Any
     dose = {name: total["dose"].values[row] for row, name in enumerate(COMPONENTS)}
     values = total_let(dose, let).astype(np.float32)
     return (("z", "y", "x"), values, {"units": "keV/um", "long_name": "dose-averaged LET of all components"})
+
+
+def _let_by_component(let: Mapping[str, NDArray[np.float32]]) -> Any:
+    """Return the LET of each component as one labelled map."""
+    values = np.stack([np.asarray(let[name], dtype=np.float32) for name in COMPONENTS])
+    attrs = {"units": "keV/um", "long_name": "dose-averaged LET of each component; 0 where it gives next to no dose"}
+    return (("component", "z", "y", "x"), values, attrs)
 
 
 def _weighted(

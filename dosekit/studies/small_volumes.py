@@ -218,8 +218,8 @@ def reweigh_file(
     if yields is not None and yields != before.attrs.get("yields"):
         grid, _ = load_volume(parse_study(record.study_text), Path(beside))
     after = reweight(before, grid, star_scale=star_scale, yields=yields)
-    if "effect_dose" in after:
-        after = after.drop_vars("effect_dose")  # belongs to the old yields
+    # effect and LET belong to the old shares of the components
+    after = after.drop_vars([name for name in ("effect_dose", "let", "let_by_component") if name in after])
     write_dataset(after, out, run_hash=record.run_hash, title=str(before.attrs.get("title", "")))
     old, new = (float(item["dose"].sum("component").max()) for item in (before, after))
     return f"largest dose {old:.4g} Gy before, {new:.4g} Gy after; wrote {Path(out).name}. {BANNER}"

@@ -21,7 +21,10 @@ import dicom_judges
 def coarse(tmp_path_factory, study_text):
     folder = tmp_path_factory.mktemp("coarse")
     path = folder / "s.toml"
-    path.write_text(study_text + "[outputs]\ndose_spacing_mm = 8.0\nsecondary_capture = true\n", encoding="utf-8")
+    path.write_text(
+        study_text + "[outputs]\ndose_spacing_mm = 8.0\nsecondary_capture = true\nlet_by_component = true\n",
+        encoding="utf-8",
+    )
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", DosekitWarning)
         return folder / "out", run(path, folder / "out")
@@ -55,6 +58,24 @@ def test_energy_and_stops_survive_another_lattice(coarse):
     assert float(new["stops"].sum()) * 8.0**3 == pytest.approx(stops.sum() * 4.0**3, rel=1e-3)
 
 
+def test_let_of_each_component_is_averaged_over_its_dose(coarse):
+    folder, result = coarse
+    fine = result.dose["let_by_component"]
+    assert fine.dims == result.dose["dose"].dims
+    # the mean over components, weighted by their dose, is the LET of all
+    dose = result.dose["dose"].values.astype(np.float64)
+    total = dose.sum(axis=0)
+    hot = total > 0.05 * total.max()
+    mean = (dose * fine.values).sum(axis=0)[hot] / total[hot]
+    np.testing.assert_allclose(mean, result.dose["let"].values[hot], rtol=1e-3)
+    written = read_dataset(folder / "dose.nc")
+    let, dose = written["let_by_component"].values, written["dose"].values.astype(np.float64)
+    total = dose.sum(axis=0)
+    hot = total > 0.05 * total.max()
+    mean = (dose * let).sum(axis=0)[hot] / total[hot]
+    np.testing.assert_allclose(mean, written["let"].values[hot], rtol=1e-3)
+
+
 def test_figures_go_into_the_archive_as_pictures(coarse):
     folder, _ = coarse
     pages = sorted((folder / "dicom").glob("figure_*.dcm"))
@@ -70,6 +91,7 @@ def test_star_yields_change_on_a_finished_run(finished, tmp_path):
     for name, factor in (("star_light", 1.1), ("star_heavy", 1.1), ("primary", 1.0)):
         old = result.dose["dose"].sel(component=name).values
         np.testing.assert_allclose(new["dose"].sel(component=name).values, factor * old, rtol=1e-5)
+    assert not {"let", "effect_dose"} & set(new.data_vars)  # they belong to the old shares
     reweigh_file(folder, tmp_path / "cascade.nc", yields="cascade")
     other = read_dataset(tmp_path / "cascade.nc")
     assert float(other["dose"].sel(component="star_light").sum()) != pytest.approx(
