@@ -7,12 +7,13 @@ interrupted run leaves no half-written result under a name that somebody might o
 from __future__ import annotations
 
 import hashlib
-from contextlib import suppress
+from collections.abc import Iterator
+from contextlib import contextmanager, suppress
 from pathlib import Path
 
 from dosekit.errors import OutputError
 
-__all__ = ["sha256_of_bytes", "sha256_of_file", "write_bytes", "write_text"]
+__all__ = ["sha256_of_bytes", "sha256_of_file", "whole_file", "write_bytes", "write_text"]
 
 _BLOCK_BYTES = 1 << 20
 
@@ -37,20 +38,45 @@ def write_bytes(path: str | Path, data: bytes) -> Path:
     OutputError
         If the place cannot be written.
     """
+    with whole_file(path) as partial:
+        partial.write_bytes(data)
+    return Path(path)
+
+
+@contextmanager
+def whole_file(path: str | Path) -> Iterator[Path]:
+    """Give a name beside a file to write to; the file gets its own name when all went well, else it is removed.
+
+    Parameters
+    ----------
+    path : str or Path
+        The final name; its folder is made if it is not there.
+
+    Yields
+    ------
+    Path
+        Where to write.
+
+    Raises
+    ------
+    OutputError
+        If the place cannot be written.
+    """
     target = Path(path)
     partial = target.with_name(f".{target.name}.partial")
     try:
         target.parent.mkdir(parents=True, exist_ok=True)
-        partial.write_bytes(data)
+        yield partial
         partial.replace(target)
-    except OSError as problem:
+    except BaseException as problem:
         with suppress(OSError):
             partial.unlink(missing_ok=True)
+        if not isinstance(problem, OSError):
+            raise
         raise OutputError(
             f"{target.name} could not be written ({problem.strerror or type(problem).__name__})",
             remedy="check that the output folder exists, has space and may be written",
         ) from problem
-    return target
 
 
 def write_text(path: str | Path, text: str) -> Path:

@@ -10,14 +10,14 @@ depend on the library at all.
 from __future__ import annotations
 
 import hashlib
-from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from dosekit.caution import CAUTION
-from dosekit.errors import InputError, OutputError
+from dosekit.errors import InputError
+from dosekit.outputs.files import whole_file
 from dosekit.outputs.record import canonical_json
 
 if TYPE_CHECKING:
@@ -75,22 +75,11 @@ def write_dataset(
     OutputError
         If the place cannot be written.
     """
-    target = Path(path)
-    partial = target.with_name(f".{target.name}.partial")
     prepared = _prepared(dataset, run_hash=run_hash, sources=sources, title=title)
     encoding = {name: _encoding(prepared[name]) for name in prepared.data_vars}
-    try:
-        target.parent.mkdir(parents=True, exist_ok=True)
+    with whole_file(path) as partial:
         prepared.to_netcdf(partial, engine="h5netcdf", format="NETCDF4", encoding=encoding)
-        partial.replace(target)
-    except OSError as problem:
-        with suppress(OSError):
-            partial.unlink(missing_ok=True)
-        raise OutputError(
-            f"{target.name} could not be written ({problem.strerror or type(problem).__name__})",
-            remedy="check that the output folder exists, has space and may be written",
-        ) from problem
-    return target
+    return Path(path)
 
 
 def read_dataset(path: str | Path) -> xr.Dataset:
