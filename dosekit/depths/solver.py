@@ -23,7 +23,7 @@ from dosekit.depths.core import Core, solve_core
 from dosekit.depths.deltas import carry_deltas
 from dosekit.depths.kernels import gather_products, march, score_events
 from dosekit.depths.leptons import carry_electrons, decay_muons, michel_electrons
-from dosekit.depths.muons import muon_capture_products, muon_capture_share
+from dosekit.depths.muons import muon_capture_products
 from dosekit.depths.products import (
     NEAR_COSINE,
     Carried,
@@ -37,6 +37,12 @@ __all__ = ["Solution", "solve"]
 _PION_REST = 139.57039
 _MUON_REST = 105.6583755
 _ELECTRON_REST = 0.51099895
+_NEUTRAL_STEPS = 2.0
+"""Cell of neutral products, which vary slowly, in steps of residual range."""
+_DECAY_STEPS = {"pi-": 1.0, "pi+": 0.5, "mu-": 0.5, "mu+": 0.5, "proton": 2.0}
+"""Cell of decays in the same unit; electrons from a thin layer of stops have a sharp maximum there."""
+_NO_BREMSSTRAHLUNG = ("cascade",)
+"""Yield sets whose results list no bremsstrahlung among their processes, and show no photons far from decays."""
 
 
 @dataclass(frozen=True)
@@ -156,12 +162,14 @@ def _solve(
     charged.let_weighted += scattered.recoil * 100.0
     parts["in_flight_charged"] = charged
     reacted = scattered.core_reactions + scattered.later_reactions
-    # neutral products and decays vary slowly: twice the step
-    wide = coarse_grid(
-        species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=2.0 * grid.step_mm
+    wide, close = (
+        coarse_grid(
+            species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=factor * grid.step_mm
+        )
+        for factor in (_NEUTRAL_STEPS, _DECAY_STEPS[species])
     )
     neutral, emitted = neutral_products(species, regrid(reacted, grid, wide), wide, yields=yields, width_mm=width_mm)
-    decayed, rest = _decays(species, core, grid, wide, scattered, width_mm)
+    decayed, rest = _decays(species, core, grid, close, scattered, yields, width_mm)
 
     to_bins = grid.to_bins
     built_up = carry_deltas(
@@ -177,12 +185,12 @@ def _solve(
     stopped = {"core": core.stops, "scattered": to_bins(scattered.carried.stops)}
     # the muon of a pion at rest goes 1.4 mm in water: it stays in its bin
     at_rest = (stopped["core"] + stopped["scattered"]) * (MUON_ENERGY_AT_REST_MEV if species == "pi+" else 0.0)
-    deposit["decay"] = wide.to_bins(decayed.deposit) + at_rest
+    deposit["decay"] = close.to_bins(decayed.deposit) + at_rest
     weighted = {"core": core.let_weighted, **{name: to_bins(part.let_weighted) for name, part in parts.items()}}
-    weighted["decay"] = wide.to_bins(decayed.let_weighted) + 1.5 * at_rest
+    weighted["decay"] = close.to_bins(decayed.let_weighted) + 1.5 * at_rest
     weighted["in_flight_neutral"] = 15.0 * deposit["in_flight_neutral"]
     for name, (amount, quality) in rest.capture.items():
-        deposit[name] = wide.to_bins(amount)
+        deposit[name] = close.to_bins(amount)
         weighted[name] = quality * deposit[name]
     let = {name: weighted[name] / np.where(deposit[name] > 1e-15, deposit[name], 1.0) for name in deposit}
     let["core"] = core.let_weighted / np.where(core.deposit > 1e-15, core.deposit, 1.0)
@@ -211,8 +219,8 @@ def _solve(
     }
     return Solution(
         species, core, grid, deposit, let, stopped, channels,
-        wide.to_bins(rest.at_rest), ledger,
-        {"decay": _width(decayed, wide), **{name: _width(part, grid) for name, part in parts.items()}},
+        close.to_bins(rest.at_rest), ledger,
+        {"decay": _width(decayed, close), **{name: _width(part, grid) for name, part in parts.items()}},
         _classes(scattered.carried, grid),
     )  # fmt: skip
 
@@ -319,7 +327,13 @@ class _Rest:
 
 
 def _decays(
-    species: str, core: Core, fine: CoarseGrid, grid: CoarseGrid, scattered: _Scattered, width_mm: float | None
+    species: str,
+    core: Core,
+    fine: CoarseGrid,
+    grid: CoarseGrid,
+    scattered: _Scattered,
+    yields: str,
+    width_mm: float | None,
 ) -> tuple[Carried, _Rest]:
     """Follow muons and electrons from decays in flight and at rest."""
     total = Carried(grid.cells)
@@ -355,9 +369,8 @@ def _decays(
         electrons += flying
     caught = np.zeros(grid.cells)
     if not positive:
-        share = np.array([muon_capture_share(stuff) for stuff in grid.materials])[grid.stuff]
-        caught = muons * share
-        products = muon_capture_products(caught, grid, width_mm=width_mm)
+        products = muon_capture_products(muons, grid, yields=yields, width_mm=width_mm)
+        caught = products.caught
         rest.capture.update(products.deposit)
         rest.neutrino += products.neutrino
         rest.escaped += products.escaped
@@ -365,12 +378,15 @@ def _decays(
     electrons += muons - caught
     if not species.startswith("pi"):
         rest.at_rest = muons - caught
-    run, photons = michel_electrons(electrons, grid, positron=positive)
+    run, photons = michel_electrons(
+        electrons, grid, positron=positive, radiates=yields not in _NO_BREMSSTRAHLUNG, width_mm=width_mm
+    )
     total.add(run)
     gone_number = float(run.escaped[1] + run.escaped[3])
     number = float(np.sum(electrons))
     rest.escaped += photons + float(run.escaped[0] + run.escaped[2]) + gone_number * _ELECTRON_REST
-    rest.electron_rest += (number - gone_number) * _ELECTRON_REST
+    # an electron keeps its rest energy; a positron gives its own and that of an electron of the medium to photons
+    rest.electron_rest += (number - gone_number) * (-_ELECTRON_REST if positive else _ELECTRON_REST)
     rest.neutrino += number * (_MUON_REST - MICHEL_MEAN_ENERGY_MEV - _ELECTRON_REST)
     return total, rest
 
@@ -454,7 +470,7 @@ def _electrons(
         "escaped": photons + float(run.escaped[0] + run.escaped[2]),
         "neutrino": 0.0,
         "binding": 0.0,
-        "electron_rest": 0.0,
+        "electron_rest": -2.0 * _ELECTRON_REST * float(np.sum(run.stops)) if species == "e+" else 0.0,
         "star": 0.0,
     }
     for name in ("in_flight_charged", "in_flight_neutral", "decay"):

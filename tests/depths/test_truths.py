@@ -10,6 +10,8 @@ from dosekit.basis.components import COMPONENTS
 from dosekit.depths.angles import COSINES, WEIGHTS, diffusion_matrices, kappa_of, shares
 from dosekit.depths.broad import convolve_planes, plane_from_shells
 from dosekit.depths.core import solve_core
+from dosekit.depths.leptons import annihilation_cm2_g
+from dosekit.depths.muons import muon_capture_share
 from dosekit.depths.tables import beta_samples, node_spread
 from dosekit.errors import BeamError, InputError, SizeError, UnknownNameError
 
@@ -47,10 +49,46 @@ def test_energy_in_is_energy_out(name, medium, yields):
         pytest.skip("one yield set is enough where neutron histories are simulated")
     curve = dk.depth_curve(BEAMS[name], MEDIA[medium], yields=yields, bin_mm=2.0)
     assert abs(balance(curve)) < 2e-3
-    for part in ("deposited", "escaped", "neutrino", "electron_rest"):
+    for part in ("deposited", "escaped", "neutrino"):
         assert curve.attrs[f"energy_{part}_mev"] >= -1e-9
+    # a negative muon leaves an electron; a positron takes one of the medium with it
+    electron = curve.attrs["energy_electron_rest_mev"]
+    assert (-0.512 < electron < 0.0) if name in ("pi+", "mu+") else (-1e-9 <= electron < 0.512)
     inside = float((curve["energy"] * curve.attrs["bin_mm"]).sum())
     assert inside == pytest.approx(curve.attrs["energy_deposited_mev"], rel=0.02)
+
+
+def test_positrons_give_their_rest_energy_to_photons():
+    settings = {"bin_mm": 2.0, "depth_mm": 1000.0, "width_mm": None}
+    kinetic = dk.Beam("e+", momentum_mev_c=60).kinetic_energy_mev
+    curve = dk.depth_curve(dk.Beam("e+", momentum_mev_c=60), "water", **settings)
+    assert abs(balance(curve)) < 2e-3
+    assert curve.attrs["energy_electron_rest_mev"] == pytest.approx(-1.022, abs=0.02)
+    assert curve.attrs["energy_in_mev"] == pytest.approx(kinetic)
+    # a little annihilates early: less reach than electrons
+    electrons = dk.depth_curve(dk.Beam("e-", momentum_mev_c=60), "water", **settings)
+    deep = slice(200.0, 240.0)
+    assert float(curve["energy"].sel(depth=deep).sum()) < float(electrons["energy"].sel(depth=deep).sum())
+
+
+def test_annihilation_in_flight_has_its_limits():
+    water = dk.material("water")
+    slow, fast = np.array([1e-4, 200.0])
+    area = np.pi * 2.8179403262e-13**2 * water.electrons_per_gram
+    beta = np.sqrt(1.0 - 1.0 / (1.0 + slow / 0.511) ** 2)
+    # Dirac: pi r_e^2 / beta for slow positrons; pi r_e^2 (ln 2 gamma - 1) / gamma for fast ones
+    assert float(annihilation_cm2_g(water, slow)) == pytest.approx(area / beta, rel=0.01)
+    gamma = 1.0 + fast / 0.511
+    assert float(annihilation_cm2_g(water, fast)) == pytest.approx(area / gamma * (np.log(2 * gamma) - 1), rel=0.02)
+
+
+def test_hydrogen_keeps_muons_in_the_cascade_set_alone():
+    water, carbon = dk.material("water"), dk.material("graphite")
+    oxygen = 1.0 - 1795.0 / 2197.0
+    assert muon_capture_share(water) == pytest.approx(oxygen)
+    # Z for hydrogen, 0.56 Z for oxygen: 2 / 6.48 stay
+    assert muon_capture_share(water, yields="cascade") == pytest.approx(oxygen * (1.0 - 2.0 / 6.48), rel=0.005)
+    assert muon_capture_share(carbon, yields="cascade") == pytest.approx(muon_capture_share(carbon))
 
 
 def test_nothing_is_negative_and_nothing_is_missing():
