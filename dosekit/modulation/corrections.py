@@ -7,7 +7,10 @@ stand-in ``s`` plus what it lacked at the last weights ``w_n``::
 
 with the exact dose ``e``, and keeps the outcome only if the exact cost falls; otherwise it goes half as
 far.  Only one exact dose, and no exact slope, is needed in a round.  A fixed point meets the goals with the
-exact dose as well as the stand-in's slopes allow.
+exact dose as well as the stand-in's slopes allow.  Each search with the stand-in ends at a quarter of `enough`.
+
+With errors to stand, every scenario has a stand-in and an exact dose of its own, is corrected by its own lack, and
+the cost is the joined one of `dosekit.modulation.costs`.
 
 Stopping rules: exact cost at or below `enough`; it falls by less than `least_gain`; number of rounds; no
 lower cost after four halvings.
@@ -15,11 +18,14 @@ lower cost after four halvings.
 
 from __future__ import annotations
 
+import warnings
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from dosekit.errors import SettingsWarning
+from dosekit.modulation.costs import joined_costs
 from dosekit.modulation.goals import Goal, goal_costs
 from dosekit.modulation.weights import FoundWeights, find_weights
 
@@ -33,6 +39,8 @@ if TYPE_CHECKING:
 __all__ = ["CorrectedResponse", "find_weights_corrected"]
 
 _HALVINGS = 4
+_LEAST_GAIN = 1e-3
+_QUICK_SHARE = 0.25
 
 
 @dataclass(frozen=True, eq=False)
@@ -98,8 +106,10 @@ def find_weights_corrected(
     *,
     scale_gy: float,
     start: ArrayLike | None = None,
+    scenarios: Sequence[tuple[Response, Response]] = (),
+    robust: str = "worst",
     rounds: int = 5,
-    largest_steps: int = 40,
+    largest_steps: int = 60,
     least_gain: float = 0.2,
     enough: float = 1e-4,
     progress: Callable[[int, float], None] | None = None,
@@ -109,13 +119,17 @@ def find_weights_corrected(
     Parameters
     ----------
     exact, quick : Response
-        The exact dose and its stand-in, for the same voxels and weights.
+        The exact dose and its stand-in, for the same voxels and weights; of the exact one only ``dose`` is used.
     goals : sequence of Goal
         The goals.
     scale_gy : float
         The prescription, Gy.
     start : array_like, shape (w,), optional
         Weights to begin with.
+    scenarios : sequence of (Response, Response)
+        Exact dose and stand-in of further scenarios.
+    robust : str
+        ``worst`` or ``expectation``; how scenarios are joined.
     rounds : int
         Largest number of rounds.
     largest_steps : int
@@ -131,38 +145,46 @@ def find_weights_corrected(
     Returns
     -------
     FoundWeights
-        Best weights; history, parts and dose are those of the exact response.
+        Best weights; history (of the joined cost), parts and dose (nominal) are those of the exact response.
     """
-    import warnings
+    exacts = [exact, *(pair[0] for pair in scenarios)]
+    quicks = [quick, *(pair[1] for pair in scenarios)]
 
-    from dosekit.errors import SettingsWarning
-
-    def search(response: Response, begin: ArrayLike | None) -> NDArray[np.float64]:
+    def search(stand_ins: Sequence[Response], begin: ArrayLike | None) -> NDArray[np.float64]:
+        first, *others = stand_ins
         with warnings.catch_warnings():
             warnings.simplefilter("ignore", SettingsWarning)
             return find_weights(
-                response, goals, scale_gy=scale_gy, start=begin, largest_steps=largest_steps, least_gain=1e-3
+                first,
+                goals,
+                scale_gy=scale_gy,
+                start=begin,
+                scenarios=others,
+                robust=robust,
+                largest_steps=largest_steps,
+                least_gain=_LEAST_GAIN,
+                enough=_QUICK_SHARE * enough,
             ).weights
 
     evaluations = 0
 
-    def judge(weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], float, dict[str, float]]:
+    def judge(weights: NDArray[np.float64]) -> tuple[list[NDArray[np.float64]], float, dict[str, float]]:
         nonlocal evaluations
         evaluations += 1
-        dose, _ = exact.dose(weights)
-        cost, parts, _ = goal_costs(goals, dose, scale_gy=scale_gy)
-        return dose, cost, parts
+        doses = [one.dose(weights)[0] for one in exacts]
+        costs = [goal_costs(goals, dose, scale_gy=scale_gy)[:2] for dose in doses]
+        return doses, joined_costs(np.array([cost for cost, _ in costs]), robust)[0], costs[0][1]
 
-    best = search(quick, start)
-    dose, cost, parts = judge(best)
+    best = search(quicks, start)
+    doses, cost, parts = judge(best)
     history, parts_history = [cost], {name: [value] for name, value in parts.items()}
     reason = f"{rounds} rounds"
     for number in range(1, rounds + 1):
         if cost <= enough:
-            reason = f"exact cost at or below {enough:g}"
             break
-        corrected = CorrectedResponse(quick, dose - quick.dose(best)[0])
-        aimed = search(corrected, best)
+        aimed = search(
+            [CorrectedResponse(one, dose - one.dose(best)[0]) for dose, one in zip(doses, quicks, strict=True)], best
+        )
         part, found = 1.0, None
         for _ in range(_HALVINGS + 1):
             trial = best + part * (aimed - best)
@@ -175,18 +197,20 @@ def find_weights_corrected(
             reason = f"no lower cost after {_HALVINGS} halvings"
             break
         before = cost
-        best, dose, cost, parts = found
+        best, doses, cost, parts = found
         history.append(cost)
         for name, value in parts.items():
             parts_history[name].append(value)
         if progress is not None:
             progress(number, cost)
-        if before - cost < least_gain * before:
+        if cost > enough and before - cost < least_gain * before:
             reason = f"exact cost falls by less than {100 * least_gain:g} %"
             break
+    if cost <= enough:
+        reason = f"exact cost at or below {enough:g}"
     return FoundWeights(
         weights=best,
-        dose_gy=dose,
+        dose_gy=doses[0],
         history=tuple(history),
         parts={name: tuple(values) for name, values in parts_history.items()},
         steps=len(history) - 1,

@@ -6,12 +6,10 @@ limited-memory quasi-Newton method with bounds (L-BFGS-B: Byrd, Lu, Nocedal & Zh
 (diagonal preconditioning).
 
 Stopping rules, the first that applies: the cost falls by less than `least_gain` (relative) in each of
-three steps in a row; the number of steps; no lower cost in the search direction; a cost of zero.
+three steps in a row; the number of steps; no lower cost in the search direction; a cost of `enough` or less.
 
 Robust weights: scenarios (say a range 3 % longer or shorter, a shift of 3 mm) are given as responses of
-their own, the nominal one first.  ``expectation`` minimises the mean of their costs; ``worst`` minimises
-the norm ``(mean of F_i^p)^(1/p)`` with p = 8, a smooth stand-in for the largest cost F, between
-F / n^(1/8) and F for n scenarios.
+their own, the nominal one first, and their costs joined (`dosekit.modulation.costs`).
 
 Two modes: `find_weights` with all fields together; `find_weights_each_field` makes each field alone give
 its share of the goals.
@@ -27,8 +25,9 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from dosekit.errors import InputError, ReachError, SettingsWarning, UnknownNameError
-from dosekit.modulation.goals import Goal, goal_costs
+from dosekit.errors import InputError, SettingsWarning, UnknownNameError
+from dosekit.modulation.costs import ROBUST_MODES, CostProblem, goals_asking, scale_to_mean, unit_weights
+from dosekit.modulation.goals import Goal
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence
@@ -37,12 +36,8 @@ if TYPE_CHECKING:
 
     from dosekit.modulation.responses import Response
 
-__all__ = ["ROBUST_MODES", "FoundWeights", "find_weights", "find_weights_each_field", "scale_to_mean"]
+__all__ = ["FoundWeights", "find_weights", "find_weights_each_field"]
 
-ROBUST_MODES: tuple[str, ...] = ("expectation", "worst")
-"""How scenarios are joined."""
-
-_NORM = 8.0
 _PATIENCE = 3
 
 
@@ -89,6 +84,7 @@ def find_weights(
     robust: str = "worst",
     largest_steps: int = 60,
     least_gain: float = 1e-4,
+    enough: float = 0.0,
     progress: Callable[[int, float], None] | None = None,
 ) -> FoundWeights:
     """Find non-negative weights that reach the goals.
@@ -111,6 +107,8 @@ def find_weights(
         Largest number of steps.
     least_gain : float
         Relative gain that counts as no progress.
+    enough : float
+        A cost at or below this ends the search.
     progress : callable, optional
         Called with step and cost after each step.
 
@@ -141,9 +139,9 @@ def find_weights(
 
     responses = [response, *scenarios]
     _check(responses, goals, scale_gy, robust)
-    unit = _units(response, goals)
+    unit = unit_weights(response, goals)
     begin = _beginning(response, goals, unit, start)
-    problem = _Problem(responses, list(goals), float(scale_gy), robust, unit)
+    problem = CostProblem(responses, list(goals), float(scale_gy), robust, unit)
     first, _ = problem(begin)
     history = [first]
     parts: dict[str, list[float]] = {name: [cost] for name, cost in problem.parts_at(begin).items()}
@@ -158,8 +156,8 @@ def find_weights(
             parts[name].append(part)
         if progress is not None:
             progress(len(history) - 1, cost)
-        if cost == 0.0:
-            reason = "cost is zero"
+        if cost <= enough:
+            reason = "cost is zero" if cost == 0.0 else f"cost at or below {enough:g}"
             raise _Stop
         if len(history) > _PATIENCE and all(
             history[-k - 2] - history[-k - 1] < least_gain * history[-k - 2] for k in range(_PATIENCE)
@@ -167,7 +165,7 @@ def find_weights(
             reason = f"gain below {least_gain:g} in {_PATIENCE} steps in a row"
             raise _Stop
 
-    if first > 0.0:
+    if first > enough:
         try:
             search: Any = optimize.minimize
             options = {
@@ -191,7 +189,7 @@ def find_weights(
         except _Stop:
             pass
     else:
-        reason = "cost is zero"
+        reason = "cost is zero" if first == 0.0 else f"cost at or below {enough:g}"
     if reason == f"{largest_steps} steps" and history[-2] - history[-1] > 0.01 * history[-1]:
         warnings.warn(
             f"weights: cost still falling by {100 * (1 - history[-1] / history[-2]):.1f} % after {largest_steps} steps",
@@ -274,139 +272,6 @@ def find_weights_each_field(
     return found
 
 
-def scale_to_mean(
-    response: Response, weights: ArrayLike, *, voxels: ArrayLike, coverage: ArrayLike | None = None, dose_gy: float
-) -> NDArray[np.float64]:
-    """Multiply weights by one number so that the mean dose of some voxels is the one wanted.
-
-    Parameters
-    ----------
-    response : Response
-        Dose as a function of the weights.
-    weights : array_like, shape (w,)
-        Weights.
-    voxels : array_like of int
-        Places of the voxels.
-    coverage : array_like, optional
-        Share of each voxel.
-    dose_gy : float
-        Mean dose wanted, Gy.
-
-    Returns
-    -------
-    ndarray, shape (w,)
-        Scaled weights; found by secant steps to 1e-9, since effect-weighted dose is not proportional.
-
-    Raises
-    ------
-    ReachError
-        If the weights give no dose there.
-    """
-    given = np.asarray(weights, dtype=np.float64)
-    places = np.asarray(voxels, dtype=np.int64)
-    share = None if coverage is None else np.asarray(coverage, dtype=np.float64)
-    factor = 1.0
-    for _ in range(50):
-        mean = float(np.average(response.dose(factor * given)[0][places], weights=share))
-        if not mean > 0.0:
-            raise ReachError(
-                "weights without dose in the voxels asked for",
-                allowed="some dose",
-                remedy="check the fields",
-            )
-        if abs(mean / dose_gy - 1.0) < 1e-9:
-            break
-        factor *= dose_gy / mean
-    return factor * given
-
-
-class _Problem:
-    """Cost and slope in preconditioned units, remembering the last few points."""
-
-    def __init__(
-        self,
-        responses: list[Response],
-        goals: list[Goal],
-        scale_gy: float,
-        robust: str,
-        unit: NDArray[np.float64],
-    ) -> None:
-        self.responses, self.goals, self.scale_gy = responses, goals, scale_gy
-        self.robust, self.unit = robust, unit
-        self.evaluations = 0
-        self._memory: dict[bytes, tuple[float, NDArray[np.float64], dict[str, float]]] = {}
-
-    def __call__(self, x: NDArray[np.float64]) -> tuple[float, NDArray[np.float64]]:
-        """Give cost and slope."""
-        return self._at(x)[:2]
-
-    def parts_at(self, x: NDArray[np.float64]) -> dict[str, float]:
-        """Give the nominal cost of each goal."""
-        return self._at(x)[2]
-
-    def _at(self, x: NDArray[np.float64]) -> tuple[float, NDArray[np.float64], dict[str, float]]:
-        key = np.ascontiguousarray(x).tobytes()
-        if key not in self._memory:
-            if len(self._memory) > 4:
-                self._memory.pop(next(iter(self._memory)))
-            self._memory[key] = self._evaluate(np.maximum(x, 0.0) * self.unit)
-        return self._memory[key]
-
-    def _evaluate(self, weights: NDArray[np.float64]) -> tuple[float, NDArray[np.float64], dict[str, float]]:
-        self.evaluations += 1
-        costs, back, nominal = [], [], {}
-        for number, response in enumerate(self.responses):
-            dose, kept = response.dose(weights)
-            cost, parts, slope = goal_costs(self.goals, dose, scale_gy=self.scale_gy)
-            costs.append(cost)
-            back.append((response, slope, kept))
-            if number == 0:
-                nominal = parts
-        total, factors = _joined(np.array(costs), self.robust)
-        gradient = np.zeros_like(weights)
-        for factor, (response, slope, kept) in zip(factors, back, strict=True):
-            if factor > 0.0 and np.any(slope):
-                gradient += response.pull_back(factor * slope, kept)
-        return total, gradient * self.unit, nominal
-
-
-def _joined(costs: NDArray[np.float64], robust: str) -> tuple[float, NDArray[np.float64]]:
-    """Join the costs of the scenarios; give the slope with respect to each."""
-    count = len(costs)
-    if count == 1:
-        return float(costs[0]), np.ones(1)
-    top = float(np.max(costs))
-    if robust == "expectation" or top == 0.0:
-        return float(np.mean(costs)), np.full(count, 1.0 / count)
-    relative = costs / top
-    mean = float(np.mean(relative**_NORM))
-    return top * mean ** (1.0 / _NORM), mean ** (1.0 / _NORM - 1.0) * relative ** (_NORM - 1.0) / count
-
-
-def _asking(goals: Sequence[Goal]) -> list[Goal]:
-    """Goals that ask for dose."""
-    return [goal for goal in goals if goal.kind in {"uniform", "minimum", "volume_above"} and goal.level_gy > 0.0]
-
-
-def _units(response: Response, goals: Sequence[Goal]) -> NDArray[np.float64]:
-    """Weight that gives the target the same summed dose for every entry; 0 where a weight does not reach it."""
-    asked = np.zeros(response.shape[0])
-    for goal in _asking(goals):
-        assert goal.coverage is not None
-        np.add.at(asked, goal.voxels, goal.coverage)
-    _, kept = response.dose(np.zeros(response.shape[1]))
-    reach = response.pull_back(asked, kept)
-    top = float(np.max(reach, initial=0.0))
-    if not top > 0.0:
-        raise ReachError(
-            "no spot or step gives dose where it is asked for",
-            allowed="fields that reach the target",
-            remedy="check them",
-        )
-    # entries that hardly touch the target keep a moderate unit, so that they do not run away
-    return np.asarray(1.0 / np.maximum(reach, 0.02 * top) * (reach > 1e-6 * top))
-
-
 def _beginning(
     response: Response, goals: Sequence[Goal], unit: NDArray[np.float64], start: ArrayLike | None
 ) -> NDArray[np.float64]:
@@ -424,7 +289,7 @@ def _beginning(
         begin = np.where(unit > 0.0, given / np.where(unit > 0.0, unit, 1.0), 0.0)
         if not np.any(begin > 0.0):
             begin = np.where(unit > 0.0, 1.0, 0.0)
-    goal = max(_asking(goals), key=lambda one: one.weight)
+    goal = max(goals_asking(goals), key=lambda one: one.weight)
     scaled = scale_to_mean(response, begin * unit, voxels=goal.voxels, coverage=goal.coverage, dose_gy=goal.level_gy)
     return np.where(unit > 0.0, scaled / np.where(unit > 0.0, unit, 1.0), 0.0)
 
@@ -440,7 +305,7 @@ def _check(responses: Sequence[Response], goals: Sequence[Goal], scale_gy: float
             allowed="the same voxels and weights in every scenario",
             remedy="build all scenarios from the same fields and voxels",
         )
-    if not scale_gy > 0.0 or not _asking(goals):
+    if not scale_gy > 0.0 or not goals_asking(goals):
         raise InputError(
             f"{len(goals)} goals with a prescription of {scale_gy} Gy",
             allowed="a prescription above 0 and a goal that asks for dose",

@@ -1,8 +1,8 @@
 """From first weights to final ones: a search in three dimensions where the study asks for it, and the prescription.
 
-The search is that of :mod:`dosekit.modulation.corrections` (a quick stand-in set right by the fold), or with errors
-to stand that of :mod:`dosekit.modulation.weights` on the fold itself: uniform dose in the target, limits in organs, and
-no more than the prescription in a shell around the target. Then all weights are multiplied by one number
+The search is that of :mod:`dosekit.modulation.corrections`: a quick stand-in set right by the fold, with one of each
+for every error that the weights should stand. Goals: uniform dose in the target, limits in organs, and no more than the
+prescription in a shell around the target. Then all weights are multiplied by one number
 so that the mean target dose (physical or effect-weighted, as the goal says) is the prescribed one.
 """
 
@@ -17,18 +17,42 @@ from numpy.typing import NDArray
 
 from dosekit.basis.components import COMPONENTS
 from dosekit.effects.tissues import Tissue
+from dosekit.studies.folding import JudgingFold, weights_given
+from dosekit.studies.goal_voxels import goals_of
 from dosekit.studies.planning import PlannedField, effect_model_of
 
 if TYPE_CHECKING:
+    import xarray as xr
+
     from dosekit.effects.mixed_field import EffectModel
     from dosekit.grids.voxels import VoxelGrid
     from dosekit.maps.fields import Field
     from dosekit.modulation.goals import Goal
     from dosekit.modulation.responses import Response
+    from dosekit.modulation.surrogates import Pencils
     from dosekit.modulation.weights import FoundWeights
     from dosekit.studies.model import Study
 
-__all__ = ["search_weights"]
+__all__ = ["FieldWeights", "search_weights"]
+
+
+@dataclass(frozen=True)
+class FieldWeights:
+    """Outcome of a search.
+
+    Attributes
+    ----------
+    planned : list of PlannedField
+        Fields with the weights found.
+    searches : tuple of FoundWeights
+        One search, or one for each field.
+    folded : dict of str to Dataset
+        Dose of those fields whose last judgement was of the weights found.
+    """
+
+    planned: list[PlannedField]
+    searches: tuple[FoundWeights, ...]
+    folded: dict[str, xr.Dataset]
 
 
 def search_weights(
@@ -39,7 +63,7 @@ def search_weights(
     *,
     let: Mapping[str, NDArray[np.float32]] | None = None,
     progress: Callable[[str, float], None] | None = None,
-) -> tuple[list[PlannedField], tuple[FoundWeights, ...]]:
+) -> FieldWeights:
     """Find the weights of all spots and steps in three dimensions.
 
     Parameters
@@ -59,13 +83,11 @@ def search_weights(
 
     Returns
     -------
-    planned : list of PlannedField
-        Fields with the weights found.
-    searches : tuple of FoundWeights
-        One search, or one for each field.
+    FieldWeights
+        Fields with the weights found, the searches, and the folds that judged them last.
     """
     goal = study.goal
-    goals, voxels = _goals(study, grid, target)
+    goals, voxels = goals_of(study, grid, target)
     local = None if let is None else {name: values.reshape(-1)[voxels] for name, values in let.items()}
     constants: Mapping[str, tuple[Any, Any]] = {}
     if goal.quantity == "effect":
@@ -74,6 +96,7 @@ def search_weights(
     what = "weights in three dimensions"
     found: list[FoundWeights] = []
     changed: list[PlannedField] = []
+    folded: dict[str, xr.Dataset] = {}
     for count, group in enumerate(groups):
         share = len(group) / len(planned)
 
@@ -83,16 +106,14 @@ def search_weights(
                 progress(what, (count + min(step / (1.0 + step), 0.95)) / len(groups))
 
         tell(0, 0.0)
-        one = _search(_Task(study, grid, voxels, constants), group, _scaled_goals(goals, share), share, tell)
+        scaled = [replace(goal, level_gy=goal.level_gy * share) for goal in goals]
+        one, known = _search(_Task(study, grid, voxels, constants), group, scaled, share, tell)
         found.append(one)
-        sizes = np.cumsum([int(np.prod(plan.field.shape)) for plan in group])[:-1]
-        changed += [
-            replace(plan, field=plan.field.replace(weights=part.reshape(plan.field.shape)))
-            for plan, part in zip(group, np.split(one.weights, sizes), strict=True)
-        ]
+        changed += weights_given(group, one.weights)
+        folded |= known
     if progress is not None:
         progress(what, 1.0)
-    return changed, tuple(found)
+    return FieldWeights(changed, tuple(found), folded)
 
 
 @dataclass(frozen=True)
@@ -131,151 +152,123 @@ def _search(
     goals: Sequence[Goal],
     share: float,
     tell: Callable[[int, float], None],
-) -> FoundWeights:
-    """Search with the quick stand-in corrected by the fold; with errors to stand, with the fold itself."""
+) -> tuple[FoundWeights, dict[str, xr.Dataset]]:
+    """Search with the quick stand-in corrected by the fold, in every scenario."""
     from dosekit.modulation.corrections import find_weights_corrected
-    from dosekit.modulation.weights import find_weights
+    from dosekit.modulation.surrogates import Pencils, water_depth_mm
 
-    goal = task.study.goal
-    start = np.concatenate([np.asarray(plan.field.weights).ravel() for plan in group])
-    exact = _response(task, group)
-    scale = goal.dose_gy * share
-    if goal.robust is not None:
-        return find_weights(
-            exact,
-            goals,
-            scale_gy=scale,
-            start=start,
-            scenarios=_scenarios(task, group),
-            robust=goal.robust.join,
-            largest_steps=goal.iterations,
-            progress=tell,
-        )
-    return find_weights_corrected(
-        exact,
-        _stand_in(task, group),
+    said = task.study.goal
+    pencils = [Pencils(plan.field, plan.library, water_depth_mm(plan.field, task.grid, task.voxels)) for plan in group]
+    model = effect_model_of(task.study, group[0].field.beam.particle)
+    first = _Erring(task, group, _Error())
+    judging = JudgingFold(task.study, task.grid, group, task.voxels, model, task.constants, first)
+    errors = _errors(task.study)
+    found = find_weights_corrected(
+        judging,
+        _stand_in(task, pencils, model, _Error()),
         goals,
-        scale_gy=scale,
-        start=start,
-        largest_steps=goal.iterations,
+        scale_gy=said.dose_gy * share,
+        start=np.concatenate([np.asarray(plan.field.weights).ravel() for plan in group]),
+        scenarios=[(_Erring(task, group, error), _stand_in(task, pencils, model, error)) for error in errors],
+        robust=said.robust.join if said.robust is not None else "worst",
+        largest_steps=said.iterations,
         progress=tell,
     )
+    return found, judging.folded(found.weights)
 
 
-def _scaled_goals(goals: Sequence[Goal], share: float) -> list[Goal]:
-    """Return the goals for a share of the dose."""
-    return [replace(goal, level_gy=goal.level_gy * share) for goal in goals]
+@dataclass(frozen=True)
+class _Error:
+    """An error of range (a factor on all depths) or of position (of the isocentre, mm)."""
+
+    range_factor: float = 1.0
+    moved_mm: tuple[float, float, float] = (0.0, 0.0, 0.0)
 
 
-def _stand_in(task: _Task, group: Sequence[PlannedField]) -> Response:
+def _errors(study: Study) -> list[_Error]:
+    """Return the errors that the weights should stand, none where the study does not ask for them."""
+    said = study.goal.robust
+    if said is None:
+        return []
+    found = []
+    if said.range_percent > 0.0:
+        found += [_Error(range_factor=1.0 + sign * said.range_percent / 100.0) for sign in (-1.0, 1.0)]
+    if said.position_mm > 0.0:
+        for axis in range(3):
+            for sign in (-1.0, 1.0):
+                x, y, z = (sign * said.position_mm if axis == place else 0.0 for place in range(3))
+                found.append(_Error(moved_mm=(x, y, z)))
+    return found
+
+
+def _stand_in(task: _Task, pencils: Sequence[Pencils], model: EffectModel, error: _Error) -> Response:
     """Return the quick stand-in for the dose of some fields, as sparse matrices."""
-    from scipy.sparse import hstack
-
     from dosekit.modulation.responses import EffectResponse, LinearResponse
     from dosekit.modulation.surrogates import pencil_matrices
 
     study = task.study
-    model = effect_model_of(study, group[0].field.beam.particle)
     plain = task.plain_factors(model)
-    if plain is not None:
-        factors: list[dict[str, Any]] = [dict(plain)]
-    else:
-        factors = [{name: task.constants[name][place] for name in COMPONENTS} for place in (0, 1)]
-    columns = [
-        pencil_matrices(plan.field, plan.library, task.grid, task.voxels, factors=factors, star_scale=study.stars.scale)
-        for plan in group
-    ]
-    joined = [hstack([matrices[place] for matrices in columns], format="csr") for place in range(len(factors))]
+    factors: list[dict[str, Any]] = [dict(plain)] if plain is not None else []
     if plain is None:
-        return EffectResponse(joined[0], joined[1], model.tissue, study.goal.fractions)
-    return LinearResponse(joined[0])
-
-
-def _goals(study: Study, grid: VoxelGrid, target: str) -> tuple[list[Goal], NDArray[np.int64]]:
-    """Return the goals and the flat indices of the voxels that they look at."""
-    from scipy.ndimage import distance_transform_edt
-
-    from dosekit.modulation.goals import Goal
-
-    said = study.goal
-    wanted = grid.structure(target)
-    limited = [organ for organ in study.organ if organ.maximum_gy is not None or organ.mean_gy is not None]
-    masks = {organ.structure: grid.structure(organ.structure) for organ in limited}
-    sampling = grid.spacing_mm[::-1]
-    away = distance_transform_edt(wanted < 0.5, sampling=sampling)
-    shell = (away > max(sampling)) & (away <= said.surround_mm) & grid.body() & (wanted <= 0.0)
-    asked = (wanted > 0.0) | shell
-    for mask in masks.values():
-        asked |= mask > 0.0
-    voxels = np.flatnonzero(asked)
-    place = np.full(asked.size, -1, dtype=np.int64)
-    place[voxels] = np.arange(len(voxels))
-
-    def goal(name: str, kind: str, mask: NDArray[np.float32], level: float, weight: float) -> Goal:
-        flat = np.flatnonzero(mask > 0.0)
-        cover = mask.reshape(-1)[flat].astype(np.float64)
-        return Goal(name, kind, place[flat], level, coverage=cover, weight=weight)
-
-    goals = [goal(target, "uniform", wanted, said.dose_gy, 1.0)]
-    if said.surround_weight > 0.0 and shell.any():
-        share = shell.astype(np.float32)
-        goals.append(goal("shell around the target", "maximum", share, said.dose_gy, said.surround_weight))
-    for organ in limited:
-        mask = masks[organ.structure]
-        if organ.maximum_gy is not None:
-            goals.append(goal(f"{organ.structure}, maximum", "maximum", mask, organ.maximum_gy, organ.weight))
-        if organ.mean_gy is not None:
-            goals.append(goal(f"{organ.structure}, mean", "mean", mask, organ.mean_gy, organ.weight))
-    return goals, voxels
-
-
-def _response(
-    task: _Task,
-    planned: Sequence[PlannedField],
-    *,
-    grid: VoxelGrid | None = None,
-    moved_mm: tuple[float, float, float] = (0.0, 0.0, 0.0),
-) -> Response:
-    """Return dose, or effect-weighted dose, in the chosen voxels as a function of the weights."""
-    from dosekit.maps.operator import FoldOperator
-    from dosekit.modulation.responses import FoldEffectResponse, LinearResponse
-
-    study = task.study
-    fields = [_moved(plan.field, moved_mm) for plan in planned]
-    operator = FoldOperator(
-        fields,
-        grid or task.grid,
-        voxels=task.voxels,
-        yields=study.stars.yields,
+        factors = [{name: task.constants[name][place] for name in COMPONENTS} for place in (0, 1)]
+    matrices = pencil_matrices(
+        pencils,
+        task.grid,
+        task.voxels,
+        factors=factors,
         star_scale=study.stars.scale,
-        dose_to=study.outputs.dose_to,
-        libraries={plan.field.name: plan.library for plan in planned},
+        range_factor=error.range_factor,
+        moved_mm=error.moved_mm,
     )
-    model = effect_model_of(study, fields[0].beam.particle)
-    plain = task.plain_factors(model)
-    if plain is not None:
-        return LinearResponse(operator.with_factors(plain))
-    return FoldEffectResponse(operator, task.constants, model.tissue, study.goal.fractions)
+    if plain is None:
+        return EffectResponse(matrices[0], matrices[1], model.tissue, study.goal.fractions)
+    return LinearResponse(matrices[0])
 
 
-def _scenarios(task: _Task, planned: Sequence[PlannedField]) -> list[Response]:
-    """Return the responses with an error of range or position, none where the study does not ask for them."""
-    said = task.study.goal.robust
-    if said is None:
-        return []
-    found: list[Response] = []
-    if said.range_percent > 0.0:
-        for sign in (-1.0, 1.0):
-            factor = np.float32(1.0 + sign * said.range_percent / 100.0)
-            denser = task.grid.replace(density_g_cm3=task.grid.density_g_cm3 * factor)
-            found.append(_response(task, planned, grid=denser))
-    if said.position_mm > 0.0:
-        for axis in range(3):
-            for sign in (-1.0, 1.0):
-                moved = [0.0, 0.0, 0.0]
-                moved[axis] = sign * said.position_mm
-                found.append(_response(task, planned, moved_mm=(moved[0], moved[1], moved[2])))
-    return found
+@dataclass(frozen=True, eq=False)
+class _Erring:
+    """The exact dose with an error of range or position (or none), made anew each time it is asked for."""
+
+    task: _Task
+    planned: Sequence[PlannedField]
+    error: _Error
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        """Voxels and weights."""
+        return len(self.task.voxels), sum(int(np.prod(plan.field.shape)) for plan in self.planned)
+
+    def dose(self, weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], Any]:
+        """Give the dose that the goal asks for, Gy."""
+        return self._response().dose(weights)
+
+    def pull_back(self, slope: NDArray[np.float64], kept: Any) -> NDArray[np.float64]:
+        """Turn a slope per voxel into a slope per weight."""
+        return self._response().pull_back(slope, kept)
+
+    def _response(self) -> Response:
+        """Prepare the fold."""
+        from dosekit.maps.operator import FoldOperator
+        from dosekit.modulation.responses import FoldEffectResponse, LinearResponse
+
+        study, grid = self.task.study, self.task.grid
+        if self.error.range_factor != 1.0:
+            grid = grid.replace(density_g_cm3=grid.density_g_cm3 * np.float32(self.error.range_factor))
+        fields = [_moved(plan.field, self.error.moved_mm) for plan in self.planned]
+        operator = FoldOperator(
+            fields,
+            grid,
+            voxels=self.task.voxels,
+            yields=study.stars.yields,
+            star_scale=study.stars.scale,
+            dose_to=study.outputs.dose_to,
+            libraries={plan.field.name: plan.library for plan in self.planned},
+        )
+        model = effect_model_of(study, fields[0].beam.particle)
+        plain = self.task.plain_factors(model)
+        if plain is not None:
+            return LinearResponse(operator.with_factors(plain))
+        return FoldEffectResponse(operator, self.task.constants, model.tissue, study.goal.fractions)
 
 
 def _moved(field: Field, by_mm: tuple[float, float, float]) -> Field:

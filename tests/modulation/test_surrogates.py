@@ -12,7 +12,7 @@ from dosekit.depths.library import depth_library
 from dosekit.errors import InputError
 from dosekit.grids.voxels import VoxelGrid
 from dosekit.maps.fields import Field, spot_lattice
-from dosekit.modulation.surrogates import pencil_matrices, water_depth_mm
+from dosekit.modulation.surrogates import Pencils, pencil_matrices, water_depth_mm
 
 ALL = dict.fromkeys(COMPONENTS, 1.0)
 NARROW = {name: 1.0 for name in COMPONENTS if name not in ("star_neutron", "star_photon", "in_flight", "decay")}
@@ -64,7 +64,7 @@ def test_lateral_sum_is_the_depth_curve(tank, field, library):
     """A spot's dose summed over a plane is the broad-field dose of one particle."""
     row = 20
     plane = [np.ravel_multi_index((k, row, i), tank.shape) for k in range(25) for i in range(25)]
-    matrix = pencil_matrices(field, library, tank, np.array(plane), factors=[NARROW])[0]
+    matrix = pencil_matrices([Pencils(field, library)], tank, np.array(plane), factors=[NARROW])[0]
     middle = len(field.spots_mm) // 2
     weights = np.zeros(field.shape)
     weights[middle, 0] = 1.0
@@ -76,9 +76,9 @@ def test_lateral_sum_is_the_depth_curve(tank, field, library):
 
 def test_factors_act_by_component(tank, field, library):
     places = np.array([np.ravel_multi_index((12, row, 12), tank.shape) for row in (5, 20, 30)])
-    parts = [pencil_matrices(field, library, tank, places, factors=[{name: 1.0}])[0] for name in NARROW]
+    parts = [pencil_matrices([Pencils(field, library)], tank, places, factors=[{name: 1.0}])[0] for name in NARROW]
     whole, doubled = pencil_matrices(
-        field, library, tank, places, factors=[NARROW, {name: np.array([2.0, 2.0, 2.0]) for name in NARROW}]
+        [Pencils(field, library)], tank, places, factors=[NARROW, {name: np.array([2.0, 2.0, 2.0]) for name in NARROW}]
     )
     vector = np.ones(int(np.prod(field.shape)))
     np.testing.assert_allclose(sum(part @ vector for part in parts), whole @ vector, rtol=5e-3)
@@ -95,7 +95,7 @@ def test_like_the_fold(tank, field, library):
     operator = FoldOperator([field], tank, voxels=places, libraries={"one": library})
     vector = np.ones(operator.shape[1])
     exact = operator @ vector
-    quick = pencil_matrices(field, library, tank, places, factors=[ALL])[0] @ vector
+    quick = pencil_matrices([Pencils(field, library)], tank, places, factors=[ALL])[0] @ vector
     assert np.corrcoef(exact, quick)[0, 1] > 0.97
     high = exact > 0.5 * exact.max()
     assert np.mean(quick[high]) == pytest.approx(np.mean(exact[high]), rel=0.15)
@@ -103,4 +103,4 @@ def test_like_the_fold(tank, field, library):
 
 def test_other_library_is_refused(tank, field, library):
     with pytest.raises(InputError, match="steps"):
-        pencil_matrices(field.replace(shift_mm=np.zeros(1), weights=None), library, tank, [0], factors=[ALL])
+        Pencils(field.replace(shift_mm=np.zeros(1), weights=None), library)

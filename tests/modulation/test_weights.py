@@ -11,9 +11,10 @@ from dosekit.basis.components import COMPONENTS
 from dosekit.effects.mixed_field import EffectModel
 from dosekit.effects.tissues import Tissue, TissueMap
 from dosekit.errors import InputError, ReachError, SettingsWarning, UnknownNameError
+from dosekit.modulation.costs import scale_to_mean
 from dosekit.modulation.goals import Goal, goal_costs
 from dosekit.modulation.responses import EffectResponse, FoldEffectResponse, LinearResponse
-from dosekit.modulation.weights import find_weights, find_weights_each_field, scale_to_mean
+from dosekit.modulation.weights import find_weights, find_weights_each_field
 
 ANY = Tissue("any", 0.3, 6.0)
 

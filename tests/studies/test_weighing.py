@@ -38,20 +38,18 @@ def test_a_large_target_between_organs_meets_its_goals():
 
 
 def test_robust_weights_lower_the_worst_scenario(study_text):
-    plain = _computed(study_text.replace("[goal]", "[goal]\nweights = 'all_fields'\niterations = 5"))
+    """The dose that 98 % of the target have, with matter 3 % denser or lighter, judged by the fold."""
+    from dosekit.maps.fold import fold
+
+    plain = _computed(study_text.replace("[goal]", "[goal]\nweights = 'all_fields'"))
     robust = _computed(
-        study_text.replace(
-            "[goal]",
-            "[goal]\nweights = 'all_fields'\niterations = 5\nrobust = { range_percent = 3, position_mm = 0 }",
-        )
+        study_text.replace("[goal]", "[goal]\nweights = 'all_fields'\nrobust = { range_percent = 3, position_mm = 0 }")
     )
     worst = []
     for result in (plain, robust):
-        from dosekit.maps.fold import fold
-
         grid, target = result.grid, result.grid.structure(result.target)
         lowest = np.inf
-        for factor in (0.97, 1.03):
+        for factor in (0.97, 1.0, 1.03):
             other = grid.replace(density_g_cm3=grid.density_g_cm3 * np.float32(factor))
             total = 0.0
             for plan in result.planned:
@@ -59,7 +57,8 @@ def test_robust_weights_lower_the_worst_scenario(study_text):
                 total = total + dose["dose"].sum("component").values
             lowest = min(lowest, float(np.quantile(total[target > 0.5], 0.02)))
         worst.append(lowest)
-    assert worst[1] > worst[0]
+    assert worst[1] > worst[0] + 0.02 * 1.5
+    assert len(robust.searches[0].parts) == len(plain.searches[0].parts)
 
 
 def test_other_particles_reach_the_same_goal(study_text):
