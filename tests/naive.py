@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from functools import cache
 
+import numpy as np
+
 # ---------------------------------------------------------------- effects: volume histograms and agreement
 
 
@@ -217,6 +219,60 @@ def slowing_down(energy_of_range, reach_mm, edges_mm, path_mm, deviation_mm, qua
         for index in range(len(deposit)):
             deposit[index] += weight * (energies[index] - energies[index + 1])
     return deposit
+
+
+# ---------------------------------------------------------------- depths: histories of single particles
+
+
+def stopping_depths(
+    energy_mev, *, mass_mev, electrons_per_mm3, stopping_mev_mm, scattering_rad2_mm, step_mm, cut_mev, count, rng
+):
+    """Return depths at which particles stop, one by one: random collisions over a cut, a Gaussian under it, turns.
+
+    Collisions of energy e with free electrons have the density 2 pi r^2 m n / beta^2 (1/e^2 - beta^2 / (e W)); the
+    rest of the mean loss is smooth, with the variance of the collisions under the cut.
+    """
+    electron, area = 0.51099895, 2.0 * math.pi * 2.8179403262e-12**2
+    energy = np.full(count, float(energy_mev))
+    depth = np.zeros(count)
+    direction = np.zeros((count, 3))
+    direction[:, 2] = 1.0
+    while True:
+        moving = np.flatnonzero(energy > 0.5)
+        if len(moving) == 0:
+            return depth
+        now = energy[moving]
+        step = np.minimum(step_mm, 0.03 * now / stopping_mev_mm(now))
+        half = now - 0.5 * step * stopping_mev_mm(now)
+        gamma = 1.0 + half / mass_mev
+        beta2 = 1.0 - 1.0 / gamma**2
+        ratio = electron / mass_mev
+        top = 2.0 * electron * beta2 * gamma**2 / (1.0 + 2.0 * gamma * ratio + ratio**2)
+        cut = np.minimum(cut_mev, top)
+        xi = area * electron * electrons_per_mm3 * step / beta2
+        hard_number = np.maximum(xi * (1.0 / cut - 1.0 / top - beta2 / top * np.log(top / cut)), 0.0)
+        hard_loss = xi * (np.log(top / cut) - beta2 * (1.0 - cut / top))
+        loss = step * stopping_mev_mm(half) - hard_loss
+        loss += rng.normal(size=len(now)) * np.sqrt(xi * (cut - 0.5 * beta2 * cut**2 / top))
+        hits = np.repeat(np.arange(len(now)), rng.poisson(hard_number))
+        while len(hits):
+            share = rng.random(len(hits))
+            given = 1.0 / (1.0 / cut[hits] - share * (1.0 / cut[hits] - 1.0 / top[hits]))
+            taken = rng.random(len(hits)) < 1.0 - beta2[hits] * given / top[hits]
+            np.add.at(loss, hits[taken], given[taken])
+            hits = hits[~taken]
+        energy[moving] = now - np.maximum(loss, 0.0)
+        # turn in the middle of the step: two small angles about the direction of flight
+        ahead = direction[moving]
+        side = np.cross(ahead, np.where(np.abs(ahead[:, :1]) < 0.9, [[1.0, 0.0, 0.0]], [[0.0, 1.0, 0.0]]))
+        side /= np.linalg.norm(side, axis=1, keepdims=True)
+        other = np.cross(ahead, side)
+        angles = rng.normal(size=(2, len(now))) * np.sqrt(scattering_rad2_mm(half) * step)
+        size = np.hypot(*angles)
+        across = (side * angles[0][:, None] + other * angles[1][:, None]) / np.maximum(size, 1e-30)[:, None]
+        turned = ahead * np.cos(size)[:, None] + across * np.sin(size)[:, None]
+        depth[moving] += 0.5 * step * (ahead[:, 2] + turned[:, 2])
+        direction[moving] = turned
 
 
 # ---------------------------------------------------------------- maps: exponentials along straight lines

@@ -6,7 +6,9 @@ import numpy as np
 import pytest
 
 import dosekit as dk
+from dosekit.basis.particles import particle
 from dosekit.beams.ranges import range_table
+from dosekit.beams.scattering import scattering_power_rad2_mm
 from dosekit.beams.straggling import range_shape, range_variance_mm2
 from dosekit.depths.angles import COSINES
 from dosekit.depths.coarse import coarse_grid
@@ -60,3 +62,33 @@ def test_slowing_down_with_straggling():
     # classes are a fifth of the deviation wide, and the fast code adds the 0.03 mm of Lewis (1952)
     np.testing.assert_allclose(core.deposit, slow, rtol=0.0, atol=1e-2 * max(slow))
     assert float(np.sum(core.deposit)) == pytest.approx(sum(slow), rel=2e-4)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("name", "start_mev"), [("pi-", 80.384), ("proton", 150.0)])
+def test_stops_against_histories(name, start_mev, rng):
+    """Mean, deviation and Gaussian core of stops; the core feels the shape, which is Vavilov's to first order."""
+    water = dk.material("water")
+    table = range_table(name, water)
+    depth = naive.stopping_depths(
+        start_mev,
+        mass_mev=particle(name).mass_mev,
+        electrons_per_mm3=water.electron_density_per_cm3 * 1e-3,
+        stopping_mev_mm=table.stopping_mev_mm,
+        scattering_rad2_mm=lambda t: scattering_power_rad2_mm(name, water, t, start_energy_mev=start_mev),
+        step_mm=0.5,
+        cut_mev=0.05,
+        count=20000,
+        rng=rng,
+    )
+    curve = dk.depth_curve(
+        dk.Beam(name, kinetic_energy_mev=start_mev), water, nuclear=False, decays=False, bin_mm=0.25, depth_mm=220.0
+    )
+    z, stops = curve["depth"].to_numpy(), curve["stops"].to_numpy() * 0.25
+    mean = float(np.sum(z * stops))
+    deviation = float(np.sqrt(np.sum((z - mean) ** 2 * stops)))
+    noise = deviation / np.sqrt(len(depth))
+    # half a per mille of the range and the noise of the histories
+    assert mean == pytest.approx(np.mean(depth), abs=5e-4 * mean + 3.0 * noise)
+    assert deviation == pytest.approx(np.std(depth), rel=0.03)
+    assert np.interp(0.5, np.cumsum(stops), z + 0.125) == pytest.approx(np.median(depth), abs=5e-4 * mean + 4.0 * noise)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from scipy.optimize import curve_fit
 from scipy.special import gamma, pbdv
 
 import dosekit as dk
@@ -30,37 +31,75 @@ def bortfeld(depth_cm, range_cm, sigma_cm, fluence_loss=0.012, local_share=0.6, 
     return np.where(near, peak, np.where(depth_cm < range_cm, plateau / norm, 0.0))
 
 
-MISSES = {70.0: "3.2 %", 100.0: "3.4 %", 150.0: "4.9 %", 200.0: "7.7 %"}
+# measured; with elastic scattering on hydrogen switched off, which the form does not know: 1.6, 3.0 and 4.4 %
+MISSES = {100.0: "3.1 %", 150.0: "5.0 %", 200.0: "7.8 %"}
+RELATIVE_MISSES = {200.0: "4.2 %"}
 
 
-def proton_case(energy):
-    if energy not in MISSES:
-        return energy
-    reason = (
-        f"measured {MISSES[energy]}: the form has no nuclear elastic scattering, which broadens the peak; the "
-        "independent transport result at 150 MeV misses it by 5 to 8 % too"
+def proton_cases(misses):
+    """Return the energies, those that miss marked."""
+    because = (
+        "the form knows no elastic scattering on nuclei and hydrogen, which takes protons out of the peak, and lays "
+        "secondary protons down on the spot; the independent transport result at 150 MeV misses it by 5 to 8 % "
+        "(absolute) and 4.3 % (relative)"
     )
-    return pytest.param(energy, marks=pytest.mark.xfail(strict=True, reason=reason))
+    for energy in (70.0, 100.0, 150.0, 200.0):
+        missed = misses.get(energy)
+        marks = [pytest.mark.xfail(strict=True, reason=f"measured {missed}: {because}")] if missed else []
+        yield pytest.param(energy, marks=marks)
+
+
+def proton_curve(energy):
+    """Return our curve in bins much narrower than the peak: depth in cm, MeV/cm and stops."""
+    curve = dk.depth_curve(dk.Beam("proton", kinetic_energy_mev=energy), "water", bin_mm=energy / 1000.0)
+    return curve["depth"].to_numpy() / 10.0, curve["energy"].sum("component").to_numpy() * 10.0, curve["stops"]
 
 
 @pytest.mark.published
-@pytest.mark.parametrize("energy", [proton_case(energy) for energy in (70.0, 100.0, 150.0, 200.0)])
+@pytest.mark.parametrize("energy", [*proton_cases(MISSES)])
 def test_proton_peak_against_the_analytic_form(energy, evidence):
     """3 % of the peak. Range and width are inputs of the form: the mean range and Bohr's width are given to it.
 
     The form lays reaction energy down on the spot, so it has no build-up: the first 10 mm are left out.
     """
-    beam = dk.Beam("proton", kinetic_energy_mev=energy)
-    curve = dk.depth_curve(beam, "water", bin_mm=0.5)
-    depth = curve["depth"].to_numpy() / 10.0
-    ours = curve["energy"].sum("component").to_numpy() * 10.0
-    range_cm = mean_projected_range_mm("proton", beam.momentum_mev_c) / 10.0
+    depth, ours, _ = proton_curve(energy)
+    range_cm = mean_projected_range_mm("proton", dk.Beam("proton", kinetic_energy_mev=energy).momentum_mev_c) / 10.0
     sigma = float(range_sigma_mm("proton", "water", energy)) / 10.0
     theirs = bortfeld(depth, range_cm, sigma)
     keep = (depth > 1.0) & (depth < range_cm + 2.0 * sigma)
     worst = float(np.max(np.abs(ours - theirs)[keep]) / np.max(theirs))
     evidence(what=f"proton depth dose {energy:g} MeV, miss", source="Bortfeld (1997)", value=0.0, ours=100.0 * worst,
              unit="% of peak", bar="3 %")  # fmt: skip
+    assert worst < 0.03
+
+
+def distal_80(depth, dose):
+    """Return the depth behind the peak where dose has fallen to 80 %."""
+    top = int(np.argmax(dose))
+    return float(np.interp(-0.8, -dose[top:] / dose[top], depth[top:]))
+
+
+@pytest.mark.published
+@pytest.mark.parametrize("energy", [*proton_cases(RELATIVE_MISSES)])
+def test_proton_shape_against_the_analytic_form(energy, evidence):
+    """3 % of the peak, read as measured curves are: both to their maximum, aligned at the distal 80 %.
+
+    The width given to the form is that of the Gaussian core of our stops.
+    """
+    depth, ours, stops = proton_curve(energy)
+    stops = stops.to_numpy()
+    keep = stops > 0.02 * np.max(stops)
+    gauss = lambda x, a, m, s: a * np.exp(-0.5 * ((x - m) / s) ** 2)  # noqa: E731
+    start = [np.max(stops), depth[np.argmax(stops)], 0.01 * depth[np.argmax(stops)]]
+    centre, sigma = np.abs(curve_fit(gauss, depth[keep], stops[keep], p0=start)[0][1:])
+    fine = np.linspace(depth[0], depth[-1], 20000)
+    form = bortfeld(fine, centre, sigma)
+    shift = distal_80(depth, ours) - distal_80(fine, form)
+    theirs = bortfeld(depth, centre + shift, sigma) / np.max(form)
+    inside = (depth > 1.0) & (depth < centre + 2.0 * sigma)
+    worst = float(np.max(np.abs(ours / np.max(ours) - theirs)[inside]))
+    evidence(what=f"proton depth dose {energy:g} MeV, shape, miss", source="Bortfeld (1997)", value=0.0,
+             ours=100.0 * worst, unit="% of peak", bar="3 %")  # fmt: skip
     assert worst < 0.03
 
 

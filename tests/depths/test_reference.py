@@ -15,6 +15,7 @@ from scipy.optimize import curve_fit
 
 import dosekit as dk
 from dosekit.basis.components import STAR_COMPONENTS
+from dosekit.beams.ranges import range_table
 
 import reference_cases
 
@@ -75,17 +76,26 @@ def core(z, stops):
 COMPONENT_MISSES = {
     ("w170_dp2", "total"): "2.3 % at 192.5 mm: star neutrons 12 % above the reference",
     ("mu170", "stars and decay"): (
-        "2.6 % at 288.5 mm: the reference has 5.9 MeV of charged particles per nuclear capture, here 1.8 after Measday; "
+        "2.6 % at 288.5 mm: the reference has 5.9 MeV of charged particles per nuclear capture, here 1.8 (Measday); "
         "electrons and neutrons agree"
     ),
 }
+LONG_STEPS = (
+    ": the reference moves in steps of 1 mm, which lengthen its range (test_offset_in_range_is_that_of_long_steps; its "
+    "stopping drops by 1 % at once where a step takes 1 % of the energy). Histories with exact losses: w170_em 196.7 mm"
+)
 CORE_MISSES = {
-    ("w170_em", "centre"): "196.79 mm against 197.43: ICRU 90 range 197.40, less 1.05 detour, plus 0.4 skewness",
-    ("w170_dp0", "centre"): "196.67 mm against 197.20",
-    ("w170_dp2", "centre"): "195.59 mm against 196.10",
-    ("mu170", "centre"): "286.54 mm against 287.18",
+    ("w170_em", "centre"): "196.79 mm against 197.43" + LONG_STEPS,
+    ("w170_dp0", "centre"): "196.67 mm against 197.20" + LONG_STEPS,
+    ("w170_dp2", "centre"): "195.59 mm against 196.10" + LONG_STEPS,
+    ("mu170", "centre"): "286.54 mm against 287.18" + LONG_STEPS,
 }
-STOP_MISSES = {"p150_water": "1.084 against 1.120: multiplicities of secondary protons are from memory"}
+STOP_MISSES = {
+    "p150_water": (
+        "1.083 against 1.120: the reference's cascade makes about 0.3 more slow protons per collision than the "
+        "multiplicities after ICRU Report 63 in use (1.5 at 150 MeV); recoils of hydrogen count in both"
+    )
+}
 
 
 def components_of(case):
@@ -174,6 +184,30 @@ def test_core_of_stops(case, what, evidence):
         assert abs(mine - theirs) <= 0.5
     else:
         assert mine == pytest.approx(theirs, rel=0.05)
+
+
+@pytest.mark.parametrize(("case", "depth_mm"), [("w170_em", 60), ("w170_em", 140), ("mu170", 100), ("mu170", 215)])
+def test_offset_in_range_is_that_of_long_steps(case, depth_mm, evidence):
+    """The reference moves in steps of 1 mm; while a step takes under 1 % of the energy, codes use S at its start.
+
+    That loses less energy than the way really costs. What is missing at a depth, as range, must be what such steps
+    make of our own stopping power; the stopping powers then agree.
+    """
+    curve, columns = pair(case)
+    ours = curve["energy"].sel(component="primary").to_numpy()[:depth_mm]
+    beam, medium, _ = setting(case)
+    table = range_table(beam.particle, medium)
+    start = float(beam.kinetic_energy_mev)
+    less = float(np.sum(ours) - np.sum(columns["primary"][:depth_mm]))
+    measured = less / float(table.stopping_mev_mm(start - float(np.sum(ours))))
+    stepped = start
+    for _ in range(depth_mm):
+        stepped -= float(table.stopping_mev_mm(stepped))
+    expected = float(table.range_mm(stepped)) - (float(table.range_mm(start)) - depth_mm)
+    evidence(what=f"{case}: offset in range at {depth_mm} mm, that of 1 mm steps", source="tests/reference",
+             value=measured, ours=expected, unit="mm", bar="0.06 mm", kind="reference")  # fmt: skip
+    assert measured > 0.0
+    assert expected == pytest.approx(measured, abs=0.06)
 
 
 @pytest.mark.parametrize("case", ["w170_dp0", "w170_dp2", "w170_piplus", "p150_water", "slab_a"])
