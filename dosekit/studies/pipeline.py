@@ -14,9 +14,12 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from dosekit.basis.components import COMPONENTS, STAR_COMPONENTS
+from dosekit.basis.components import COMPONENTS
 from dosekit.errors import DosekitWarning, ReachError
+from dosekit.studies.balance import energy_by_component, energy_totals
 from dosekit.studies.comparing import study_for
+from dosekit.studies.folding import fold_fields, scaled_dose, scaled_plan, summed
+from dosekit.studies.measures import reported_structures, structure_histograms, structure_measures
 from dosekit.studies.model import Study, read_study
 from dosekit.studies.planning import PlannedField, effect_model_of, plan_field
 from dosekit.studies.quality import let_maps
@@ -133,41 +136,64 @@ def _prefixed(tell: Progress, particle: str) -> Progress:
 
 def _compute(study: Study, base: Path, tell: Progress) -> Result:
     """Compute, with warnings being collected outside."""
+    from dosekit.outputs.summary import console_line
+
     tell("volume", 0.0)
     grid, target = load_volume(study, base, progress=tell)
     inputs = _hashed_inputs(study, base)
     tell("volume", 1.0)
     planned = [plan_field(study, section, grid, target, progress=tell) for section in study.field]
     shares = 1.0 / len(planned)
-    planned = [_times(plan, shares) for plan in planned]
+    planned = [scaled_plan(plan, shares) for plan in planned]
+    known: dict[str, xr.Dataset] = {}
     searches: tuple[Any, ...] = ()
     model = effect_model_of(study, planned[0].field.beam.particle)
     if study.goal.weights != "range_steps":
         let = None
         if study.goal.quantity == "effect" and model.needs_let:
-            _, first = _folded(study, grid, planned, tell)
+            first = summed(fold_fields(study, grid, planned, progress=tell))
             let = _let(study, grid, planned, first, tell)
-        planned, searches = search_weights(study, grid, target, planned, let=let, progress=tell)
-    per_field, total = _folded(study, grid, planned, tell)
+        found = search_weights(study, grid, target, planned, let=let, progress=tell)
+        planned, searches, known = found.planned, found.searches, found.folded
+    per_field = fold_fields(study, grid, planned, known=known, progress=tell)
+    total = summed(per_field)
     let = _let(study, grid, planned, total, tell)
     constants = model.constants(let)
     coverage = grid.structure(target)
     scale = _prescription_scale(study, total, coverage, model, constants)
-    planned = [_times(plan, scale) for plan in planned]
-    per_field = {name: _scaled(dataset, scale) for name, dataset in per_field.items()}
-    total = _scaled(total, scale)
+    planned = [scaled_plan(plan, scale) for plan in planned]
+    per_field = {name: scaled_dose(dataset, scale) for name, dataset in per_field.items()}
+    total = scaled_dose(total, scale)
     tell("effect and measures", 0.0)
     effect = _effect_dose(study, total, model, constants)
     physical = np.asarray(total["dose"].sum("component", dtype=np.float64), dtype=np.float32)
     total["let"] = _total_let(total, let)
     if study.outputs.let_by_component:
         total["let_by_component"] = _let_by_component(let)
-    names = _structures(study, grid, target)
-    histograms = _histograms(grid, physical, names)
-    effect_histograms = _histograms(grid, effect, names)
+    names = reported_structures(study, grid, target)
+    histograms = structure_histograms(grid, physical, names)
+    effect_histograms = structure_histograms(grid, effect, names)
     tell("effect and measures", 1.0)
     run_hash = _run_hash(study, inputs)
-    summary, line = _summary(study, grid, target, planned, total, histograms, effect_histograms, run_hash)
+    level = 0.95 * study.goal.dose_gy
+    effective = study.goal.quantity == "effect"
+    measures = structure_measures(grid, target, histograms, physical, level_gy=None if effective else level)
+    effect_measures = {}
+    if study.effect.model != "physical":
+        effect_measures = structure_measures(
+            grid, target, effect_histograms, effect, level_gy=level if effective else None
+        )
+    energy = energy_by_component(
+        total, grid, yields=study.stars.yields, star_scale=study.stars.scale, dose_to=study.outputs.dose_to
+    )
+    summary = replace(
+        _summary(study, grid, target, planned, total, effect_histograms if effective else histograms),
+        measures=measures,
+        effect_measures=effect_measures,
+        energy_balance=energy_totals(energy, planned),
+        energy_by_component=energy,
+        run_hash=run_hash,
+    )
     return Result(
         study=study,
         grid=grid,
@@ -181,52 +207,10 @@ def _compute(study: Study, base: Path, tell: Progress) -> Result:
         summary=summary,
         inputs=inputs,
         run_hash=run_hash,
-        line=line,
+        line=console_line(summary),
         scale=scale,
         searches=searches,
     )
-
-
-def _folded(
-    study: Study, grid: VoxelGrid, planned: Sequence[PlannedField], tell: Progress
-) -> tuple[dict[str, xr.Dataset], xr.Dataset]:
-    """Fold each field and add them up."""
-    from dosekit.maps.fold import fold
-
-    per_field: dict[str, xr.Dataset] = {}
-    for count, plan in enumerate(planned):
-        tell("fold", count / len(planned))
-        per_field[plan.field.name] = fold(
-            plan.field,
-            grid,
-            yields=study.stars.yields,
-            star_scale=study.stars.scale,
-            dose_to=study.outputs.dose_to,
-            libraries={plan.field.name: plan.library},
-        )
-    tell("fold", 1.0)
-    first, *rest = per_field.values()
-    total = first.copy(deep=True)
-    for dataset in rest:
-        for name in total.data_vars:
-            total[name].values += dataset[name].values
-    total.attrs["fields"] = ", ".join(per_field)
-    total.attrs["particles"] = float(sum(plan.field.particles for plan in planned))
-    return per_field, total
-
-
-def _times(plan: PlannedField, factor: float) -> PlannedField:
-    """Return a planned field with its weights multiplied."""
-    return replace(plan, field=plan.field.replace(weights=np.asarray(plan.field.weights) * factor))
-
-
-def _scaled(dataset: xr.Dataset, scale: float) -> xr.Dataset:
-    """Return dose and stops multiplied by one number."""
-    changed = dataset.copy(deep=True)
-    for name in changed.data_vars:
-        changed[name].values *= np.float32(scale)
-    changed.attrs["particles"] = float(dataset.attrs.get("particles", 0.0)) * scale
-    return changed
 
 
 def _let(
@@ -307,26 +291,6 @@ def _effect_dose(
     return np.asarray(_weighted(study, parts, model, constants), dtype=np.float32)
 
 
-def _structures(study: Study, grid: VoxelGrid, target: str) -> list[str]:
-    """Return the structures to report on: target, organs of the study, then the phantom's or CT's own."""
-    named = [target, *(grid.structure_name(organ.structure) for organ in study.organ)]
-    others = [name for name in grid.structures if grid.role(name) in ("organ_at_risk", "body")]
-    return list(dict.fromkeys([*named, *others]))
-
-
-def _histograms(grid: VoxelGrid, dose_gy: NDArray[Any], names: Sequence[str]) -> dict[str, VolumeHistogram]:
-    """Return volume histograms of structures that have a volume in the grid."""
-    from dosekit.effects.histograms import volume_histogram
-
-    voxel_cm3 = float(np.prod(grid.spacing_mm)) * 1e-3
-    found: dict[str, VolumeHistogram] = {}
-    for name in names:
-        coverage = grid.structure(name)
-        if coverage.any():
-            found[name] = volume_histogram(dose_gy, coverage, voxel_cm3=voxel_cm3)
-    return found
-
-
 def _hashed_inputs(study: Study, base: Path) -> tuple[InputFile, ...]:
     """Hash what the study reads."""
     from dosekit.outputs.record import hash_inputs
@@ -368,20 +332,16 @@ def _summary(
     planned: Sequence[PlannedField],
     total: xr.Dataset,
     histograms: Mapping[str, VolumeHistogram],
-    effect_histograms: Mapping[str, VolumeHistogram],
-    run_hash: str,
-) -> tuple[RunSummary, str]:
-    """Say what a reader wants to know first."""
+) -> RunSummary:
+    """Say what a reader wants to know first; the histograms are of the quantity that the goal speaks of."""
     from dosekit.outputs.marks import curve_marks
-    from dosekit.outputs.summary import RunSummary, console_line, mean_doses_gy, star_share
+    from dosekit.outputs.summary import RunSummary, mean_doses_gy, star_share
 
-    effective = study.goal.quantity == "effect"
     parts = mean_doses_gy(total, grid.structure(target))
-    share = star_share(parts)
     first = planned[0]
     deepest = curve_marks(first.library.depth_mm, first.curves_gy[int(np.argmax(first.residual_range_mm))])
     worst = max(planned, key=lambda plan: plan.settings.flatness)
-    chosen = (effect_histograms if effective else histograms)[target]
+    chosen = histograms[target]
     d98, d2 = chosen.dose_at_volume_gy(98.0), chosen.dose_at_volume_gy(2.0)
     flat = {
         "flatness_percent": 100.0 * worst.settings.flatness,
@@ -391,36 +351,18 @@ def _summary(
     }
     if study.goal.weights != "range_steps":
         flat = {"flatness_percent": 100.0 * max(d2 - chosen.mean_gy, chosen.mean_gy - d98) / chosen.mean_gy}
-    seconds = sum(plan.field.particles for plan in planned) / study.machine.particles_per_s
-    summary = RunSummary(
+    return RunSummary(
         title=study.title,
         target=target,
-        quantity="effect-weighted dose" if effective else "physical dose",
+        quantity="effect-weighted dose" if study.goal.quantity == "effect" else "physical dose",
         **flat,  # type: ignore[arg-type]
         target_d98_percent=100.0 * d98 / study.goal.dose_gy,
         target_d2_percent=100.0 * d2 / study.goal.dose_gy,
         peak_depth_mm=deepest.peak_depth_mm,
         peak_to_entrance=first.settings.measures.peak_to_entrance,
-        star_share=share,
+        star_share=star_share(parts),
         mean_dose_gy=chosen.mean_gy,
-        beam_time_s=seconds,
+        beam_time_s=sum(plan.field.particles for plan in planned) / study.machine.particles_per_s,
         component_doses_gy=parts,
-        measures={name: histogram.measures() for name, histogram in histograms.items()},
-        energy_balance=_energy_balance(total, grid),
         sources=SOURCES,
-        run_hash=run_hash,
     )
-    return summary, console_line(summary)
-
-
-def _energy_balance(total: xr.Dataset, grid: VoxelGrid) -> dict[str, float]:
-    """Return the energy deposited inside the volume by component, J, and what stars deposited of what they had."""
-    mass_kg = grid.density_g_cm3.astype(np.float64) * float(np.prod(grid.spacing_mm)) * 1e-6
-    inside = {
-        name: float(np.sum(total["dose"].values[row] * mass_kg, dtype=np.float64))
-        for row, name in enumerate(COMPONENTS)
-    }
-    balance = {f"{name}_inside_j": value for name, value in inside.items()}
-    balance["stars_inside_j"] = sum(inside[name] for name in STAR_COMPONENTS)
-    balance["total_inside_j"] = sum(inside.values())
-    return balance
