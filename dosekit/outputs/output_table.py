@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import csv
 import io
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -154,7 +155,10 @@ def spoken(column: str) -> str:
     --------
     >>> spoken("residual_range_mm")
     'residual range (mm)'
+    >>> spoken("d95_gy")
+    'D95 (Gy)'
     """
+    column = re.sub(r"^d(?=\d)", "D", column)
     for ending, unit in _UNIT_ENDINGS.items():
         if column.endswith(ending):
             return f"{column.removesuffix(ending).replace('_', ' ')} ({unit})"

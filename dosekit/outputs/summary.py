@@ -59,8 +59,12 @@ class RunSummary:
         Mean target dose of each component.
     measures : mapping of structure to mapping of str to float
         Volume measures.
+    effect_measures : mapping of structure to mapping of str to float
+        The same of the effect-weighted dose.
     energy_balance : mapping of str to float
         Where the energy went; the unit is in the name.
+    energy_by_component : mapping of component to mapping of str to float
+        Energy deposited; for stars also emitted, bound and escaped.
     sources, warnings : tuple of str
         What it rests on, and what was warned of.
     run_hash : str
@@ -80,7 +84,9 @@ class RunSummary:
     beam_time_s: float
     component_doses_gy: Mapping[str, float] = field(default_factory=dict)
     measures: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
+    effect_measures: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
     energy_balance: Mapping[str, float] = field(default_factory=dict)
+    energy_by_component: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
     sources: tuple[str, ...] = ()
     warnings: tuple[str, ...] = ()
     run_hash: str = ""
@@ -238,8 +244,10 @@ def summary_text(summary: RunSummary, *, settings: OutputTable | None = None) ->
                 ]
             ),
         ]
-    for structure, values in summary.measures.items():
-        parts += [_heading(structure), _pairs([(spoken(name), f"{value:.4g}") for name, value in values.items()])]
+    for quantity, measures in (("", summary.measures), (", effect-weighted dose", summary.effect_measures)):
+        for structure, values in measures.items():
+            pairs = [(spoken(name), f"{value:.4g}") for name, value in values.items()]
+            parts += [_heading(f"{structure}{quantity}"), _pairs(pairs)]
     if summary.energy_balance:
         parts += [
             _heading("Energy balance"),

@@ -121,6 +121,10 @@ def _write_tables(result: Result, folder: Path) -> list[tuple[str, OutputTable]]
         sources=sources,
     )
     measures = measures_table(result.summary.measures, units="doses Gy, volumes cm3", sources=sources)
+    effect_measures = measures_table(
+        result.summary.effect_measures, units="effect-weighted doses Gy, volumes cm3", sources=sources
+    )
+    energy = measures_table(result.summary.energy_by_component, units="J", first="component", sources=sources)
     doses = _doses_by_structure(result)
     components = component_table(doses, sources=sources)
     histograms = histogram_table(
@@ -134,8 +138,10 @@ def _write_tables(result: Result, folder: Path) -> list[tuple[str, OutputTable]]
         "measures": measures,
         "components": components,
         "histograms": histograms,
+        "energy": energy,
     }
-    if result.study.effect.model != "physical":
+    if result.summary.effect_measures:
+        tables["measures_effect"] = effect_measures
         tables["histograms_effect"] = histogram_table(
             {name: histogram.curve() for name, histogram in result.effect_histograms.items()},
             volumes_cm3={name: histogram.total_volume_cm3 for name, histogram in result.effect_histograms.items()},
@@ -158,7 +164,9 @@ def _write_tables(result: Result, folder: Path) -> list[tuple[str, OutputTable]]
     return [
         ("Settings of each field and range step", settings),
         ("Dose measures by structure", measures),
+        *([("The same of effect-weighted dose", effect_measures)] if result.summary.effect_measures else []),
         ("Mean dose by structure and shares of the components", component_share_table(doses, sources=sources)),
+        ("Energy by component: deposited in the volume; of stars also emitted, bound, escaped", energy),
     ]
 
 

@@ -19,7 +19,8 @@ def test_the_folder_holds_everything(finished):
     folder, result = finished
     names = {path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file()}
     expected = {
-        "dose.nc", "settings.csv", "spots.csv", "measures.csv", "components.csv", "histograms.csv", "summary.txt",
+        "dose.nc", "settings.csv", "spots.csv", "measures.csv", "measures_effect.csv", "components.csv", "energy.csv",
+        "histograms.csv", "summary.txt",
         "report.html", "record.json", "dicom/rt_dose_total.dcm", "dicom/rt_dose_effective.dcm",
         "dicom/rt_dose_field_front.dcm", "dicom/rt_dose_field_left.dcm", "dicom/rt_ion_plan.dcm",
         "dicom/rt_structure_set.dcm", "dicom/volume/ct_0001.dcm", "figures/slices.pdf", "figures/slices.png",
@@ -35,6 +36,26 @@ def test_every_text_output_says_research_only(finished):
     assert len(texts) >= 8
     for path in texts:
         assert "RESEARCH ONLY" in path.read_text(encoding="utf-8"), path.name
+
+
+def test_energy_of_each_component_is_accounted_for(finished):
+    _, result = finished
+    rows, totals = result.summary.energy_by_component, result.summary.energy_balance
+    mass_kg = result.grid.density_g_cm3.astype(np.float64) * 4.0**3 * 1e-6
+    for row, name in enumerate(COMPONENTS):
+        expected = float(np.sum(result.dose["dose"].values[row] * mass_kg))
+        assert rows[name]["deposited_j"] == pytest.approx(expected, rel=1e-5), name
+    for name in STAR_COMPONENTS:
+        parts = rows[name]
+        out = parts["deposited_j"] + parts["bound_j"] + parts["escaped_j"]
+        assert out == pytest.approx(parts["emitted_j"], rel=1e-9)
+        assert parts["escaped_j"] > -1e-6 * parts["emitted_j"]
+    assert rows["star_neutron"]["escaped_j"] > rows["star_light"]["escaped_j"]
+    # 139.57 MeV for each stop
+    stops = float(result.dose["stops"].values.sum(dtype=np.float64)) * 4.0**3
+    given = sum(rows[name]["emitted_j"] for name in (*STAR_COMPONENTS, "binding"))
+    assert given == pytest.approx(stops * 139.57039 * 1.602176634e-13, rel=1e-3)
+    assert totals["total_inside_j"] < totals["beams_kinetic_j"] + totals["stars_emitted_j"]
 
 
 def test_the_mean_target_dose_is_the_prescribed_one(finished):
