@@ -21,13 +21,16 @@ Models by name
 ``physical``
     all factors 1.
 ``icrp60``
-    factors Q(L): dose equivalent of radiation protection, no treatment effect.
+    factors Q(L), averaged over the component's dose: dose equivalent of radiation protection, no treatment effect.
 ``carabe``, ``wedenberg``, ``mcnamara``, ``rorvik_linear``
     the proton model for `primary`, `star_light` and `contaminant_muon`, the microdosimetric form for
     `in_flight`, `star_heavy` and `star_neutron` (they hold helium ions and recoils, far beyond the proton
     data), photons' constants for `star_photon`, `decay` and `contaminant_electron`.
 ``microdosimetric``
     the microdosimetric form for all of these but the last three.
+
+Star and reaction products have a wide spread of LET: alpha and Q, which bend with LET, are averaged over the dose of
+each such component (`dosekit.effects.let_spectra`); the proton models rise in proportion to LET and need its mean only.
 
 Validity: each model's own; the proton models extrapolate wherever they are applied to pions and their
 products.
@@ -42,6 +45,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from dosekit.basis.components import COMPONENTS
+from dosekit.effects.let_spectra import spectral_mean
 from dosekit.effects.microdosimetry import saturated_alpha
 from dosekit.effects.rbe import component_factors, proton_model_names, quality_factor, rbe_extremes
 from dosekit.effects.tissues import Tissue, TissueMap, tissue
@@ -163,9 +167,9 @@ class EffectModel:
         elif let is None or component in _LIKE_PHOTONS:
             factor = np.ones_like(np.asarray(0.0 if let is None else let, dtype=np.float64))
         elif self.name == "icrp60":
-            factor = quality_factor(let)
+            factor = spectral_mean(quality_factor, component, let, beam_particle=self.beam_particle)
         elif self.name == "microdosimetric" or component in _DENSE:
-            alpha = saturated_alpha(let, tissue=self.tissue)
+            alpha = saturated_alpha(let, tissue=self.tissue, component=component, beam_particle=self.beam_particle)
             return alpha, np.broadcast_to(root_x, alpha.shape)
         else:
             largest, smallest = rbe_extremes(self.name, let, alpha_beta_gy=self.tissue.alpha_beta_gy)

@@ -16,9 +16,11 @@ effect::
 
 with m0 = 3 and K = 3 mmHg (Alper & Howard-Flanders; common values) and L0 = 94 keV/um (cube root of 8.27e5,
 that paper, memory).  In a mixed field each component's effect-weighted dose counts ``1 / OER_c``, hence
-``OER = sum X_c / sum (X_c / OER_c)``.
+``OER = sum X_c / sum (X_c / OER_c)``; within a component of wide spread ``1 / OER`` is averaged over the effect of its
+spectrum (`dosekit.effects.let_spectra`).
 
-Validity: acute hypoxia in cell culture, 0 to 160 mmHg, LET up to about 500 keV/um; a warning beyond.
+Validity: acute hypoxia in cell culture, 0 to 160 mmHg, mean LET up to about 500 keV/um; a warning beyond.  One curve
+serves all ions, though protons and helium lose the enhancement at a lower LET than carbon.
 """
 
 from __future__ import annotations
@@ -28,10 +30,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from dosekit.effects.let_spectra import SPREAD, spectral_mean
 from dosekit.errors import InputError, ValidityWarning
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Callable, Mapping
 
     from numpy.typing import ArrayLike, NDArray
 
@@ -80,7 +83,7 @@ def largest_enhancement(let_kev_um: ArrayLike) -> NDArray[np.float64]:
         raise InputError("a LET below 0 or no number", allowed="0 keV/um or more", remedy="check the LET map")
     if np.any(let > 500.0):
         warnings.warn(f"oxygen: LET up to {let.max():.3g} keV/um, made for 0 to 500", ValidityWarning, stacklevel=2)
-    return np.asarray(1.0 + (LARGEST_ENHANCEMENT - 1.0) / (1.0 + (let / TURNING_LET_KEV_UM) ** 3))
+    return _most(let)
 
 
 def oxygen_enhancement(pressure_mmhg: ArrayLike, let_kev_um: ArrayLike = 0.0) -> NDArray[np.float64]:
@@ -126,6 +129,8 @@ def mixed_oxygen_enhancement(
     let_kev_um: Mapping[str, ArrayLike],
     *,
     pressure_mmhg: ArrayLike = 0.0,
+    effect_per_dose: Callable[[NDArray[np.float64]], NDArray[np.float64]] = np.ones_like,
+    beam_particle: str = "pi-",
 ) -> NDArray[np.float64]:
     """Give the oxygen enhancement ratio of several kinds of radiation together.
 
@@ -137,6 +142,11 @@ def mixed_oxygen_enhancement(
         Dose-averaged LET of each component in keV/um; a component left out counts as photons.
     pressure_mmhg : array_like
         Partial pressure of oxygen in mmHg.
+    effect_per_dose : callable
+        Effect per dose as a function of LET in keV/um, by which the spectrum of a component is weighted; all dose
+        alike by default.
+    beam_particle : str
+        What reacts in flight.
 
     Returns
     -------
@@ -152,5 +162,36 @@ def mixed_oxygen_enhancement(
     total = np.sum(np.broadcast_arrays(*parts), axis=0)
     reduced = np.zeros_like(total)
     for name, dose in zip(weighted_dose_gy, parts, strict=True):
-        reduced = reduced + dose / oxygen_enhancement(pressure_mmhg, let_kev_um.get(name, 0.0))
+        let = let_kev_um.get(name, 0.0)
+        ratio = oxygen_enhancement(pressure_mmhg, let)
+        if name in SPREAD:
+            ratio = _spread_enhancement(name, let, pressure_mmhg, effect_per_dose, beam_particle)
+        reduced = reduced + dose / ratio
     return np.where(total > 0.0, total / np.where(total > 0.0, reduced, 1.0), 1.0)
+
+
+def _spread_enhancement(
+    component: str,
+    let_kev_um: ArrayLike,
+    pressure_mmhg: ArrayLike,
+    effect_per_dose: Callable[[NDArray[np.float64]], NDArray[np.float64]],
+    beam_particle: str,
+) -> NDArray[np.float64]:
+    """Give the enhancement of a component, ``1 / OER`` averaged over the effect of its spectrum.
+
+    With ``1 / OER = p / (p + K) + (K / (p + K)) / m`` only the mean of ``1 / m`` depends on LET.
+    """
+
+    def kept(let: NDArray[np.float64]) -> NDArray[np.float64]:
+        return np.asarray(effect_per_dose(let) / _most(let))
+
+    whole = spectral_mean(effect_per_dose, component, let_kev_um, beam_particle=beam_particle)
+    part = spectral_mean(kept, component, let_kev_um, beam_particle=beam_particle)
+    pressure = np.asarray(pressure_mmhg, dtype=np.float64)
+    share = HALF_PRESSURE_MMHG / (pressure + HALF_PRESSURE_MMHG)
+    return np.asarray(1.0 / ((1.0 - share) + share * part / np.where(whole > 0.0, whole, 1.0)))
+
+
+def _most(let_kev_um: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Give the enhancement from no oxygen to full oxygen, without a check."""
+    return np.asarray(1.0 + (LARGEST_ENHANCEMENT - 1.0) / (1.0 + (let_kev_um / TURNING_LET_KEV_UM) ** 3))
