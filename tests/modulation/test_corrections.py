@@ -62,3 +62,28 @@ def test_correction_is_added_and_slopes_are_the_stand_ins(rng):
     np.testing.assert_allclose(corrected.dose(weights)[0], inner.dose(weights)[0] + lacking, rtol=1e-14)
     np.testing.assert_array_equal(corrected.pull_back(slope, None), inner.pull_back(slope, None))
     assert corrected.shape == (60, 20)
+
+
+def test_scenarios_are_corrected_and_judged_each_by_its_own():
+    """A target seen 1.5 bins nearer or farther: the worst cost falls below that of the plain search."""
+    goals = [Goal("target", "uniform", TARGET, 2.0)]
+
+    def shifted(by, exact):
+        depth = DEPTH + by
+        width, plateau, more = (2.1, 0.18, 0.02) if exact else (1.8, 0.15, 0.0)
+        place = PEAKS + (0.3 if exact else 0.0)
+        return LinearResponse(np.exp(-0.5 * ((depth - place) / width) ** 2) + plateau * (depth < PEAKS) + more)
+
+    exact, quick = shifted(0.0, True), shifted(0.0, False)
+    others = [(shifted(by, True), shifted(by, False)) for by in (-1.5, 1.5)]
+    plain = find_weights_corrected(exact, quick, goals, scale_gy=2.0, rounds=8, least_gain=0.01, enough=0.0)
+    robust = find_weights_corrected(
+        exact, quick, goals, scale_gy=2.0, scenarios=others, rounds=8, least_gain=0.01, enough=0.0
+    )
+
+    def worst(weights):
+        return max(goal_costs(goals, one.dose(weights)[0], scale_gy=2.0)[0] for one in (exact, *dict(others)))
+
+    assert worst(robust.weights) < 0.8 * worst(plain.weights)
+    assert np.all(np.diff(robust.history) < 0.0)
+    np.testing.assert_array_equal(robust.dose_gy, exact.dose(robust.weights)[0])

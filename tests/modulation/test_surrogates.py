@@ -104,3 +104,37 @@ def test_like_the_fold(tank, field, library):
 def test_other_library_is_refused(tank, field, library):
     with pytest.raises(InputError, match="steps"):
         Pencils(field.replace(shift_mm=np.zeros(1), weights=None), library)
+
+
+def test_an_error_of_range_is_a_longer_way(tank, field, library):
+    """Depths times 1.1 everywhere are the depths 1.1 times as far down the axis."""
+    near = np.array([np.ravel_multi_index((12, row, 12), tank.shape) for row in (4, 14, 24)])
+    depth = water_depth_mm(field, tank, near)
+    pencils = Pencils(field, library, depth)
+    other = Pencils(field, library, depth * 1.1)
+    vector = np.ones(int(np.prod(field.shape)))
+    longer = pencil_matrices([pencils], tank, near, factors=[NARROW], range_factor=1.1)[0] @ vector
+    np.testing.assert_allclose(longer, pencil_matrices([other], tank, near, factors=[NARROW])[0] @ vector, rtol=1e-12)
+    assert not np.allclose(longer, pencil_matrices([pencils], tank, near, factors=[NARROW])[0] @ vector, rtol=1e-3)
+
+
+def test_an_error_of_position_moves_the_dose(tank, field, library):
+    """The isocentre one voxel to +x: the dose one voxel to +x, in a uniform medium."""
+    near = np.array([np.ravel_multi_index((12, row, 12), tank.shape) for row in (4, 14, 24)])
+    vector = np.zeros(field.shape)
+    vector[3, 0] = 1.0
+    here = pencil_matrices([Pencils(field, library)], tank, near, factors=[NARROW])[0] @ vector.ravel()
+    moved = pencil_matrices([Pencils(field, library)], tank, near + 1, factors=[NARROW], moved_mm=(5.0, 0.0, 0.0))[0]
+    np.testing.assert_allclose(moved @ vector.ravel(), here, rtol=1e-6)
+
+
+def test_fields_follow_one_another_in_the_columns(tank, field, library):
+    near = np.array([np.ravel_multi_index((12, row, 12), tank.shape) for row in (4, 14, 24)])
+    side = field.replace(name="two", gantry_deg=90.0)
+    both = pencil_matrices([Pencils(field, library), Pencils(side, library)], tank, near, factors=[NARROW])[0]
+    count = int(np.prod(field.shape))
+    for place, one in enumerate((field, side)):
+        vector = np.zeros(2 * count)
+        vector[place * count : (place + 1) * count] = 1.0
+        alone = pencil_matrices([Pencils(one, library)], tank, near, factors=[NARROW])[0]
+        np.testing.assert_allclose(both @ vector, alone @ np.ones(count), rtol=1e-12)
