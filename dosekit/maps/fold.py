@@ -111,10 +111,8 @@ def fold(
             continue
         fine, coarse = pencils.maps(field.weights)
         rows = np.array([_row_of(name, field) for name in TARGETS])
-        reached = pencils.voxels()
-        pencils.deposit(
-            fine, coarse, reached, reached, factor=_factors(pencils.matter, dose_to=dose_to), rows=rows, out=sums
-        )
+        factor = _factors(pencils.matter, dose_to=dose_to)
+        pencils.deposit(fine, coarse, pencils.reach(), factor=factor, rows=rows, out=sums)
     volumes = sums.reshape(-1, *grid.shape)
     dose, star_stops = volumes[: len(COMPONENTS)], volumes[len(COMPONENTS)]
     if star_stops.any():

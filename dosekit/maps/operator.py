@@ -217,9 +217,8 @@ class FoldOperator(LinearOperator):
                 continue
             fine, coarse = pencils.gather(direct, self.voxels, places, factor=self._direct_factor, rows=_direct_rows())
             if stops is not None and pencils.field.beam.particle == STAR_MAKER:
-                reached = pencils.voxels()
                 more_fine, more_coarse = pencils.gather(
-                    stops, reached, reached, factor=self._stops_factor, rows=_stops_rows()
+                    stops, pencils.reach(), factor=self._stops_factor, rows=_stops_rows()
                 )
                 fine += more_fine
                 coarse += more_coarse
@@ -239,10 +238,7 @@ class FoldOperator(LinearOperator):
                 fine, coarse, self.voxels, places, factor=self._direct_factor, rows=_direct_rows(), out=direct
             )
             if stars and pencils.field.beam.particle == STAR_MAKER:
-                reached = pencils.voxels()
-                pencils.deposit(
-                    fine, coarse, reached, reached, factor=self._stops_factor, rows=_stops_rows(), out=stops
-                )
+                pencils.deposit(fine, coarse, pencils.reach(), factor=self._stops_factor, rows=_stops_rows(), out=stops)
         doses = dict(zip(_DIRECT, direct, strict=True))
         if stars and stops.any():
             from dosekit.maps.stars import carry_stars

@@ -1,21 +1,13 @@
-"""One field made ready to be folded: rays, tables, spreads and the lattices its dose is formed on.
+"""Make a field ready to be folded: lattices, widths, taps, and the order in which the loops take them.
 
-For ray r, plane j and range step k with fluence phi (particles on the ray), water-equivalent path WET and slant s:
-
-    source(r, j, k)   = phi s q_k(WET)                                    energy or stops per mm of water
-    variance(r, j, k) = A2(r, j, k) - A2(surface, k) + optics(j)          Fermi-Eyges (Eyges 1948) along the ray
-    map(j)            = sum over rays and steps of source * Gaussian(variance) / area of a ray
-    dose in a voxel   = map interpolated at its points * its own stopping power / density
-
-The spot's size where it enters is in phi; what the beam spreads after that is in the variance. Particles that scatter
-from one ray to another lose energy by what lies where they arrive, so the voxel's own stopping power counts; in a
-plane of one material this keeps the energy exactly, beside an edge it keeps the particles.
+The lattices follow from the spots and the volume: rays where the spots reach, a fine lattice around them as wide as
+the core spreads, a coarse one as wide as the broad parts do, no wider than the volume. Memory is checked before it is
+taken.
 """
 
 from __future__ import annotations
 
 import warnings
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -24,455 +16,25 @@ from numpy.typing import NDArray
 from dosekit.errors import GeometryWarning
 from dosekit.grids.memory import check_memory
 from dosekit.maps.cones_threads import Threads
-from dosekit.maps.fields import PARTICLES_PER_UNIT, Field
+from dosekit.maps.fields import Field
+from dosekit.maps.loops import Lattice, Loops, Spreads, core_table, field_bytes
+from dosekit.maps.passes import FieldPencils
 from dosekit.maps.rays import Matter, Planes, RayTrace, plane_lattice, trace
-from dosekit.maps.tables import TARGETS, StepTables, step_tables
+from dosekit.maps.tables import StepTables, step_tables
 from dosekit.maps.widths import REACH_SIGMAS, gaussian_taps, spot_profiles, width_ladder
 
 if TYPE_CHECKING:
     from dosekit.depths.library import DepthLibrary
 
-__all__ = ["FieldPencils", "field_bytes", "field_pencils"]
+__all__ = ["FieldPencils", "field_pencils"]
 
 BODY_RSP = 0.05
 """Relative stopping power above which a ray counts as having met something."""
 
-PLANES_AT_ONCE = 8
 _COARSEST_MM = 8.0
 _LINEAR_VARIANCE = 1.0 / 6.0  # mean variance that linear interpolation adds, squared lattice steps
 _SPLINE_VARIANCE = 1.0 / 4.0  # variance that interpolation by a quadratic B-spline adds, anywhere
 _SIGNIFICANT = 1e-4
-
-
-@dataclass(frozen=True, eq=False)
-class _Lattice:
-    """Nodes on a plane."""
-
-    u_mm: NDArray[np.float64]
-    v_mm: NDArray[np.float64]
-    spacing_mm: float
-
-
-@dataclass(frozen=True, eq=False)
-class Loops:
-    """What the kernels take, in arrays.
-
-    Attributes
-    ----------
-    wet, local, slant : ndarray
-        Of the rays, see :class:`dosekit.maps.rays.RayTrace`.
-    gaps : ndarray
-        Distance of each plane from the one before; of the first from the range shifter, mm.
-    inverse_bin, power, alive, survivors, narrow, start, broad : ndarray
-        Of the tables, see :class:`dosekit.maps.tables.StepTables`.
-    reference, growth : ndarray
-        Variance that is in the fluence already, at the surface and by how much it grows to each plane.
-    ladder, inverse_width_step : ndarray, float
-        Variances of the ladder of widths, and rungs per mm.
-    kernel_of_plane, taps_u, taps_v, radius, component : ndarray
-        Which taps a plane uses, the taps, their reach, and the first component of each width.
-    first_row, first_column : int
-        Where the rays begin on the fine lattice.
-    per_area, coarse_per_area : ndarray
-        One over the area of a cell at each plane, 1/mm2.
-    coarse_row, coarse_column, coarse_share_v, coarse_share_u : ndarray
-        Coarse node below each ray and the share of the next.
-    broad_taps_u, broad_taps_v, broad_radius, broad_component : ndarray
-        The same for the broad parts.
-    """
-
-    wet: NDArray[np.float64]
-    local: NDArray[np.float64]
-    slant: NDArray[np.float64]
-    gaps: NDArray[np.float64]
-    inverse_bin: float
-    power: NDArray[np.float64]
-    alive: NDArray[np.int64]
-    survivors: NDArray[np.float64]
-    narrow: NDArray[np.float64]
-    start: NDArray[np.float64]
-    reference: NDArray[np.float64]
-    growth: NDArray[np.float64]
-    ladder: NDArray[np.float64]
-    inverse_width_step: float
-    kernel_of_plane: NDArray[np.int64]
-    taps_u: NDArray[np.float64]
-    taps_v: NDArray[np.float64]
-    radius: NDArray[np.int64]
-    first_row: int
-    first_column: int
-    component: NDArray[np.int64]
-    per_area: NDArray[np.float64]
-    broad: NDArray[np.float64]
-    coarse_column: NDArray[np.int64]
-    coarse_share_u: NDArray[np.float64]
-    coarse_row: NDArray[np.int64]
-    coarse_share_v: NDArray[np.float64]
-    broad_taps_u: NDArray[np.float64]
-    broad_taps_v: NDArray[np.float64]
-    broad_radius: NDArray[np.int64]
-    broad_component: NDArray[np.int64]
-    coarse_per_area: NDArray[np.float64]
-
-    def rays(self) -> tuple[Any, ...]:
-        """Return what says where the rays run."""
-        return self.wet, self.local, self.slant, self.gaps
-
-    def steps(self, state: NDArray[np.float64]) -> tuple[Any, ...]:
-        """Return what says what the steps leave, with the running moments among it."""
-        return (
-            self.inverse_bin, self.power, self.alive, self.survivors, self.narrow, state, self.reference, self.growth,
-            self.ladder, self.inverse_width_step,
-        )  # fmt: skip
-
-    def fine(self) -> tuple[Any, ...]:
-        """Return what spreads the core."""
-        return (
-            self.kernel_of_plane, self.taps_u, self.taps_v, self.radius, self.first_row, self.first_column,
-            self.component, self.per_area,
-        )  # fmt: skip
-
-    def coarse(self) -> tuple[Any, ...]:
-        """Return what spreads the broad parts."""
-        return (
-            self.broad_taps_u, self.broad_taps_v, self.broad_radius, int(self.coarse_row[0]),
-            int(self.coarse_column[0]), self.broad_component, self.coarse_per_area,
-        )  # fmt: skip
-
-
-def field_bytes(*, planes: int, rays: int, nodes: int, coarse_nodes: int, steps: int, parts: int, rungs: int) -> float:
-    """Return the memory one field takes while it is folded.
-
-    Parameters
-    ----------
-    planes, rays, nodes, coarse_nodes, steps, parts, rungs : int
-        Planes across the beam, rays with fluence, nodes of a fine and a coarse plane, range steps, parts of the broad
-        dose, widths of the ladder.
-
-    Returns
-    -------
-    float
-        Bytes: 8 [2 planes rays + (4 + P) rays steps + 2 P rungs rays + planes (2 nodes + 6 coarse)
-        + 3 coarse parts], with P planes at once.
-    """
-    return 8.0 * (
-        2.0 * planes * rays
-        + (4.0 + PLANES_AT_ONCE) * rays * steps
-        + 2.0 * PLANES_AT_ONCE * rungs * rays
-        + planes * (2.0 * nodes + len(TARGETS) * coarse_nodes)
-        + 3.0 * coarse_nodes * parts
-    )
-
-
-@dataclass(frozen=True, eq=False)
-class FieldPencils:
-    """A field on its own lattices, ready for its weights.
-
-    Attributes
-    ----------
-    field : Field
-        The field.
-    matter : Matter
-        The volume.
-    planes : Planes
-        Rays and planes.
-    rays : RayTrace
-        Matter along the rays that carry fluence.
-    tables : StepTables
-        Depth tables of the range steps.
-    surface_mm : float
-        Where the first ray enters something, along w, mm.
-    misses : bool
-        Whether no ray meets anything.
-    fine, coarse : lattice
-        Nodes on which the core and the broad parts are formed.
-    optics_variance_mm2 : ndarray
-        Variance that size and divergence of the beam add after the surface, shape (2, planes), mm2.
-    width_steps_per_mm : float
-        Rungs of the ladder of widths per mm of sigma.
-    profiles : tuple of ndarray
-        First ray of each spot along u and v, and what it gives to each ray from there.
-    loops : Loops
-        Everything else the kernels take.
-    """
-
-    field: Field
-    matter: Matter
-    planes: Planes
-    rays: RayTrace
-    tables: StepTables
-    surface_mm: float
-    misses: bool
-    fine: _Lattice
-    coarse: _Lattice
-    optics_variance_mm2: NDArray[np.float64]
-    width_steps_per_mm: float
-    profiles: tuple[NDArray[Any], ...]
-    loops: Loops
-
-    def fluence(self, weights: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Return particles on each ray.
-
-        Parameters
-        ----------
-        weights : ndarray
-            Units of 1e9 particles, spots by steps.
-
-        Returns
-        -------
-        ndarray
-            Particles, shape (v, u, K).
-        """
-        from dosekit.maps import kernels
-
-        first_u, first_v, profile_u, profile_v = self.profiles
-        out = np.zeros((*self.rays.slant.shape, self.field.shape[1]))
-        particles = np.ascontiguousarray(weights, dtype=np.float64) * PARTICLES_PER_UNIT
-        with Threads() as threads:
-            threads.run(kernels.lay_spots, (particles, first_u, first_v, profile_u, profile_v, out), len(out))
-        return out
-
-    def maps(self, weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Return the field's dose on its own lattices.
-
-        Parameters
-        ----------
-        weights : ndarray
-            Units of 1e9 particles, spots by steps.
-
-        Returns
-        -------
-        fine : ndarray
-            Core energy (MeV) and stops per mm of water and mm2, shape (w, v, u, 2).
-        coarse : ndarray
-            The broad components, shape (w, v, u, components).
-        """
-        from dosekit.maps import kernels
-
-        fine, coarse = self._empty_maps()
-        fluence = self.fluence(weights)
-        work, planes, rows = self.loops, len(self.planes.w_mm), len(self.rays.v_mm)
-        state, source, touched = self._scratch()
-        columns = int(work.coarse_column[-1] - work.coarse_column[0]) + 2
-        gathered = np.empty((PLANES_AT_ONCE, rows, columns, work.broad.shape[2]))
-        with Threads() as threads:
-            for first in range(0, planes, PLANES_AT_ONCE):
-                last = min(first + PLANES_AT_ONCE, planes)
-                threads.run(
-                    kernels.follow_rows,
-                    (fluence, *work.rays(), *work.steps(state), work.broad, work.coarse_column, work.coarse_share_u,
-                     source, touched, gathered, first, last),
-                    rows,
-                )  # fmt: skip
-                threads.run(
-                    kernels.spread_planes,
-                    (source, touched, gathered, *work.fine(), work.coarse_row, work.coarse_share_v, *work.coarse(),
-                     fine, coarse, first),
-                    last - first,
-                )  # fmt: skip
-        return fine, coarse
-
-    def weights_of(self, fine: NDArray[np.float64], coarse: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Apply the transpose of `maps`.
-
-        Parameters
-        ----------
-        fine, coarse : ndarray
-            Maps as `maps` returns them.
-
-        Returns
-        -------
-        ndarray
-            One value for each spot and step.
-        """
-        from dosekit.maps import kernels
-
-        first_u, first_v, profile_u, profile_v = self.profiles
-        work, planes = self.loops, len(self.planes.w_mm)
-        rows, columns = self.rays.slant.shape
-        spots, steps = self.field.shape
-        fluence = np.zeros((rows, columns, steps))
-        state, source, touched = self._scratch()
-        variances = np.zeros((PLANES_AT_ONCE, rows, columns, steps))
-        lines = int(work.coarse_row[-1] - work.coarse_row[0]) + 2
-        across = int(work.coarse_column[-1] - work.coarse_column[0]) + 2
-        coarse_source = np.empty((PLANES_AT_ONCE, work.broad.shape[2], 1, lines, across))
-        weights = np.zeros((spots, steps))
-        with Threads() as threads:
-            for first in range(0, planes, PLANES_AT_ONCE):
-                last = min(first + PLANES_AT_ONCE, planes)
-                threads.run(
-                    kernels.touch_rows,
-                    (*work.rays(), *work.steps(state), touched, variances, first, last),
-                    rows,
-                )
-                threads.run(
-                    kernels.gather_planes,
-                    (source, touched, coarse_source, *work.fine(), *work.coarse(), fine, coarse, first),
-                    last - first,
-                )
-                threads.run(
-                    kernels.read_rows,
-                    (work.wet, work.slant, work.inverse_bin, work.alive, work.narrow, variances, work.ladder,
-                     work.inverse_width_step, work.broad, work.coarse_column, work.coarse_share_u, work.coarse_row,
-                     work.coarse_share_v, source, coarse_source, fluence, first, last),
-                    rows,
-                )  # fmt: skip
-            threads.run(kernels.lay_spots_transposed, (fluence, first_u, first_v, profile_u, profile_v, weights), spots)
-        return weights * PARTICLES_PER_UNIT
-
-    def _scratch(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.uint8]]:
-        """Return the moments of every ray and step at the start, and room for a block of planes."""
-        work = self.loops
-        rows, columns = self.rays.slant.shape
-        state = np.empty((rows, columns, *work.start.shape))
-        state[:] = work.start
-        source = np.empty((PLANES_AT_ONCE, len(work.ladder), 2, rows, columns))
-        return state, source, np.zeros((PLANES_AT_ONCE, rows, len(work.ladder)), dtype=np.uint8)
-
-    def deposit(
-        self,
-        fine: NDArray[np.float64],
-        coarse: NDArray[np.float64],
-        voxels: NDArray[np.int64],
-        places: NDArray[np.int64],
-        *,
-        factor: NDArray[np.float64],
-        rows: NDArray[np.int64],
-        out: NDArray[Any],
-    ) -> None:
-        """Add maps to voxels.
-
-        Parameters
-        ----------
-        fine, coarse : ndarray
-            The maps.
-        voxels : ndarray
-            Flat indices of voxels.
-        places : ndarray
-            Column of `out` for each.
-        factor : ndarray
-            Factor of each row of `out` and material; negative: its size times the voxel's stopping power.
-        rows : ndarray
-            Row of `out` for each of `TARGETS`, or -1.
-        out : ndarray
-            Where to add, shape (rows, columns).
-        """
-        from dosekit.maps import kernels
-
-        where = self._voxel_arguments(fine, coarse, rows)
-        with Threads() as threads:
-            threads.run(kernels.deposit, (voxels, places, *where, factor, out), len(voxels))
-
-    def gather(
-        self,
-        values: NDArray[Any],
-        voxels: NDArray[np.int64],
-        places: NDArray[np.int64],
-        *,
-        factor: NDArray[np.float64],
-        rows: NDArray[np.int64],
-    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Apply the transpose of `deposit`.
-
-        Parameters
-        ----------
-        values : ndarray
-            Values in voxels, shape (rows, columns).
-        voxels, places, factor, rows : ndarray
-            As for `deposit`; the voxels must be in rising order.
-
-        Returns
-        -------
-        fine, coarse : ndarray
-            The maps.
-        """
-        from dosekit.maps import kernels
-
-        fine, coarse = self._empty_maps()
-        nz, ny, nx = self.matter.shape
-        widest = max(self.coarse.spacing_mm, self.fine.spacing_mm) * float(
-            np.max(self.planes.frame.magnification(self.planes.w_mm))
-        )
-        step = max(widest, float(np.diff(self.planes.w_mm[:2])[0]))
-        thickness = 2.0 * np.sqrt(3.0) * step + float(self.matter.spacing_mm[2])
-        layers = max(int(np.ceil(thickness / self.matter.spacing_mm[2])), 1)
-        starts = np.arange(0, nz + layers, layers, dtype=np.int64) * (ny * nx)
-        slabs = np.searchsorted(voxels, starts)
-        where = self._voxel_arguments(fine, coarse, rows)
-        with Threads() as threads:
-            for colour in range(2):
-                halves = (len(slabs) - colour) // 2
-                shared = (slabs, voxels, places, *where, factor, values, colour)
-                threads.run(kernels.deposit_transposed, shared, halves)
-        return fine, coarse
-
-    def _empty_maps(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Return maps of nothing."""
-        planes = len(self.planes.w_mm)
-        fine = np.zeros((planes, len(self.fine.v_mm), len(self.fine.u_mm), 2))
-        coarse = np.zeros((planes, len(self.coarse.v_mm), len(self.coarse.u_mm), len(TARGETS)))
-        return fine, coarse
-
-    def _voxel_arguments(
-        self, fine: NDArray[np.float64], coarse: NDArray[np.float64], rows: NDArray[np.int64]
-    ) -> tuple[Any, ...]:
-        """Return what the voxel kernels need to know about both lattices."""
-        frame, matter = self.planes.frame, self.matter
-        on_nodes = self.planes.on_nodes
-        apart = self.fine.spacing_mm if on_nodes else 1.25 * self.fine.spacing_mm
-        sub = np.maximum(np.ceil(matter.spacing_mm / apart - 1e-9), 1).astype(np.int64)
-        if on_nodes:  # along the beam, planes lie so as well
-            along = int(np.argmax(np.abs(frame.rotation[2])))
-            step = float(self.planes.w_mm[1] - self.planes.w_mm[0])
-            sub[along] = max(1, round(float(matter.spacing_mm[along]) / step))
-        w = self.planes.w_mm
-        return (
-            np.array(matter.shape),
-            matter.origin_mm,
-            matter.spacing_mm,
-            np.array(frame.isocentre_mm),
-            frame.rotation,
-            0.0 if frame.source_distance_mm is None else 1.0 / frame.source_distance_mm,
-            sub,
-            on_nodes,
-            float(w[0]),
-            1.0 / float(w[1] - w[0]),
-            float(self.fine.u_mm[0]),
-            float(self.fine.v_mm[0]),
-            1.0 / self.fine.spacing_mm,
-            fine,
-            float(self.coarse.u_mm[0]),
-            float(self.coarse.v_mm[0]),
-            1.0 / self.coarse.spacing_mm,
-            coarse,
-            rows[[TARGETS.index("primary"), TARGETS.index("stops")]],
-            rows,
-            matter.index.reshape(-1),
-            matter.rsp.reshape(-1),
-        )
-
-    def voxels(self) -> NDArray[np.int64]:
-        """Return the voxels that the field's lattices can reach.
-
-        Returns
-        -------
-        ndarray
-            Flat indices in rising order.
-        """
-        matter, frame, w = self.matter, self.planes.frame, self.planes.w_mm
-        u, v = self.coarse.u_mm, self.coarse.v_mm
-        fine_u, fine_v = self.fine.u_mm, self.fine.v_mm
-        edges_u = (min(u[0], fine_u[0]), max(u[-1], fine_u[-1]))
-        edges_v = (min(v[0], fine_v[0]), max(v[-1], fine_v[-1]))
-        corners = frame.to_patient([[a, b, c] for a in edges_u for b in edges_v for c in (w[0], w[-1])])
-        first = (corners.min(axis=0) - matter.origin_mm) / matter.spacing_mm
-        last = (corners.max(axis=0) - matter.origin_mm) / matter.spacing_mm
-        nz, ny, nx = matter.shape
-        low = np.clip(np.floor(first).astype(int), 0, [nx, ny, nz])
-        high = np.clip(np.ceil(last).astype(int) + 1, 0, [nx, ny, nz])
-        x, y, z = (np.arange(a, max(a, b), dtype=np.int64) for a, b in zip(low, high, strict=True))
-        return ((z[:, None, None] * ny + y[:, None]) * nx + x).reshape(-1)
 
 
 def field_pencils(
@@ -534,9 +96,7 @@ def field_pencils(
     sigma = np.sqrt(np.maximum(entry[:, None] + at_surface - blur[:, None], 0.0))
     nodes = [_spot_nodes(field, planes, axis, sigma[axis]) for axis in range(2)]
     rays = rays.part(*nodes)
-    profiles = [
-        spot_profiles(field.spots_mm[:, axis], sigma[axis], nodes[axis], spacing_mm=spacing) for axis in range(2)
-    ]
+    profiles = [_profiles(field.spots_mm[:, axis], sigma[axis], nodes[axis], spacing) for axis in range(2)]
     ahead = float(planes.w_mm[0] - (surface - tables.gap_mm))
     widest = _widest(rays, planes, tables, ahead, shift_variance)
     ladder, width_step = width_ladder(np.sqrt(widest))
@@ -553,71 +113,54 @@ def field_pencils(
     factor = max(1, int(wanted / spacing + 1e-9))
     largest_broad = float(np.sqrt(part_sigma[0] ** 2 + extra.max()) / magnified.min())
     coarse = _widened(planes, nodes, (REACH_SIGMAS - 0.5) * largest_broad, factor * spacing, bounds)
+    columns, share_u = _coarse_places(rays.u_mm, coarse.u_mm, coarse.spacing_mm)
+    lines, share_v = _coarse_places(rays.v_mm, coarse.v_mm, coarse.spacing_mm)
     check_memory(
         field_bytes(
             planes=len(planes.w_mm),
             rays=rays.slant.size,
-            nodes=len(fine.u_mm) * len(fine.v_mm),
-            coarse_nodes=len(coarse.u_mm) * len(coarse.v_mm),
+            nodes=fine.nodes,
+            coarse_nodes=coarse.nodes,
             steps=field.shape[1],
             parts=len(part_sigma),
             rungs=len(ladder),
+            gathered=len(lines) * (int(columns[-1] - columns[0]) + 2),
         )
         + 8.0 * sum(profile.size for _, profile in profiles),
         what=f"field {field.name!r}",
         remedy="use a coarser volume, a smaller field or fewer range steps",
     )
-    variances = [(ladder[None, :] + extra[axis][:, None]) / scale[:, None] for axis in range(2)]
-    taps = [gaussian_taps(variance, largest=len(fine.u_mm) + len(fine.v_mm)) for variance in variances]
-    length = max(t.shape[-1] for t, _ in taps)
-    taps_u, taps_v = (_padded(t, length) for t, _ in taps)
-    radius = np.maximum(taps[0][1], taps[1][1])
-    # spreading rays over coarse nodes and interpolating between them add a sixth each
-    broad_variances = [
-        np.maximum(
-            (part_sigma[None, :] ** 2 + extra[axis][:, None]) / (scale[:, None] * factor**2) - 2.0 * _LINEAR_VARIANCE,
-            0.0,
-        )
-        for axis in range(2)
-    ]
-    broad_taps = [gaussian_taps(v, largest=len(coarse.u_mm) + len(coarse.v_mm)) for v in broad_variances]
-    length = max(t.shape[-1] for t, _ in broad_taps)
-    broad_taps_u, broad_taps_v = (_padded(t, length) for t, _ in broad_taps)
-    columns, share_u = _coarse_places(rays.u_mm, coarse.u_mm, coarse.spacing_mm)
-    lines, share_v = _coarse_places(rays.v_mm, coarse.v_mm, coarse.spacing_mm)
+    # spreading rays over coarse nodes and interpolating between them add a sixth of a squared step each
+    core_spreads = _spreads(
+        ladder, extra, scale, fine, corner=(rays.v_mm[0], rays.u_mm[0]), target=np.zeros(len(ladder), dtype=np.int64),
+        per_area=1.0 / (spacing * magnified) ** 2, less=0.0,
+    )  # fmt: skip
+    broad_spreads = _spreads(
+        part_sigma**2, extra, scale * factor**2, coarse, corner=(coarse.v_mm[lines[0]], coarse.u_mm[columns[0]]),
+        target=part_target, per_area=1.0 / (coarse.spacing_mm * magnified) ** 2, less=2.0 * _LINEAR_VARIANCE,
+    )  # fmt: skip
     loops = Loops(
         wet=rays.wet_mm,
         local=rays.scatter,
         slant=rays.slant,
         gaps=np.concatenate([[ahead], np.diff(planes.w_mm)]),
         inverse_bin=1.0 / tables.bin_mm,
-        power=tables.power,
+        core=core_table(tables),
         alive=tables.alive(),
-        survivors=tables.survivors,
-        narrow=tables.narrow,
         start=tables.start,
         reference=shift_variance,
         growth=growth,
-        ladder=ladder,
-        inverse_width_step=1.0 / width_step,
+        rungs=len(ladder),
+        squared_rungs_per_mm2=1.0 / width_step**2,
         kernel_of_plane=which,
-        taps_u=taps_u,
-        taps_v=taps_v,
-        radius=radius,
-        first_row=_index_of(rays.v_mm[0], fine.v_mm, spacing),
-        first_column=_index_of(rays.u_mm[0], fine.u_mm, spacing),
-        component=np.zeros(len(ladder), dtype=np.int64),
-        per_area=1.0 / (spacing * magnified) ** 2,
+        core_spreads=core_spreads,
+        broad_spreads=broad_spreads,
         broad=broad,
-        coarse_column=columns,
-        coarse_share_u=share_u,
-        coarse_row=lines,
-        coarse_share_v=share_v,
-        broad_taps_u=broad_taps_u,
-        broad_taps_v=broad_taps_v,
-        broad_radius=np.maximum(broad_taps[0][1], broad_taps[1][1]),
-        broad_component=part_target,
-        coarse_per_area=1.0 / (coarse.spacing_mm * magnified) ** 2,
+        parts_at=_parts_at(broad),
+        column=columns,
+        share_u=share_u,
+        row=lines,
+        share_v=share_v,
     )
     return FieldPencils(
         field=field,
@@ -633,6 +176,44 @@ def field_pencils(
         width_steps_per_mm=1.0 / width_step,
         profiles=(profiles[0][0], profiles[1][0], profiles[0][1], profiles[1][1]),
         loops=loops,
+    )
+
+
+def _spreads(
+    variance_mm2: NDArray[np.float64],
+    extra_mm2: NDArray[np.float64],
+    scale_mm2: NDArray[np.float64],
+    lattice: Lattice,
+    *,
+    corner: tuple[float, float],
+    target: NDArray[np.int64],
+    per_area: NDArray[np.float64],
+    less: float,
+) -> Spreads:
+    """Return how widths are spread on a lattice.
+
+    `extra_mm2` (2, kernels) comes on top of every width; `scale_mm2` is the squared spacing for each kernel; `less` is
+    the variance, in squared steps, that is there already.
+    """
+    taps, radii = [], []
+    for axis in range(2):
+        variance = (variance_mm2[None, :] + extra_mm2[axis][:, None]) / scale_mm2[:, None] - less
+        t, reach = gaussian_taps(np.maximum(variance, 0.0), largest=len(lattice.u_mm) + len(lattice.v_mm))
+        taps.append(t)
+        radii.append(reach)
+    length = max(t.shape[-1] for t in taps)
+    return Spreads(
+        taps_u=_padded(taps[0], length),
+        taps_v=_padded(taps[1], length),
+        radius=np.maximum(*radii),
+        corner=np.array(
+            [
+                _index_of(corner[0], lattice.v_mm, lattice.spacing_mm),
+                _index_of(corner[1], lattice.u_mm, lattice.spacing_mm),
+            ]
+        ),
+        target=target,
+        per_area=per_area,
     )
 
 
@@ -676,6 +257,15 @@ def _spot_nodes(field: Field, planes: Planes, axis: int, sigma_mm: NDArray[np.fl
     return planes.nodes(float(spots.min()) - reach, float(spots.max()) + reach, axis)
 
 
+def _profiles(
+    centres_mm: NDArray[np.float64], sigma_mm: NDArray[np.float64], nodes_mm: NDArray[np.float64], spacing_mm: float
+) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """Return what each spot gives to the rays along one axis; spots in one line are the same."""
+    different, which = np.unique(centres_mm, return_inverse=True)
+    first, profile = spot_profiles(different, sigma_mm, nodes_mm, spacing_mm=spacing_mm)
+    return first[which], profile[which]
+
+
 def _air_variance(optics: tuple[float, float, float], distance_mm: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return the variance of position in air at a distance behind the surface, mm2."""
     sigma, angle, correlation = optics
@@ -684,7 +274,7 @@ def _air_variance(optics: tuple[float, float, float], distance_mm: NDArray[np.fl
 
 def _widest(rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, reference: NDArray[np.float64]) -> float:
     """Return the largest scatter variance behind the surface, from every third ray, with room for the others."""
-    from dosekit.maps import kernels
+    from dosekit.maps import kernels_steps
 
     counts = np.ascontiguousarray(tables.narrow[:, 0] > _SIGNIFICANT * tables.narrow[:, 0].max(axis=0))
     width = np.zeros(len(rays.v_mm[::3]))
@@ -702,13 +292,13 @@ def _widest(rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, re
         width,
     )
     with Threads() as threads:
-        threads.run(kernels.widest_spread, shared, len(width))
+        threads.run(kernels_steps.widest_spread, shared, len(width))
     return 1.1 * float(width.max()) + 0.01
 
 
 def _widened(
     planes: Planes, nodes: list[NDArray[np.float64]], margin_mm: float, spacing_mm: float, bounds: NDArray[np.float64]
-) -> _Lattice:
+) -> Lattice:
     """Return a lattice around the rays, wide enough for what spreads, no wider than the volume."""
     axes = []
     factor = round(spacing_mm / planes.spacing_mm)
@@ -720,7 +310,7 @@ def _widened(
         steps_before = int(np.ceil((centre - before) / spacing_mm - 1e-9)) + (factor > 1)
         steps_after = int(np.ceil((after - centre) / spacing_mm - 1e-9)) + (factor > 1)
         axes.append(centre + spacing_mm * np.arange(-steps_before, steps_after + 1))
-    return _Lattice(u_mm=axes[0], v_mm=axes[1], spacing_mm=spacing_mm)
+    return Lattice(u_mm=axes[0], v_mm=axes[1], spacing_mm=spacing_mm)
 
 
 def _parts(tables: StepTables) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.float64]]:
@@ -730,6 +320,13 @@ def _parts(tables: StepTables) -> tuple[NDArray[np.float64], NDArray[np.int64], 
     sigma = np.concatenate([tables.part_sigma_mm, np.full(more, tables.part_sigma_mm.min(initial=10.0))])
     target = np.concatenate([tables.part_target, np.full(more, tables.part_target.min(initial=0))])
     return sigma, target, np.ascontiguousarray(np.pad(tables.broad, [(0, 0), (0, 0), (0, more)]))
+
+
+def _parts_at(broad: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Return how many parts count at each row, rounded up to a multiple of four."""
+    parts = broad.shape[2]
+    last = np.where((broad != 0.0).any(axis=1), np.arange(1, parts + 1), 0).max(axis=1)
+    return np.asarray(np.minimum(-(-last // 4) * 4, parts), dtype=np.int64)
 
 
 def _coarse_places(

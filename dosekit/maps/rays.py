@@ -205,7 +205,6 @@ def matter_of(grid: VoxelGrid, particle: str = "pi-", kinetic_energy_mev: float 
     """
     from dosekit.beams.scattering import scattering_power_ratio
     from dosekit.beams.stopping import relative_stopping_power
-    from dosekit.maps import kernels
 
     def per_density(matter: Material) -> float:
         stopping = relative_stopping_power(matter, particle, kinetic_energy_mev=kinetic_energy_mev)
@@ -213,11 +212,10 @@ def matter_of(grid: VoxelGrid, particle: str = "pi-", kinetic_energy_mev: float 
 
     stopping = np.array([per_density(matter) for matter in grid.materials])
     ratio = np.array([scattering_power_ratio(matter) for matter in grid.materials])
-    rsp = np.empty(grid.shape, dtype=np.float32)
-    scatter = np.empty(grid.shape, dtype=np.float32)
-    with Threads() as threads:
-        shared = (grid.density_g_cm3, grid.material_index, stopping, ratio, rsp, scatter)
-        threads.run(kernels.prepare_matter, shared, grid.shape[0])
+    rsp = stopping.astype(np.float32)[grid.material_index]
+    rsp *= grid.density_g_cm3
+    scatter = ratio.astype(np.float32)[grid.material_index]
+    scatter *= rsp
     return Matter(
         origin_mm=np.array(grid.origin_mm),
         spacing_mm=np.array(grid.spacing_mm),
@@ -327,7 +325,7 @@ def trace(planes: Planes, matter: Matter, u_mm: NDArray[np.float64], v_mm: NDArr
     RayTrace
         Water-equivalent path and scattering along them.
     """
-    from dosekit.maps import kernels
+    from dosekit.maps import kernels_rays
 
     frame = planes.frame
     inverse = 0.0 if frame.source_distance_mm is None else 1.0 / frame.source_distance_mm
@@ -352,7 +350,7 @@ def trace(planes: Planes, matter: Matter, u_mm: NDArray[np.float64], v_mm: NDArr
         scatter,
     )
     with Threads() as threads:
-        threads.run(kernels.trace_rays, shared, len(v_mm))
+        threads.run(kernels_rays.trace_rays, shared, len(v_mm))
     slant = np.sqrt(1.0 + (u_mm[None, :] ** 2 + v_mm[:, None] ** 2) * inverse**2)
     return RayTrace(u_mm=u_mm, v_mm=v_mm, wet_mm=wet, scatter=scatter, slant=slant)
 

@@ -1,0 +1,190 @@
+"""Inner loops of the planes: spread rows of rays by Gaussians of several widths, and the transpose.
+
+A Gaussian is a product of one along u and one along v, so a plane is spread along its rows first and across them
+second. Lines are combined four at a time, which is what makes it fast: one load and one store of the result for four
+multiply-adds. Planes of a block from `begin` to `end` are one piece of work; every sum has one order. What the
+arguments mean is said where they are made: :mod:`dosekit.maps.loops`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+__all__ = ["gather_planes", "spread_planes"]
+
+
+@njit(nogil=True, error_model="numpy")
+def _along(line, stride, taps, reach, out):  # type: ignore[no-untyped-def]
+    """Set out[x] to the sum over t of taps[|t|] line[x + (reach + t) stride]."""
+    middle = reach * stride
+    centre, factor = line[middle:], taps[0]
+    for x in range(out.size):
+        out[x] = factor * centre[x]
+    for t in range(1, reach + 1, 2):
+        n = min(t + 1, reach)
+        one, other = taps[t], (taps[n] if n > t else 0.0)
+        a, b = line[middle - t * stride :], line[middle + t * stride :]
+        c, d = line[middle - n * stride :], line[middle + n * stride :]
+        for x in range(out.size):
+            out[x] += one * (a[x] + b[x]) + other * (c[x] + d[x])
+
+
+@njit(nogil=True, error_model="numpy")
+def _across(lines, shift, first, last, centre, taps, out):  # type: ignore[no-untyped-def]
+    """Add to out[x] the sum over r from first to last - 1 of taps[|r - centre|] lines[r, x + shift]."""
+    for r in range(first, last, 4):
+        r1, r2, r3 = min(r + 1, last - 1), min(r + 2, last - 1), min(r + 3, last - 1)
+        f0 = taps[abs(r - centre)]
+        f1 = taps[abs(r1 - centre)] if r + 1 < last else 0.0
+        f2 = taps[abs(r2 - centre)] if r + 2 < last else 0.0
+        f3 = taps[abs(r3 - centre)] if r + 3 < last else 0.0
+        a, b, c, d = lines[r][shift:], lines[r1][shift:], lines[r2][shift:], lines[r3][shift:]
+        for x in range(out.size):
+            out[x] += f0 * a[x] + f1 * b[x] + f2 * c[x] + f3 * d[x]
+
+
+@njit(nogil=True, error_model="numpy")
+def _spread(source, used, taps_u, taps_v, radius, corner, stride, target, total):  # type: ignore[no-untyped-def]
+    """Spread the widths of one plane: add to total[target, row, column x stride] from source[v, width, u x stride].
+
+    `stride` values (energy and stops, or one part) stand beside each other; ``used[v, width]`` tells which rows hold
+    anything; `corner` is the row and column of the first ray.
+    """
+    nv, widths, _ = source.shape
+    nu, rows, columns = source.shape[2] // stride, total.shape[1], total.shape[2] // stride
+    padded = np.empty((columns + nu + 2 * radius.max()) * stride)
+    lines = np.empty((nv, columns * stride))
+    for g in range(widths):
+        first, last = nv, 0
+        for r in range(nv):
+            if used[r, g]:
+                first, last = min(first, r), r + 1
+        if first >= last:
+            continue
+        reach = radius[g]
+        low, high = max(0, corner[1] - reach), min(columns, corner[1] + nu + reach)
+        size = (high - low) * stride
+        begin = (corner[1] - low + reach) * stride
+        for x in range(size + 2 * reach * stride):
+            padded[x] = 0.0
+        for r in range(first, last):
+            line = lines[r][:size]
+            for x in range(size):
+                line[x] = 0.0
+            if used[r, g]:
+                for x in range(nu * stride):
+                    padded[begin + x] = source[r, g, x]
+                _along(padded, stride, taps_u[g], reach, line)
+        for row in range(max(0, corner[0] + first - reach), min(rows, corner[0] + last + reach)):
+            centre = row - corner[0]
+            line = total[target[g], row][low * stride : high * stride]
+            _across(lines, 0, max(first, centre - reach), min(last, centre + reach + 1), centre, taps_v[g], line)
+
+
+@njit(nogil=True, error_model="numpy")
+def _gather(wanted, used, taps_u, taps_v, radius, corner, stride, target, source):  # type: ignore[no-untyped-def]
+    """Transpose of `_spread`: source[v, width, u x stride] from wanted[target, row, column x stride]."""
+    nv, widths, _ = source.shape
+    nu, rows, columns = source.shape[2] // stride, wanted.shape[1], wanted.shape[2] // stride
+    padded = np.empty((nu + 2 * radius.max()) * stride)
+    for g in range(widths):
+        reach = radius[g]
+        low, high = max(0, corner[1] - reach), min(columns, corner[1] + nu + reach)
+        begin = (low - corner[1] + reach) * stride
+        lines = wanted[target[g]]
+        for r in range(nv):
+            if not used[r, g]:
+                continue
+            centre = corner[0] + r
+            for x in range((nu + 2 * reach) * stride):
+                padded[x] = 0.0
+            line = padded[begin : begin + (high - low) * stride]
+            begin_row, end_row = max(0, centre - reach), min(rows, centre + reach + 1)
+            _across(lines, low * stride, begin_row, end_row, centre, taps_v[g], line)
+            _along(padded, stride, taps_u[g], reach, source[r, g])
+
+
+@njit(nogil=True, error_model="numpy")
+def _share_rows(gathered, row, share_v, source, used):  # type: ignore[no-untyped-def]
+    """Share rows of rays out among coarse rows: source[coarse row, part, column] from gathered[v, column, part]."""
+    nv, columns, parts = gathered.shape
+    for n in range(source.shape[0]):
+        for b in range(parts):
+            used[n, b] = 0
+            for m in range(columns):
+                source[n, b, m] = 0.0
+    for r in range(nv):
+        n = row[r] - row[0]
+        for b in range(parts):
+            for m in range(columns):
+                value = gathered[r, m, b]
+                if value != 0.0:
+                    used[n, b] = 1
+                    used[n + 1, b] = 1
+                    source[n, b, m] += (1.0 - share_v[r]) * value
+                    source[n + 1, b, m] += share_v[r] * value
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def spread_planes(  # type: ignore[no-untyped-def]
+    source, used, gathered, kernel_of_plane, taps_u, taps_v, radius, corner, target, per_area, coarse_row, share_v,
+    broad_taps_u, broad_taps_v, broad_radius, coarse_corner, broad_target, coarse_per_area, fine, coarse, first_plane,
+    begin, end,
+):  # fmt: skip
+    """Spread planes of a block: ``fine[plane, v, u, (energy, stops)]`` and ``coarse[plane, v, u, component]``."""
+    _, nv, active, parts = gathered.shape
+    _, rows, columns, stride = fine.shape
+    _, coarse_rows, coarse_columns, components = coarse.shape
+    coarse_source = np.empty((coarse_row[nv - 1] - coarse_row[0] + 2, parts, active))
+    coarse_used = np.empty(coarse_source.shape[:2], dtype=np.uint8)
+    total = np.empty((1, rows, columns * stride))
+    coarse_total = np.empty((components, coarse_rows, coarse_columns))
+    for m in range(begin, end):
+        j = first_plane + m
+        n = kernel_of_plane[j]
+        total[:] = 0.0
+        _spread(source[m], used[m], taps_u[n], taps_v[n], radius[n], corner, stride, target, total)
+        for row in range(rows):
+            for c in range(columns):
+                for part in range(stride):
+                    fine[j, row, c, part] = total[0, row, c * stride + part] * per_area[j]
+        _share_rows(gathered[m], coarse_row, share_v, coarse_source, coarse_used)
+        coarse_total[:] = 0.0
+        _spread(
+            coarse_source, coarse_used, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_corner, 1,
+            broad_target, coarse_total,
+        )  # fmt: skip
+        for row in range(coarse_rows):
+            for c in range(coarse_columns):
+                for part in range(components):
+                    coarse[j, row, c, part] = coarse_total[part, row, c] * coarse_per_area[j]
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def gather_planes(  # type: ignore[no-untyped-def]
+    source, used, coarse_source, kernel_of_plane, taps_u, taps_v, radius, corner, target, per_area, broad_taps_u,
+    broad_taps_v, broad_radius, coarse_corner, broad_target, coarse_per_area, fine, coarse, first_plane, begin, end,
+):  # fmt: skip
+    """Transpose of `spread_planes`, up to the coarse rows: coarse_source[plane, coarse row, part, coarse column]."""
+    _, rows, columns, stride = fine.shape
+    _, coarse_rows, coarse_columns, components = coarse.shape
+    every = np.ones(coarse_source.shape[1:3], dtype=np.uint8)
+    wanted = np.empty((1, rows, columns * stride))
+    coarse_wanted = np.empty((components, coarse_rows, coarse_columns))
+    for m in range(begin, end):
+        j = first_plane + m
+        n = kernel_of_plane[j]
+        for row in range(rows):
+            for c in range(columns):
+                for part in range(stride):
+                    wanted[0, row, c * stride + part] = fine[j, row, c, part] * per_area[j]
+        _gather(wanted, used[j], taps_u[n], taps_v[n], radius[n], corner, stride, target, source[m])
+        for row in range(coarse_rows):
+            for c in range(coarse_columns):
+                for part in range(components):
+                    coarse_wanted[part, row, c] = coarse[j, row, c, part] * coarse_per_area[j]
+        _gather(
+            coarse_wanted, every, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_corner, 1, broad_target,
+            coarse_source[m],
+        )  # fmt: skip

@@ -1,0 +1,242 @@
+"""Inner loops of rays and range steps: spots to rays, rays through planes, and the transposes.
+
+Plain arrays in, plain arrays out; rows of rays from `begin` to `end` (spots, in the transpose of `lay_spots`) are one
+piece of work. No piece touches what another writes and every sum has one order, so that the result does not depend on
+the number of threads. What the arguments mean is said where they are made: :mod:`dosekit.maps.loops`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+__all__ = ["follow_rows", "lay_spots", "lay_spots_transposed", "read_rows", "widest_spread"]
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def lay_spots(weights, first_u, first_v, profile_u, profile_v, fluence, begin, end):  # type: ignore[no-untyped-def]
+    """Add the spots' profiles to the rays: fluence[v, u, step] in particles per ray."""
+    spots, width_u, steps = profile_u.shape
+    width_v = profile_v.shape[1]
+    for r in range(begin, end):
+        for s in range(spots):
+            p = r - first_v[s]
+            if p < 0 or p >= width_v:
+                continue
+            for q in range(width_u):
+                c = first_u[s] + q
+                for k in range(steps):
+                    fluence[r, c, k] += weights[s, k] * profile_v[s, p, k] * profile_u[s, q, k]
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weights, begin, end):  # type: ignore[no-untyped-def]
+    """Transpose of `lay_spots`."""
+    _, width_u, steps = profile_u.shape
+    width_v = profile_v.shape[1]
+    for s in range(begin, end):
+        for p in range(width_v):
+            for q in range(width_u):
+                for k in range(steps):
+                    weights[s, k] += (
+                        fluence[first_v[s] + p, first_u[s] + q, k] * profile_v[s, p, k] * profile_u[s, q, k]
+                    )
+
+
+@njit(nogil=True, error_model="numpy")
+def _row(wet, inverse_bin, last):  # type: ignore[no-untyped-def]
+    """Return the table row below a depth and the share of the row above."""
+    place = wet * inverse_bin - 0.5
+    if place <= 0.0:
+        return 0, 0.0
+    i = int(place)
+    if i >= last:
+        return last - 1, 1.0
+    return i, place - i
+
+
+@njit(nogil=True, error_model="numpy")
+def _advance(moments, length, scatter, part, power, power_above, steps):  # type: ignore[no-untyped-def]
+    """Carry the Fermi-Eyges moments of the steps of one ray along a length (Eyges 1948)."""
+    a0, a1, a2 = moments[0], moments[1], moments[2]
+    for k in range(steps):
+        t = scatter * ((1.0 - part) * power[k] + part * power_above[k])
+        a2[k] += length * (2.0 * a1[k] + length * (a0[k] + t * length / 3.0))
+        a1[k] += length * (a0[k] + 0.5 * t * length)
+        a0[k] += t * length
+
+
+@njit(nogil=True, error_model="numpy")
+def _core(core, i, f, reference, growth, a2, squared_rungs, rungs, energy, stops, rung, upper, steps):  # type: ignore[no-untyped-def]
+    """Look up what each step of one ray leaves: energy and stops per particle, its rung and the share of the next.
+
+    ``core[row, 4, K]`` holds scattering power, survivors, energy and stops. `squared_rungs` turns a variance into
+    squared rungs of the ladder; a variance between two rungs is shared so that it is exact.
+    """
+    left, left_above = core[i, 1], core[i + 1, 1]
+    given, given_above = core[i, 2], core[i + 1, 2]
+    stopped, stopped_above = core[i, 3], core[i + 1, 3]
+    highest = rungs - 2.0
+    for k in range(steps):
+        energy[k] = (1.0 - f) * given[k] + f * given_above[k]
+        stops[k] = (1.0 - f) * stopped[k] + f * stopped_above[k]
+        survivors = (1.0 - f) * left[k] + f * left_above[k]
+        squared = max((a2[k] - reference[k] * growth) * survivors * squared_rungs, 0.0)
+        g = min(np.floor(np.sqrt(squared)), highest)
+        rung[k] = g
+        upper[k] = min((squared - g * g) / (2.0 * g + 1.0), 1.0)
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def widest_spread(wet, local, slant, w, inverse_bin, power, weight, start, ahead, reference, widest, begin, end):  # type: ignore[no-untyped-def]
+    """Find the largest scatter variance of any ray and step that still counts, for each row of rays."""
+    last = power.shape[0] - 1
+    for r in range(begin, end):
+        for c in range(wet.shape[2]):
+            moments = start.copy()
+            before = 0.0
+            for j in range(wet.shape[0]):
+                length = (ahead if j == 0 else w[j] - w[j - 1]) * slant[r, c]
+                i, f = _row(0.5 * (before + wet[j, r, c]), inverse_bin, last)
+                before = wet[j, r, c]
+                scatter = local[j, r, c] if j > 0 else 0.0
+                _advance(moments, length, scatter, f, power[i], power[i + 1], start.shape[1])
+                n, g = _row(before, inverse_bin, last)
+                for k in range(start.shape[1]):
+                    if (1.0 - g) * weight[n, k] + g * weight[n + 1, k] > 0.0:
+                        widest[r] = max(widest[r], moments[2, k] - reference[k])
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def follow_rows(  # type: ignore[no-untyped-def]
+    fluence, wet, local, slant, gaps, inverse_bin, core, alive, state, reference, growth, squared_rungs, broad,
+    parts_at, column, share_u, source, used, gathered, first_plane, last_plane, begin, end,
+):  # fmt: skip
+    """Follow rows of rays through a block of planes and share out what they leave there.
+
+    ``source[plane, v, rung, 2 u + (energy, stops)]`` becomes what is to be spread by each width of the ladder. It is
+    not zero where ``used[plane, v, rung]``, which says on entry what must be cleared. The broad parts go to
+    ``gathered[plane, v, coarse column, part]``.
+    """
+    steps = core.shape[2]
+    last = core.shape[0] - 1
+    rungs = source.shape[2]
+    parts = broad.shape[2]
+    columns = wet.shape[2]
+    lit, total = np.empty(columns, dtype=np.uint8), np.empty(parts)
+    energy, stops, rung, upper = np.empty(steps), np.empty(steps), np.empty(steps), np.empty(steps)
+    for r in range(begin, end):
+        for c in range(columns):
+            lit[c] = 0
+            for k in range(steps):
+                if fluence[r, c, k] != 0.0:
+                    lit[c] = 1
+        for j in range(first_plane, last_plane):
+            rows, flags, sums = source[j - first_plane, r], used[j - first_plane, r], gathered[j - first_plane, r]
+            for g in range(rungs):
+                if flags[g]:
+                    flags[g] = 0
+                    for m in range(2 * columns):
+                        rows[g, m] = 0.0
+            for m in range(sums.shape[0]):
+                for b in range(parts):
+                    sums[m, b] = 0.0
+            for c in range(columns):
+                if not lit[c]:
+                    continue
+                depth = wet[j, r, c]
+                before = wet[j - 1, r, c] if j > 0 else 0.0
+                number, moments = fluence[r, c], state[r, c]
+                i, f = _row(0.5 * (before + depth), inverse_bin, last)
+                scatter = local[j, r, c] if j > 0 else 0.0
+                _advance(moments, gaps[j] * slant[r, c], scatter, f, core[i, 0], core[i + 1, 0], alive[i])
+                i, f = _row(depth, inverse_bin, last)
+                _core(
+                    core, i, f, reference, growth[j], moments[2], squared_rungs, rungs, energy, stops, rung, upper,
+                    alive[i],
+                )  # fmt: skip
+                for k in range(alive[i]):
+                    e, s = energy[k] * number[k] * slant[r, c], stops[k] * number[k] * slant[r, c]
+                    if e == 0.0 and s == 0.0:
+                        continue
+                    g = int(rung[k])
+                    flags[g] = 1
+                    flags[g + 1] = 1
+                    rows[g, 2 * c] += (1.0 - upper[k]) * e
+                    rows[g, 2 * c + 1] += (1.0 - upper[k]) * s
+                    rows[g + 1, 2 * c] += upper[k] * e
+                    rows[g + 1, 2 * c + 1] += upper[k] * s
+                n = min(int(depth * inverse_bin * 4.0), broad.shape[0] - 1)
+                table, some = broad[n], parts_at[n]
+                for b in range(some):
+                    total[b] = 0.0
+                for k in range(0, steps, 4):  # four at a time; those beyond the last count nothing
+                    k1, k2, k3 = min(k + 1, steps - 1), min(k + 2, steps - 1), min(k + 3, steps - 1)
+                    n0, n1 = number[k], (number[k1] if k + 1 < steps else 0.0)
+                    n2, n3 = (number[k2] if k + 2 < steps else 0.0), (number[k3] if k + 3 < steps else 0.0)
+                    t0, t1, t2, t3 = table[k], table[k1], table[k2], table[k3]
+                    for b in range(some):
+                        total[b] += n0 * t0[b] + n1 * t1[b] + n2 * t2[b] + n3 * t3[b]
+                near, n = slant[r, c] * (1.0 - share_u[c]), column[c] - column[0]
+                far = slant[r, c] * share_u[c]
+                for b in range(some):
+                    sums[n, b] += near * total[b]
+                    sums[n + 1, b] += far * total[b]
+
+
+@njit(nogil=True, error_model="numpy", cache=True)
+def read_rows(  # type: ignore[no-untyped-def]
+    wet, local, slant, gaps, inverse_bin, core, alive, state, reference, growth, squared_rungs, broad, column, share_u,
+    row, share_v, source, coarse, fluence, first_plane, last_plane, begin, end,
+):  # fmt: skip
+    """Transpose of `follow_rows`: what a particle of each step on each ray is worth.
+
+    Here ``broad[row, part, K]`` has its last axes exchanged, and ``coarse[plane, coarse row, part, coarse column]``
+    has not been shared out among rows of rays.
+    """
+    steps = core.shape[2]
+    last = core.shape[0] - 1
+    rungs = source.shape[2]
+    parts = broad.shape[1]
+    energy, stops, rung, upper = np.empty(steps), np.empty(steps), np.empty(steps), np.empty(steps)
+    value, total = np.empty(steps), np.zeros(parts + 4)
+    for r in range(begin, end):
+        line, share = row[r] - row[0], share_v[r]
+        for j in range(first_plane, last_plane):
+            rows = source[j - first_plane, r]
+            near, far = coarse[j - first_plane, line], coarse[j - first_plane, line + 1]
+            for c in range(wet.shape[2]):
+                depth = wet[j, r, c]
+                before = wet[j - 1, r, c] if j > 0 else 0.0
+                moments = state[r, c]
+                i, f = _row(0.5 * (before + depth), inverse_bin, last)
+                scatter = local[j, r, c] if j > 0 else 0.0
+                _advance(moments, gaps[j] * slant[r, c], scatter, f, core[i, 0], core[i + 1, 0], alive[i])
+                i, f = _row(depth, inverse_bin, last)
+                _core(
+                    core, i, f, reference, growth[j], moments[2], squared_rungs, rungs, energy, stops, rung, upper,
+                    alive[i],
+                )  # fmt: skip
+                u, m = share_u[c], column[c] - column[0]
+                for b in range(parts):
+                    one = (1.0 - u) * near[b, m] + u * near[b, m + 1]
+                    other = (1.0 - u) * far[b, m] + u * far[b, m + 1]
+                    total[b] = (1.0 - share) * one + share * other
+                table = broad[min(int(depth * inverse_bin * 4.0), broad.shape[0] - 1)]
+                for k in range(steps):
+                    value[k] = 0.0
+                for b in range(0, parts, 4):
+                    f0, f1, f2, f3 = total[b], total[b + 1], total[b + 2], total[b + 3]
+                    t0, t1 = table[b], table[min(b + 1, parts - 1)]
+                    t2, t3 = table[min(b + 2, parts - 1)], table[min(b + 3, parts - 1)]
+                    for k in range(steps):
+                        value[k] += f0 * t0[k] + f1 * t1[k] + f2 * t2[k] + f3 * t3[k]
+                for k in range(alive[i]):
+                    if energy[k] == 0.0 and stops[k] == 0.0:
+                        continue
+                    g = int(rung[k])
+                    below = energy[k] * rows[g, 2 * c] + stops[k] * rows[g, 2 * c + 1]
+                    above = energy[k] * rows[g + 1, 2 * c] + stops[k] * rows[g + 1, 2 * c + 1]
+                    value[k] += (1.0 - upper[k]) * below + upper[k] * above
+                for k in range(steps):
+                    fluence[r, c, k] += value[k] * slant[r, c]
