@@ -17,7 +17,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from dosekit.effects.histograms import conformity, integral_dose_j, outside_field_dose, volume_histogram
+from dosekit.effects.histograms import volume_histogram
+from dosekit.effects.plan_measures import conformity, integral_dose_j, outside_field_dose
 from dosekit.effects.mixed_field import EffectModel
 from dosekit.errors import InputError, ReachError
 from dosekit.modulation.flattening import EffectCurves

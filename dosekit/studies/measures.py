@@ -93,7 +93,7 @@ def structure_measures(
     dict of str to dict
         Name to measures by name.
     """
-    from dosekit.effects.histograms import conformity
+    from dosekit.effects.plan_measures import conformity
 
     rows = {name: histogram.measures() for name, histogram in histograms.items()}
     for name, row in rows.items():

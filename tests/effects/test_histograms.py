@@ -7,13 +7,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from dosekit.effects.histograms import (
-    conformity,
-    dose_spread_gy,
-    integral_dose_j,
-    outside_field_dose,
-    volume_histogram,
-)
+from dosekit.effects.histograms import dose_spread_gy, volume_histogram
+from dosekit.effects.plan_measures import conformity, integral_dose_j, outside_field_dose
 from dosekit.errors import InputError
 
 import naive
