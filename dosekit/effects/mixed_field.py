@@ -90,12 +90,16 @@ class EffectModel:
         Changes to the constant factors; only for ``constant``.
     beam_particle : str
         Species of the beam; the proton models warn for any other than ``proton``.
+    spread_let : bool
+        Average over the LET spectra of star and reaction products; otherwise every LET is that of all tracks (a
+        curve of ions brought in under the name of a component).
     """
 
     name: str = "constant"
     tissue: Tissue | TissueMap = field(default_factory=lambda: tissue("tumour"))
     factors: Mapping[str, float] = field(default_factory=dict)
     beam_particle: str = "pi-"
+    spread_let: bool = True
 
     def __post_init__(self) -> None:
         """Refuse unknown names and factors where there are none."""
@@ -160,6 +164,7 @@ class EffectModel:
     def _pair(self, component: str, let: ArrayLike | None) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Give alpha and sqrt(beta) of one component."""
         alpha_x, root_x = self.tissue.alpha_per_gy, np.sqrt(self.tissue.beta_per_gy2)
+        spread = component if self.spread_let else "primary"
         if self.name == "physical":
             factor = np.asarray(1.0)
         elif self.name == "constant":
@@ -167,7 +172,7 @@ class EffectModel:
         elif let is None or component in _LIKE_PHOTONS:
             factor = np.ones_like(np.asarray(0.0 if let is None else let, dtype=np.float64))
         elif self.name == "icrp60":
-            factor = spectral_mean(quality_factor, component, let, beam_particle=self.beam_particle)
+            factor = spectral_mean(quality_factor, spread, let, beam_particle=self.beam_particle)
         elif self.name == "microdosimetric" or component in _DENSE:
             alpha = saturated_alpha(let, tissue=self.tissue, component=component, beam_particle=self.beam_particle)
             return alpha, np.broadcast_to(root_x, alpha.shape)

@@ -18,8 +18,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from dosekit.effects.histograms import volume_histogram
-from dosekit.effects.plan_measures import conformity, integral_dose_j, outside_field_dose
 from dosekit.effects.mixed_field import EffectModel
+from dosekit.effects.plan_measures import conformity, integral_dose_j, outside_field_dose
 from dosekit.errors import InputError, ReachError
 from dosekit.modulation.flattening import EffectCurves
 from dosekit.modulation.profiles import profile_measures
@@ -160,12 +160,21 @@ def compare_in_depth(
         )
     found += [
         _flatten_imported(
-            curve, interval_mm, EffectModel(effect, tissue, factors=dict((factors or {}).get(curve.name, {})),
-                                            beam_particle="proton"),
-            dose_gy=dose_gy, step_mm=step_mm, flatten_effect=flatten_effect,
+            curve,
+            interval_mm,
+            EffectModel(
+                effect,
+                tissue,
+                factors=dict((factors or {}).get(curve.name, {})),
+                beam_particle="proton",
+                spread_let=False,
+            ),
+            dose_gy=dose_gy,
+            step_mm=step_mm,
+            flatten_effect=flatten_effect,
         )
         for curve in imported
-    ]  # fmt: skip
+    ]
     return found
 
 

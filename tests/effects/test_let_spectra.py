@@ -83,3 +83,8 @@ def test_quality_factor_is_averaged():
     by_hand = 0.7 * np.dot(light.dose_share, quality_factor(light.let_kev_um))
     by_hand += 0.3 * np.dot(heavy.dose_share, quality_factor(heavy.let_kev_um))
     assert ours == pytest.approx(by_hand, rel=1e-9)
+
+
+def test_ions_of_one_let_are_not_spread():
+    one = EffectModel("microdosimetric", ANY, spread_let=False).constants({"star_heavy": 80.0})["star_heavy"][0]
+    assert float(one) == pytest.approx(float(saturated_alpha(80.0, tissue=ANY)), rel=1e-12)
