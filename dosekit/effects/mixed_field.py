@@ -174,7 +174,7 @@ class EffectModel:
         elif self.name == "icrp60":
             factor = spectral_mean(quality_factor, spread, let, beam_particle=self.beam_particle)
         elif self.name == "microdosimetric" or component in _DENSE:
-            alpha = saturated_alpha(let, tissue=self.tissue, component=component, beam_particle=self.beam_particle)
+            alpha = saturated_alpha(let, tissue=self.tissue, component=spread, beam_particle=self.beam_particle)
             return alpha, np.broadcast_to(root_x, alpha.shape)
         else:
             largest, smallest = rbe_extremes(self.name, let, alpha_beta_gy=self.tissue.alpha_beta_gy)
