@@ -47,6 +47,7 @@ def draw_slice(
     target: str | None = None,
     isodose_percent: Sequence[float] = ISODOSE_PERCENT,
     norm: Normalize | None = None,
+    colours: Colormap | None = None,
     box_mm: dict[str, tuple[float, float]] | None = None,
     scale_bar: bool = True,
     letters: bool = True,
@@ -75,6 +76,8 @@ def draw_slice(
         Levels of the isodose lines.
     norm : Normalize, optional
         Colour scale in %.
+    colours : Colormap, optional
+        Colours of the wash; those of dose without it.
     box_mm : dict, optional
         Limits along x, y and z.
     scale_bar, letters : bool
@@ -91,7 +94,7 @@ def draw_slice(
     percent = Slice(100.0 * percent.values / reference_gy, percent.horizontal_mm, percent.vertical_mm)
     axes.imshow(
         percent.values,
-        cmap=dose_colours(),
+        cmap=colours or dose_colours(),
         norm=norm,
         alpha=_opacity(percent.values, norm),
         extent=percent.extent_mm,

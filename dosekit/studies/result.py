@@ -85,3 +85,21 @@ class Result:
     warnings: tuple[str, ...] = ()
     others: tuple[Result, ...] = ()
     base: Path = Path()
+
+    def maps(self) -> xr.Dataset:
+        """Return the dose map with the effect-weighted dose beside it.
+
+        Returns
+        -------
+        Dataset
+            ``dose(component, z, y, x)``, stops, LET, and ``effect_dose(z, y, x)`` in Gy per fraction.
+        """
+        dataset = self.dose.copy()
+        dataset["effect_dose"] = (
+            ("z", "y", "x"),
+            self.effect_dose_gy,
+            {"units": "Gy", "long_name": f"effect-weighted dose, model {self.study.effect.model}"},
+        )
+        dataset.attrs["study"] = self.study.title
+        dataset.attrs["dose_per"] = "fraction"
+        return dataset

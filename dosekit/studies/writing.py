@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from dosekit.studies.drawing import write_figures
 from dosekit.studies.model import file_name
 from dosekit.studies.result import Result
 
@@ -16,7 +17,6 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from dosekit.outputs.report import ReportFigure
-    from dosekit.outputs.style import FigureFiles
     from dosekit.outputs.tables import OutputTable
 
 __all__ = ["write_results"]
@@ -49,7 +49,7 @@ def write_results(result: Result, folder: Path, *, study_text: str, progress: Pr
     tell("tables", 1.0)
     figures: list[ReportFigure] = []
     if outputs.figures:
-        figures = _write_figures(result, folder / "figures", tell)
+        figures = write_figures(result, folder / "figures", tell)
     if outputs.dicom:
         tell("DICOM", 0.0)
         _write_dicom(result, folder / "dicom", figures_folder=folder / "figures")
@@ -177,24 +177,11 @@ def _doses_by_structure(result: Result) -> dict[str, dict[str, float]]:
     return {name: mean_doses_gy(result.dose, result.grid.structure(name)) for name in result.histograms}
 
 
-def _with_effect(result: Result) -> xr.Dataset:
-    """Return the dose map with the effect-weighted dose beside it."""
-    dataset = result.dose.copy()
-    dataset["effect_dose"] = (
-        ("z", "y", "x"),
-        result.effect_dose_gy,
-        {"units": "Gy", "long_name": f"effect-weighted dose, model {result.study.effect.model}"},
-    )
-    dataset.attrs["study"] = result.study.title
-    dataset.attrs["dose_per"] = "fraction"
-    return dataset
-
-
 def _write_maps(result: Result, folder: Path) -> None:
     """Write the dose maps, components apart, on the lattice that the study asks for."""
     from dosekit.outputs.netcdf import write_dataset
 
-    dataset = _on_output_lattice(result, _with_effect(result))
+    dataset = _on_output_lattice(result, result.maps())
     write_dataset(
         dataset, folder / "dose.nc", run_hash=result.run_hash, sources=result.summary.sources, title=result.study.title
     )
@@ -209,153 +196,6 @@ def _on_output_lattice(result: Result, dataset: xr.Dataset) -> xr.Dataset:
     from dosekit.studies.model import axis_triple
 
     return on_lattice(dataset, result.grid, axis_triple(spacing), dose_to=result.study.outputs.dose_to)
-
-
-def _write_figures(result: Result, folder: Path, tell: Progress) -> list[ReportFigure]:
-    """Draw the figures and return them for the report."""
-    from dosekit.outputs.figures_depth import depth_curve_figure
-    from dosekit.outputs.figures_histogram import histogram_figure
-    from dosekit.outputs.figures_modulation import convergence_figure, range_steps_figure
-    from dosekit.outputs.figures_slices import component_slices_figure, slices_figure
-    from dosekit.outputs.report import report_figure
-    from dosekit.outputs.style import particle_label, write_figure
-
-    effective = result.study.goal.quantity == "effect"
-    quantity = "effect-weighted dose" if effective else "dose"
-    shown: list[ReportFigure] = []
-    count = 4 + 2 * len(result.planned)
-
-    def add(figure: Any, name: str, caption: str) -> None:
-        tell("figures", len(shown) / count)
-        files: FigureFiles = write_figure(figure, folder / name)
-        shown.append(report_figure(files, caption=caption))
-
-    add(
-        slices_figure(
-            _with_effect(result),
-            result.grid,
-            target=result.target,
-            reference_gy=result.study.goal.dose_gy,
-            variable="effect_dose" if effective else "dose",
-            quantity=quantity,
-        ),
-        "slices",
-        f"The {quantity} over the anatomy in three planes through the target, per fraction.",
-    )
-    if not effective:
-        histograms = {name: histogram.curve() for name, histogram in result.histograms.items()}
-    else:
-        histograms = {name: histogram.curve() for name, histogram in result.effect_histograms.items()}
-    add(
-        histogram_figure(
-            histograms,
-            target=result.target,
-            order=list(result.grid.structures),
-            prescribed_gy=result.study.goal.dose_gy,
-            quantity=quantity,
-        ),
-        "histograms",
-        f"Volume histograms of {quantity} per fraction.",
-    )
-    for plan in result.planned:
-        beam = plan.field.beam
-        words = f"{particle_label(beam.particle)} {beam.momentum_mev_c:.1f} MeV/c"
-        add(
-            depth_curve_figure(_beam_curve(result, beam), title=words),
-            f"depth_{file_name(plan.field.name)}",
-            f"Depth dose in water of the unmodulated beam of field '{plan.field.name}', every component apart.",
-        )
-        settings = plan.settings
-        add(
-            range_steps_figure(
-                settings.depth_mm,
-                plan.curves_gy[settings.index],
-                interval_mm=settings.interval_mm,
-                residual_range_mm=settings.residual_range_mm,
-                weights=settings.weights,
-                flatness=settings.flatness,
-                flat_interval_mm=settings.measures.judged_mm,
-                flat_dose=settings.effect_dose,
-                quantity="dose" if settings.effect_dose is None else "effect-weighted dose",
-                title=f"{plan.field.name}, {words}",
-            ),
-            f"range_steps_{file_name(plan.field.name)}",
-            f"Range steps of field '{plan.field.name}' over its widest interval of the target, broad field in water.",
-        )
-    add(
-        component_slices_figure(result.dose, result.grid, target=result.target, reference_gy=result.study.goal.dose_gy),
-        "components",
-        "Components of the dose in the transverse plane through the target.",
-    )
-    for number, search in enumerate(result.searches, start=1):
-        add(
-            convergence_figure(search.history, parts=search.parts, stopped_because=search.stopped_because),
-            f"convergence_{number}",
-            "Cost of the goals against the steps of the search for weights.",
-        )
-    if result.others or result.study.comparison.curve:
-        _add_comparison(result, add)
-    _add_calibration(result, add)
-    tell("figures", 1.0)
-    return shown
-
-
-def _beam_curve(result: Result, beam: Any) -> xr.Dataset:
-    """Return the depth curve in water of a field's own beam."""
-    from dosekit.depths.curves import depth_curve
-
-    return depth_curve(beam, "water", yields=result.study.stars.yields, star_scale=result.study.stars.scale)
-
-
-def _add_comparison(result: Result, add: Callable[[Any, str, str], None]) -> None:
-    """Draw the page that sets particles side by side."""
-    from dosekit.outputs.figures_comparison import comparison_figure
-    from dosekit.studies.comparing import particle_results
-
-    effective = result.study.goal.quantity == "effect"
-    results = [result, *result.others]
-    page = comparison_figure(
-        particle_results(results, result.base),
-        result.grid,
-        target=result.target,
-        prescribed_gy=result.study.goal.dose_gy,
-        quantity="effect-weighted dose" if effective else "dose",
-    )
-    add(
-        page,
-        "comparison",
-        "Particles on the same anatomy with the same goals; momentum, range steps and weights found anew for each. "
-        "A calculation with the models named in the sources; it does not show which particle treats a patient better.",
-    )
-
-
-def _add_calibration(result: Result, add: Callable[[Any, str, str], None]) -> None:
-    """Draw the HU calibration, where the volume comes from a CT."""
-    if result.study.volume.ct is None:
-        return
-    from dosekit.grids.calibration import Calibration, read_calibration, stoichiometric_calibration
-    from dosekit.outputs.figures_calibration import calibration_figure
-
-    known = result.grid.source.get("calibration")
-    calibration: Calibration
-    if isinstance(known, Calibration):
-        calibration = known
-    elif result.study.volume.calibration is not None:
-        calibration = read_calibration(result.base / result.study.volume.calibration)
-    else:
-        calibration = stoichiometric_calibration()
-    curve = calibration.curve(yields=result.study.stars.yields)
-    add(
-        calibration_figure(
-            curve.hu,
-            density_g_cm3=curve.density_g_cm3,
-            relative_stopping_power=curve.relative_stopping_power,
-            star_energy_mev=curve.star_energy_mev,
-            tissues=curve.tissues,
-        ),
-        "calibration",
-        "From HU to density, relative stopping power and charged star energy per stop.",
-    )
 
 
 def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
@@ -387,7 +227,7 @@ def _write_dicom(result: Result, folder: Path, *, figures_folder: Path) -> None:
         fractions=result.study.goal.fractions,
     )
     plan = plan_uid(result.run_hash)
-    maps = _on_output_lattice(result, _with_effect(result))
+    maps = _on_output_lattice(result, result.maps())
     axes = {f"{axis}_mm": maps[axis].values for axis in "xyz"}
     common: dict[str, Any] = {"reference": reference, "run_hash": result.run_hash, "plan_instance_uid": plan, **axes}
     total = _summed(maps)

@@ -24,7 +24,7 @@ def test_the_folder_holds_everything(finished):
         "report.html", "record.json", "dicom/rt_dose_total.dcm", "dicom/rt_dose_effective.dcm",
         "dicom/rt_dose_field_front.dcm", "dicom/rt_dose_field_left.dcm", "dicom/rt_ion_plan.dcm",
         "dicom/rt_structure_set.dcm", "dicom/volume/ct_0001.dcm", "figures/slices.pdf", "figures/slices.png",
-        "figures/histograms.pdf", "figures/depth_front.png", "figures/range_steps_left.pdf",
+        "figures/histograms.pdf", "figures/quality.pdf", "figures/depth_front.png", "figures/range_steps_left.pdf",
     }  # fmt: skip
     assert expected <= names
     assert BANNER in result.line
