@@ -24,6 +24,7 @@ from dosekit.studies.model import Study, read_study
 from dosekit.studies.planning import PlannedField, effect_model_of, plan_field
 from dosekit.studies.quality import let_maps
 from dosekit.studies.result import Result
+from dosekit.studies.shipped import study_path
 from dosekit.studies.volume import existing, input_files, load_volume
 from dosekit.studies.weighing import search_weights
 
@@ -65,7 +66,7 @@ def run(
     Parameters
     ----------
     study : str or Path
-        The study file.
+        The study file, or the name of a shipped study.
     out : str or Path
         Folder for the results; must not exist, be empty, or hold an earlier run as it was left.
     anonymous : bool, optional
@@ -88,11 +89,12 @@ def run(
     from dosekit.outputs.folder import output_folder
     from dosekit.studies.writing import write_results
 
-    said, text = read_study(study)
+    path = study_path(study)
+    said, text = read_study(path)
     if anonymous is not None:
         said = said.model_copy(update={"outputs": said.outputs.model_copy(update={"anonymous": anonymous})})
     with output_folder(out) as folder:
-        result = compute(said, base=Path(study).resolve().parent, progress=progress)
+        result = compute(said, base=path.resolve().parent, progress=progress)
         write_results(result, folder, study_text=text, progress=progress)
     return result
 

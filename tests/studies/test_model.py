@@ -8,6 +8,7 @@ from hypothesis import strategies as st
 
 from dosekit.errors import DosekitError, StudyError, UnknownNameError
 from dosekit.studies.model import axis_triple, parse_study, read_study
+from dosekit.studies.pipeline import run
 from dosekit.studies.shipped import shipped_names, study_path, write_new_study
 
 BASE = 'title = "x"\n[volume]\nphantom = "torso"\n[target]\nstructure = "t"\n[[field]]\nname = "a"\n'
@@ -71,6 +72,12 @@ def test_a_new_study_is_valid_and_never_overwrites(tmp_path):
     read_study(path)
     with pytest.raises(DosekitError, match="exists"):
         write_new_study(path)
+
+
+def test_a_run_by_name_suggests_the_nearest_study(tmp_path):
+    with pytest.raises(UnknownNameError, match="two_fields_torso"):
+        run("two_fields_toso", tmp_path / "out")
+    assert not (tmp_path / "out").exists()
 
 
 def test_a_shipped_study_is_found_by_name_or_suggested():
