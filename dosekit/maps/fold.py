@@ -94,6 +94,13 @@ def fold(
         When a field misses the volume or starts inside it.
     """
     several = fields_of(fields)
+    for field in several:
+        if field.weights.min(initial=0.0) < 0.0:
+            raise InputError(
+                f"field {field.name!r}: a weight of {field.weights.min():.6g}",
+                allowed="weights of 0 or more",
+                remedy="correct the field's weights; the operator takes weights of any sign",
+            )
     if dose_to not in DOSE_TO:
         raise UnknownNameError("dose_to", dose_to, DOSE_TO)
     voxels = int(np.prod(grid.shape))

@@ -179,25 +179,35 @@ def core_table(tables: StepTables) -> NDArray[np.float64]:
 
 
 def field_bytes(
-    *, planes: int, rays: int, nodes: int, coarse_nodes: int, steps: int, parts: int, rungs: int, gathered: int
+    *,
+    planes: int,
+    rays: int,
+    nodes: int,
+    coarse_nodes: int,
+    steps: int,
+    parts: int,
+    rungs: int,
+    gathered: int,
+    threads: int = 1,
 ) -> float:
     """Return the memory one field takes while it is folded.
 
     Parameters
     ----------
-    planes, rays, nodes, coarse_nodes, steps, parts, rungs, gathered : int
+    planes, rays, nodes, coarse_nodes, steps, parts, rungs, gathered, threads : int
         Planes across the beam, rays with fluence, nodes of a fine and a coarse plane, range steps, parts of the broad
-        dose, widths of the ladder, rows of rays times the coarse columns they are shared out among.
+        dose, widths of the ladder, rows of rays times the coarse columns they are shared out among, threads.
 
     Returns
     -------
     float
-        Bytes: 8 [2 planes rays + 4 rays steps + P (2 rungs rays + parts gathered) + planes (2 nodes + 6 coarse)],
-        with P planes at once.
+        Bytes: 8 [2 planes rays + 4 rays steps + P (2 rungs rays + parts gathered) + planes (2 nodes + 6 coarse)
+        + T (4 nodes + 7 coarse + parts gathered)], with P planes at once on T threads.
     """
     return 8.0 * (
         2.0 * planes * rays
         + 4.0 * rays * steps
         + PLANES_AT_ONCE * (2.0 * rungs * rays + parts * gathered)
         + planes * (2.0 * nodes + len(TARGETS) * coarse_nodes)
+        + threads * (4.0 * nodes + (len(TARGETS) + 1.0) * coarse_nodes + parts * gathered)
     )

@@ -120,7 +120,7 @@ class FoldOperator(LinearOperator):
         list of ndarray
             Spots by steps for each field.
         """
-        vector = np.asarray(weights, dtype=np.float64).reshape(-1)
+        vector = _finite(weights, "weights")
         sizes = [int(np.prod(field.shape)) for field in self.fields]
         parts = np.split(vector, np.cumsum(sizes)[:-1])
         return [part.reshape(field.shape) for part, field in zip(parts, self.fields, strict=True)]
@@ -206,7 +206,7 @@ class FoldOperator(LinearOperator):
 
     def _rmatvec(self, x: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return one value for each weight."""
-        values = np.asarray(x, dtype=np.float64).reshape(-1)
+        values = _finite(x, "values")
         direct = np.stack([self.factors[name] * values for name in _DIRECT])
         places = np.arange(len(self.voxels), dtype=np.int64)
         stops = self._stops_wanted(values) if self._makes_stars else None
@@ -266,6 +266,14 @@ class FoldOperator(LinearOperator):
             wanted[name] = volume.reshape(self.grid.shape)
         stops = carry_stars_transposed(wanted, self.grid, yields=self.yields, star_scale=self.star_scale)
         return np.asarray(stops, dtype=np.float64).reshape(1, -1)
+
+
+def _finite(values: ArrayLike, what: str) -> NDArray[np.float64]:
+    """Return a vector, or refuse it."""
+    vector = np.asarray(values, dtype=np.float64).reshape(-1)
+    if not np.isfinite(vector).all():
+        raise InputError(f"{what} that are not finite", allowed="finite numbers", remedy=f"correct the {what}")
+    return vector
 
 
 def _direct_rows() -> NDArray[np.int64]:

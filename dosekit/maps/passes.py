@@ -34,6 +34,7 @@ from dosekit.maps.fields import PARTICLES_PER_UNIT, Field
 from dosekit.maps.loops import PLANES_AT_ONCE, Lattice, Loops
 from dosekit.maps.rays import Matter, Planes, RayTrace
 from dosekit.maps.sampling import Runs, box_of_voxels, places_of_points, slabs_apart
+from dosekit.maps.straight import runs_straight, straight_reading
 from dosekit.maps.tables import TARGETS, StepTables
 
 __all__ = ["FieldPencils"]
@@ -205,6 +206,14 @@ class FieldPencils:
                 out[first:last] = used[: last - first]
         return out
 
+    @cached_property
+    def _present(self) -> NDArray[np.bool_]:
+        """Which of `TARGETS` the field makes at all."""
+        given = self.loops.broad.any(axis=(0, 1))
+        targets = np.arange(len(TARGETS))
+        fine = np.isin(targets, [TARGETS.index("primary"), TARGETS.index("stops")])
+        return np.asarray(fine | np.isin(targets, self.loops.broad_spreads.target[given]))
+
     def deposit(
         self,
         fine: NDArray[np.float64],
@@ -233,9 +242,21 @@ class FieldPencils:
         out : ndarray
             Where to add, shape (rows, columns).
         """
+        runs = self._runs(voxels, columns)
+        rows = np.where(self._present, rows, -1)
+        if runs_straight(self.planes):
+            from dosekit.maps import kernels_straight
+
+            reading = straight_reading(self.matter, self.planes, (self.fine, self.coarse), (fine, coarse))
+            shared: tuple[Any, ...] = (
+                runs.first, runs.column, runs.count, np.array(self.matter.shape), fine.reshape(-1), coarse.reshape(-1),
+                *reading, *self._matter(), rows, factor, out,
+            )  # fmt: skip
+            with Threads() as threads:
+                threads.run(kernels_straight.deposit_straight, shared, len(runs.first))
+            return
         from dosekit.maps import kernels_voxels
 
-        runs = self._runs(voxels, columns)
         lit = [np.array([plane.any() for plane in maps]) for maps in (fine, coarse)]
         shared = (
             runs.first, runs.column, runs.count, *places_of_points(self.matter, self.planes, self.fine),

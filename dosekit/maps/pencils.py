@@ -68,6 +68,8 @@ def field_pencils(
     GeometryWarning
         When the field misses everything, or its source lies inside the volume.
     """
+    from numba import get_num_threads
+
     frame = field.frame(patient_position)
     tables = step_tables(library, field.beam)
     optics = [field.beam.axis(axis) for axis in range(2)]
@@ -125,6 +127,7 @@ def field_pencils(
             parts=len(part_sigma),
             rungs=len(ladder),
             gathered=len(lines) * (int(columns[-1] - columns[0]) + 2),
+            threads=int(get_num_threads()),
         )
         + 8.0 * sum(profile.size for _, profile in profiles),
         what=f"field {field.name!r}",

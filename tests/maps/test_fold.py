@@ -79,6 +79,19 @@ def test_operator_refuses_what_it_cannot_know(mixed):
         fold([], mixed)
 
 
+@pytest.mark.parametrize("bad", [np.nan, np.inf])
+def test_numbers_that_are_not_finite_are_refused(mixed, bad):
+    operator = FoldOperator(field(), mixed, libraries=LIBRARIES)
+    with pytest.raises(InputError, match="not finite"):
+        operator.matvec(np.full(operator.shape[1], bad))
+    with pytest.raises(InputError, match="not finite"):
+        operator.rmatvec(np.full(operator.shape[0], bad))
+    with pytest.raises(InputError, match="not finite"):
+        field(weights=[[1, bad], [0, 0]])
+    with pytest.raises(InputError, match="weight of -1"):
+        fold(field(weights=[[1, -1], [0, 0]]), mixed, libraries=LIBRARIES)
+
+
 @pytest.mark.parametrize("wanted", [2.0, (5.0, 3.0, 2.5), 7.0])
 def test_energy_is_kept_on_another_lattice(mixed, wanted):
     """Dose times mass adds up to the same on any lattice that covers the volume."""

@@ -51,6 +51,30 @@ def test_voxels_sample_the_maps(rng):
         assert out[0, n] == pytest.approx(wanted, rel=1e-10)
 
 
+@pytest.mark.parametrize("spacing", [(2.0, 2.0, 2.0), (4.0, 3.0, 5.0), (1.0, 3.0, 2.0)])
+@pytest.mark.parametrize(("gantry", "couch"), [(0, 0), (90, 0), (180, 0), (270, 90)])
+def test_straight_fields_are_read_as_any_other(spacing, gantry, couch, rng, monkeypatch):
+    """Interpolating along one axis after the other gives what one point after the other gives."""
+    grid = mixed_grid((5, 9, 7), rng, spacing_mm=spacing)
+    field = Field("f", BEAM, (1, 2, 3), gantry, couch, [[0, 0], [6, -4]], [0.0, 20.0])
+    pencils = field_pencils(field, matter_of(grid), invented_library(BEAM, [0.0, 20.0]))
+    fine, coarse = pencils.maps(field.weights)
+    fine, coarse = fine + rng.random(fine.shape), coarse + rng.random(coarse.shape)
+    chosen = np.sort(rng.choice(pencils.voxels(), size=100, replace=False))
+    factor, rows = rng.uniform(-1, 1, (len(TARGETS), len(grid.materials))), np.arange(len(TARGETS))
+
+    def read():
+        everywhere, some = np.zeros((len(TARGETS), grid.density_g_cm3.size)), np.zeros((len(TARGETS), 100))
+        pencils.deposit(fine, coarse, pencils.reach(), factor=factor, rows=rows, out=everywhere)
+        pencils.deposit(fine, coarse, chosen, np.arange(100), factor=factor, rows=rows, out=some)
+        np.testing.assert_allclose(everywhere[:, chosen], some, rtol=1e-12)
+        return everywhere
+
+    straight = read()
+    monkeypatch.setattr("dosekit.maps.passes.runs_straight", lambda planes: False)
+    np.testing.assert_allclose(straight, read(), rtol=1e-11, atol=1e-13 * np.abs(straight).max())
+
+
 @pytest.mark.parametrize("variance", [0.0, 0.05, 0.7, 1.0, 3.3, 40.0])
 def test_taps(variance):
     taps, reach = gaussian_taps(np.array([variance]))

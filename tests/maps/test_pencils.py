@@ -11,7 +11,7 @@ from dosekit.errors import GeometryWarning, SizeError
 from dosekit.maps.fields import Field, spot_lattice
 from dosekit.maps.pencils import field_pencils
 from dosekit.maps.rays import matter_of, plane_lattice, ray_spacing_mm, trace
-from dosekit.maps.tables import TARGETS, moliere_tail_share, step_tables
+from dosekit.maps.tables import TARGETS, step_tables
 
 from invented_fields import BEAM, box_grid, invented_library, mixed_grid
 
@@ -224,23 +224,20 @@ def test_maps_have_an_exact_transpose(rng):
 
 
 def test_tables_keep_every_quantity():
+    """What the library leaves at a depth is in the core or in one of the broad parts, and nothing else is."""
     library = invented_library(BEAM, [0.0, 25.0])
     tables = step_tables(library, BEAM)
-    tail = moliere_tail_share(BEAM)
-    narrow = tables.narrow[:-1].transpose(1, 2, 0)
-    for part, key in enumerate(("core", "core_stops")):
-        wanted = (1.0 - tail) * library.quantities[key]
-        np.testing.assert_allclose(narrow[part], wanted, rtol=1e-12, atol=1e-9 * wanted.max())
     assert np.all(np.diff(tables.part_sigma_mm) <= 0.0)
-    quarter = (np.arange(4 * len(library.depth_mm)) + 0.5) / 4.0
+    place = np.clip((np.arange(4 * len(library.depth_mm)) + 0.5) / 4.0 - 0.5, 0.0, len(library.depth_mm) - 1.0)
     for n, name in enumerate(TARGETS):
         broad = tables.broad[:-1, :, tables.part_target == n].sum(axis=2)
         for k in range(2):
-            # the tail's share of the core is broad, the rest narrow
-            share = {"core": tail, "core_stops": tail}
-            wanted = sum(share.get(key, 1.0) * library.quantities[key][k] for key in KEYS[name])
-            read = np.interp(quarter, library.depth_mm, wanted)
-            np.testing.assert_allclose(broad[:, k], read, rtol=1e-9, atol=1e-9 * wanted.max())
+            narrow = tables.narrow[:-1, n, k] if n < 2 else 0.0 * library.depth_mm
+            wanted = sum(library.quantities[key][k] for key in KEYS[name])
+            found = np.interp(place, np.arange(len(narrow)), narrow) + broad[:, k]
+            read = np.interp(place, np.arange(len(wanted)), wanted)
+            np.testing.assert_allclose(found, read, rtol=1e-9, atol=1e-9 * max(wanted.max(), 1e-30))
+            assert narrow.min() >= 0.0
 
 
 def test_ray_spacing_divides_or_multiplies_the_voxel():
@@ -257,3 +254,33 @@ def test_absurd_fields_are_refused_before_memory_is_taken():
     spots = np.stack(np.meshgrid(np.linspace(-20000, 20000, 30), np.linspace(-20000, 20000, 30)), -1).reshape(-1, 2)
     with pytest.raises(SizeError):
         field_pencils(Field("wide", BEAM, (0, 0, 0), 0, 0, spots), matter_of(grid), invented_library(BEAM, [0.0]))
+
+
+def test_memory_is_what_the_formula_says(rng):
+    """No more than stated, and not far less, for a field of some size."""
+    import tracemalloc
+
+    import numba
+
+    from dosekit.maps.loops import field_bytes
+
+    grid = box_grid((30, 60, 30), 2.0)
+    field = Field("f", BEAM, (0, 0, 0), 30, 0, spot_lattice(15, 5), np.linspace(0, 40, 12))
+    pencils = field_pencils(field, matter_of(grid), invented_library(BEAM, field.shift_mm))
+    pencils.maps(field.weights)  # nothing is compiled while memory is counted
+    work = pencils.loops
+    stated = field_bytes(
+        planes=len(pencils.planes.w_mm), rays=work.slant.size, nodes=pencils.fine.nodes,
+        coarse_nodes=pencils.coarse.nodes, steps=field.shape[1], parts=work.broad.shape[2], rungs=work.rungs,
+        gathered=len(work.row) * work.coarse_size[1], threads=numba.get_num_threads(),
+    )  # fmt: skip
+    fine, coarse = pencils.maps(field.weights)
+    pencils.weights_of(fine, coarse)
+    del fine, coarse
+    rays = 8.0 * 2.0 * work.wet.size  # these are there already
+    for run in (lambda: pencils.maps(field.weights), lambda: pencils.weights_of(*pencils._empty_maps())):
+        tracemalloc.start()
+        run()
+        peak = tracemalloc.get_traced_memory()[1]
+        tracemalloc.stop()
+        assert 0.3 * stated < peak + rays <= stated
