@@ -284,6 +284,7 @@ def map_row(
     *,
     dose_gy: Mapping[str, ArrayLike],
     effect_gy: ArrayLike,
+    goal_gy: ArrayLike | None = None,
     structures: Mapping[str, ArrayLike],
     target: str,
     body: ArrayLike,
@@ -304,6 +305,8 @@ def map_row(
         Physical dose by component, Gy.
     effect_gy : array_like
         Effect-weighted dose, Gy.
+    goal_gy : array_like, optional
+        The dose that the prescription is of; effect-weighted when absent.
     structures : mapping of str to array_like
         Coverage of every structure by name, the target's among them.
     target : str
@@ -313,7 +316,7 @@ def map_row(
     voxel_cm3 : float
         Volume of a voxel, cm3.
     prescription_gy : float
-        Effect-weighted prescription, Gy.
+        Prescription, Gy.
     let_kev_um : mapping of str to array_like, optional
         Dose-averaged LET by component.
     time_s : float
@@ -325,20 +328,21 @@ def map_row(
     -------
     dict
         Target D2, D50, D95, D98, homogeneity, conformity at 95 %, mean and D2 of each other structure,
-        integral dose of the body, star-neutron dose outside the fields, LET and RBE in the target, beam
-        time.
+        integral dose of the body, dose and star-neutron dose outside the fields (where all but star neutrons give
+        less than the level), LET and RBE in the target, beam time.
     """
     if target not in structures:
         raise InputError(f"no structure {target!r}", allowed=", ".join(structures), remedy="name the target")
     effect = np.asarray(effect_gy, dtype=np.float64)
+    judged = effect if goal_gy is None else np.asarray(goal_gy, dtype=np.float64)
     parts = {part: np.asarray(values, dtype=np.float64) for part, values in dose_gy.items()}
     total = np.sum(list(parts.values()), axis=0)
     row: dict[str, float | str] = {"name": name, "time_s": float(time_s)}
-    histogram = volume_histogram(effect, structures[target], voxel_cm3=voxel_cm3)
+    histogram = volume_histogram(judged, structures[target], voxel_cm3=voxel_cm3)
     for percent in (2, 50, 95, 98):
         row[f"target_d{percent}_share"] = histogram.dose_at_volume_gy(percent) / prescription_gy
     row["target_homogeneity"] = histogram.homogeneity
-    fit = conformity(effect, structures[target], body=body, level_gy=0.95 * prescription_gy, voxel_cm3=voxel_cm3)
+    fit = conformity(judged, structures[target], body=body, level_gy=0.95 * prescription_gy, voxel_cm3=voxel_cm3)
     row["conformity"], row["conformation_number"] = fit["conformity"], fit["conformation_number"]
     share = np.asarray(structures[target], dtype=np.float64)
     row["target_rbe"] = float(np.sum(effect * share) / np.sum(total * share))
@@ -355,7 +359,7 @@ def map_row(
     for structure, coverage in structures.items():
         if structure == target or not np.any(np.asarray(coverage) > 0.0):
             continue
-        organ = volume_histogram(effect, coverage, voxel_cm3=voxel_cm3)
+        organ = volume_histogram(judged, coverage, voxel_cm3=voxel_cm3)
         row[f"{structure}_mean_gy"] = organ.mean_gy
         row[f"{structure}_d2_gy"] = organ.dose_at_volume_gy(2.0)
     row["integral_dose_j"] = integral_dose_j(total, density_g_cm3, coverage=body, voxel_cm3=voxel_cm3)
@@ -363,6 +367,9 @@ def map_row(
     outside = outside_field_dose(
         total - neutron, neutron, body=body, level_gy=outside_level * prescription_gy, voxel_cm3=voxel_cm3
     )
-    row["outside_neutron_mean_gy"] = outside["mean_gy"]
+    everything = outside_field_dose(
+        total - neutron, total, body=body, level_gy=outside_level * prescription_gy, voxel_cm3=voxel_cm3
+    )
+    row["outside_mean_gy"], row["outside_neutron_mean_gy"] = everything["mean_gy"], outside["mean_gy"]
     row["outside_volume_cm3"] = outside["volume_cm3"]
     return row

@@ -160,9 +160,9 @@ def comparison_figure(
     figure = new_figure(PAGE_MM, 62.0 + map_mm + 66.0 + table_mm + 26.0, alt=alt)
     parts: Any = figure.subfigures(4, 1, height_ratios=(62.0, map_mm + 7.0, 66.0, table_mm + 5.0))
     depth, let = parts[0].subplots(1, 2)
-    _draw_depth(depth, results, target_interval_mm)
+    _draw_depth(depth, results, target_interval_mm, quantity=quantity)
     _draw_let(let, results, target_interval_mm)
-    letter_panel(depth, "a", "depth dose")
+    letter_panel(depth, "a", "along the axis of the first field")
     letter_panel(let, "b", "radiation quality")
     letters = iter("cdefghij")
     if mapped:
@@ -186,7 +186,7 @@ def comparison_figure(
             )
             letter_panel(axes, next(letters), str(particle_style(result.particle)["label"]))
         bar = parts[1].colorbar(ScalarMappable(norm, dose_colours()), ax=list(panels), shrink=0.9, pad=0.012, aspect=22)
-        bar.set_label(f"% of {prescribed_gy:.3g} {unit}")
+        bar.set_label(f"{quantity} (% of {prescribed_gy:.3g} {unit})")
     histogram_axes = parts[2].subplots()
     _draw_histograms(histogram_axes, results, target=target, order=list(grid.structures), label=f"{quantity} ({unit})")
     letter_panel(histogram_axes, next(letters), "volume histograms")
@@ -215,14 +215,20 @@ def _line(result: ParticleResult, index: int) -> dict[str, Any]:
     return style
 
 
-def _draw_depth(axes: Axes, results: Sequence[ParticleResult], target_interval_mm: tuple[float, float] | None) -> None:
+def _draw_depth(
+    axes: Axes,
+    results: Sequence[ParticleResult],
+    target_interval_mm: tuple[float, float] | None,
+    *,
+    quantity: str = "dose",
+) -> None:
     _shade(axes, target_interval_mm, label="target")
     for i, result in enumerate(results):
         axes.plot(result.depth_mm, result.dose_percent, **_line(result, i) | {"linewidth": 1.2})
     axes.set_xlim(0.0, max(float(np.max(result.depth_mm)) for result in results))
     axes.set_ylim(0.0, 1.08 * max(float(np.max(result.dose_percent)) for result in results))
     axes.set_xlabel("depth (mm)")
-    axes.set_ylabel("dose (% of the prescribed)")
+    axes.set_ylabel(f"{quantity} (% of prescribed)")
 
 
 def _draw_let(axes: Axes, results: Sequence[ParticleResult], target_interval_mm: tuple[float, float] | None) -> None:
@@ -241,7 +247,7 @@ def _draw_let(axes: Axes, results: Sequence[ParticleResult], target_interval_mm:
 
 
 def _shade(axes: Axes, interval_mm: tuple[float, float] | None, *, label: str = "_nolegend_") -> None:
-    if interval_mm is not None:
+    if interval_mm is not None and np.all(np.isfinite(interval_mm)):
         axes.axvspan(*interval_mm, color="#DDCC77", alpha=0.35, linewidth=0.0, label=label)
 
 

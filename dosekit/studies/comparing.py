@@ -16,9 +16,12 @@ from dosekit.studies.result import Result
 if TYPE_CHECKING:
     from dosekit.outputs.figures_comparison import ParticleResult
 
-__all__ = ["comparison_rows", "particle_results", "study_for"]
+__all__ = ["comparison_rows", "particle_results", "study_for", "target_on_axis_mm"]
 
 _STEP_MM = 1.0
+_SHORT_MM = 10.0
+_BEHIND_MM = 25.0
+_MOST_ORGANS = 4
 
 
 def study_for(study: Study, particle: str) -> Study:
@@ -77,6 +80,10 @@ def particle_results(results: Sequence[Result], base: Path) -> list[ParticleResu
     from dosekit.modulation.imported import read_curve
     from dosekit.outputs.figures_comparison import ParticleResult
 
+    main = results[0]
+    organs = [main.grid.structure_name(organ.structure) for organ in main.study.organ]
+    others = [] if organs else [name for name in main.histograms if main.grid.role(name) == "organ_at_risk"]
+    names = list(dict.fromkeys([main.target, *organs, *others[:_MOST_ORGANS]]))
     found = []
     for result in results:
         dose = result.study.goal.dose_gy
@@ -91,11 +98,10 @@ def particle_results(results: Sequence[Result], base: Path) -> list[ParticleResu
                 dose_percent=100.0 * total / dose,
                 let_kev_um=let,
                 dose=maps,
-                histograms={name: histogram.curve() for name, histogram in histograms.items()},
-                measures=_shown(comparison_rows(result)),
+                histograms={name: histograms[name].curve() for name in names if name in histograms},
+                measures=_shown(comparison_rows(result), names[1:]),
             )
         )
-    main = results[0]
     far = float(np.max(main.planned[0].aimed.far_mm))
     for said in main.study.comparison.curve:
         curve = read_curve(base / said.file, name=said.name)
@@ -110,6 +116,29 @@ def particle_results(results: Sequence[Result], base: Path) -> list[ParticleResu
             )
         )
     return found
+
+
+def target_on_axis_mm(result: Result) -> tuple[float, float]:
+    """Return where the axis of the first field enters and leaves the target.
+
+    Parameters
+    ----------
+    result : Result
+        A finished run.
+
+    Returns
+    -------
+    near_mm, far_mm : float
+        Distance from the surface, mm; no numbers where the axis misses the target.
+    """
+    from scipy.ndimage import map_coordinates
+
+    depth, index = _axis_points(result)
+    cover = map_coordinates(result.grid.structure(result.target).astype(np.float64), index, order=1, mode="nearest")
+    inside = np.flatnonzero(cover >= 0.5)
+    if not len(inside):
+        return float("nan"), float("nan")
+    return float(depth[inside[0]]), float(depth[inside[-1]])
 
 
 def comparison_rows(result: Result) -> dict[str, float]:
@@ -133,6 +162,7 @@ def comparison_rows(result: Result) -> dict[str, float]:
         result.planned[0].field.beam.particle,
         dose_gy={name: result.dose["dose"].values[place] for place, name in enumerate(COMPONENTS)},
         effect_gy=result.effect_dose_gy,
+        goal_gy=_goal_dose(result),
         structures=structures,
         target=result.target,
         body=grid.body().astype(np.float32),
@@ -147,29 +177,42 @@ def comparison_rows(result: Result) -> dict[str, float]:
     numbers["target_let_kev_um"] = float(np.sum(dose * result.dose["let"].values) / np.sum(dose))
     for plan in result.planned:
         numbers[f"momentum_{plan.field.name}_mev_c"] = plan.field.beam.momentum_mev_c
-    numbers["entrance_share"] = _entrance_share(result)
+    numbers["entrance_share"], numbers["exit_share"] = _ends_of_axis(result)
     numbers["star_share"] = result.summary.star_share
     return numbers
 
 
-def _shown(numbers: dict[str, float]) -> dict[str, float]:
+def _shown(numbers: dict[str, float], organs: Sequence[str]) -> dict[str, float]:
     """Return the numbers that the page has room for, named for a reader."""
     names = {
         "target_d95_share": ("target D95 (% of prescription)", 100.0),
         "target_d2_share": ("target D2 (% of prescription)", 100.0),
         "target_rbe": ("mean RBE in the target", 1.0),
         "target_let_kev_um": ("mean LET in the target (keV/µm)", 1.0),
-        "entrance_share": ("entrance dose, first field (% of target mean)", 100.0),
-        "integral_dose_j": ("integral dose in the body (J)", 1.0),
-        "outside_neutron_mean_gy": ("star-neutron dose outside the fields (mGy)", 1000.0),
-        "star_share": ("share of target dose from stars (%)", 100.0),
+        "entrance_share": ("absorbed dose over the first 10 mm, first field (% of target mean)", 100.0),
+        "exit_share": (f"absorbed dose {_BEHIND_MM:.0f} mm behind the target, first field (% of target mean)", 100.0),
+        "integral_dose_j": ("energy left in the body (J)", 1.0),
+        "outside_mean_gy": ("mean absorbed dose outside the fields (mGy)", 1000.0),
+        "outside_neutron_mean_gy": ("of this, star neutrons (mGy)", 1000.0),
+        "star_share": ("share of absorbed target dose from stars (%)", 100.0),
         "time_s": ("beam time (s)", 1.0),
     }
-    shown = {label: factor * numbers[name] for name, (label, factor) in names.items() if name in numbers}
-    organs = {name: value for name, value in numbers.items() if name.endswith("_mean_gy") and "neutron" not in name}
-    for name, value in list(organs.items())[:4]:
-        shown[f"{name.removesuffix('_mean_gy')}, mean (Gy)"] = value
+    shown = {
+        label: factor * numbers[name]
+        for name, (label, factor) in names.items()
+        if np.isfinite(numbers.get(name, np.nan))
+    }
+    for organ in organs[:_MOST_ORGANS]:
+        if f"{organ}_mean_gy" in numbers:
+            shown[f"{organ}, mean (Gy)"] = numbers[f"{organ}_mean_gy"]
     return shown
+
+
+def _goal_dose(result: Result) -> NDArray[np.float64]:
+    """Return the dose that the prescription is of, [z, y, x]."""
+    if result.study.goal.quantity == "effect":
+        return np.asarray(result.effect_dose_gy, dtype=np.float64)
+    return np.asarray(result.dose["dose"].sum("component").values, dtype=np.float64)
 
 
 def _as_dose(result: Result) -> Any:
@@ -205,18 +248,22 @@ def _along_axis(result: Result) -> tuple[NDArray[np.float64], NDArray[np.float64
     from scipy.ndimage import map_coordinates
 
     depth, index = _axis_points(result)
-    effective = result.study.goal.quantity == "effect"
-    total = result.effect_dose_gy if effective else result.dose["dose"].sum("component").values
-    dose = map_coordinates(np.asarray(total, dtype=np.float64), index, order=1, mode="nearest")
+    dose = map_coordinates(_goal_dose(result), index, order=1, mode="nearest")
     let = map_coordinates(result.dose["let"].values.astype(np.float64), index, order=1, mode="nearest")
     return depth, dose, let
 
 
-def _entrance_share(result: Result) -> float:
-    """Return the first field's own dose over the first 10 mm of its axis, over the target mean; physical dose."""
+def _ends_of_axis(result: Result) -> tuple[float, float]:
+    """Return the first field's own absorbed dose at both ends of its axis, over the target mean.
+
+    At the entrance it is the mean over the first 10 mm; behind the target that of 10 mm about `_BEHIND_MM` (no number
+    where the body ends before).
+    """
     from scipy.ndimage import map_coordinates
 
     depth, index = _axis_points(result)
     own = result.per_field[result.planned[0].field.name]["dose"].sum("component").values.astype(np.float64)
-    entrance = map_coordinates(own, index, order=1, mode="nearest")[depth <= 10.0]
-    return float(entrance.mean() / result.histograms[result.target].mean_gy)
+    dose = map_coordinates(own, index, order=1, mode="nearest") / result.histograms[result.target].mean_gy
+    _, far = target_on_axis_mm(result)
+    behind = np.abs(depth - far - _BEHIND_MM) <= _SHORT_MM / 2.0
+    return float(dose[depth <= _SHORT_MM].mean()), float(dose[behind].mean()) if behind.any() else float("nan")

@@ -147,7 +147,7 @@ def _beam_curve(result: Result, beam: Any) -> xr.Dataset:
 def _add_comparison(result: Result, add: Callable[[Any, str, str], None]) -> None:
     """Draw the page that sets particles side by side."""
     from dosekit.outputs.figures_comparison import comparison_figure
-    from dosekit.studies.comparing import particle_results
+    from dosekit.studies.comparing import particle_results, target_on_axis_mm
 
     effective = result.study.goal.quantity == "effect"
     results = [result, *result.others]
@@ -156,7 +156,8 @@ def _add_comparison(result: Result, add: Callable[[Any, str, str], None]) -> Non
         result.grid,
         target=result.target,
         prescribed_gy=result.study.goal.dose_gy,
-        quantity="effect-weighted dose" if effective else "dose",
+        target_interval_mm=target_on_axis_mm(result),
+        quantity="effect-weighted dose" if effective else "absorbed dose",
     )
     add(
         page,
