@@ -11,7 +11,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-__all__ = ["gather_planes", "spread_planes"]
+__all__ = ["gather_planes", "share_planes", "spread_planes"]
 
 
 @njit(nogil=True, error_model="numpy")
@@ -53,7 +53,7 @@ def _spread(source, used, taps_u, taps_v, radius, corner, stride, target, total)
     """
     nv, widths, _ = source.shape
     nu, rows, columns = source.shape[2] // stride, total.shape[1], total.shape[2] // stride
-    padded = np.empty((columns + nu + 2 * radius.max()) * stride)
+    padded = np.empty((columns + nu + 2 * taps_u.shape[1]) * stride)
     lines = np.empty((nv, columns * stride))
     for g in range(widths):
         first, last = nv, 0
@@ -87,7 +87,7 @@ def _gather(wanted, used, taps_u, taps_v, radius, corner, stride, target, source
     """Transpose of `_spread`: source[v, width, u x stride] from wanted[target, row, column x stride]."""
     nv, widths, _ = source.shape
     nu, rows, columns = source.shape[2] // stride, wanted.shape[1], wanted.shape[2] // stride
-    padded = np.empty((nu + 2 * radius.max()) * stride)
+    padded = np.empty((nu + 2 * taps_u.shape[1]) * stride)
     for g in range(widths):
         reach = radius[g]
         low, high = max(0, corner[1] - reach), min(columns, corner[1] + nu + reach)
@@ -105,86 +105,98 @@ def _gather(wanted, used, taps_u, taps_v, radius, corner, stride, target, source
             _along(padded, stride, taps_u[g], reach, source[r, g])
 
 
-@njit(nogil=True, error_model="numpy")
-def _share_rows(gathered, row, share_v, source, used):  # type: ignore[no-untyped-def]
-    """Share rows of rays out among coarse rows: source[coarse row, part, column] from gathered[v, column, part]."""
-    nv, columns, parts = gathered.shape
-    for n in range(source.shape[0]):
-        for b in range(parts):
-            used[n, b] = 0
-            for m in range(columns):
-                source[n, b, m] = 0.0
-    for r in range(nv):
-        n = row[r] - row[0]
-        for b in range(parts):
-            for m in range(columns):
-                value = gathered[r, m, b]
-                if value != 0.0:
-                    used[n, b] = 1
-                    used[n + 1, b] = 1
-                    source[n, b, m] += (1.0 - share_v[r]) * value
-                    source[n + 1, b, m] += share_v[r] * value
+@njit(nogil=True, error_model="numpy", cache=True)
+def share_planes(gathered, row, share_v, source, used, begin, end):  # type: ignore[no-untyped-def]
+    """Share rows of rays out among coarse rows.
+
+    ``source[plane, coarse row, part, column]`` is made from ``gathered[plane, v, column, part]``; ``used[plane, coarse row,
+    part]`` becomes whether there is anything.
+    """
+    nv, columns, parts = gathered.shape[1:]
+    for j in range(begin, end):
+        for n in range(source.shape[1]):
+            for b in range(parts):
+                used[j, n, b] = 0
+                for m in range(columns):
+                    source[j, n, b, m] = 0.0
+        for r in range(nv):
+            n = row[r] - row[0]
+            for b in range(parts):
+                for m in range(columns):
+                    value = gathered[j, r, m, b]
+                    if value != 0.0:
+                        used[j, n, b] = 1
+                        used[j, n + 1, b] = 1
+                        source[j, n, b, m] += (1.0 - share_v[r]) * value
+                        source[j, n + 1, b, m] += share_v[r] * value
 
 
 @njit(nogil=True, error_model="numpy", cache=True)
 def spread_planes(  # type: ignore[no-untyped-def]
-    source, used, gathered, kernel_of_plane, taps_u, taps_v, radius, corner, target, per_area, coarse_row, share_v,
-    broad_taps_u, broad_taps_v, broad_radius, coarse_corner, broad_target, coarse_per_area, fine, coarse, first_plane,
-    begin, end,
-):  # fmt: skip
-    """Spread planes of a block: ``fine[plane, v, u, (energy, stops)]`` and ``coarse[plane, v, u, component]``."""
-    _, nv, active, parts = gathered.shape
-    _, rows, columns, stride = fine.shape
-    _, coarse_rows, coarse_columns, components = coarse.shape
-    coarse_source = np.empty((coarse_row[nv - 1] - coarse_row[0] + 2, parts, active))
-    coarse_used = np.empty(coarse_source.shape[:2], dtype=np.uint8)
-    total = np.empty((1, rows, columns * stride))
-    coarse_total = np.empty((components, coarse_rows, coarse_columns))
+    source,
+    used,
+    kernel_of_plane,
+    taps_u,
+    taps_v,
+    radius,
+    corner,
+    target,
+    per_area,
+    stride,
+    first_plane,
+    out,
+    begin,
+    end,
+):
+    """Spread planes of a block: out[plane, v, u, part] from source[plane, v, width, u x stride].
+
+    With a stride of one every width adds to one part of the result; otherwise the values that stand beside each other
+    are the parts.
+    """
+    _, rows, columns, parts = out.shape
+    targets = parts // stride
+    total = np.empty((targets, rows, columns * stride))
     for m in range(begin, end):
         j = first_plane + m
         n = kernel_of_plane[j]
-        total[:] = 0.0
+        for t in range(targets):
+            for row in range(rows):
+                for x in range(columns * stride):
+                    total[t, row, x] = 0.0
         _spread(source[m], used[m], taps_u[n], taps_v[n], radius[n], corner, stride, target, total)
         for row in range(rows):
             for c in range(columns):
-                for part in range(stride):
-                    fine[j, row, c, part] = total[0, row, c * stride + part] * per_area[j]
-        _share_rows(gathered[m], coarse_row, share_v, coarse_source, coarse_used)
-        coarse_total[:] = 0.0
-        _spread(
-            coarse_source, coarse_used, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_corner, 1,
-            broad_target, coarse_total,
-        )  # fmt: skip
-        for row in range(coarse_rows):
-            for c in range(coarse_columns):
-                for part in range(components):
-                    coarse[j, row, c, part] = coarse_total[part, row, c] * coarse_per_area[j]
+                for part in range(parts):
+                    t, k = part // stride, part % stride
+                    out[j, row, c, part] = total[t, row, c * stride + k] * per_area[j]
 
 
 @njit(nogil=True, error_model="numpy", cache=True)
 def gather_planes(  # type: ignore[no-untyped-def]
-    source, used, coarse_source, kernel_of_plane, taps_u, taps_v, radius, corner, target, per_area, broad_taps_u,
-    broad_taps_v, broad_radius, coarse_corner, broad_target, coarse_per_area, fine, coarse, first_plane, begin, end,
-):  # fmt: skip
-    """Transpose of `spread_planes`, up to the coarse rows: coarse_source[plane, coarse row, part, coarse column]."""
-    _, rows, columns, stride = fine.shape
-    _, coarse_rows, coarse_columns, components = coarse.shape
-    every = np.ones(coarse_source.shape[1:3], dtype=np.uint8)
-    wanted = np.empty((1, rows, columns * stride))
-    coarse_wanted = np.empty((components, coarse_rows, coarse_columns))
+    source,
+    used,
+    kernel_of_plane,
+    taps_u,
+    taps_v,
+    radius,
+    corner,
+    target,
+    per_area,
+    stride,
+    first_plane,
+    given,
+    begin,
+    end,
+):
+    """Transpose of `spread_planes`, for the rows and widths that are used: source from given[plane, v, u, part]."""
+    _, rows, columns, parts = given.shape
+    wanted = np.empty((parts // stride, rows, columns * stride))
     for m in range(begin, end):
         j = first_plane + m
         n = kernel_of_plane[j]
         for row in range(rows):
             for c in range(columns):
-                for part in range(stride):
-                    wanted[0, row, c * stride + part] = fine[j, row, c, part] * per_area[j]
-        _gather(wanted, used[j], taps_u[n], taps_v[n], radius[n], corner, stride, target, source[m])
-        for row in range(coarse_rows):
-            for c in range(coarse_columns):
-                for part in range(components):
-                    coarse_wanted[part, row, c] = coarse[j, row, c, part] * coarse_per_area[j]
-        _gather(
-            coarse_wanted, every, broad_taps_u[n], broad_taps_v[n], broad_radius[n], coarse_corner, 1, broad_target,
-            coarse_source[m],
-        )  # fmt: skip
+                for part in range(parts):
+                    t, k = part // stride, part % stride
+                    wanted[t, row, c * stride + k] = given[j, row, c, part] * per_area[j]
+        _gather(wanted, used[m], taps_u[n], taps_v[n], radius[n], corner, stride, target, source[m])

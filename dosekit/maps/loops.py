@@ -201,13 +201,13 @@ def field_bytes(
     Returns
     -------
     float
-        Bytes: 8 [2 planes rays + 4 rays steps + P (2 rungs rays + parts gathered) + planes (2 nodes + 6 coarse)
-        + T (4 nodes + 7 coarse + parts gathered)], with P planes at once on T threads.
+        Bytes: 8 [2 planes rays + 4 rays steps + 2 P (rungs rays + parts gathered) + planes (2 nodes + 6 coarse)
+        + T (4 nodes + 7 coarse)], with P planes at once on T threads.
     """
     return 8.0 * (
         2.0 * planes * rays
         + 4.0 * rays * steps
-        + PLANES_AT_ONCE * (2.0 * rungs * rays + parts * gathered)
+        + 2.0 * PLANES_AT_ONCE * (rungs * rays + parts * gathered)
         + planes * (2.0 * nodes + len(TARGETS) * coarse_nodes)
-        + threads * (4.0 * nodes + (len(TARGETS) + 1.0) * coarse_nodes + parts * gathered)
+        + threads * (4.0 * nodes + (len(TARGETS) + 1.0) * coarse_nodes)
     )

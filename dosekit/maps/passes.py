@@ -126,12 +126,16 @@ class FieldPencils:
 
         work = self.loops
         fine, coarse = self._empty_maps()
-        shared = (work.row, work.share_v)
+        lines, across = work.coarse_size
+        shared = np.empty((PLANES_AT_ONCE, lines, work.broad.shape[2], across))
+        some = np.empty(shared.shape[:3], dtype=np.uint8)
         core, broad = work.core_spreads.arrays(), work.broad_spreads.arrays()
         with Threads() as threads:
-            for first, last, block in self._blocks(threads, self.fluence(weights)):
-                arguments = (*block, work.kernel_of_plane, *core, *shared, *broad, fine, coarse, first)
-                threads.run(kernels_spread.spread_planes, arguments, last - first)
+            for first, last, (source, used, gathered) in self._blocks(threads, self.fluence(weights)):
+                count, which = last - first, work.kernel_of_plane
+                threads.run(kernels_spread.spread_planes, (source, used, which, *core, 2, first, fine), count)
+                threads.run(kernels_spread.share_planes, (gathered, work.row, work.share_v, shared, some), count)
+                threads.run(kernels_spread.spread_planes, (shared, some, which, *broad, 1, first, coarse), count)
         return fine, coarse
 
     def weights_of(self, fine: NDArray[np.float64], coarse: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -156,16 +160,19 @@ class FieldPencils:
         fluence = np.zeros((rows, columns, steps))
         state, source = work.moments(), work.room()
         lines, across = work.coarse_size
-        coarse_source = np.empty((PLANES_AT_ONCE, lines, work.broad.shape[2], across))
+        shared = np.empty((PLANES_AT_ONCE, lines, work.broad.shape[2], across))
+        every = np.ones(shared.shape[:3], dtype=np.uint8)
         core, broad = work.core_spreads.arrays(), work.broad_spreads.arrays()
         places = (work.column, work.share_u, work.row, work.share_v)
         weights = np.zeros((spots, steps))
         with Threads() as threads:
             for first in range(0, planes, PLANES_AT_ONCE):
                 last = min(first + PLANES_AT_ONCE, planes)
-                arguments = (source, used, coarse_source, work.kernel_of_plane, *core, *broad, fine, coarse, first)
-                threads.run(kernels_spread.gather_planes, arguments, last - first)
-                read = (*work.steps(state), work.broad_by_part, *places, source, coarse_source, fluence, first, last)
+                count, which = last - first, work.kernel_of_plane
+                block = (source, used[first:last], which, *core, 2, first, fine)
+                threads.run(kernels_spread.gather_planes, block, count)
+                threads.run(kernels_spread.gather_planes, (shared, every, which, *broad, 1, first, coarse), count)
+                read = (*work.steps(state), work.broad_by_part, *places, source, shared, fluence, first, last)
                 threads.run(kernels_steps.read_rows, read, rows)
             threads.run(kernels_steps.lay_spots_transposed, (fluence, *self.profiles, weights), spots)
         return weights * PARTICLES_PER_UNIT
@@ -247,13 +254,15 @@ class FieldPencils:
         if runs_straight(self.planes):
             from dosekit.maps import kernels_straight
 
-            reading = straight_reading(self.matter, self.planes, (self.fine, self.coarse), (fine, coarse))
-            shared: tuple[Any, ...] = (
-                runs.first, runs.column, runs.count, np.array(self.matter.shape), fine.reshape(-1), coarse.reshape(-1),
-                *reading, *self._matter(), rows, factor, out,
-            )  # fmt: skip
+            core = rows[[TARGETS.index("primary"), TARGETS.index("stops")]]
             with Threads() as threads:
-                threads.run(kernels_straight.deposit_straight, shared, len(runs.first))
+                for lattice, array, wanted in ((self.fine, fine, core), (self.coarse, coarse, rows)):
+                    reading = straight_reading(self.matter, self.planes, self.fine, lattice, array)
+                    shared: tuple[Any, ...] = (
+                        runs.first, runs.column, runs.count, np.array(self.matter.shape), array.reshape(-1), *reading,
+                        *self._matter(), wanted, factor, out,
+                    )  # fmt: skip
+                    threads.run(kernels_straight.deposit_straight, shared, len(runs.first))
             return
         from dosekit.maps import kernels_voxels
 

@@ -38,12 +38,9 @@ def runs_straight(planes: Planes) -> bool:
 
 
 def straight_reading(
-    matter: Matter,
-    planes: Planes,
-    lattices: tuple[Lattice, Lattice],
-    maps: tuple[NDArray[np.float64], NDArray[np.float64]],
+    matter: Matter, planes: Planes, fine: Lattice, lattice: Lattice, array: NDArray[np.float64]
 ) -> tuple[NDArray[Any], ...]:
-    """Return what the straight kernel needs to know of the nodes that voxels read.
+    """Return what the straight kernel needs to know of the nodes of a map that voxels read.
 
     Parameters
     ----------
@@ -51,45 +48,52 @@ def straight_reading(
         The volume.
     planes : Planes
         Planes of the field.
-    lattices : tuple of Lattice
-        The fine and the coarse lattice.
-    maps : tuple of ndarray
-        The fine and the coarse map, shape (w, v, u, parts).
+    fine, lattice : Lattice
+        The fine lattice of the field, and the one of the map; if it is the same, it is read by splines.
+    array : ndarray
+        The map, shape (w, v, u, parts).
 
     Returns
     -------
     stride, count, first, share : ndarray
         See :func:`dosekit.maps.kernels_straight.deposit_straight`.
     """
-    _, start, turn, _, sub, (first_plane, per_mm), nodes = places_of_points(matter, planes, lattices[0])
-    matrices: dict[tuple[int, int], NDArray[np.float64]] = {}
-    stride, count = np.zeros((2, 3), dtype=np.int64), np.zeros((2, 3), dtype=np.int64)
+    _, start, turn, _, sub, (first_plane, per_mm), nodes = places_of_points(matter, planes, fine)
+    matrices = []
+    stride, count = np.zeros(3, dtype=np.int64), np.zeros(3, dtype=np.int64)
     for axis in range(3):  # z, y, x
         a = 2 - axis
         b = int(np.argmax(np.abs(turn[:, a])))  # u, v or w of the beam
         points = np.arange(matter.shape[axis])[:, None] + (np.arange(sub[a]) + 0.5) / sub[a] - 0.5
         position = start[b] + turn[b, a] * points
-        for n, (lattice, array) in enumerate(zip(lattices, maps, strict=True)):
-            along = 2 - b  # axis of the map
-            stride[n, axis] = int(np.prod(array.shape[along + 1 :]))
-            count[n, axis] = array.shape[along]
-            if b == 2:
-                lit = np.array([plane.any() for plane in array])
-                matrix = _linear((position - first_plane) * per_mm, len(lit))
-                matrix[~(matrix[:, lit] > 0.0).any(axis=1)] = 0.0  # nothing to read there
-            else:
-                place = (position - (lattice.u_mm, lattice.v_mm)[b][0]) / lattice.spacing_mm
-                matrix = _linear(place, count[n, axis]) if n else _spline(place, count[n, axis], nodes)
-            matrices[n, axis] = matrix
-    widest = max(int((matrix != 0.0).sum(axis=1).max()) for matrix in matrices.values())
-    widest = min(widest, int(count.min()))
-    first = np.zeros((2, 3, max(matter.shape)), dtype=np.int64)
+        along = 2 - b  # axis of the map
+        stride[axis] = int(np.prod(array.shape[along + 1 :]))
+        count[axis] = array.shape[along]
+        if b == 2:
+            lit = np.array([plane.any() for plane in array])
+            matrix = _linear((position - first_plane) * per_mm, len(lit))
+            matrix[~(matrix[:, lit] > 0.0).any(axis=1)] = 0.0  # nothing to read there
+        else:
+            place = (position - (lattice.u_mm, lattice.v_mm)[b][0]) / lattice.spacing_mm
+            matrix = _spline(place, count[axis], nodes) if lattice is fine else _linear(place, count[axis])
+        matrices.append(matrix)
+    widest = max(_width(matrix) for matrix in matrices)
+    first = np.zeros((3, max(matter.shape)), dtype=np.int64)
     share = np.zeros((*first.shape, widest))
-    for (n, axis), matrix in matrices.items():
-        begin = np.minimum((matrix != 0.0).argmax(axis=1), matrix.shape[1] - widest)
-        first[n, axis, : len(begin)] = begin
-        share[n, axis, : len(begin)] = np.take_along_axis(matrix, begin[:, None] + np.arange(widest), axis=1)
+    for axis, matrix in enumerate(matrices):
+        begin = (matrix != 0.0).argmax(axis=1)
+        places = begin[:, None] + np.arange(widest)
+        first[axis, : len(begin)] = begin
+        inside = np.minimum(places, count[axis] - 1)
+        share[axis, : len(begin)] = np.where(places < count[axis], np.take_along_axis(matrix, inside, axis=1), 0.0)
     return stride, count, first, share
+
+
+def _width(matrix: NDArray[np.float64]) -> int:
+    """Return how many nodes a voxel reads at most, from the first to the last."""
+    some = matrix != 0.0
+    last = np.where(some, np.arange(1, matrix.shape[1] + 1), 0).max(axis=1)
+    return max(int((last - some.argmax(axis=1)).max()), 1)
 
 
 def _linear(place: NDArray[np.float64], count: int) -> NDArray[np.float64]:
