@@ -109,8 +109,8 @@ def _gather(wanted, used, taps_u, taps_v, radius, corner, stride, target, source
 def share_planes(gathered, row, share_v, source, used, begin, end):  # type: ignore[no-untyped-def]
     """Share rows of rays out among coarse rows.
 
-    ``source[plane, coarse row, part, column]`` is made from ``gathered[plane, v, column, part]``; ``used[plane, coarse row,
-    part]`` becomes whether there is anything.
+    ``source[plane, coarse row, part, column]`` is made from ``gathered[plane, v, column, part]``, and
+    ``used[plane, coarse row, part]`` becomes whether there is anything.
     """
     nv, columns, parts = gathered.shape[1:]
     for j in range(begin, end):
@@ -159,6 +159,12 @@ def spread_planes(  # type: ignore[no-untyped-def]
     for m in range(begin, end):
         j = first_plane + m
         n = kernel_of_plane[j]
+        some = False
+        for r in range(used.shape[1]):
+            for g in range(used.shape[2]):
+                some = some or used[m, r, g] != 0
+        if not some:  # the result is zero as it is
+            continue
         for t in range(targets):
             for row in range(rows):
                 for x in range(columns * stride):

@@ -330,29 +330,36 @@ def trace(planes: Planes, matter: Matter, u_mm: NDArray[np.float64], v_mm: NDArr
     frame = planes.frame
     inverse = 0.0 if frame.source_distance_mm is None else 1.0 / frame.source_distance_mm
     shape = (len(planes.w_mm), len(v_mm), len(u_mm))
-    step = float(planes.w_mm[1] - planes.w_mm[0])
-    samples = int(np.ceil(SAMPLES_PER_VOXEL * step / float(matter.spacing_mm.min()) - 1e-9))
+    spacing = float(planes.w_mm[1] - planes.w_mm[0])
+    samples = int(np.ceil(SAMPLES_PER_VOXEL * spacing / float(matter.spacing_mm.min()) - 1e-9))
+    u_axis, v_axis, direction = frame.rotation
+    across = u_mm[None, :, None] * u_axis + v_mm[:, None, None] * v_axis
+    start = (np.asarray(frame.isocentre_mm) + across - matter.origin_mm) / matter.spacing_mm
+    slope = direction + across * inverse
+    length = np.sqrt((slope**2).sum(axis=2))
+    step = slope / matter.spacing_mm
+    enter, leave = _inside(start, step, np.array(matter.shape[::-1]))
     wet, scatter = np.zeros(shape), np.zeros(shape)
-    shared = (
-        matter.rsp,
-        matter.scatter,
-        matter.origin_mm,
-        matter.spacing_mm,
-        np.array(frame.isocentre_mm),
-        frame.rotation,
-        inverse,
-        u_mm,
-        v_mm,
-        planes.w_mm,
-        planes.lead_mm,
-        samples,
-        wet,
-        scatter,
-    )
+    ends = np.concatenate([[planes.w_mm[0] - planes.lead_mm], planes.w_mm])
+    shared = (matter.rsp, matter.scatter, start, step, length, enter, leave, ends, samples, wet, scatter)
     with Threads() as threads:
         threads.run(kernels_rays.trace_rays, shared, len(v_mm))
     slant = np.sqrt(1.0 + (u_mm[None, :] ** 2 + v_mm[:, None] ** 2) * inverse**2)
     return RayTrace(u_mm=u_mm, v_mm=v_mm, wet_mm=wet, scatter=scatter, slant=slant)
+
+
+def _inside(
+    start: NDArray[np.float64], step: NDArray[np.float64], size: NDArray[np.int64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return where rays (index units, [v, u, axis]) enter and leave a volume; they leave first when they miss it."""
+    low, high = -0.5 - start, size - 0.5 - start
+    with np.errstate(divide="ignore", invalid="ignore"):
+        one, other = low / step, high / step
+    along = step != 0.0
+    outside = ~along & ((low > 0.0) | (high < 0.0))
+    enter = np.where(along, np.minimum(one, other), -np.inf).max(axis=2)
+    leave = np.where(along, np.maximum(one, other), np.where(outside, -np.inf, np.inf)).min(axis=2)
+    return enter, leave
 
 
 def _parallel_axis(axis: NDArray[np.float64]) -> int | None:
