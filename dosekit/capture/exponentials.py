@@ -35,19 +35,32 @@ from dosekit.capture.sharing import capture_shares
 from dosekit.capture.spectra import Spectrum
 from dosekit.errors import InputError
 
-__all__ = ["RATES_PER_MM", "ConeKernel", "cone_kernel", "material_kernel", "neutron_scale", "proton_kernel"]
+__all__ = [
+    "RATES_PER_MM",
+    "SMOOTH_MODES",
+    "ConeKernel",
+    "cone_kernel",
+    "material_kernel",
+    "neutron_scale",
+    "proton_kernel",
+]
 
 RATES_PER_MM: dict[str, tuple[float, ...]] = {
-    "star_light": (0.1492, 0.1719, 0.1986, 0.2344, 0.3055, 0.3666, 2.0391),
+    "star_light": (0.1492, 0.1719, 0.1986, 0.2344, 0.3055, 0.3666, 0.6, 1.1, 2.5),
     "star_heavy": (),
     "star_neutron": (0.002, 0.0075, 0.012, 0.028, 0.26),
     "star_photon": (0.0012, 0.0031, 0.0075, 0.02, 0.23),
 }
 """Rates of the exponentials, 1/mm of scaled distance. Helium ions and recoils stay where they are."""
 
+SMOOTH_MODES = 6
+"""The first so many modes of light products sum to a kernel that begins at 0 like distance squared: as energy per
+volume it has no spike at the stop, so that it may be carried on a coarser lattice than the others."""
+
 _LIGHT_EDGES_MM = np.concatenate([[0.0, 0.25, 0.5, 0.75], np.arange(1.0, 10.0), np.arange(10.0, 90.0, 2.0)])
 _FLOOR = {"star_light": 0.001, "star_neutron": 0.02, "star_photon": 0.02}
 _RIDGE = 1e-3
+_SMOOTH_RATE_PER_MM = 0.2
 _HYDROGEN, _OXYGEN, _POWER = 5.68, 0.41, 0.27
 
 
@@ -137,16 +150,21 @@ def _fitted(component: str, yields: str, symbol: str) -> ConeKernel:
     edges = EDGES_MM[EDGES_MM <= 1000.0]
     # photons leave all they have in an endless medium; neutrons lose a part to binding
     deposited = float(profile.beyond_mev[0] - (profile.beyond_mev[-1] if component == "star_neutron" else 0.0))
-    energies = _least_squares(profile, rates, edges, _FLOOR[component], deposited, instant=False)
+    energies = _least_squares(profile, rates, edges, _FLOOR[component], deposited)
     return ConeKernel(energies, rates, profile.local_mev)
 
 
 def _light(profile: Profile, rates: NDArray[np.float64]) -> ConeKernel:
-    """Fit charged products: what is stopped within microns is local, and the sum is exact."""
+    """Fit charged products: what is stopped within microns is local, the sum is exact, and the first modes are
+    smooth at the stop.
+    """
     total, floor = float(profile.beyond_mev[0]), _FLOOR["star_light"]
-    energies = _least_squares(profile, rates, _LIGHT_EDGES_MM, floor, total, instant=True)
+    smooth = np.zeros((2, len(rates)))
+    for row, power in enumerate((1, 2)):
+        smooth[row, :SMOOTH_MODES] = (rates[:SMOOTH_MODES] / _SMOOTH_RATE_PER_MM) ** power
+    energies = _least_squares(profile, rates, _LIGHT_EDGES_MM, floor, total, none=smooth, instant=True)
     if energies[-1] < 0.0:
-        energies = np.append(_least_squares(profile, rates, _LIGHT_EDGES_MM, floor, total, instant=False), 0.0)
+        energies = np.append(_least_squares(profile, rates, _LIGHT_EDGES_MM, floor, total, none=smooth), 0.0)
     energies *= total / energies.sum()
     return ConeKernel(energies[:-1], rates, float(energies[-1]) + profile.local_mev)
 
@@ -158,9 +176,12 @@ def _least_squares(
     floor: float,
     deposited: float,
     *,
-    instant: bool,
+    none: NDArray[np.float64] | None = None,
+    instant: bool = False,
 ) -> NDArray[np.float64]:
-    """Fit mode energies to the shells of a profile; ``instant`` adds a mode that lies in the first shell."""
+    """Fit mode energies to the shells of a profile; ``instant`` adds a mode that lies in the first shell, and the
+    sums in the rows of ``none`` are held at 0.
+    """
     wanted = -np.diff(np.interp(edges, profile.radius_mm, profile.beyond_mev))
     modes = -np.diff(np.exp(-np.outer(edges, rates)), axis=0)
     if instant:
@@ -172,6 +193,11 @@ def _least_squares(
     right = [wanted * weight, np.zeros(modes.shape[1])]
     rows.append(np.full((1, modes.shape[1]), 1e3 / total))
     right.append(np.array([1e3 * deposited / total]))
+    if none is not None:
+        held = np.zeros((len(none), modes.shape[1]))
+        held[:, : len(rates)] = 1e3 / total * none
+        rows.append(held)
+        right.append(np.zeros(len(none)))
     # the slowest mode outlives all others and must not be negative
     least = np.full(modes.shape[1], -np.inf)
     least[0] = 0.0

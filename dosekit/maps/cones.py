@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 
 from dosekit.errors import InputError
 from dosekit.maps.cones_directions import direction_set
+from dosekit.maps.cones_layouts import LAST, add_turned, held_box, own, padded, padding, turn_last, unpadded
 from dosekit.maps.cones_threads import Threads
 
 __all__ = ["FAINT", "WIDENING_MM", "Cones"]
@@ -47,6 +48,8 @@ class _Line:
 _AXES = ((0, 1, 2), (1, 0, 2), (2, 0, 1))
 """Array axes put first, second and third when z, y or x is the main axis."""
 
+_ALIKE = 1e-9
+
 
 @dataclass(frozen=True)
 class Cones:
@@ -67,8 +70,10 @@ class Cones:
     directions: int = 50
     bias: Callable[[NDArray[np.float64]], NDArray[np.float64]] | None = None
 
-    def lines(self) -> tuple[list[_Line], list[_Line], list[_Line]]:
-        """Return the directions sorted by main array axis (z, y, x); those between axes are shared evenly."""
+    def lines(self, *, widening: bool = False) -> tuple[list[_Line], list[_Line], list[_Line]]:
+        """Return the directions sorted by main array axis (z, y, x); those between axes are shared evenly, unless
+        their rays are the same from each (not so if ``widening``).
+        """
         units, weights = direction_set(self.directions)
         if self.bias is not None:
             weights = weights * np.asarray(self.bias(units), dtype=float)
@@ -82,7 +87,9 @@ class Cones:
             if weight == 0.0:
                 continue
             steps = np.abs(unit) / spacing
-            main = [axis for axis in range(3) if steps[axis] > steps.max() * (1.0 - 1e-9)]
+            main = [axis for axis in range(3) if steps[axis] > steps.max() * (1.0 - _ALIKE)]
+            if not widening and all(min(step, steps.max() - step) < _ALIKE * steps.max() for step in steps):
+                main = main[:1]  # whole steps from plane to plane: the same rays from any of these axes
             for axis in main:
                 k, j, i = _AXES[axis]
                 sorted_lines[axis].append(
@@ -126,13 +133,13 @@ class Cones:
         total = np.zeros(scale.shape)
         with Threads() as pool:
             for order, batch in self._batches():
-                turned = _own(scale.transpose(order), float)
-                sources = np.ascontiguousarray(
-                    np.asarray(sources_mev, dtype=float).transpose(0, *(a + 1 for a in order))
-                )
+                turned = padded(scale, order)
+                sources = np.stack([padded(mode, order) for mode in sources_mev])
                 out = np.zeros((len(batch), *turned.shape))
-                pool.run(sweep_widening, (sources, turned, rates, *self._widening(batch, order), out), len(batch))
-                total += out.sum(axis=0).transpose(np.argsort(order))
+                common = (sources, turned, *padding(scale, order), rates, *self._widening(batch, order))
+                pool.run(sweep_widening, (*common, out), len(batch))
+                summed = sum((line.weight * part for line, part in zip(batch, out, strict=True)), start=0.0 * out[0])
+                total += unpadded(summed, scale, order)
         return total
 
     def gather_widening(
@@ -158,13 +165,12 @@ class Cones:
         total = np.zeros((len(rates), *scale.shape))
         with Threads() as pool:
             for order, batch in self._batches():
-                turned = _own(scale.transpose(order), float)
-                asked = _own(wanted.transpose(order), float)
+                turned, asked = padded(scale, order), padded(wanted, order)
                 out = np.zeros((len(batch), len(rates), *turned.shape))
-                pool.run(
-                    sweep_widening_transposed, (asked, turned, rates, *self._widening(batch, order), out), len(batch)
-                )
-                total += out.sum(axis=0).transpose(0, *(np.argsort(order) + 1))
+                common = (asked, turned, *padding(scale, order), rates, *self._widening(batch, order))
+                pool.run(sweep_widening_transposed, (*common, out), len(batch))
+                for line, part in zip(batch, out, strict=True):
+                    total += line.weight * np.stack([unpadded(values, scale, order) for values in part])
         return total
 
     def _batches(self) -> list[tuple[tuple[int, int, int], list[_Line]]]:
@@ -173,12 +179,12 @@ class Cones:
         """
         return [
             (_AXES[axis], lines[start : start + _BATCH])
-            for axis, lines in enumerate(self.lines())
+            for axis, lines in enumerate(self.lines(widening=True))
             for start in range(0, len(lines), _BATCH)
         ]
 
     def _widening(self, batch: list[_Line], order: tuple[int, int, int]) -> tuple[NDArray[Any], ...]:
-        """Return taps, offsets, signs, steps and weights of a batch."""
+        """Return taps, offsets, signs and steps of a batch."""
         spacing = np.array(self.spacing_mm)[::-1][list(order)]
         taps: list[list[NDArray[np.float64]]] = [[], []]
         starts: list[list[int]] = [[], []]
@@ -199,7 +205,6 @@ class Cones:
             np.array(starts[1]),
             np.array([line.down for line in batch]),
             np.array([line.step_mm for line in batch]),
-            np.array([line.weight for line in batch]),
         )
 
     def carry(
@@ -237,32 +242,46 @@ class Cones:
         from dosekit.maps.kernels_stars import source_ranges, sweep
 
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
+        by_stops = sources_mev is None
+        if sources_mev is None:
+            assert stops is not None
+            assert material is not None
+            assert energies_mev is not None
+            table = np.ascontiguousarray(energies_mev, dtype=float)
+            shining, kinds = own(stops, float), own(material)
+            brightest = np.abs(table).max(axis=0) * max(float(shining.max()), -float(shining.min()))
+            sources = np.empty((0, 1, 1, 1))
+        else:
+            table, kinds = np.zeros((1, 1)), np.zeros((1, 1, 1), np.uint16)
+            sources = own(sources_mev, float)
+            shining = np.abs(sources).sum(axis=0)
+            brightest = np.abs(sources).reshape(len(rates), -1).max(axis=1)
+        ranges = source_ranges(shining)
+        held = held_box(*ranges)
         total = np.zeros(scale.shape)
         with Threads() as pool:
             for axis, lines in enumerate(self.lines()):
                 if not lines:
                     continue
-                order = _AXES[axis]
-                turned = _own(scale.transpose(order))
-                if sources_mev is None:
-                    assert stops is not None
-                    assert material is not None
-                    assert energies_mev is not None
-                    emitted = _own(stops.transpose(order), float)
-                    index = _own(material.transpose(order))
-                    table = np.ascontiguousarray(energies_mev, dtype=float)
-                    sources = np.empty((0, 1, 1, 1))
+                turned, (first, last) = turn_last(pool, scale, axis), ranges
+                emitted, index, modes = shining, kinds, sources
+                if axis == LAST:
+                    emitted = turn_last(pool, shining, axis, box=held)
                     first, last = source_ranges(emitted)
-                else:
-                    sources = np.ascontiguousarray(sources_mev.transpose(0, *(a + 1 for a in order)))
-                    emitted, index, table = np.empty((1, 1, 1)), np.zeros((1, 1, 1), np.uint16), np.zeros((1, 1))
-                    first, last = source_ranges(np.abs(sources).sum(axis=0))
-                out = np.zeros(turned.shape)
+                    if by_stops:
+                        index = turn_last(pool, kinds, axis, box=held)
+                    else:
+                        modes = np.stack([turn_last(pool, mode, axis, box=held) for mode in sources])
+                if not by_stops:
+                    emitted = np.empty((1, 1, 1))
+                out = np.zeros(turned.shape) if axis == LAST else total
                 for line in lines:
-                    common = (emitted, index, table, sources, turned, rates, line.slope_j, line.slope_i, line.down)
-                    rest = (line.step_mm, line.weight, first, last, FAINT, out)
-                    pool.run(sweep, (*common, *rest), _rows(line, turned.shape))
-                total += out.transpose(np.argsort(order))
+                    common = (emitted, index, table, modes, turned, rates, line.slope_j, line.slope_i, line.down)
+                    faint = FAINT * line.weight * brightest
+                    rest = (line.step_mm, line.weight, first, last, faint, axis == 1, out)
+                    pool.run(sweep, (*common, *rest), _rows(line, scale.shape, axis))
+                if axis == LAST:
+                    pool.run(add_turned, (out, total), len(total))
         return total
 
     def gather(
@@ -295,39 +314,29 @@ class Cones:
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         by_mode = energies_mev is None
         total = np.zeros((len(rates), *scale.shape)) if by_mode else np.zeros(scale.shape)
+        table = np.zeros((1, len(rates))) if energies_mev is None else np.ascontiguousarray(energies_mev, dtype=float)
         with Threads() as pool:
             for axis, lines in enumerate(self.lines()):
                 if not lines:
                     continue
-                order = _AXES[axis]
-                turned = _own(scale.transpose(order))
-                asked = _own(wanted.transpose(order), float)
+                turned, asked = turn_last(pool, scale, axis), turn_last(pool, wanted, axis, float)
                 first, last = source_ranges(asked)
-                if by_mode:
-                    index, table = np.zeros((1, 1, 1), np.uint16), np.zeros((1, len(rates)))
-                    out, out_modes = np.zeros((1, 1, 1)), np.zeros((len(rates), *turned.shape))
-                else:
-                    assert material is not None
-                    assert energies_mev is not None
-                    index = _own(material.transpose(order))
-                    table = np.ascontiguousarray(energies_mev, dtype=float)
-                    out, out_modes = np.zeros(turned.shape), np.zeros((1, 1, 1, 1))
+                index = np.zeros((1, 1, 1), np.uint16) if by_mode else turn_last(pool, np.asarray(material), axis)
+                goal = np.zeros((*total.shape[:-3], *turned.shape)) if axis == LAST else total
+                out, out_modes = (np.zeros((1, 1, 1)), goal) if by_mode else (goal, np.zeros((1, 1, 1, 1)))
                 for line in lines:
                     common = (asked, index, table, by_mode, turned, rates, line.slope_j, line.slope_i, line.down)
-                    rest = (line.step_mm, line.weight, first, last, out, out_modes)
-                    pool.run(sweep_transposed, (*common, *rest), _rows(line, turned.shape))
-                back = np.argsort(order)
-                total += out_modes.transpose(0, *(back + 1)) if by_mode else out.transpose(back)
+                    rest = (line.step_mm, line.weight, first, last, axis == 1, out, out_modes)
+                    pool.run(sweep_transposed, (*common, *rest), _rows(line, scale.shape, axis))
+                if axis == LAST:
+                    for turned_back, part in zip(goal, total, strict=True) if by_mode else ((goal, total),):
+                        pool.run(add_turned, (turned_back, part), len(part))
         return total
 
 
-def _rows(line: _Line, shape: tuple[int, ...]) -> int:
-    """Return how many rows of rays cross a volume."""
-    nk, nj, _ = shape
+def _rows(line: _Line, shape: tuple[int, ...], axis: int) -> int:
+    """Return how many rows of rays cross a volume along one main axis."""
+    order = _AXES[axis]
+    nk, nj = shape[order[0]], shape[order[1]]
     ends = [int(np.rint(line.slope_j * (k - nk // 2))) for k in (0, nk - 1)]
     return nj + max(ends) - min(ends)
-
-
-def _own(array: NDArray[Any], dtype: Any = None) -> NDArray[Any]:
-    """Return a contiguous, writable array, so that kernels meet one type and are compiled once."""
-    return np.require(array, dtype, ["C", "W"])

@@ -89,6 +89,7 @@ def sweep(  # type: ignore[no-untyped-def]
     first,
     last,
     faint,
+    swapped,
     out,
     row_begin,
     row_end,
@@ -96,10 +97,12 @@ def sweep(  # type: ignore[no-untyped-def]
     """Carry all modes along one direction and add what they leave to ``out``.
 
     ``energies[material, mode]`` times ``stops`` is emitted, or ``sources[mode]`` if there is any. Where a mode has
-    fallen below
-    ``faint`` of its brightest emission on the ray row, what is left is put down at once.
+    fallen below ``faint[mode]`` on the ray row, what is left is put down at once. If ``swapped``, the second array
+    axis is the main one.
     """
     nk, nj, ni = scale.shape
+    if swapped:
+        nk, nj = nj, nk
     modes = len(rates)
     middle = nk // 2
     low_j = min(int(np.rint(slope_j * (0 - middle))), int(np.rint(slope_j * (nk - 1 - middle))))
@@ -116,13 +119,13 @@ def sweep(  # type: ignore[no-untyped-def]
         start = width
         stop = 0
         alive = np.zeros(modes, dtype=np.bool_)
-        brightest = np.zeros(modes)
         for turn in range(nk):
-            k = nk - 1 - turn if down else turn
-            j = row - high_j + int(np.rint(slope_j * (k - middle)))
-            if j < 0 or j >= nj:
+            plane = nk - 1 - turn if down else turn
+            across = row - high_j + int(np.rint(slope_j * (plane - middle)))
+            if across < 0 or across >= nj:
                 continue
-            offset = high_i - int(np.rint(slope_i * (k - middle)))
+            offset = high_i - int(np.rint(slope_i * (plane - middle)))
+            k, j = (across, plane) if swapped else (plane, across)
             if last[k, j] > 0:
                 start = min(start, first[k, j] + offset)
                 stop = max(stop, last[k, j] + offset)
@@ -151,8 +154,6 @@ def sweep(  # type: ignore[no-untyped-def]
                         light = sources[m, k, j, i0 : i0 + count]
                         for q in range(count):
                             bright[q] = weight * light[q]
-                    for q in range(count):
-                        brightest[m] = max(brightest[m], abs(bright[q]))
                     _step_shining(thick, b, here, bright, given)
                 elif alive[m]:
                     _step_dark(thick, b, here, given)
@@ -161,7 +162,7 @@ def sweep(  # type: ignore[no-untyped-def]
                         most = 0.0
                         for q in range(count):
                             most = max(most, abs(here[q]))
-                        if most < faint * brightest[m]:
+                        if most < faint[m]:
                             for q in range(count):
                                 given[q] += here[q]
                             state[m, :] = 0.0
@@ -186,6 +187,7 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
     weight,
     first,
     last,
+    swapped,
     out,
     out_modes,
     row_begin,
@@ -197,6 +199,8 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
     or per mode to ``out_modes`` if ``by_mode``.
     """
     nk, nj, ni = scale.shape
+    if swapped:
+        nk, nj = nj, nk
     modes = len(rates)
     middle = nk // 2
     low_j = min(int(np.rint(slope_j * (0 - middle))), int(np.rint(slope_j * (nk - 1 - middle))))
@@ -211,11 +215,12 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
         start = width
         stop = 0
         for turn in range(nk):
-            k = turn if down else nk - 1 - turn
-            j = row - high_j + int(np.rint(slope_j * (k - middle)))
-            if j < 0 or j >= nj:
+            plane = turn if down else nk - 1 - turn
+            across = row - high_j + int(np.rint(slope_j * (plane - middle)))
+            if across < 0 or across >= nj:
                 continue
-            offset = high_i - int(np.rint(slope_i * (k - middle)))
+            offset = high_i - int(np.rint(slope_i * (plane - middle)))
+            k, j = (across, plane) if swapped else (plane, across)
             if last[k, j] > 0:
                 start = min(start, first[k, j] + offset)
                 stop = max(stop, last[k, j] + offset)
@@ -243,88 +248,74 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True, error_model="numpy")
-def _shift(old, middle, new, taps_j, start_j, taps_i, start_i):  # type: ignore[no-untyped-def]
-    """Move every mode sideways by four taps along each lateral axis; what crosses an edge is gone."""
-    modes, nj, ni = old.shape
-    for m in range(modes):
-        for j in range(nj):
-            row = middle[j]
-            row[:] = 0.0
-            for tap in range(4):
-                source = j - start_j - tap
-                if 0 <= source < nj:
-                    weight = taps_j[tap]
-                    from_row = old[m, source]
-                    for i in range(ni):
-                        row[i] += weight * from_row[i]
-        for j in range(nj):
-            row = middle[j]
-            goal = new[m, j]
-            goal[:] = 0.0
-            for tap in range(4):
-                move = start_i + tap
-                weight = taps_i[tap]
-                low = max(0, move)
-                high = min(ni, ni + move)
-                if high > low:
-                    to = goal[low:high]
-                    be = row[low - move : high - move]
-                    for q in range(high - low):
-                        to[q] += weight * be[q]
+def _moved(old, middle, new, pad, stride, taps_j, start_j, taps_i, start_i):  # type: ignore[no-untyped-def]
+    """Move a flat, padded plane sideways by four taps along each lateral axis; what enters the padding is gone."""
+    begin, end = pad * stride, len(old) - pad * stride
+    many = end - begin
+    at = begin - start_j * stride
+    first, second = old[at : at + many], old[at - stride : at - stride + many]
+    at -= 2 * stride
+    third, fourth = old[at : at + many], old[at - stride : at - stride + many]
+    a, b, c, d = taps_j[0], taps_j[1], taps_j[2], taps_j[3]
+    goal = middle[begin:end]
+    for f in range(many):
+        goal[f] = (a * first[f] + b * second[f]) + (c * third[f] + d * fourth[f])
+    at = begin - start_i
+    first, second = middle[at : at + many], middle[at - 1 : at - 1 + many]
+    third, fourth = middle[at - 2 : at - 2 + many], middle[at - 3 : at - 3 + many]
+    a, b, c, d = taps_i[0], taps_i[1], taps_i[2], taps_i[3]
+    goal = new[begin:end]
+    for f in range(many):
+        goal[f] = (a * first[f] + b * second[f]) + (c * third[f] + d * fourth[f])
+    for row in range(begin, end, stride):
+        new[row : row + pad] = 0.0
+        new[row + stride - pad : row + stride] = 0.0
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def sweep_widening(  # type: ignore[no-untyped-def]
-    sources, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out, line_begin, line_end
+    sources, scale, pad, stride, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, out, line_begin, line_end
 ):
-    """Carry all modes along several directions, widening on the way; each direction has its own ``out[line]``."""
-    nk, nj, ni = scale.shape
+    """Carry all modes along several directions, widening on the way; each direction has its own ``out[line]``.
+
+    Planes are flat, rows of ``stride`` with ``pad`` empty voxels all round.
+    """
+    nk, flat = scale.shape
     modes = len(rates)
-    for line in range(line_begin, min(len(weights), line_end)):
-        state = np.zeros((modes, nj, ni))
-        moved = np.zeros((modes, nj, ni))
-        middle = np.zeros((nj, ni))
-        emitted = np.empty(ni)
+    middle = np.zeros(flat)
+    for line in range(line_begin, min(len(steps_mm), line_end)):
+        state = np.zeros((modes, flat))
+        moved = np.zeros((modes, flat))
         for turn in range(nk):
             k = nk - 1 - turn if down[line] else turn
-            if turn > 0:
-                _shift(state, middle, moved, taps_j[line], start_j[line], taps_i[line], start_i[line])
-                state, moved = moved, state
-            for j in range(nj):
-                given = out[line, k, j]
-                thick = scale[k, j]
-                for m in range(modes):
-                    light = sources[m, k, j]
-                    for i in range(ni):
-                        emitted[i] = weights[line] * light[i]
-                    _step_shining(thick, rates[m] * steps_mm[line], state[m, j], emitted, given)
+            for m in range(modes):
+                here = moved[m]
+                if turn > 0:
+                    _moved(
+                        state[m], middle, here, pad, stride, taps_j[line], start_j[line], taps_i[line], start_i[line]
+                    )
+                _step_shining(scale[k], rates[m] * steps_mm[line], here, sources[m, k], out[line, k])
+            state, moved = moved, state
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def sweep_widening_transposed(  # type: ignore[no-untyped-def]
-    wanted, scale, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, weights, out, line_begin, line_end
+    wanted, scale, pad, stride, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, out, line_begin, line_end
 ):
     """Apply the exact transpose of `sweep_widening`; results per mode in ``out[line, mode]``."""
-    nk, nj, ni = scale.shape
+    nk, flat = scale.shape
     modes = len(rates)
-    for line in range(line_begin, min(len(weights), line_end)):
-        state = np.zeros((modes, nj, ni))
-        moved = np.zeros((modes, nj, ni))
-        middle = np.zeros((nj, ni))
+    middle = np.zeros(flat)
+    for line in range(line_begin, min(len(steps_mm), line_end)):
+        state = np.zeros((modes, flat))
+        moved = np.zeros((modes, flat))
         back_j = taps_j[line, ::-1].copy()
         back_i = taps_i[line, ::-1].copy()
         for turn in range(nk):
             k = turn if down[line] else nk - 1 - turn
-            if turn > 0:
-                _shift(state, middle, moved, back_j, -start_j[line] - 3, back_i, -start_i[line] - 3)
-                state, moved = moved, state
-            for j in range(nj):
-                for m in range(modes):
-                    _step_back(
-                        scale[k, j],
-                        rates[m] * steps_mm[line],
-                        state[m, j],
-                        wanted[k, j],
-                        weights[line],
-                        out[line, m, k, j],
-                    )
+            for m in range(modes):
+                here = moved[m]
+                if turn > 0:
+                    _moved(state[m], middle, here, pad, stride, back_j, -start_j[line] - 3, back_i, -start_i[line] - 3)
+                _step_back(scale[k], rates[m] * steps_mm[line], here, wanted[k], 1.0, out[line, m, k])
+            state, moved = moved, state

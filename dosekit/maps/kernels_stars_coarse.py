@@ -8,18 +8,22 @@ from numba import njit
 __all__ = ["block_sources", "spread_blocks"]
 
 
-@njit(cache=True, error_model="numpy")
-def block_sources(stops, material, table, fz, fy, fx, out):  # type: ignore[no-untyped-def]
-    """Sum stops times their material's energy in each mode over blocks."""
+@njit(cache=True, nogil=True, error_model="numpy")
+def block_sources(stops, material, table, fz, fy, fx, out, begin, end):  # type: ignore[no-untyped-def]
+    """Sum stops times their material's energy in each mode over blocks of planes ``begin`` to ``end``.
+
+    The arrays begin with the first plane of block ``begin``; no materials means the first for all.
+    """
     nz, ny, nx = stops.shape
     modes = table.shape[1]
-    for block in range(out.shape[1]):
-        for z in range(block * fz, min(nz, block * fz + fz)):
+    alike = material.shape[0] == 0
+    for block in range(begin, end):
+        for z in range((block - begin) * fz, min(nz, (block - begin + 1) * fz)):
             for y in range(ny):
                 for x in range(nx):
                     number = stops[z, y, x]
                     if number != 0.0:
-                        kind = material[z, y, x]
+                        kind = 0 if alike else material[z, y, x]
                         for m in range(modes):
                             out[m, block, y // fy, x // fx] += number * table[kind, m]
 

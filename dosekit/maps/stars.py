@@ -3,7 +3,8 @@
 Each stopped pion becomes a star of the element that captures it there; shares and yields follow from the local
 composition (`dosekit.capture`). Its products travel along a fixed set of directions (`dosekit.maps.cones`):
 
-* p, d, t on the voxels themselves, in distance scaled by the local relative stopping power;
+* p, d, t in distance scaled by the local relative stopping power, the smooth far part of their kernel on blocks of
+  about 4 mm and the rest on the voxels (`dosekit.maps.stars_modes`);
 * helium ions and recoils stay in the voxel (they travel 0.1 mm in tissue);
 * neutrons, scaled by density and composition, and photons, scaled by electron density, on blocks of about 8 mm
   (`dosekit.maps.stars_coarse`).
@@ -26,15 +27,14 @@ from dosekit.basis.components import STAR_COMPONENTS
 from dosekit.capture.exponentials import RATES_PER_MM, ConeKernel, material_kernel, neutron_scale
 from dosekit.capture.stars import star_energy_mev
 from dosekit.errors import GridError, InputError, UnknownNameError
-from dosekit.maps.cones import Cones
-from dosekit.maps.stars_coarse import Blocks, block_factors
+from dosekit.maps.stars_modes import Travel
 
 if TYPE_CHECKING:
     from dosekit.grids.voxels import VoxelGrid
 
 __all__ = ["DIRECTIONS", "carry_stars", "carry_stars_transposed", "star_balance", "star_scales"]
 
-DIRECTIONS: dict[str, int] = {"star_light": 86, "star_neutron": 110, "star_photon": 86}
+DIRECTIONS: dict[str, int] = {"star_light": 110, "star_neutron": 110, "star_photon": 86}
 """Directions for each component that travels; see docs/explanation/star_transport.md for the study."""
 
 BLOCK_MM = 8.0
@@ -70,7 +70,7 @@ def carry_stars(
     directions : mapping of str to int, optional
         Number of directions by component, instead of `DIRECTIONS`.
     block_mm : float
-        Size of the blocks for neutrons and photons, mm; 0 carries them on the voxels.
+        Size of the blocks for neutrons and photons, mm; 0 carries everything on the voxels.
 
     Returns
     -------
@@ -90,11 +90,15 @@ def carry_stars(
         kernels = [material_kernel(component, yields, medium) for medium in grid.materials]
         factor = star_scale if component in _CHARGED else 1.0
         local = np.array([kernel.local_mev for kernel in kernels]) * factor
-        energy = stops * local[grid.material_index]
+        energy = np.zeros(grid.shape)
+        for k, here in enumerate(stops):
+            if here.any():
+                energy[k] = here * local[grid.material_index[k]]
         if RATES_PER_MM[component] and stops.any():
             table = _table(kernels) * factor
             count = (directions or DIRECTIONS).get(component, DIRECTIONS[component])
-            energy += _carried(component, stops, grid, table, count, block_mm)
+            travel = Travel(component, grid, star_scales(grid, component), count, block_mm)
+            energy += travel.carry(stops, grid.material_index, table)
         result[component] = energy
     return result
 
@@ -140,18 +144,8 @@ def carry_stars_transposed(
             continue
         table = _table(kernels) * factor
         count = (directions or DIRECTIONS).get(component, DIRECTIONS[component])
-        rates = np.array(RATES_PER_MM[component])
-        scale = star_scales(grid, component)
-        factors = _factors(component, grid, block_mm)
-        if component in _CHARGED:
-            cones = Cones(grid.spacing_mm, count)
-            total += cones.gather(scale, rates, value, material=grid.material_index, energies_mev=table)
-            continue
-        blocks = Blocks(grid.shape, factors, grid.density_g_cm3)
-        cones = Cones(_coarse_spacing(grid, factors), count)
-        per_mode = cones.gather_widening(blocks.averaged(scale), rates, blocks.spread_transposed(value))
-        for mode in range(len(rates)):
-            total += blocks.repeated(per_mode[mode]) * table[:, mode][grid.material_index]
+        travel = Travel(component, grid, star_scales(grid, component), count, block_mm)
+        total += travel.gather(value, grid.material_index, table)
     return total
 
 
@@ -255,32 +249,3 @@ def _checked(stops_per_voxel: NDArray[Any], grid: VoxelGrid) -> NDArray[np.float
 def _table(kernels: list[ConeKernel]) -> NDArray[np.float64]:
     """Return mode energies by material."""
     return np.array([kernel.energies_mev for kernel in kernels])
-
-
-def _factors(component: str, grid: VoxelGrid, block_mm: float) -> tuple[int, int, int]:
-    """Return voxels per block for a component."""
-    if component in _CHARGED or block_mm <= 0.0:
-        return (1, 1, 1)
-    return block_factors(grid.spacing_mm, block_mm)
-
-
-def _coarse_spacing(grid: VoxelGrid, factors: tuple[int, int, int]) -> tuple[float, float, float]:
-    """Return the spacing of blocks (x, y, z)."""
-    x, y, z = (step * factor for step, factor in zip(grid.spacing_mm, reversed(factors), strict=True))
-    return x, y, z
-
-
-def _carried(
-    component: str, stops: NDArray[np.float64], grid: VoxelGrid, table: NDArray[np.float64], count: int, block_mm: float
-) -> NDArray[np.float64]:
-    """Carry one component, on voxels or on blocks."""
-    rates = np.array(RATES_PER_MM[component])
-    scale = star_scales(grid, component)
-    factors = _factors(component, grid, block_mm)
-    if component in _CHARGED:
-        cones = Cones(grid.spacing_mm, count)
-        return cones.carry(scale, rates, stops=stops, material=grid.material_index, energies_mev=table)
-    blocks = Blocks(grid.shape, factors, grid.density_g_cm3)
-    sources = blocks.sources(stops, grid.material_index, table)
-    cones = Cones(_coarse_spacing(grid, factors), count)
-    return blocks.spread(cones.carry_widening(blocks.averaged(scale), rates, sources))

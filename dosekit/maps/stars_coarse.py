@@ -69,13 +69,9 @@ class Blocks:
         return z, y, x
 
     def summed(self, values: NDArray[Any]) -> NDArray[np.float64]:
-        """Return the sums over blocks of an array [..., z, y, x]."""
-        result = np.asarray(values, dtype=np.float64)
-        for axis, factor in enumerate(self.factors):
-            if factor > 1:
-                at = result.ndim - 3 + axis
-                result = np.add.reduceat(result, np.arange(0, result.shape[at], factor), axis=at)
-        return result
+        """Return the sums over blocks of an array [z, y, x]."""
+        total: NDArray[np.float64] = self.sources(values, np.zeros((0, 0, 0), np.uint16), np.ones((1, 1)))[0]
+        return total
 
     def repeated(self, blocks: NDArray[Any]) -> NDArray[Any]:
         """Return block values at every voxel: the transpose of `summed`."""
@@ -101,14 +97,12 @@ class Blocks:
             pool.run(spread_blocks, arguments, self.coarse_shape[0])
         return out
 
-    def sources(
-        self, stops: NDArray[np.float64], material: NDArray[Any], table: NDArray[np.float64]
-    ) -> NDArray[np.float64]:
+    def sources(self, stops: NDArray[Any], material: NDArray[Any], table: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return stops times their material's energies per mode, summed over blocks, shape (m, z, y, x)."""
-        from dosekit.maps.kernels_stars_coarse import block_sources
-
         out = np.zeros((table.shape[1], *self.coarse_shape))
-        block_sources(stops, material, np.ascontiguousarray(table), *self.factors, out)
+        with Threads() as pool:
+            arguments = (stops, material, np.ascontiguousarray(table), self.factors, out)
+            pool.run(_planes, arguments, self.coarse_shape[0])
         return out
 
     def spread_transposed(self, wanted: NDArray[Any]) -> NDArray[np.float64]:
@@ -143,3 +137,24 @@ class Blocks:
         step = np.matmul(values, x)
         step = np.matmul(y.T, step)
         return np.asarray(np.tensordot(z.T, step, axes=(1, 0)))
+
+
+def _planes(
+    stops: NDArray[Any],
+    material: NDArray[Any],
+    table: NDArray[np.float64],
+    factors: tuple[int, int, int],
+    out: NDArray[np.float64],
+    begin: int,
+    end: int,
+) -> None:
+    """Sum over some planes of blocks, brought to one type a few planes at a time."""
+    from dosekit.maps.kernels_stars_coarse import block_sources
+
+    for block in range(begin, min(end, out.shape[1])):
+        part = slice(block * factors[0], (block + 1) * factors[0])
+        values = np.require(stops[part], np.float64, ["C", "W"])
+        if values.any():
+            block_sources(
+                values, np.require(material[part], np.uint16, ["C", "W"]), table, *factors, out, block, block + 1
+            )

@@ -17,11 +17,10 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import brentq
 
-from dosekit.capture.exponentials import RATES_PER_MM, ConeKernel, cone_kernel, proton_kernel
+from dosekit.capture.exponentials import ConeKernel, cone_kernel, proton_kernel
 from dosekit.errors import GridError, InputError, UnknownNameError
-from dosekit.maps.cones import Cones
 from dosekit.maps.stars import BLOCK_MM, DIRECTIONS, star_scales
-from dosekit.maps.stars_coarse import Blocks, block_factors
+from dosekit.maps.stars_modes import Travel
 
 if TYPE_CHECKING:
     from dosekit.grids.voxels import VoxelGrid
@@ -119,22 +118,12 @@ def carry_reactions(
     if energy.shape != grid.shape:
         raise GridError(f"energy of shape {energy.shape}", allowed=f"the volume's shape {grid.shape}")
     component = _COMPONENT[channel]
-    rates = np.array(RATES_PER_MM[component])
     kernel = _kernel(channel, mean_energy_mev)
     share = kernel.energies_mev / kernel.energy_mev
     local = kernel.local_mev / kernel.energy_mev * energy
     bias = forward_bias(beam_direction, mean_cosine)
-    scale = star_scales(grid, component)
-    if channel == "charged":
-        index = np.zeros(grid.shape, dtype=np.uint16)
-        cones = Cones(grid.spacing_mm, DIRECTIONS[component], bias)
-        return local + cones.carry(scale, rates, stops=energy, material=index, energies_mev=share[None, :])
-    factors = block_factors(grid.spacing_mm, block_mm)
-    blocks = Blocks(grid.shape, factors, grid.density_g_cm3)
-    x, y, z = (step * factor for step, factor in zip(grid.spacing_mm, reversed(factors), strict=True))
-    cones = Cones((x, y, z), DIRECTIONS[component], bias)
-    sources = blocks.summed(energy)[None] * share[:, None, None, None]
-    return local + blocks.spread(cones.carry_widening(blocks.averaged(scale), rates, sources))
+    travel = Travel(component, grid, star_scales(grid, component), DIRECTIONS[component], block_mm, bias)
+    return local + travel.carry(energy, np.zeros(grid.shape, dtype=np.uint16), share[None, :])
 
 
 def _kernel(channel: str, mean_energy_mev: float) -> ConeKernel:
