@@ -79,7 +79,7 @@ def _spread(source, used, taps_u, taps_v, radius, corner, stride, target, total)
         for row in range(max(0, corner[0] + first - reach), min(rows, corner[0] + last + reach)):
             centre = row - corner[0]
             line = total[target[g], row][low * stride : high * stride]
-            _across(lines, 0, max(first, centre - reach), min(last, centre + reach + 1), centre, taps_v[g], line)
+            _across(lines, 0 * low, max(first, centre - reach), min(last, centre + reach + 1), centre, taps_v[g], line)
 
 
 @njit(nogil=True, error_model="numpy")

@@ -69,14 +69,24 @@ def best(work, times=3):
 
 def counted(pencils):
     """Multiply-adds of one fold, counted from the sizes of its loops."""
-    planes, rows, columns = pencils.rays.wet_mm.shape
-    steps = pencils.field.shape[1]
-    parts = pencils.tables.broad.shape[2]
-    fine, coarse = len(pencils.fine.u_mm) * len(pencils.fine.v_mm), len(pencils.coarse.u_mm) * len(pencils.coarse.v_mm)
-    per_ray = steps * (parts + 20)
-    reach = 2.0 * 4.0 * 8.0 / pencils.fine.spacing_mm
-    per_plane = rows * columns * per_ray + 2 * 4 * reach * fine + parts * 27 * coarse
-    return planes * per_plane + len(pencils.voxels()) * 8 * 8
+    work, used = pencils.loops, pencils._used
+    planes, _, columns = work.wet.shape
+    followed = 0.0
+    for wet in work.wet:
+        row = np.minimum((wet * work.inverse_bin).astype(int), len(work.alive) - 1)
+        broad = np.minimum((wet * work.inverse_bin * 4).astype(int), len(work.parts_at) - 1)
+        followed += 25.0 * work.alive[row].sum() + work.core.shape[2] * work.parts_at[broad].sum()
+    spread = 0.0
+    for j in range(planes):
+        n = work.kernel_of_plane[j]
+        for lattice, spreads, lines, width, parts in (
+            (pencils.fine, work.core_spreads, used[j].sum(axis=0), columns, 2),
+            (pencils.coarse, work.broad_spreads, work.coarse_size[0], work.coarse_size[1], 1),
+        ):
+            taps = 2.0 * spreads.radius[n] + 1.0
+            wide = np.minimum(width + taps - 1.0, len(lattice.u_mm))
+            spread += (parts * lines * (np.minimum(taps, len(lattice.v_mm)) + taps) * wide).sum()
+    return followed + spread + 30.0 * pencils.reach().count.sum()
 
 
 def run(size, half_width_mm, steps, peak):
@@ -88,15 +98,14 @@ def run(size, half_width_mm, steps, peak):
     def work():
         pencils = pencils_of(field, grid)
         fine, coarse = pencils.maps(field.weights)
-        out = np.zeros((1, size**3), dtype=np.float32)
-        voxels = pencils.voxels()
-        rows = np.zeros(6, dtype=np.int64)
-        pencils.deposit(fine, coarse, voxels, voxels, factor=np.ones((1, 1)), rows=rows, out=out)
+        out = np.zeros((6, size**3), dtype=np.float32)
+        pencils.deposit(fine, coarse, pencils.reach(), factor=np.ones((6, 1)), rows=np.arange(6), out=out)
 
+    work()
     seconds = best(work)
-    with_stars = best(lambda: fold(field, grid), times=1)
+    with_stars = best(lambda: fold(field, grid), times=2)
     pencils = pencils_of(field, grid)
-    updates = len(pencils.voxels()) * steps
+    updates = int(pencils.reach().count.sum()) * steps
     memory = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6
     print(
         f"{size}^3 voxels, {len(field.spots_mm)} spots, {steps} steps: folded {seconds:.2f} s, "
