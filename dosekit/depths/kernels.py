@@ -105,18 +105,19 @@ def march(  # type: ignore[no-untyped-def]
     bremsstrahlung,
     sideways,
     ahead,
-    near,
+    within,
 ):
     """Carry a population down in residual range, with events and angular diffusion.
 
     source (nodes, cells, directions) is used up and changed. node_energy (nodes); let (materials, nodes) keV/um on
     the way down from a node; stuff (cells); chance (materials, nodes) of an event on the way down from a node;
     parts (materials, nodes, 3) elastic, reaction, decay; elastic_to (materials, nodes) energy after elastic
-    scattering; reemit (materials, nodes, nodes) particles of the same kind per reaction; turn_* (materials, nodes,
-    directions, directions); turn (nodes, directions, directions) angular diffusion per step or of length 0;
-    radiated (nodes) share of the loss that is bremsstrahlung. Sideways displacement (variance of one axis since
-    emission) is carried along as a sum over particles; sideways (cells) receives it times the deposit; near (3,
-    cells) holds deposit, stops and sideways of directions over `ahead`. Scores: deposit, let_weighted, stops,
+    scattering; reemit (classes, materials, nodes, nodes) particles of the same kind per reaction; turn_elastic
+    (materials, nodes, directions, directions), turn_reemit likewise for each class; turn (nodes, directions,
+    directions) angular diffusion per step or of length 0; radiated (nodes) share of the loss that is bremsstrahlung.
+    Sideways displacement (variance of one axis since emission) is carried along as a sum over particles; sideways
+    (cells) receives it times the deposit; within (thresholds, 3, cells) holds deposit, stops and sideways of
+    directions over each threshold of `ahead`. Scores: deposit, let_weighted, stops,
     counts (3, cells) of events, reactions and decays (cells, groups), forward (2, cells) sum of cosine times
     events, escaped (4): energy and number through the front and the back, bremsstrahlung (cells, directions).
     Returns the energy that elastic scattering gave to nuclei, by cell.
@@ -129,7 +130,11 @@ def march(  # type: ignore[no-untyped-def]
     aside = np.zeros((directions, width))
     recoil = np.zeros(cells)
     happened = np.zeros((2, cells, directions))
-    moved = np.zeros((cells, directions))
+    # cells -1 and `cells` take what is shared over an end
+    moved = np.zeros((cells + 2, directions))
+    outside = np.zeros((2, directions))
+    after_elastic = np.zeros(directions)
+    after_reaction = np.zeros((reemit.shape[0], directions))
     left = np.full(directions, width)
     right = np.full(directions, -1)
     events = chance.shape[1] > 0
@@ -138,8 +143,16 @@ def march(  # type: ignore[no-untyped-def]
         step = nodes - 1 - k
         # sources at this node enter the moving frames
         for j in range(directions):
-            for u in range(cells):
-                n = source[k, u, j]
+            for u in range(-1, cells + 1):
+                if 0 <= u < cells:
+                    n = source[k, u, j]
+                elif (u < 0) == (cosine[j] < 0.0):
+                    # half a cell outside and going away
+                    n = 0.0
+                    escaped[0 if u < 0 else 2] += outside[1 if u < 0 else 0, j] * node_energy[k]
+                    escaped[1 if u < 0 else 3] += outside[1 if u < 0 else 0, j]
+                else:
+                    n = outside[1 if u < 0 else 0, j]
                 if n != 0.0:
                     c = u + shift - step * cosine[j]
                     low = math.floor(c)
@@ -194,21 +207,26 @@ def march(  # type: ignore[no-untyped-def]
                         decays[second, g + 1] += lost * group_weight[k] * w
                         forward[1, first] += lost * cosine[j] * (1.0 - w)
                         forward[1, second] += lost * cosine[j] * w
+                # what is shared over an end has left
+                here = 1.0 - w if 0 <= low < cells else 0.0
+                there = w if 0 <= low + 1 < cells else 0.0
+                escaped[0 if low < 0 else 2] += n * loss * (1.0 - here - there)
                 given = n * loss * (1.0 - brems)
-                deposit[first] += given * (1.0 - w)
-                deposit[second] += given * w
-                let_weighted[first] += given * let[m, k] * (1.0 - w)
-                let_weighted[second] += given * let[m, k] * w
-                sideways[first] += given * per_particle * (1.0 - w)
-                sideways[second] += given * per_particle * w
-                if cosine[j] > ahead:
-                    near[0, first] += given * (1.0 - w)
-                    near[0, second] += given * w
-                    near[2, first] += given * per_particle * (1.0 - w)
-                    near[2, second] += given * per_particle * w
+                deposit[first] += given * here
+                deposit[second] += given * there
+                let_weighted[first] += given * let[m, k] * here
+                let_weighted[second] += given * let[m, k] * there
+                sideways[first] += given * per_particle * here
+                sideways[second] += given * per_particle * there
+                for which in range(len(ahead)):
+                    if cosine[j] > ahead[which]:
+                        within[which, 0, first] += given * here
+                        within[which, 0, second] += given * there
+                        within[which, 2, first] += given * per_particle * here
+                        within[which, 2, second] += given * per_particle * there
                 if brems > 0.0:
-                    bremsstrahlung[first, j] += n * loss * brems * (1.0 - w)
-                    bremsstrahlung[second, j] += n * loss * brems * w
+                    bremsstrahlung[first, j] += n * loss * brems * here
+                    bremsstrahlung[second, j] += n * loss * brems * there
                 if end < -0.5:
                     escaped[0] += n * node_energy[k - 1]
                     escaped[1] += n
@@ -226,41 +244,54 @@ def march(  # type: ignore[no-untyped-def]
         if any_event:
             for u in range(cells):
                 m = stuff[u]
+                struck = 0.0
+                reacted = 0.0
+                after_elastic[:] = 0.0
+                after_reaction[:] = 0.0
                 for j in range(directions):
                     n = happened[0, u, j]
                     if n > 0.0:
-                        counts[0, u] += n
-                        after = elastic_to[m, k]
-                        recoil[u] += n * (node_energy[k] - after)
-                        if after > node_energy[k - 1]:
-                            deposit[u] += n * (after - node_energy[k - 1])
-                            let_weighted[u] += n * (after - node_energy[k - 1]) * let[m, k]
-                            after = node_energy[k - 1]
-                        low = k - 1
-                        while low > 0 and node_energy[low] > after:
-                            low -= 1
-                        if low == k - 1:
-                            low = max(k - 2, 0)
-                        w = 0.0
-                        if k > 1:
-                            w = (after - node_energy[low]) / (node_energy[low + 1] - node_energy[low])
+                        struck += n
                         for i in range(directions):
-                            a = n * turn_elastic[m, k, j, i]
-                            source[low, u, i] += a * (1.0 - w)
-                            if k > 1:
-                                source[low + 1, u, i] += a * w
+                            after_elastic[i] += n * turn_elastic[m, k, j, i]
                     n = happened[1, u, j]
                     if n > 0.0:
-                        counts[1, u] += n
-                        g = group_low[k]
-                        reactions[u, g] += n * (1.0 - group_weight[k])
-                        reactions[u, g + 1] += n * group_weight[k]
+                        reacted += n
                         forward[0, u] += n * cosine[j]
+                        for kind in range(reemit.shape[0]):
+                            for i in range(directions):
+                                after_reaction[kind, i] += n * turn_reemit[kind, m, k, j, i]
+                if struck > 0.0:
+                    counts[0, u] += struck
+                    after = elastic_to[m, k]
+                    recoil[u] += struck * (node_energy[k] - after)
+                    if after > node_energy[k - 1]:
+                        deposit[u] += struck * (after - node_energy[k - 1])
+                        let_weighted[u] += struck * (after - node_energy[k - 1]) * let[m, k]
+                        after = node_energy[k - 1]
+                    low = k - 1
+                    while low > 0 and node_energy[low] > after:
+                        low -= 1
+                    if low == k - 1:
+                        low = max(k - 2, 0)
+                    w = 0.0
+                    if k > 1:
+                        w = (after - node_energy[low]) / (node_energy[low + 1] - node_energy[low])
+                    for i in range(directions):
+                        source[low, u, i] += after_elastic[i] * (1.0 - w)
+                        if k > 1:
+                            source[low + 1, u, i] += after_elastic[i] * w
+                if reacted > 0.0:
+                    counts[1, u] += reacted
+                    g = group_low[k]
+                    reactions[u, g] += reacted * (1.0 - group_weight[k])
+                    reactions[u, g + 1] += reacted * group_weight[k]
+                    for kind in range(reemit.shape[0]):
                         for low in range(k):
-                            a = n * reemit[m, k, low]
-                            if a > 1e-16:
+                            a = reemit[kind, m, k, low]
+                            if reacted * a > 1e-16:
                                 for i in range(directions):
-                                    source[low, u, i] += a * turn_reemit[m, k, j, i]
+                                    source[low, u, i] += a * after_reaction[kind, i]
         if diffuse:
             moved[:] = 0.0
             for j in range(directions):
@@ -275,17 +306,17 @@ def march(  # type: ignore[no-untyped-def]
                     x = c - shift + (step + 1) * cosine[j]
                     low = math.floor(x)
                     w = x - low
-                    first = min(max(low, 0), cells - 1)
-                    second = min(max(low + 1, 0), cells - 1)
                     for i in range(directions):
-                        if i != j:
+                        if i != j and turn[k, j, i] > 0.0:
                             a = n * turn[k, j, i]
-                            moved[first, i] += a * (1.0 - w)
-                            moved[second, i] += a * w
+                            moved[low + 1, i] += a * (1.0 - w)
+                            moved[low + 2, i] += a * w
+            outside[0] = moved[cells + 1]
+            outside[1] = moved[0]
             for u in range(cells):
                 for i in range(directions):
-                    if moved[u, i] != 0.0:
-                        source[k - 1, u, i] += moved[u, i]
+                    if moved[u + 1, i] != 0.0:
+                        source[k - 1, u, i] += moved[u + 1, i]
     step = nodes - 1
     for j in range(directions):
         for c in range(width):
@@ -298,9 +329,10 @@ def march(  # type: ignore[no-untyped-def]
                 second = min(max(low + 1, 0), cells - 1)
                 stops[first] += n * (1.0 - w)
                 stops[second] += n * w
-                if cosine[j] > ahead:
-                    near[1, first] += n * (1.0 - w)
-                    near[1, second] += n * w
+                for which in range(len(ahead)):
+                    if cosine[j] > ahead[which]:
+                        within[which, 1, first] += n * (1.0 - w)
+                        within[which, 1, second] += n * w
     return recoil
 
 

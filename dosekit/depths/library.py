@@ -38,12 +38,13 @@ MODES: tuple[str, ...] = ("shifter", "momentum")
 QUANTITIES: tuple[str, ...] = (
     "core", "scattered", "in_flight_charged", "in_flight_neutral", "decay", "contaminant_muon", "contaminant_electron",
     "core_stops", "scattered_stops", "reactions",
-    "scattered_near", "scattered_wide", "scattered_near_stops", "scattered_wide_stops",
+    "scattered_near", "scattered_oblique", "scattered_wide",
+    "scattered_near_stops", "scattered_oblique_stops", "scattered_wide_stops",
 )  # fmt: skip
 """Keys of the quantities: MeV/mm per incident particle, or 1/mm for stops and reactions.
 
-``scattered_near`` (direction cosine over 0.9) and ``scattered_wide`` are two classes that sum to ``scattered``, with
-widths of their own; likewise their stops.
+``scattered_near`` (direction cosine over 0.9), ``scattered_oblique`` (0.5 to 0.9) and ``scattered_wide`` are classes
+that sum to ``scattered``, with widths of their own; likewise their stops.
 """
 
 _COMPONENT_OF = {

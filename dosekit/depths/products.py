@@ -27,7 +27,7 @@ from dosekit.depths.kernels import gather_products, march
 from dosekit.depths.tables import GROUP_ENERGY_MEV, beta_samples, product_spread
 
 __all__ = [
-    "NEAR_COSINE",
+    "AHEAD_COSINES",
     "Carried",
     "carry",
     "carry_populations",
@@ -36,8 +36,8 @@ __all__ = [
     "node_tables",
 ]
 
-NEAR_COSINE = 0.9
-"""Directions over this cosine count as near the beam."""
+AHEAD_COSINES = np.array([0.9, 0.5])
+"""Directions over these cosines count as near the beam and oblique to it."""
 
 _NO_EVENTS = np.zeros((0, 0))
 _ANCHORS_MEV = (10.0, 50.0, 100.0, 200.0)
@@ -58,7 +58,7 @@ class Carried:
         self.stops = np.zeros(cells)
         self.escaped = np.zeros(4)
         self.sideways = np.zeros(cells)
-        self.near = np.zeros((3, cells))
+        self.ahead = np.zeros((len(AHEAD_COSINES), 3, cells))
 
     def add(self, other: Carried) -> None:
         """Add the scores of another population.
@@ -73,7 +73,7 @@ class Carried:
         self.stops += other.stops
         self.escaped += other.escaped
         self.sideways += other.sideways
-        self.near += other.near
+        self.ahead += other.ahead
 
 
 def carry(
@@ -139,10 +139,10 @@ def carry_populations(
     """
     march(
         source, COSINES, grid.step_mm, nodes_mev, let, grid.stuff, np.zeros((len(grid.materials), 0)),
-        np.zeros((0, 0, 3)), _NO_EVENTS, np.zeros((0, 0, 0)), np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0, 0)), turn,
-        radiated, np.zeros(nodes, dtype=np.int64), np.zeros(nodes), scores.deposit, scores.let_weighted,
+        np.zeros((0, 0, 3)), _NO_EVENTS, np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0, 0, 0)),
+        turn, radiated, np.zeros(nodes, dtype=np.int64), np.zeros(nodes), scores.deposit, scores.let_weighted,
         scores.stops, np.zeros((3, grid.cells)), np.zeros((grid.cells, 2)), np.zeros((grid.cells, 2)), np.zeros((2,
-        grid.cells)), scores.escaped, brems, scores.sideways, NEAR_COSINE, scores.near,
+        grid.cells)), scores.escaped, brems, scores.sideways, AHEAD_COSINES, scores.ahead,
     )  # fmt: skip
 
 

@@ -25,7 +25,7 @@ from dosekit.depths.kernels import gather_products, march, score_events
 from dosekit.depths.leptons import carry_electrons, decay_muons, michel_electrons
 from dosekit.depths.muons import muon_capture_products
 from dosekit.depths.products import (
-    NEAR_COSINE,
+    AHEAD_COSINES,
     Carried,
     charged_products,
     neutral_products,
@@ -228,14 +228,19 @@ def _solve(
 def _classes(
     part: Carried, grid: CoarseGrid
 ) -> dict[str, tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]]:
-    """Split scattered particles by direction."""
+    """Split scattered particles by direction: near the beam, oblique to it, and wide."""
     given, stopped = grid.to_bins(part.deposit), grid.to_bins(part.stops)
-    near = np.clip(grid.to_bins(part.near[0]), 0.0, given), np.clip(grid.to_bins(part.near[1]), 0.0, stopped)
-    wide = part.sideways - part.near[2]
-    return {
-        "scattered_near": (near[0], near[1], _spread(part.near[2], part.near[0], grid)),
-        "scattered_wide": (given - near[0], stopped - near[1], _spread(wide, part.deposit - part.near[0], grid)),
-    }
+    rows = [*part.ahead, np.stack([part.deposit, part.stops, part.sideways])]
+    left_given, left_stopped, before = given, stopped, np.zeros_like(rows[0])
+    result = {}
+    for name, row in zip(("scattered_near", "scattered_oblique", "scattered_wide"), rows, strict=True):
+        own = row - before
+        here = np.clip(grid.to_bins(own[0]), 0.0, left_given), np.clip(grid.to_bins(own[1]), 0.0, left_stopped)
+        if name == "scattered_wide":
+            here = left_given, left_stopped
+        left_given, left_stopped, before = left_given - here[0], left_stopped - here[1], row
+        result[name] = (*here, _spread(own[2], own[0], grid))
+    return result
 
 
 def _width(part: Carried, grid: CoarseGrid) -> NDArray[np.float64]:
@@ -294,9 +299,10 @@ class _Scattered:
         self.counts = np.zeros((3, grid.cells))
         self.forward = np.zeros((2, grid.cells))
         if nuclear and np.any(by_node > 0.0):
-            spread = np.stack([node_spread(row[:, None], table.energy) for row in table.elastic_to])
-            gather_products(by_node[0], grid.stuff, spread, table.start_elastic, source)
-            gather_products(by_node[1], grid.stuff, table.reemit, table.start_reemit, source)
+            scattered = np.stack([node_spread(row[:, None], table.energy) for row in table.elastic_to])
+            gather_products(by_node[0], grid.stuff, scattered, table.start_elastic, source)
+            for spread, angular in zip(table.reemit, table.start_reemit, strict=True):
+                gather_products(by_node[1], grid.stuff, spread, angular, source)
             loss = table.energy[None, :] - table.elastic_to
             self.recoil += np.sum(by_node[0] * loss[grid.stuff], axis=1)
             self.recoil += self._run(table, grid, source)
@@ -309,7 +315,7 @@ class _Scattered:
             table.group_low, table.group_weight, self.carried.deposit, self.carried.let_weighted,
             self.carried.stops, self.counts, self.later_reactions, self.later_decays, self.forward,
             self.carried.escaped, np.zeros((0, 0)), self.carried.sideways,
-            NEAR_COSINE, self.carried.near,
+            AHEAD_COSINES, self.carried.ahead,
         )  # fmt: skip
         return result
 

@@ -5,7 +5,10 @@ medium itself where it is uniform, else water). This file turns cross sections, 
 numbers per step and node for each material of a stack.
 
 Spectra of emitted particles are beta distributions on (0, highest energy) with the mean and the root mean square of the
-tables; angles follow exp(kappa cos) with the mean cosine of the tables.
+tables; angles follow exp(kappa cos) with the mean cosine of the tables. Protons that come out of reactions of protons
+go the more ahead the more energy they keep: kappa is proportional to the slope a(E) of C. Kalbach, Phys. Rev. C 37
+(1988) 2350 (from memory), with a factor such that the mean cosine (weighted by energy) is the tabled one. Protons and
+the hydrogen that they strike share the energy evenly between nothing and all, and the angle follows from it.
 """
 
 from __future__ import annotations
@@ -18,10 +21,11 @@ from numpy.typing import NDArray
 from scipy.special import betaincinv
 
 from dosekit.basis.materials import Material
+from dosekit.basis.particles import particle
 from dosekit.beams.decay import decay_per_mm
 from dosekit.beams.ranges import range_table
 from dosekit.beams.reactions import Reactions, reactions
-from dosekit.depths.angles import COSINES, kappa_of, shares
+from dosekit.depths.angles import COSINES, kappa_of, ring_shares, shares
 
 __all__ = [
     "GROUP_ENERGY_MEV",
@@ -37,6 +41,9 @@ GROUP_ENERGY_MEV: NDArray[np.float64] = np.array([0.0, 5, 10, 20, 30, 40, 50, 60
 """Energies of the projectile between which products of reactions and decays are interpolated, MeV."""
 
 _SAMPLES = 24
+_ENERGY_CLASSES = 4  # of what comes out of a nucleus
+_KALBACH_LIMITS_MEV = (130.0, 41.0)
+_PAIR_CLASSES = 6  # of two protons that share the energy
 
 
 @dataclass(frozen=True)
@@ -57,12 +64,16 @@ class SpeciesTable:
         Chance of an event and its parts elastic, reaction, decay.
     elastic_to : ndarray, shape (materials, nodes)
         Energy after elastic scattering, MeV.
-    reemit : ndarray, shape (materials, nodes, nodes)
-        Particles of the same kind after a reaction.
-    turn_elastic, turn_reemit : ndarray, shape (materials, nodes, 16, 16)
-        Directions after events.
-    start_elastic, start_reemit : ndarray, shape (materials, nodes, 16)
-        Directions after events of the beam.
+    reemit : ndarray, shape (classes, materials, nodes, nodes)
+        Particles of the same kind after a reaction, in classes of energy with directions of their own.
+    turn_elastic : ndarray, shape (materials, nodes, 16, 16)
+        Directions after elastic scattering.
+    turn_reemit : ndarray, shape (classes, materials, nodes, 16, 16)
+        Directions after reactions.
+    start_elastic : ndarray, shape (materials, nodes, 16)
+        Directions after elastic scattering of the beam.
+    start_reemit : ndarray, shape (classes, materials, nodes, 16)
+        Directions after reactions of the beam.
     group_low, group_weight : ndarray, shape (nodes,)
         Energy group of a node and share of the next one.
     """
@@ -248,11 +259,12 @@ def _species_table(
     chance = np.zeros((count, nodes))
     parts = np.zeros((count, nodes, 3))
     elastic_to = np.tile(energy, (count, 1))
-    reemit = np.zeros((count, nodes, nodes))
+    classes = _ENERGY_CLASSES + _PAIR_CLASSES if name == "proton" else 1
+    reemit = np.zeros((classes, count, nodes, nodes))
     turn_elastic = np.zeros((count, nodes, directions, directions))
-    turn_reemit = np.zeros((count, nodes, directions, directions))
+    turn_reemit = np.zeros((classes, count, nodes, directions, directions))
     start_elastic = np.zeros((count, nodes, directions))
-    start_reemit = np.zeros((count, nodes, directions))
+    start_reemit = np.zeros((classes, count, nodes, directions))
     base = range_table(name, reference).stopping_mev_mm(middle)
     for m, stuff in enumerate(materials):
         stopping = range_table(name, stuff).stopping_mev_mm(middle)
@@ -272,20 +284,24 @@ def _species_table(
             mean = np.clip(table.at(table.mean_energy_mev[name], energy), 1e-3, 0.97 * top)
             rms = np.clip(table.at(table.rms_energy_mev[name], energy), mean, np.sqrt(mean * top))
             share = table.at(table.reaction_share, energy)
-            reemit[m] = node_spread(beta_samples(mean, rms, top), energy) * (share * number)[:, None]
+            drawn = beta_samples(mean, rms, top)
             cosine = table.at(table.mean_cosine[name], energy)
+            kappa = kappa_of(cosine)[:, None]
             if name == "proton":
-                # two protons share the energy evenly between nothing and all, at cos = sqrt(E / T)
-                pair = energy[:, None] * (np.arange(_SAMPLES) + 0.5)[None, :] / _SAMPLES
-                reemit[m] += 2.0 * (1.0 - share)[:, None] * node_spread(pair, energy)
-                made = np.maximum(share * number + 2.0 * (1.0 - share), 1e-12)
-                cosine = (share * number * cosine + 2.0 * (1.0 - share) * 2.0 / 3.0) / made
+                kappa = _slopes(drawn, cosine, energy)
+            out = np.split(drawn, kappa.shape[1], axis=1)
+            for n, part in enumerate(out):
+                reemit[n, m] = node_spread(part, energy) * (share * number / len(out))[:, None]
+                turn_reemit[n, m] = shares(kappa[:, n, None], COSINES[None, :])
+                start_reemit[n, m] = shares(kappa[:, n])
+            for n in range(len(out), classes):
+                part, ahead = _pair(energy, n - len(out))
+                reemit[n, m] = 2.0 * (1.0 - share)[:, None] * node_spread(part, energy) / _PAIR_CLASSES
+                turn_reemit[n, m] = ring_shares(ahead[:, None, :], COSINES[None, :, None]).mean(axis=2)
+                start_reemit[n, m] = ring_shares(ahead).mean(axis=1)
             kappa = kappa_of(table.at(table.elastic_cosine, energy))
             turn_elastic[m] = shares(kappa[:, None], COSINES[None, :])
             start_elastic[m] = shares(kappa)
-            kappa = kappa_of(cosine)
-            turn_reemit[m] = shares(kappa[:, None], COSINES[None, :])
-            start_reemit[m] = shares(kappa)
         total = np.sum(rates, axis=1)
         chance[m] = -np.expm1(-total * path)
         parts[m] = rates / np.where(total > 0.0, total, 1.0)[:, None]
@@ -294,3 +310,38 @@ def _species_table(
         name, step, energy, let, chance, parts, elastic_to, reemit, turn_elastic, turn_reemit, start_elastic,
         start_reemit, low, weight,
     )  # fmt: skip
+
+
+def _slopes(
+    drawn_mev: NDArray[np.float64], mean_cosine: NDArray[np.float64], before_mev: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Return kappa of each energy class: Kalbach's slope times a factor that gives the mean cosine.
+
+    a = 0.04 X + 1.8e-6 X^3 + 6.7e-7 Y^4 with X and Y the emitted energy times the smaller of 1 and 130 MeV (41 MeV for
+    Y) over the energy before; binding energies are left out.
+    """
+    classes = np.stack(np.split(drawn_mev, _ENERGY_CLASSES, axis=1), axis=1)
+    energy = classes.mean(axis=2)
+    part = energy / np.maximum(before_mev, 1e-6)[:, None]
+    x, y = (part * np.minimum(before_mev, limit)[:, None] for limit in _KALBACH_LIMITS_MEV)
+    slope = 0.04 * x + 1.8e-6 * x**3 + 6.7e-7 * y**4
+    weight = energy / np.maximum(energy.sum(axis=1, keepdims=True), 1e-12)
+    low, high = np.zeros(len(energy)), np.full(len(energy), 200.0)
+    for _ in range(40):
+        factor = 0.5 * (low + high)
+        kappa = np.clip(factor[:, None] * slope, 1e-3, 400.0)
+        found = (weight * (1.0 / np.tanh(kappa) - 1.0 / kappa)).sum(axis=1)
+        low, high = np.where(found < mean_cosine, factor, low), np.where(found < mean_cosine, high, factor)
+    return np.minimum(0.5 * (low + high)[:, None] * slope, 400.0)
+
+
+def _pair(energy_mev: NDArray[np.float64], which: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return energies in one class of two protons that share the energy, and the cosines at which they go.
+
+    cos^2 = E (T + 2 m) / (T (E + 2 m)), from the conservation of energy and momentum.
+    """
+    per_class = _SAMPLES // _PAIR_CLASSES
+    part = (np.arange(per_class) + which * per_class + 0.5) / _SAMPLES
+    mass = 2.0 * particle("proton").mass_mev
+    held = energy_mev[:, None] * part[None, :]
+    return held, np.sqrt(part * (energy_mev[:, None] + mass) / (held + mass))

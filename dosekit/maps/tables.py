@@ -3,9 +3,10 @@
 The library says, for each range step, what a broad beam leaves in water at each depth. Here it becomes
 
 ``narrow``  energy and stops of the core, whose width follows each ray's own Fermi-Eyges moments;
-``broad``   everything wider (the core's single-scattering tail, scattered beam particles, products of reactions,
+``broad``   everything wider (the core's tails of large scatterings, scattered beam particles, products of reactions,
             decays, contaminants). Its variance is the core's in water plus the library's extra variance; each quantity
-            is divided between a few fixed widths so that the variance is kept at every depth (a sum of Gaussians);
+            is divided between a few fixed widths (:mod:`dosekit.maps.parts`), and what has hardly left the beam stays
+            with the core;
 ``power``   the core's scattering power in water, rad2 per mm, by differential Moliere (Gottschalk 2010).
 
 Depth rows are bin centres; a row of zeros follows the last. ``broad`` varies slowly and is read from the nearest of
@@ -19,13 +20,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtri
+
+from dosekit.maps.parts import Contribution, divide
 
 if TYPE_CHECKING:
     from dosekit.beams.beam import Beam
     from dosekit.depths.library import DepthLibrary
 
-__all__ = ["BROAD_TARGETS", "TAIL_SIGMAS", "TARGETS", "StepTables", "moliere_tail_share", "step_tables"]
+__all__ = ["BROAD_TARGETS", "TARGETS", "StepTables", "step_tables"]
 
 TARGETS: tuple[str, ...] = ("primary", "stops", "in_flight", "decay", "contaminant_muon", "contaminant_electron")
 """What the fold makes in voxels; star components follow from the stops."""
@@ -35,6 +37,8 @@ BROAD_TARGETS: dict[str, str] = {
     "scattered_stops": "stops",
     "scattered_near": "primary",
     "scattered_near_stops": "stops",
+    "scattered_oblique": "primary",
+    "scattered_oblique_stops": "stops",
     "scattered_wide": "primary",
     "scattered_wide_stops": "stops",
     "in_flight_charged": "in_flight",
@@ -44,20 +48,13 @@ BROAD_TARGETS: dict[str, str] = {
     "contaminant_electron": "contaminant_electron",
 }
 """Quantities of the library that are spread by fixed widths, and where they go. A library that divides its scattered
-particles into near and wide ones has their sum as well, which is then left out."""
+particles into near, oblique and wide ones has their sum as well, which is then left out."""
 
-TAIL_SIGMAS = 2.4
-"""Width of the single-scattering tail over that of the core; see `moliere_tail_share`."""
-
-_TAIL_TIMES_B = 0.94
-_THOMAS_FERMI_MEV = 4.216e-3  # hbar c over 0.885 Bohr radii
-_HALF_NORMAL = np.square(ndtri(0.5 + (np.arange(8) + 0.5) / 16.0))  # squares of a normal number, equal shares
-_HALF_NORMAL /= _HALF_NORMAL.mean()
-_MIXED = ("scattered", "scattered_stops", "scattered_wide", "scattered_wide_stops", "in_flight_charged")
-_MOST_MIXED_WIDTHS = 5
-_MOST_WIDTHS = 3
-_WIDTH_RATIO = 2.0
-_SIGNIFICANT = 1e-4
+_LIKE_NORMAL = ("scattered", "scattered_stops", "in_flight_charged")  # from all directions
+_EVENLY = tuple(f"scattered_{name}" for name in ("near", "oblique", "wide"))
+_NARROW_TARGETS = ("primary", "stops")
+_NARROWEST_OF_SPOT = 0.96  # makes the variance that the coarse lattice adds no larger than that of the lowest rung
+_NARROWEST_MM = 4.62
 _NEGLIGIBLE = 1e-10
 _GONE = 1e-3
 _QUADRATURE = 24
@@ -77,7 +74,7 @@ class StepTables:
     power : ndarray
         Scattering power of the core in water, rad2/mm, shape (rows, K).
     survivors : ndarray
-        Scatter variance of those that reach a depth over that of the mean particle, shape (rows, K).
+        Scatter variance of those that reach a depth, tails left out, over that of the mean particle, shape (rows, K).
     broad : ndarray
         Energy or stops per part, shape (4 rows, K, parts): four rows to a depth bin.
     part_sigma_mm : ndarray
@@ -136,6 +133,7 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     StepTables
         The tables.
     """
+    from dosekit.beams.moliere import core_variance_share
     from dosekit.beams.scattering import scattering_power_rad2_mm
 
     depth = np.asarray(library.depth_mm, dtype=np.float64)
@@ -148,35 +146,28 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     gap = beam.range_shifter_gap_mm
     in_water = _variance_in_water(power, start, gap_mm=gap, bin_mm=bin_mm)
     survivors = _survivors(beam, energy, start, in_water, gap_mm=gap, depth_mm=depth)
+    tail_shares = _tail_shares(library, beam)
+    survivors *= core_variance_share(tail_shares)
     in_water *= survivors
     narrow = np.stack([_clean(library.quantities[key]) for key in ("core", "core_stops")], axis=2)
-    share = moliere_tail_share(beam)
-    tail = TAIL_SIGMAS**2 * in_water
-    parts = [(share * narrow[..., n], tail, 0.0 * tail, name, False) for n, name in enumerate(("primary", "stops"))]
-    narrow *= 1.0 - share
-    divided = {"scattered", "scattered_stops"} if "scattered_wide" in library.quantities else set()
-    for key, target in BROAD_TARGETS.items():
-        if key in divided:
-            continue
-        widths = library.extra_sigma_mm
-        extra = np.asarray(widths.get(key, widths.get(key.removesuffix("_stops"), 0.0 * energy)), dtype=np.float64)
-        parts.append(
-            (
-                _clean(library.quantities.get(key, 0.0 * energy)),
-                in_water,
-                np.nan_to_num(extra) ** 2,
-                target,
-                key in _MIXED,
-            )
-        )
+    contributions = _tails(tail_shares, narrow, in_water)
+    for tail in contributions:
+        narrow[..., tail.target] -= tail.quantity
+    contributions += _wider(library, in_water)
     values, sigmas, targets = [], [], []
-    for quantity, variance, extra, target, mixed in parts:
-        if not quantity.any():
+    narrowest = _narrowest_mm(beam, start, gap_mm=gap)
+    for target in range(len(TARGETS)):
+        chosen = [one for one in contributions if one.target == target and one.quantity.any()]
+        if not chosen:
             continue
-        for sigma, part in _divide(quantity, np.maximum(variance, 0.0), extra, mixed=mixed):
-            values.append(quantity * part)
-            sigmas.append(sigma)
-            targets.append(TARGETS.index(target))
+        with_core = TARGETS[target] in _NARROW_TARGETS
+        core_variance = np.where((power > 0.0) & with_core, in_water, np.inf)
+        widths, shared, kept = divide(chosen, core_variance, narrowest_mm=narrowest)
+        if with_core:
+            narrow[..., target] += kept
+        sigmas += list(widths)
+        values += list(shared)
+        targets += [target] * len(widths)
     order = np.argsort(-np.array(sigmas), kind="stable")
     shape = (*energy.shape, len(order))
     broad = np.stack([values[n] for n in order], axis=2) if len(order) else np.zeros(shape)
@@ -258,80 +249,56 @@ def _survivors(
     return np.where(in_water > 0.0, (gained + drift) / np.where(in_water > 0.0, in_water, 1.0), 1.0)
 
 
-def moliere_tail_share(beam: Beam) -> float:
-    """Return the share of the core that lies in the tail of single Coulomb scatterings.
-
-    Moliere's distribution of the angle in space is a Gaussian and corrections in powers of 1/B (H.A. Bethe, Phys. Rev.
-    89 (1953) 1256). Beside the Gaussian that the differential Moliere power describes, a second one of `TAIL_SIGMAS`
-    times its width holds 0.94 / B of the particles: the least-squares description of f0 + f1/B + f2/B2 from 0.3 to 6
-    sigma, for B of 10 to 14 (own calculation). A displacement has the same tail as the angle because both go as the
-    square of the distance. Electrons of the atoms, which make up part of the scattering, cannot turn a heavy particle
-    by a large angle: the tail is reduced by the nuclei's part of it. B is taken in water at half the range.
-
-    Parameters
-    ----------
-    beam : Beam
-        The beam.
-
-    Returns
-    -------
-    float
-        Share of the core.
-    """
-    from dosekit.basis.constants import FINE_STRUCTURE
-    from dosekit.basis.materials import element, material
-    from dosekit.basis.particles import momentum_mev_c
+def _tail_shares(library: DepthLibrary, beam: Beam) -> NDArray[np.float64]:
+    """Return the shares of the core with one or a few large Coulomb scatterings, shape (K, N, 2)."""
+    from dosekit.beams.moliere import tail_shares
     from dosekit.beams.ranges import range_table
-    from dosekit.beams.scattering import pv_mev
 
-    table = range_table(beam.particle, "water")
-    half_mm = 0.5 * float(table.range_mm(beam.kinetic_energy_mev))
-    energy = float(table.energy_mev(half_mm))
-    pv, momentum = float(pv_mev(beam.particle, energy)), float(momentum_mev_c(beam.particle, energy))
-    total, nuclei, screened = 0.0, 0.0, 0.0
-    for symbol, fraction in material("water").mass_fractions:
-        z, a = element(symbol).atomic_number, element(symbol).atomic_weight
-        weight = fraction * z * (z + 1.0) / a
-        angle = (_THOMAS_FERMI_MEV * z ** (1.0 / 3.0) / momentum) ** 2  # Bethe eqs. 17 and 21
-        total += weight
-        nuclei += fraction * z * z / a
-        screened += weight * np.log(angle * (1.13 + 3.76 * (FINE_STRUCTURE * z * momentum / pv) ** 2))
-    characteristic = 0.157 * total * 0.1 * half_mm / pv**2  # chi_c squared, Bethe eq. 10, 1 g/cm3
-    b = np.log(characteristic / 1.167) - screened / total
-    big = max(b, 2.0)
-    for _ in range(50):
-        big = b + np.log(max(big, 1.5))
-    return float(_TAIL_TIMES_B / max(big, 4.5) * nuclei / total)
+    reach = float(range_table(beam.particle, "water").range_mm(beam.kinetic_energy_mev))
+    in_front = (reach - np.asarray(library.residual_range_mm, dtype=np.float64))[:, None].clip(min=0.0)
+    return tail_shares(beam.particle, beam.kinetic_energy_mev, library.depth_mm + in_front)
 
 
-def _divide(
-    quantity: NDArray[np.float64], variance: NDArray[np.float64], extra: NDArray[np.float64], *, mixed: bool
-) -> list[tuple[float, NDArray[np.float64]]]:
-    """Divide a quantity between fixed widths: pairs of sigma and share, the shares adding to one everywhere.
+def _tails(
+    shares: NDArray[np.float64], narrow: NDArray[np.float64], in_water: NDArray[np.float64]
+) -> list[Contribution]:
+    """Return the tails of the core."""
+    from dosekit.beams.moliere import TAIL_SIGMAS
 
-    A particle that left the beam at a distance s under a slope is displaced by their product, and both are spread
-    widely: many are still near and a few are far. When `mixed`, the extra sigma is therefore itself distributed, as the
-    size of a normal number, which makes the radial integral fall as exp(-r / sigma); eight equal shares stand for it.
+    nothing = np.zeros_like(in_water)
+    return [
+        Contribution(target, shares[..., n] * narrow[..., target], width**2 * in_water, nothing)
+        for target in range(len(_NARROW_TARGETS))
+        for n, width in enumerate(TAIL_SIGMAS)
+    ]
+
+
+def _wider(library: DepthLibrary, in_water: NDArray[np.float64]) -> list[Contribution]:
+    """Return what the library spreads wider than the core."""
+    divided = {"scattered", "scattered_stops"} if "scattered_wide" in library.quantities else set()
+    nothing = np.zeros_like(in_water)
+    widths = library.extra_sigma_mm
+    result = []
+    for key, target in BROAD_TARGETS.items():
+        if key in divided:
+            continue
+        extra = np.asarray(widths.get(key, widths.get(key.removesuffix("_stops"), nothing)), dtype=np.float64)
+        quantity = _clean(library.quantities.get(key, nothing))
+        law = "normal" if key in _LIKE_NORMAL else "even" if key.removesuffix("_stops") in _EVENLY else "single"
+        result.append(Contribution(TARGETS.index(target), quantity, in_water, np.nan_to_num(extra) ** 2, law=law))
+    return result
+
+
+def _narrowest_mm(beam: Beam, start: NDArray[np.float64], *, gap_mm: float) -> float:
+    """Return the smallest width that the coarse lattice carries for the beam's spots, mm.
+
+    Its step is 1.2 times the smallest sigma of a spot joined with that of the narrowest part, at most 8 mm, and it adds
+    a third of a squared step of variance.
     """
-    sizes = _HALF_NORMAL if mixed and extra.any() else np.ones(1)
-    each = [np.asarray(variance + size * extra) for size in sizes]
-    counts = quantity > _SIGNIFICANT * quantity.max()
-    low, high = float(np.sqrt(each[0][counts].min())), float(np.sqrt(each[-1][counts].max()))
-    low = max(low, 0.05 * high, 1e-3)
-    most = _MOST_MIXED_WIDTHS if len(sizes) > 1 else _MOST_WIDTHS
-    number = int(np.clip(np.ceil(np.log(max(high / low, 1.0)) / np.log(_WIDTH_RATIO) - 1e-9) + 1, 1, most))
-    if number == 1:
-        mean = np.average(variance + extra, weights=quantity)
-        return [(float(np.sqrt(mean)), np.ones_like(variance))]
-    rungs = np.linspace(np.sqrt(low), np.sqrt(high), number) ** 2
-    squares = rungs**2
-    shares = np.zeros((number, *variance.shape))
-    for one in each:
-        g = np.clip(np.searchsorted(squares, one, side="right") - 1, 0, number - 2)
-        upper = np.clip((one - squares[g]) / (squares[g + 1] - squares[g]), 0.0, 1.0) / len(sizes)
-        for n in range(number):
-            shares[n] += np.where(g == n, 1.0 / len(sizes) - upper, 0.0) + np.where(g + 1 == n, upper, 0.0)
-    return [(float(sigma), share) for sigma, share in zip(rungs, shares, strict=True)]
+    a0, a1, a2 = start
+    shifted = float((a2 + 2.0 * a1 * gap_mm + a0 * gap_mm**2).min())
+    spot = min(float(np.hypot(beam.axis(axis)[0], np.sqrt(max(shifted, 0.0)))) for axis in range(2))
+    return float(np.clip(_NARROWEST_OF_SPOT * spot, 0.5, _NARROWEST_MM))
 
 
 def _clean(quantity: NDArray[np.float64]) -> NDArray[np.float64]:
