@@ -34,7 +34,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import ArrayLike, NDArray
 
-    from dosekit.modulation.responses import Response
+    from dosekit.modulation.responses import Judge, Response
 
 __all__ = ["CorrectedResponse", "find_weights_corrected"]
 
@@ -100,13 +100,13 @@ class CorrectedResponse:
 
 
 def find_weights_corrected(
-    exact: Response,
+    exact: Judge,
     quick: Response,
     goals: Sequence[Goal],
     *,
     scale_gy: float,
     start: ArrayLike | None = None,
-    scenarios: Sequence[tuple[Response, Response]] = (),
+    scenarios: Sequence[tuple[Judge, Response]] = (),
     robust: str = "worst",
     rounds: int = 5,
     largest_steps: int = 60,
@@ -118,15 +118,17 @@ def find_weights_corrected(
 
     Parameters
     ----------
-    exact, quick : Response
-        The exact dose and its stand-in, for the same voxels and weights; of the exact one only ``dose`` is used.
+    exact : Judge
+        The exact dose.
+    quick : Response
+        Its stand-in, for the same voxels and weights.
     goals : sequence of Goal
         The goals.
     scale_gy : float
         The prescription, Gy.
     start : array_like, shape (w,), optional
         Weights to begin with.
-    scenarios : sequence of (Response, Response)
+    scenarios : sequence of (Judge, Response)
         Exact dose and stand-in of further scenarios.
     robust : str
         ``worst`` or ``expectation``; how scenarios are joined.

@@ -27,7 +27,15 @@ if TYPE_CHECKING:
 
     from dosekit.effects.tissues import Tissue, TissueMap
 
-__all__ = ["EffectResponse", "FoldEffectResponse", "LinearResponse", "Response"]
+__all__ = ["EffectResponse", "FoldEffectResponse", "Judge", "LinearResponse", "Response"]
+
+
+class Judge(Protocol):
+    """Dose as a function of the weights, with no way back: enough to judge them."""
+
+    def dose(self, weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], Any]:
+        """Give the dose in each voxel (Gy), and anything else."""
+        ...
 
 
 class Response(Protocol):

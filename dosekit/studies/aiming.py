@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from dosekit.errors import GridError
 from dosekit.modulation.spots import spots_over_shadow
+from dosekit.modulation.surrogates import voxel_centres_mm
 
 if TYPE_CHECKING:
     from dosekit.grids.voxels import VoxelGrid
@@ -74,7 +75,7 @@ def aim(frame: BeamFrame, grid: VoxelGrid, target: str, *, spacing_mm: float, ma
         If no spot meets the target.
     """
     coverage = grid.structure(target)
-    shadow = frame.to_beam(_centres(grid, coverage >= _EDGE))
+    shadow = frame.to_beam(voxel_centres_mm(grid, np.flatnonzero(coverage >= _EDGE)))
     if not len(shadow):
         raise GridError(f"target {target!r} covers no voxel by half or more", remedy="use a finer grid")
     spots = spots_over_shadow(
@@ -94,12 +95,6 @@ def aim(frame: BeamFrame, grid: VoxelGrid, target: str, *, spacing_mm: float, ma
     near = np.where(first > 0, depth[rows, first - 1], 0.0)
     far = depth[rows, last]
     return AimedSpots(spots, near, far, inside)
-
-
-def _centres(grid: VoxelGrid, mask: NDArray[np.bool_]) -> NDArray[np.float64]:
-    """Return the centres (x, y, z) of the voxels in a mask."""
-    k, j, i = np.nonzero(mask)
-    return np.stack([grid.centres_mm("x")[i], grid.centres_mm("y")[j], grid.centres_mm("z")[k]], axis=1)
 
 
 def _nearest(points: NDArray[np.float64], among: NDArray[np.float64]) -> NDArray[np.int64]:

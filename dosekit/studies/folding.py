@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
     from dosekit.effects.mixed_field import EffectModel
     from dosekit.grids.voxels import VoxelGrid
-    from dosekit.modulation.responses import Response
+    from dosekit.modulation.responses import Judge
     from dosekit.studies.model import Study
     from dosekit.studies.planning import PlannedField
 
@@ -180,7 +180,7 @@ class JudgingFold:
         The effect model, for a goal of effect-weighted dose.
     constants : mapping of str to (alpha, root of beta)
         Its constants in these voxels.
-    first : Response, optional
+    first : Judge, optional
         The same dose in these voxels alone, used for the first judgement, whose weights are seldom the last.
     """
 
@@ -190,13 +190,8 @@ class JudgingFold:
     voxels: NDArray[np.int64]
     model: EffectModel
     constants: Mapping[str, tuple[Any, Any]]
-    first: Response | None = None
+    first: Judge | None = None
     _last: tuple[bytes, dict[str, xr.Dataset]] | None = field(default=None, init=False)
-
-    @property
-    def shape(self) -> tuple[int, int]:
-        """Voxels and weights."""
-        return len(self.voxels), sum(int(np.prod(plan.field.shape)) for plan in self.planned)
 
     def dose(self, weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], None]:
         """Give the dose that the goal asks for.
@@ -211,7 +206,7 @@ class JudgingFold:
         dose_gy : ndarray, shape (n,)
             Gy.
         kept : None
-            There is no way back.
+            There is no way back, hence nothing to keep.
         """
         from dosekit.effects.mixed_field import effect_sums, weighted_dose_gy
 
@@ -229,23 +224,6 @@ class JudgingFold:
             return np.asarray(np.sum(list(parts.values()), axis=0)), None
         linear, root = effect_sums(parts, dict(self.constants))
         return weighted_dose_gy(linear, root, tissue=self.model.tissue, fractions=self.study.goal.fractions), None
-
-    def pull_back(self, slope: NDArray[np.float64], kept: Any) -> NDArray[np.float64]:
-        """Refuse: the exact dose only judges.
-
-        Parameters
-        ----------
-        slope : ndarray
-            Not used.
-        kept : object
-            Not used.
-
-        Returns
-        -------
-        ndarray
-            Nothing is returned.
-        """
-        raise NotImplementedError
 
     def folded(self, weights: NDArray[np.float64]) -> dict[str, xr.Dataset]:
         """Return the folds of the last judgement, if it was of these weights.

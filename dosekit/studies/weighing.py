@@ -233,21 +233,8 @@ class _Erring:
     planned: Sequence[PlannedField]
     error: _Error
 
-    @property
-    def shape(self) -> tuple[int, int]:
-        """Voxels and weights."""
-        return len(self.task.voxels), sum(int(np.prod(plan.field.shape)) for plan in self.planned)
-
     def dose(self, weights: NDArray[np.float64]) -> tuple[NDArray[np.float64], Any]:
         """Give the dose that the goal asks for, Gy."""
-        return self._response().dose(weights)
-
-    def pull_back(self, slope: NDArray[np.float64], kept: Any) -> NDArray[np.float64]:
-        """Turn a slope per voxel into a slope per weight."""
-        return self._response().pull_back(slope, kept)
-
-    def _response(self) -> Response:
-        """Prepare the fold."""
         from dosekit.maps.operator import FoldOperator
         from dosekit.modulation.responses import FoldEffectResponse, LinearResponse
 
@@ -267,8 +254,8 @@ class _Erring:
         model = effect_model_of(study, fields[0].beam.particle)
         plain = self.task.plain_factors(model)
         if plain is not None:
-            return LinearResponse(operator.with_factors(plain))
-        return FoldEffectResponse(operator, self.task.constants, model.tissue, study.goal.fractions)
+            return LinearResponse(operator.with_factors(plain)).dose(weights)
+        return FoldEffectResponse(operator, self.task.constants, model.tissue, study.goal.fractions).dose(weights)
 
 
 def _moved(field: Field, by_mm: tuple[float, float, float]) -> Field:
