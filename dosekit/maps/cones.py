@@ -24,9 +24,9 @@ from dosekit.maps.cones_threads import Threads
 
 __all__ = ["FAINT", "WIDENING_MM", "Cones"]
 
-WIDENING_MM = 100.0
-"""Distance at which the widening of `Cones.carry_widening` equals the width of a cone: a cone's rms half-width on
-one axis is r / sqrt(n), mm."""
+WIDENING_MM = 300.0
+"""Lateral variance per mm of path times the number of directions, mm2/mm: at 100 mm the rms width on one axis is half
+the distance between neighbouring directions of any set (sqrt(4 pi / n) r), which leaves no ripple between them."""
 
 FAINT = 1e-10
 """A mode that has fallen below this part of its brightest emission is put down where it is."""

@@ -34,7 +34,7 @@ if TYPE_CHECKING:
 
 __all__ = ["DIRECTIONS", "carry_stars", "carry_stars_transposed", "star_balance", "star_scales"]
 
-DIRECTIONS: dict[str, int] = {"star_light": 110, "star_neutron": 110, "star_photon": 86}
+DIRECTIONS: dict[str, int] = {"star_light": 110, "star_neutron": 194, "star_photon": 110}
 """Directions for each component that travels; see docs/explanation/star_transport.md for the study."""
 
 BLOCK_MM = 8.0
