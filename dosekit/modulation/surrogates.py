@@ -27,7 +27,8 @@ import numpy as np
 
 from dosekit.basis.components import COMPONENTS
 from dosekit.basis.constants import GRAY_PER_MEV_PER_GRAM
-from dosekit.errors import InputError, SizeError
+from dosekit.errors import InputError
+from dosekit.grids.memory import check_memory
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
@@ -47,7 +48,6 @@ _WIDE = ("star_neutron", "star_photon")
 _REACH_SIGMAS = 3.0
 _SIGNIFICANT = 1e-3
 _RAY_STEP_MM = 2.0
-_MOST_ENTRIES = 250_000_000
 _CHUNK = 2000
 
 
@@ -176,7 +176,7 @@ def pencil_matrices(
     Raises
     ------
     SizeError
-        More than 2.5e8 entries.
+        More entries than fit into memory.
     """
     from dosekit.maps.cones_threads import Threads
     from dosekit.modulation import kernels
@@ -193,12 +193,11 @@ def pencil_matrices(
         for row, own in zip(rows, spots, strict=True):
             threads.run(kernels.count_entries, (row.u_mm, row.v_mm, row.reach_mm, row.live, own, counts), len(places))
         starts = np.concatenate([[0], np.cumsum(counts)])
-        if float(starts[-1]) * len(factors) > _MOST_ENTRIES:
-            raise SizeError(
-                f"a stand-in with {int(starts[-1]) * len(factors)} entries",
-                allowed=f"at most {_MOST_ENTRIES}",
-                remedy="choose coarser voxels, a wider spacing of spots or fewer steps",
-            )
+        check_memory(
+            4.0 * float(starts[-1]) * (1.0 + len(factors)),
+            what=f"a stand-in of {int(starts[-1])} entries",
+            remedy="choose coarser voxels, a wider spacing of spots or fewer steps",
+        )
         columns = np.empty(int(starts[-1]), dtype=np.int32)
         values = np.empty((len(factors), int(starts[-1])), dtype=np.float32)
         at, first = starts[:-1].copy(), 0

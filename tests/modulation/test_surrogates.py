@@ -138,3 +138,13 @@ def test_fields_follow_one_another_in_the_columns(tank, field, library):
         vector[place * count : (place + 1) * count] = 1.0
         alone = pencil_matrices([Pencils(one, library)], tank, near, factors=[NARROW])[0]
         np.testing.assert_allclose(both @ vector, alone @ np.ones(count), rtol=1e-12)
+
+
+def test_more_than_fits_into_memory_is_refused(tank, field, library, monkeypatch):
+    from dosekit.errors import SizeError
+    from dosekit.grids import memory
+
+    monkeypatch.setattr(memory, "allowed_gb", lambda: 1e-6)
+    near = np.array([np.ravel_multi_index((12, row, 12), tank.shape) for row in range(30)])
+    with pytest.raises(SizeError, match="stand-in"):
+        pencil_matrices([Pencils(field, library)], tank, near, factors=[NARROW])
