@@ -150,12 +150,13 @@ def look(
 @click.option("-p", "--particle", default="pi-", show_default=True)
 @click.option("-m", "--momentum", type=float, required=True, metavar="MEV/C", help="First guess of the momentum.")
 @click.option("--medium", default="water", show_default=True)
+@click.option("--offset", is_flag=True, help="Fit the zero of depth too; it nearly stands for the momentum.")
 @click.option("-o", "--out", type=click.Path(path_type=Path), help="Write result and figure into this folder.")
-def fit(data: Path, particle: str, momentum: float, medium: str, out: Path | None) -> None:
+def fit(data: Path, particle: str, momentum: float, medium: str, offset: bool, out: Path | None) -> None:
     """Fit a beam to measured DATA: a CSV of depth_mm and relative dose."""
     from dosekit.studies.small_curves import fit_summary, fit_to_file, write_fit
 
-    result = fit_to_file(data, particle=particle, momentum_mev_c=momentum, medium=medium)
+    result = fit_to_file(data, particle=particle, momentum_mev_c=momentum, medium=medium, offset=offset)
     click.echo(fit_summary(result))
     if out is not None:
         for path in write_fit(result, out):

@@ -22,6 +22,7 @@
     DosekitWarning (UserWarning)
     |-- ValidityWarning               a model is used outside what it was made for
     |-- CalibrationWarning            HU values outside the calibration were clamped
+    |-- FitWarning                    a fit cannot tell its parameters apart, or ended at a limit
     |-- GeometryWarning               geometry was repaired or a field misses the volume
     `-- SettingsWarning               the chosen settings do not reach their goal
 """
@@ -38,6 +39,7 @@ __all__ = [
     "DicomError",
     "DosekitError",
     "DosekitWarning",
+    "FitWarning",
     "GeometryError",
     "GeometryWarning",
     "GridError",
@@ -171,6 +173,10 @@ class ValidityWarning(DosekitWarning):
 
 class CalibrationWarning(DosekitWarning):
     """HU values outside the calibration were clamped."""
+
+
+class FitWarning(DosekitWarning):
+    """A fit cannot tell its parameters apart, or ended at a limit."""
 
 
 class GeometryWarning(DosekitWarning):

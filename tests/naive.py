@@ -174,6 +174,7 @@ def carried_straight(source, cosines, step_mm, node_energy, cells):
     """Carry particles one by one along straight lines; source (nodes, cells, directions). Deposit and stops by cell.
 
     Positions lie on a lattice that moves with each direction, so a particle starts on the two lattice points about it.
+    Deposit is shared between the two nearest cells; what falls over an end has escaped.
     """
     deposit, stops, escaped = [0.0] * cells, [0.0] * cells, 0.0
     nodes = len(source)
@@ -196,8 +197,13 @@ def carried_straight(source, cosines, step_mm, node_energy, cells):
                     left, inside = node, True
                     while left > 0 and inside:
                         given = number * (node_energy[left] - node_energy[left - 1])
-                        for target, piece in share(place + 0.5 * cosine):
-                            deposit[target] += given * piece
+                        middle = math.floor(place + 0.5 * cosine)
+                        beyond = place + 0.5 * cosine - middle
+                        for target, piece in ((middle, 1.0 - beyond), (middle + 1, beyond)):
+                            if 0 <= target < cells:
+                                deposit[target] += given * piece
+                            else:
+                                escaped += given * piece
                         place += cosine
                         left -= 1
                         if place < -0.5 or place > cells - 0.5:

@@ -1,11 +1,13 @@
 """Which coarse grid do scattered particles and products use, and how do its scores come back to fine bins?
 
 The coarse grid counts water-equivalent depth (depth itself where the medium is uniform) in steps of the residual-range
-step h, 1/80 of the range. Scores go back through a monotone cubic of their running sum, so that nothing is lost.
+step h, 1/80 of the range. Scores go back through a monotone cubic of their running sum, so that nothing is lost. The
+last cell may reach beyond the end of the stack; what lies there has left the medium.
 """
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -55,8 +57,8 @@ class CoarseGrid:
 
     @property
     def nodes(self) -> NDArray[np.float64]:
-        """Cell edges in units of cells; the last cell ends with the stack, half to one and a half cells long."""
-        return np.concatenate([np.arange(float(self.cells)), [self.place_of_edge[-1]]])
+        """Cell edges in units of cells."""
+        return np.arange(self.cells + 1.0)
 
     def to_bins(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
         """Share out values summed per cell to fine bins.
@@ -69,7 +71,7 @@ class CoarseGrid:
         Returns
         -------
         ndarray, shape (bins,)
-            Amounts per fine bin; the sum is kept.
+            Amounts per fine bin; the sum is kept but for what lies beyond the stack.
         """
         if not np.any(values):
             return np.zeros(len(self.place_of_edge) - 1)
@@ -107,10 +109,11 @@ def regrid(values: NDArray[np.float64], old: CoarseGrid, new: CoarseGrid) -> NDA
     Returns
     -------
     ndarray, shape (new cells, ...)
-        Amounts per new cell; sums are kept.
+        Amounts per new cell; sums are kept (what the old grid has beyond the new one goes into its last cell).
     """
     running = np.concatenate([np.zeros((1, *values.shape[1:])), np.cumsum(values, axis=0)])
     place = np.interp(new.nodes * new.step_mm, old.nodes * old.step_mm, np.arange(old.cells + 1.0))
+    place[-1] = old.cells
     low = np.minimum(place.astype(np.int64), old.cells - 1)
     part = (place - low).reshape(-1, *([1] * (values.ndim - 1)))
     return np.asarray(np.diff(running[low] * (1.0 - part) + running[low + 1] * part, axis=0))
@@ -156,7 +159,7 @@ def coarse_grid(
     base = range_table(species, reference).stopping_mev_mm(probe)
     ratio = np.array([float(range_table(species, stuff).stopping_mev_mm(probe) / base) for stuff, _ in layers])
     equivalent = np.concatenate([[0.0], np.cumsum(np.diff(edges_mm) * ratio[layer])])
-    cells = max(round(equivalent[-1] / step_mm), 2)
+    cells = max(math.ceil(equivalent[-1] / step_mm - 1e-9), 2)
     place = equivalent / step_mm
     border_place = np.cumsum(np.array([thickness for _, thickness in layers]) * ratio) / step_mm
     layer_of_cell = np.minimum(np.searchsorted(border_place, np.arange(cells) + 0.5), len(layers) - 1)

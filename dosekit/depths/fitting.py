@@ -3,35 +3,48 @@
 Momentum, momentum spread, contaminant fractions and an offset of depth are fitted to points of relative dose by least
 squares (``scipy.optimize.least_squares``); the scale of the dose is eliminated in each step. Dose is taken as
 energy per mm of a broad beam (the laterally integrated curve). The covariance is that of the linearised problem,
-scaled by the mean square residual where no uncertainties are given. An offset of depth and the momentum nearly
-stand for each other (only the plateau tells them apart): leave the offset out where the zero of depth is known.
+scaled by the mean square residual where no uncertainties are given.
+
+An offset of depth and the momentum nearly stand for each other: both move the peak, and only the plateau tells them
+apart. The offset is fixed unless asked for; where both are free, the fit runs in the range left behind the offset,
+which is sure, and the offset, which is not, so that it converges; their covariance is carried back to the momentum.
 Someone who reconstructs a historic beam from a printed figure starts here.
 """
 
 from __future__ import annotations
 
-import csv
 import math
+import warnings
 from dataclasses import dataclass, field
-from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from dosekit.basis.materials import Material
+from dosekit.basis.particles import kinetic_energy_mev, momentum_mev_c
 from dosekit.beams.beam import Beam
+from dosekit.beams.ranges import range_table
 from dosekit.caution import CAUTION
 from dosekit.depths.curves import depth_curve
 from dosekit.depths.layers import Layers
-from dosekit.errors import InputError
+from dosekit.depths.measured import check_points, read_depth_dose
+from dosekit.errors import FitWarning, InputError
 
 if TYPE_CHECKING:
     import xarray as xr
 
 __all__ = ["BeamFit", "fit_beam", "read_depth_dose"]
 
-_SPREAD_FLOOR = 1e-4
+_SPECIES = ("mu-", "mu+", "e-", "e+")
+_KNOWN = ("momentum_mev_c", "momentum_sigma", "offset_mm", *_SPECIES)
+_SPREAD = (1e-4, 0.2)
+_LARGEST_OFFSET_MM = 40.0
+_LARGEST_FRACTION = 0.9
+_CLOSE = 0.98
+"""Correlation from which two parameters are said to stand for each other."""
+
+Vector = NDArray[np.float64]
 
 
 @dataclass(frozen=True)
@@ -57,84 +70,15 @@ class BeamFit:
     beam: Beam
     parameters: dict[str, float]
     sigma: dict[str, float]
-    covariance: NDArray[np.float64] = field(repr=False)
+    covariance: Vector = field(repr=False)
     residual_rms: float
     data: xr.Dataset = field(repr=False)
 
-
-def read_depth_dose(path: str | Path) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Read depth and relative dose from a CSV file with a header.
-
-    Parameters
-    ----------
-    path : str or Path
-        File whose first line names the columns, one beginning with ``depth`` (mm) and one with ``dose``; lines that
-        start with ``#`` are skipped.
-
-    Returns
-    -------
-    depth_mm, dose : ndarray
-        Points in the order of depth.
-
-    Raises
-    ------
-    InputError
-        If the file cannot be read, or its columns are absent, swapped or hold anything but finite numbers.
-    """
-    place = Path(path)
-    try:
-        text = place.read_text(encoding="utf-8-sig")
-    except (OSError, UnicodeDecodeError) as error:
-        raise InputError(
-            f"{place.name} cannot be read ({error.__class__.__name__})", allowed="a CSV text file"
-        ) from None
-    lines = [(n, line) for n, line in enumerate(text.splitlines(), 1) if line.strip() and not line.startswith("#")]
-    if len(lines) < 2:
-        raise InputError(f"{place.name} holds no points", allowed="a header and at least six rows")
-    names = [name.strip().lower() for name in next(csv.reader([lines[0][1]]))]
-    found = {}
-    for want in ("depth", "dose"):
-        match = [i for i, name in enumerate(names) if name.startswith((want, f"relative_{want}"))]
-        if len(match) != 1:
-            raise InputError(
-                f"{place.name}: columns {', '.join(names)}",
-                allowed="one column that begins with 'depth' (mm) and one that begins with 'dose'",
-                remedy="name the columns depth_mm,dose",
-            )
-        found[want] = match[0]
-    rows = []
-    for number, line in lines[1:]:
-        cells = next(csv.reader([line]))
-        try:
-            rows.append([float(cells[found["depth"]]), float(cells[found["dose"]])])
-        except (ValueError, IndexError):
-            raise InputError(
-                f"{place.name}, line {number}: {line.strip()!r}", allowed="two numbers", remedy="mend the row"
-            ) from None
-    table = np.array(rows)
-    _check_points(table[:, 0], table[:, 1], place.name)
-    order = np.argsort(table[:, 0], kind="stable")
-    return table[order, 0], table[order, 1]
-
-
-def _check_points(depth: NDArray[np.float64], dose: NDArray[np.float64], name: str) -> None:
-    """Refuse points that cannot be a depth-dose curve, among them swapped columns."""
-    if depth.shape != dose.shape or depth.ndim != 1 or len(depth) < 6:
-        raise InputError(f"{name}: {depth.shape} depths and {dose.shape} doses", allowed="at least six pairs")
-    if not (np.all(np.isfinite(depth)) and np.all(np.isfinite(dose))):
-        raise InputError(f"{name}: a value is missing or not finite", allowed="finite numbers", remedy="remove the row")
-    if np.any(dose < 0.0) or np.max(dose) <= 0.0:
-        raise InputError(f"{name}: negative dose, or none above zero", allowed="doses of 0 and more")
-    if np.any(depth < -50.0) or np.max(depth) > 2000.0:
-        raise InputError(f"{name}: depths from {np.min(depth):g} to {np.max(depth):g}", allowed="-50 to 2000 mm")
-    turns = np.sum(np.diff(np.sign(np.diff(depth[np.diff(depth, prepend=depth[0] - 1.0) != 0.0]))) != 0.0)
-    rising = np.all(np.diff(dose) > 0.0) or np.all(np.diff(dose) < 0.0)
-    if len(np.unique(depth)) < len(depth) or (turns > 0 and rising):
-        raise InputError(
-            f"{name}: depths repeat or jump while doses run evenly; the columns look swapped",
-            allowed="each depth (mm) once, in one column",
-            remedy="check which column holds depth",
-        )
+    @property
+    def correlation(self) -> Vector:
+        """Correlation in the order of `parameters`."""
+        deviation = np.sqrt(np.maximum(np.diag(self.covariance), 1e-300))
+        return np.asarray(self.covariance / np.outer(deviation, deviation))
 
 
 def fit_beam(
@@ -143,7 +87,7 @@ def fit_beam(
     beam: Beam,
     medium: str | Material | Layers = "water",
     *,
-    free: tuple[str, ...] = ("momentum_mev_c", "momentum_sigma", "offset_mm"),
+    free: tuple[str, ...] = ("momentum_mev_c", "momentum_sigma"),
     uncertainty: ArrayLike | None = None,
     yields: str = "evaluated",
     star_scale: float = 1.0,
@@ -162,9 +106,11 @@ def fit_beam(
         What the curve was measured in.
     free : tuple of str
         What is fitted: ``momentum_mev_c``, ``momentum_sigma``, ``offset_mm`` (depth of the model at measured depth
-        0, added to measured depths) and contaminant species, e.g. ``"e-"``.
+        0, added to measured depths; ask for it only where the zero of depth is not known) and contaminant species,
+        e.g. ``"e-"``.
     uncertainty : array_like, optional
-        Standard deviations of the doses.
+        Standard deviations of the doses. Without them all points weigh the same, and the covariance is scaled by what
+        is left over.
     yields, star_scale : str, float
         As in :func:`dosekit.depths.curves.depth_curve`.
 
@@ -177,108 +123,197 @@ def fit_beam(
     ------
     InputError
         If the points are not a curve or there is nothing to fit.
+
+    Warns
+    -----
+    FitWarning
+        If two parameters stand for each other (correlation over 0.98) or one ended at its limit.
     """
-    import xarray as xr
-    from scipy.interpolate import CubicSpline
     from scipy.optimize import least_squares
 
     depth, value = np.asarray(depth_mm, dtype=float), np.asarray(dose, dtype=float)
-    _check_points(depth, value, "depth-dose points")
-    if not free or len(set(free)) < len(free) or len(free) >= len(depth):
-        raise InputError(
-            f"{len(free)} free parameters for {len(depth)} points", allowed="different ones, fewer than points"
-        )
-    known = ("momentum_mev_c", "momentum_sigma", "offset_mm", "mu-", "mu+", "e-", "e+")
-    for name in free:
-        if name not in known:
-            raise InputError(f"free parameter {name!r}", allowed=", ".join(known))
-    peak = float(np.max(value))
-    sigma = np.full(len(depth), peak) if uncertainty is None else np.asarray(uncertainty, dtype=float)
+    check_points(depth, value, "depth-dose points")
+    _check_free(free, len(depth))
+    sigma = np.full(len(depth), float(np.max(value))) if uncertainty is None else np.asarray(uncertainty, dtype=float)
     if sigma.shape != depth.shape or not np.all(sigma > 0.0):
         raise InputError(
             "uncertainties that do not match the points or are not positive", allowed="one positive number each"
         )
-    fractions = beam.contaminant_fractions
-    start = {
-        "momentum_mev_c": beam.momentum_mev_c,
-        "momentum_sigma": max(beam.momentum_spread, 0.01),
-        "offset_mm": 0.0,
-        **{name: fractions.get(name, 0.1) for name in known[3:]},
-    }
-    limits = {
-        "momentum_mev_c": (0.8 * beam.momentum_mev_c, 1.25 * beam.momentum_mev_c),
-        "momentum_sigma": (_SPREAD_FLOOR, 0.2),
-        "offset_mm": (-40.0, 40.0),
-        **dict.fromkeys(known[3:], (0.0, 0.9)),
-    }
-    # steps well above the bin's own ripple; the curve is smooth over them
-    steps = {"momentum_mev_c": 1e-3 * beam.momentum_mev_c, "momentum_sigma": 1e-3, "offset_mm": 0.5}
-    longest = float(np.max(depth)) + 45.0
-    if isinstance(medium, Layers):
-        medium = medium.cut(max(longest, medium.total_mm))
-        longest = medium.total_mm
+    problem = _Problem(depth, value, sigma, beam, medium, free, {"yields": yields, "star_scale": star_scale})
+    found = least_squares(
+        problem.residual, problem.start, jac=problem.slope, bounds=(problem.low, problem.high), x_scale="jac",
+        xtol=1e-6, ftol=1e-7, max_nfev=40,
+    )  # fmt: skip
+    degrees = max(len(depth) - len(free) - 1, 1)
+    noise = float(np.sum(found.fun**2)) / degrees if uncertainty is None else 1.0
+    # wider steps for the covariance, so that the ripple of bins does not hide a weak dependence
+    wide = problem.slope(found.x, 3.0)
+    outward = problem.outward(found.x)
+    covariance = outward @ (noise * np.linalg.pinv(wide.T @ wide)) @ outward.T
+    fitted = problem.model(found.x)
+    values = problem.values(found.x)
+    result = BeamFit(
+        problem.beam(found.x),
+        values,
+        dict(zip(free, (float(x) for x in np.sqrt(np.maximum(np.diag(covariance), 0.0))), strict=True)),
+        np.asarray(covariance),
+        float(np.sqrt(np.mean((fitted - value) ** 2)) / np.max(value)),
+        _dataset(depth, value, fitted),
+    )
+    _warn(result, problem, found.x)
+    return result
 
-    def made(point: NDArray[np.float64]) -> Beam:
-        """Return the beam for a point of parameter space."""
-        values = dict(zip(free, point, strict=True))
-        mixed = {**fractions, **{n: max(float(values[n]), 0.0) for n in free if n in known[3:]}}
+
+def _check_free(free: tuple[str, ...], points: int) -> None:
+    """Refuse an empty, doubled, unknown or too long list of free parameters."""
+    if not free or len(set(free)) < len(free) or len(free) >= points:
+        raise InputError(
+            f"{len(free)} free parameters for {points} points", allowed="different ones, fewer than points"
+        )
+    for name in free:
+        if name not in _KNOWN:
+            raise InputError(f"free parameter {name!r}", allowed=", ".join(_KNOWN))
+
+
+def _dataset(depth: Vector, value: Vector, fitted: Vector) -> xr.Dataset:
+    """Return data, fit and residual against depth."""
+    import xarray as xr
+
+    columns = {"measured": value, "fitted": fitted, "residual": value - fitted}
+    return xr.Dataset(
+        {name: (("depth",), column, {"units": "relative"}) for name, column in columns.items()},
+        coords={"depth": ("depth", depth, {"units": "mm"})},
+        attrs={"title": "beam fitted to a measured depth-dose curve", "caution": CAUTION},
+    )
+
+
+def _warn(fit: BeamFit, problem: _Problem, point: Vector) -> None:
+    """Say what the numbers alone do not show."""
+    names = list(fit.parameters)
+    span = problem.high - problem.low
+    for name, x, low, high in zip(names, point, problem.low + 1e-4 * span, problem.high - 1e-4 * span, strict=True):
+        if not low < x < high:
+            warnings.warn(
+                f"the fit ended at the limit of {name}, {fit.parameters[name]:.4g}: its standard deviation means "
+                "nothing; fix it, or start nearer",
+                FitWarning,
+                stacklevel=3,
+            )
+    for i, one in enumerate(names):
+        for j in range(i):
+            if abs(fit.correlation[i, j]) > _CLOSE:
+                warnings.warn(
+                    f"{names[j]} and {one} stand for each other (correlation {fit.correlation[i, j]:.3f}): the points "
+                    "fix their combination, the depth of the peak, and hardly either of them; fix one that is known",
+                    FitWarning,
+                    stacklevel=3,
+                )
+
+
+class _Problem:
+    """The model of a fit and its inner parameters, those of `free` with the momentum replaced by a range if need be."""
+
+    def __init__(
+        self,
+        depth: Vector,
+        value: Vector,
+        sigma: Vector,
+        beam: Beam,
+        medium: str | Material | Layers,
+        free: tuple[str, ...],
+        settings: dict[str, str | float],
+    ) -> None:
+        self.depth, self.measured, self.sigma = depth, value, sigma
+        self.first, self.free, self.settings = beam, free, settings
+        self.longest = float(np.max(depth)) + 5.0 + _LARGEST_OFFSET_MM
+        self.medium = medium
+        if isinstance(medium, Layers):
+            self.medium = medium.cut(max(self.longest, medium.total_mm))
+            self.longest = self.medium.total_mm
+        self.by_range = "momentum_mev_c" in free and "offset_mm" in free
+        self.table = range_table(beam.particle, "water")
+        momentum = beam.momentum_mev_c
+        limits = {
+            "momentum_mev_c": (0.8 * momentum, 1.25 * momentum),
+            "momentum_sigma": _SPREAD,
+            "offset_mm": (-_LARGEST_OFFSET_MM, _LARGEST_OFFSET_MM),
+            **dict.fromkeys(_SPECIES, (0.0, _LARGEST_FRACTION)),
+        }
+        start = {
+            "momentum_mev_c": momentum,
+            "momentum_sigma": max(beam.momentum_spread, 0.01),
+            "offset_mm": 0.0,
+            **{name: beam.contaminant_fractions.get(name, 0.1) for name in _SPECIES},
+        }
+        # steps well above the ripple of bins; the curve is smooth over them
+        steps = {"momentum_mev_c": 1e-3 * momentum, "momentum_sigma": 1e-3, "offset_mm": 0.5}
+        if self.by_range:
+            limits["momentum_mev_c"] = (self._range(0.8 * momentum), self._range(1.25 * momentum))
+            start["momentum_mev_c"] = self._range(momentum)
+            steps["momentum_mev_c"], steps["offset_mm"] = 0.5, 3.0
+        self.low, self.high = np.array([limits[name] for name in free]).T
+        self.steps = np.array([steps.get(name, 0.005) for name in free])
+        self.start = np.clip([start[name] for name in free], self.low + 1e-9, self.high - 1e-9)
+
+    def _range(self, momentum: float) -> float:
+        """Return the range in water, mm."""
+        return float(self.table.range_mm(kinetic_energy_mev(self.first.particle, momentum)))
+
+    def values(self, point: Vector) -> dict[str, float]:
+        """Return the parameters of `free` at a point."""
+        values = {name: float(x) for name, x in zip(self.free, point, strict=True)}
+        if self.by_range:
+            reach = max(values["momentum_mev_c"] + values["offset_mm"], 2.0)
+            values["momentum_mev_c"] = float(momentum_mev_c(self.first.particle, self.table.energy_mev(reach)))
+        return values
+
+    def outward(self, point: Vector) -> Vector:
+        """Return d(parameters of `free`) / d(inner parameters)."""
+        matrix = np.eye(len(self.free))
+        if self.by_range:
+            row, column = self.free.index("momentum_mev_c"), self.free.index("offset_mm")
+            here = self.values(point)["momentum_mev_c"]
+            per_mm = 2e-3 * here / (self._range(1.001 * here) - self._range(0.999 * here))
+            matrix[row, row] = matrix[row, column] = per_mm
+        return matrix
+
+    def beam(self, point: Vector) -> Beam:
+        """Return the beam at a point."""
+        values = self.values(point)
+        mixed = {**self.first.contaminant_fractions, **{n: max(values[n], 0.0) for n in self.free if n in _SPECIES}}
         total = math.fsum(mixed.values())
         if total > 1.0:
             mixed = {name: share / total for name, share in mixed.items()}
-        return beam.replace(
-            momentum_mev_c=float(values.get("momentum_mev_c", beam.momentum_mev_c)),
-            momentum_sigma=float(values.get("momentum_sigma", beam.momentum_spread)),
+        return self.first.replace(
+            momentum_mev_c=values.get("momentum_mev_c", self.first.momentum_mev_c),
+            momentum_sigma=values.get("momentum_sigma", self.first.momentum_spread),
             momentum_fwhm=None,
             contaminants=mixed,
         )
 
-    def model(point: NDArray[np.float64]) -> NDArray[np.float64]:
+    def model(self, point: Vector) -> Vector:
         """Return the curve at the measured depths, scaled to the data."""
-        curve = depth_curve(made(point), medium, yields=yields, bin_mm=1.0, depth_mm=longest, star_scale=star_scale)
+        from scipy.interpolate import CubicSpline
+
+        curve = depth_curve(self.beam(point), self.medium, bin_mm=1.0, depth_mm=self.longest, **self.settings)  # type: ignore[arg-type]
         total = curve["energy"].sum("component").to_numpy()
-        offset = dict(zip(free, point, strict=True)).get("offset_mm", 0.0)
-        at = CubicSpline(curve["depth"].to_numpy(), total)(np.clip(depth + offset, 0.0, longest))
-        factor = float(np.sum(at * value / sigma**2) / max(float(np.sum((at / sigma) ** 2)), 1e-300))
-        return factor * at
+        offset = self.values(point).get("offset_mm", 0.0)
+        place = np.clip(self.depth + offset, 0.0, self.longest)
+        at = CubicSpline(curve["depth"].to_numpy(), total)(place)
+        weight = 1.0 / self.sigma**2
+        factor = float(np.sum(at * self.measured * weight) / max(float(np.sum(at * at * weight)), 1e-300))
+        return np.asarray(factor * at)
 
-    def residual(point: NDArray[np.float64]) -> NDArray[np.float64]:
+    def residual(self, point: Vector) -> Vector:
         """Return weighted residuals."""
-        return np.asarray((model(point) - value) / sigma)
+        return np.asarray((self.model(point) - self.measured) / self.sigma)
 
-    def slope(point: NDArray[np.float64], factor: float = 1.0) -> NDArray[np.float64]:
-        """Return the Jacobian by central differences with steps that the bins allow."""
+    def slope(self, point: Vector, factor: float = 1.0) -> Vector:
+        """Return the Jacobian by central differences."""
         columns = []
-        for index, name in enumerate(free):
-            move = np.zeros(len(free))
-            move[index] = factor * steps.get(name, 0.005)
-            low = np.maximum(point - move, [limits[n][0] for n in free])
-            high = np.minimum(point + move, [limits[n][1] for n in free])
-            columns.append((residual(high) - residual(low)) / (high[index] - low[index]))
+        for index, step in enumerate(self.steps):
+            move = np.zeros(len(point))
+            move[index] = factor * step
+            low, high = np.maximum(point - move, self.low), np.minimum(point + move, self.high)
+            columns.append((self.residual(high) - self.residual(low)) / (high[index] - low[index]))
         return np.stack(columns, axis=1)
-
-    bounds = ([limits[name][0] for name in free], [limits[name][1] for name in free])
-    begin = np.clip([start[name] for name in free], np.array(bounds[0]) + 1e-9, np.array(bounds[1]) - 1e-9)
-    found = least_squares(residual, begin, jac=slope, bounds=bounds, x_scale="jac", xtol=1e-8, ftol=1e-10, max_nfev=40)
-    degrees = max(len(depth) - len(free) - 1, 1)
-    noise = float(np.sum(found.fun**2)) / degrees if uncertainty is None else 1.0
-    # wider steps for the covariance: momentum and offset nearly stand for each other, and ripple would hide it
-    wide = slope(found.x, 3.0)
-    covariance = noise * np.linalg.pinv(wide.T @ wide)
-    fitted = model(found.x)
-    data = xr.Dataset(
-        {
-            "measured": (("depth",), value, {"units": "relative"}),
-            "fitted": (("depth",), fitted, {"units": "relative"}),
-            "residual": (("depth",), value - fitted, {"units": "relative"}),
-        },
-        coords={"depth": ("depth", depth, {"units": "mm"})},
-        attrs={"title": "beam fitted to a measured depth-dose curve", "caution": CAUTION},
-    )
-    return BeamFit(
-        made(found.x),
-        {name: float(x) for name, x in zip(free, found.x, strict=True)},
-        {name: float(x) for name, x in zip(free, np.sqrt(np.maximum(np.diag(covariance), 0.0)), strict=True)},
-        np.asarray(covariance),
-        float(np.sqrt(np.mean((fitted - value) ** 2))) / peak,
-        data,
-    )

@@ -33,6 +33,7 @@ from dosekit.depths.tables import GROUP_ENERGY_MEV, node_spread
 __all__ = ["annihilation_cm2_g", "carry_electrons", "decay_muons", "michel_electrons"]
 
 _GAMMA_CM2_G = 0.0170
+_SMALLEST_SHARE = 1e-6  # of a turn in one step; smaller ones cost time only
 
 
 @lru_cache(maxsize=64)
@@ -130,7 +131,9 @@ def _electron_tables(
             for stuff in materials
         ]
     )
-    return energy, let, photons / (collision + photons), diffusion_matrices(np.minimum(power * step, 50.0))
+    turn = diffusion_matrices(np.minimum(power * step, 50.0))
+    turn = np.where(turn > _SMALLEST_SHARE, turn, 0.0)
+    return energy, let, photons / (collision + photons), turn / np.sum(turn, axis=2, keepdims=True)
 
 
 def _losses(

@@ -7,6 +7,7 @@ muons and electrons from decays in flight and at rest. Everything per particle a
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 from functools import lru_cache
 
@@ -16,6 +17,7 @@ from numpy.typing import NDArray
 from dosekit.basis.materials import Material
 from dosekit.basis.particles import kinetic_energy_mev, particle
 from dosekit.beams.decay import MICHEL_MEAN_ENERGY_MEV, MUON_ENERGY_AT_REST_MEV
+from dosekit.beams.electrons import electron_stopping_powers
 from dosekit.beams.reactions import CHANNELS, reactions
 from dosekit.depths.angles import COSINES
 from dosekit.depths.coarse import CoarseGrid, coarse_grid, regrid
@@ -41,6 +43,8 @@ _NEUTRAL_STEPS = 2.0
 """Cell of neutral products, which vary slowly, in steps of residual range."""
 _DECAY_STEPS = {"pi-": 1.0, "pi+": 0.5, "mu-": 0.5, "mu+": 0.5, "proton": 2.0}
 """Cell of decays in the same unit; electrons from a thin layer of stops have a sharp maximum there."""
+_LEAST_DECAY_STEP_G_CM2 = 0.1
+"""Electrons go 20 cm, however short the range of the beam is."""
 _NO_BREMSSTRAHLUNG = ("cascade",)
 """Yield sets whose results list no bremsstrahlung among their processes, and show no photons far from decays."""
 
@@ -162,11 +166,13 @@ def _solve(
     charged.let_weighted += scattered.recoil * 100.0
     parts["in_flight_charged"] = charged
     reacted = scattered.core_reactions + scattered.later_reactions
+    steps = (
+        _NEUTRAL_STEPS * grid.step_mm,
+        max(_DECAY_STEPS[species] * grid.step_mm, _LEAST_DECAY_STEP_G_CM2 * 10.0 / grid.reference.density_g_cm3),
+    )
     wide, close = (
-        coarse_grid(
-            species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=factor * grid.step_mm
-        )
-        for factor in (_NEUTRAL_STEPS, _DECAY_STEPS[species])
+        coarse_grid(species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=step)
+        for step in steps
     )
     neutral, emitted = neutral_products(species, regrid(reacted, grid, wide), wide, yields=yields, width_mm=width_mm)
     decayed, rest = _decays(species, core, grid, close, scattered, yields, width_mm)
@@ -198,16 +204,24 @@ def _solve(
     _add_later(channels, scattered, grid, species, yields)
 
     rest_energy = particle(species).mass_mev if species != "proton" else 0.0
-    stars = float(np.sum(core.stops) + np.sum(scattered.carried.stops)) * _PION_REST if species == "pi-" else 0.0
+    stars = float(np.sum(core.stops) + np.sum(stopped["scattered"])) * _PION_REST if species == "pi-" else 0.0
+    left = scattered.carried.stops.sum() - stopped["scattered"].sum()
     out = scattered.carried.escaped
-    escaped = (
-        float(np.sum(core.deposit) - np.sum(built_up))
-        + core.energy_out
-        + float(core.number[-1]) * rest_energy
-        + float(out[0] + out[2] + (out[1] + out[3]) * rest_energy)
-    )
-    escaped += float(charged.escaped[0] + charged.escaped[2]) + float(
-        sum(np.sum(v) for v in emitted.values()) - np.sum(neutral)
+    emitted_mev = math.fsum(float(np.sum(values)) for values in emitted.values())
+    made = {name: part.deposit for name, part in parts.items()} | {"decay": decayed.deposit}
+    made |= {name: amount for name, (amount, _) in rest.capture.items()}
+    kept = {**deposit, "decay": deposit["decay"] - at_rest}
+    escaped = math.fsum(
+        [
+            float(np.sum(core.deposit) - np.sum(built_up)),
+            core.energy_out + float(core.number[-1]) * rest_energy,
+            float(out[0] + out[2] + (out[1] + out[3]) * rest_energy),
+            float(left) * {"pi-": _PION_REST, "pi+": MUON_ENERGY_AT_REST_MEV}.get(species, 0.0),
+            float(charged.escaped[0] + charged.escaped[2]),
+            emitted_mev - float(np.sum(kept["in_flight_neutral"])),
+            # what lies in the last cells beyond the stack
+            *(float(np.sum(values) - np.sum(kept[name])) for name, values in made.items()),
+        ]
     )
     ledger = {
         "in": core.energy_in + rest_energy,
@@ -453,13 +467,19 @@ def _electrons(
     z = np.linspace(-2.0, 2.0, 9) if spread > 0.0 else np.zeros(1)
     weight = np.exp(-0.5 * z**2)
     energies = kinetic_energy_mev(species, momentum * np.maximum(1.0 + spread * z, 0.05))
+    # they enter at the face and are carried from the middle of the first cell: the half step before is given here
+    per_mm = 0.1 * grid.reference.density_g_cm3 * electron_stopping_powers(grid.reference, energies)[0]
+    entered = np.maximum(energies - 0.5 * step * per_mm, 1e-3)
+    first = float(np.sum((energies - entered) * weight) / np.sum(weight))
     number = np.zeros(grid.cells)
     number[0] = 1.0
     angular = np.zeros(len(COSINES))
     angular[-1] = 1.0
     run, photons = carry_electrons(
-        (np.asarray(energies), weight / np.sum(weight)), number, angular, grid, positron=species == "e+"
+        (np.asarray(entered), weight / np.sum(weight)), number, angular, grid, positron=species == "e+"
     )
+    run.deposit[0] += first
+    run.let_weighted[0] += first * float(np.mean(per_mm))
     bins = len(silent.layer)
     empty = np.zeros(bins)
     mean = float(np.sum(energies * weight) / np.sum(weight))
@@ -473,7 +493,8 @@ def _electrons(
     let = {"core": empty, "scattered": weighted / np.where(deposit["scattered"] > 1e-15, deposit["scattered"], 1.0)}
     ledger = {
         "in": mean,
-        "escaped": photons + float(run.escaped[0] + run.escaped[2]),
+        "escaped": photons
+        + float(run.escaped[0] + run.escaped[2] + np.sum(run.deposit) - np.sum(deposit["scattered"])),
         "neutrino": 0.0,
         "binding": 0.0,
         "electron_rest": -2.0 * _ELECTRON_REST * float(np.sum(run.stops)) if species == "e+" else 0.0,

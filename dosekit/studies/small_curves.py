@@ -179,8 +179,10 @@ def write_curve(curve: xr.Dataset, folder: str | Path) -> list[Path]:
     return [table, data, files.pdf, files.png]
 
 
-def fit_to_file(path: str | Path, *, particle: str, momentum_mev_c: float, medium: str = "water") -> BeamFit:
-    """Fit momentum, spread, offset, muons and electrons to a measured depth dose in a CSV file.
+def fit_to_file(
+    path: str | Path, *, particle: str, momentum_mev_c: float, medium: str = "water", offset: bool = False
+) -> BeamFit:
+    """Fit momentum, spread, muons and electrons to a measured depth dose in a CSV file.
 
     Parameters
     ----------
@@ -192,6 +194,8 @@ def fit_to_file(path: str | Path, *, particle: str, momentum_mev_c: float, mediu
         First guess, MeV/c.
     medium : str
         See :func:`parse_medium`.
+    offset : bool
+        Whether the zero of depth is fitted too; it nearly stands for the momentum.
 
     Returns
     -------
@@ -202,7 +206,7 @@ def fit_to_file(path: str | Path, *, particle: str, momentum_mev_c: float, mediu
     from dosekit.depths.fitting import fit_beam, read_depth_dose
 
     depth, dose = read_depth_dose(path)
-    free = ["momentum_mev_c", "momentum_sigma", "offset_mm"]
+    free = ["momentum_mev_c", "momentum_sigma", *(["offset_mm"] if offset else [])]
     contaminants: dict[str, float] | None = None
     if particle in ("pi-", "pi+"):
         sign = particle[-1]
@@ -223,10 +227,15 @@ def fit_summary(fit: BeamFit) -> str:
     Returns
     -------
     str
-        Parameters with their standard deviations.
+        Parameters with their standard deviations, and the largest correlation.
     """
     lines = [f"fitted {fit.beam.particle} beam, rms residual {100 * fit.residual_rms:.2f} % of the peak"]
     lines += [f"  {name:16s} {value:10.4f} ± {fit.sigma[name]:.4f}" for name, value in fit.parameters.items()]
+    pairs = {(i, j): fit.correlation[i, j] for i in range(len(fit.parameters)) for j in range(i)}
+    if pairs:
+        i, j = max(pairs, key=lambda pair: abs(pairs[pair]))
+        names = list(fit.parameters)
+        lines.append(f"  largest correlation: {names[j]} with {names[i]}, {pairs[i, j]:.2f}")
     lines.append(BANNER)
     return "\n".join(lines)
 

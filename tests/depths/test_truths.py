@@ -91,6 +91,27 @@ def test_hydrogen_keeps_muons_in_the_cascade_set_alone():
     assert muon_capture_share(carbon, yields="cascade") == pytest.approx(muon_capture_share(carbon))
 
 
+@pytest.mark.parametrize("depth_mm", [247.0, 248.0, 250.0, 300.0])
+def test_the_end_of_a_stack_takes_nothing_away_and_adds_nothing(depth_mm):
+    """What leaves escapes. Only what a longer stack scatters back is missing, and that comes smoothly."""
+    beam = dk.Beam("pi-", momentum_mev_c=153.7, contaminants={"mu-": 0.06, "e-": 0.08})
+    curve, longer = (dk.depth_curve(beam, "water", depth_mm=depth) for depth in (depth_mm, 420.0))
+    assert abs(balance(curve)) < 1e-3
+    longer = longer.isel(depth=slice(0, len(curve["depth"])))
+    peak = float(longer["energy"].sum("component").max())
+    for name in COMPONENTS:
+        ours, theirs = (c["energy"].sel(component=name).to_numpy() for c in (curve, longer))
+        assert np.max(np.abs(ours - theirs)) < 1e-3 * peak, name
+    # electrons run ahead: there is no scattering back to speak of, and no edge in front
+    electrons, theirs = (c["energy"].sel(component="contaminant_electron").to_numpy() for c in (curve, longer))
+    np.testing.assert_allclose(electrons[-12:], theirs[-12:], rtol=0.03)  # cells differ a little
+    assert np.max(np.abs(np.diff(electrons[:12]))) < 0.02 * electrons[0]
+    for name in ("decay", "contaminant_muon"):
+        share = (curve["energy"].sel(component=name) / longer["energy"].sel(component=name)).to_numpy()[-10:]
+        assert np.all(np.diff(share) < 0.005), name
+        assert share[-1] > 0.75, name
+
+
 def test_nothing_is_negative_and_nothing_is_missing():
     curve = dk.depth_curve(BEAMS["mixed"], "water")
     assert list(curve["component"].to_numpy()) == list(COMPONENTS)
