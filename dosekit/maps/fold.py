@@ -26,7 +26,7 @@ from dosekit.maps.fields import Field
 from dosekit.maps.pencils import FieldPencils, field_pencils
 from dosekit.maps.rays import Matter, matter_of
 from dosekit.maps.regrid import DoseGrid, dose_grid_of, overlap_matrices, share_by_overlap
-from dosekit.maps.tables import TARGETS
+from dosekit.maps.tables import TARGETS, StepTables, step_tables
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -160,7 +160,7 @@ def library_of(field: Field, yields: str) -> DepthLibrary:
     DepthLibrary
         Depth curves in water, kept for the beams asked for last.
     """
-    return _library(field.beam, tuple(float(value) for value in field.shift_mm), yields)
+    return _library(field.beam, _steps(field), yields)
 
 
 def pencils_of(
@@ -189,6 +189,7 @@ def pencils_of(
         matter_of(grid, field.beam.particle),
         library_of(field, yields) if library is None else library,
         patient_position=grid.patient_position,
+        tables=_tables(field.beam, _steps(field), yields) if library is None else None,
     )
 
 
@@ -201,6 +202,16 @@ def _library(beam: Beam, shift_mm: tuple[float, ...], yields: str) -> DepthLibra
     if beam.fixed_shifter_mm and beam.shifter_material is not None:
         reach -= beam.fixed_shifter_mm * float(relative_stopping_power(beam.shifter_material, beam.particle))
     return depth_library(beam, reach - np.array(shift_mm), mode="shifter", yields=yields)
+
+
+@lru_cache(maxsize=16)
+def _tables(beam: Beam, shift_mm: tuple[float, ...], yields: str) -> StepTables:
+    return step_tables(_library(beam, shift_mm, yields), beam)
+
+
+def _steps(field: Field) -> tuple[float, ...]:
+    """Return the range steps of a field, to know its library by."""
+    return tuple(float(value) for value in field.shift_mm)
 
 
 def fields_of(fields: Field | Iterable[Field]) -> Sequence[Field]:

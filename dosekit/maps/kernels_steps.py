@@ -10,7 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-__all__ = ["follow_rows", "lay_spots", "lay_spots_transposed", "read_rows", "widest_spread"]
+__all__ = ["follow_rows", "lay_spots", "lay_spots_transposed", "read_rows"]
 
 
 @njit(nogil=True, error_model="numpy", cache=True)
@@ -85,26 +85,6 @@ def _core(core, i, f, reference, growth, a2, squared_rungs, rungs, energy, stops
         g = min(np.floor(np.sqrt(squared)), highest)
         rung[k] = g
         upper[k] = min((squared - g * g) / (2.0 * g + 1.0), 1.0)
-
-
-@njit(nogil=True, error_model="numpy", cache=True)
-def widest_spread(wet, local, slant, w, inverse_bin, power, weight, start, ahead, reference, widest, begin, end):  # type: ignore[no-untyped-def]
-    """Find the largest scatter variance of any ray and step that still counts, for each row of rays."""
-    last = power.shape[0] - 1
-    for r in range(begin, end):
-        for c in range(wet.shape[2]):
-            moments = start.copy()
-            before = 0.0
-            for j in range(wet.shape[0]):
-                length = (ahead if j == 0 else w[j] - w[j - 1]) * slant[r, c]
-                i, f = _row(0.5 * (before + wet[j, r, c]), inverse_bin, last)
-                before = wet[j, r, c]
-                scatter = local[j, r, c] if j > 0 else 0.0
-                _advance(moments, length, scatter, f, power[i], power[i + 1], start.shape[1])
-                n, g = _row(before, inverse_bin, last)
-                for k in range(start.shape[1]):
-                    if (1.0 - g) * weight[n, k] + g * weight[n + 1, k] > 0.0:
-                        widest[r] = max(widest[r], moments[2, k] - reference[k])
 
 
 @njit(nogil=True, error_model="numpy", cache=True)

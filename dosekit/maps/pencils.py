@@ -15,7 +15,6 @@ from numpy.typing import NDArray
 
 from dosekit.errors import GeometryWarning
 from dosekit.grids.memory import check_memory
-from dosekit.maps.cones_threads import Threads
 from dosekit.maps.fields import Field
 from dosekit.maps.loops import Lattice, Loops, Spreads, core_table, field_bytes
 from dosekit.maps.passes import FieldPencils
@@ -38,7 +37,12 @@ _SIGNIFICANT = 1e-4
 
 
 def field_pencils(
-    field: Field, matter: Matter, library: DepthLibrary, *, patient_position: str = "HFS"
+    field: Field,
+    matter: Matter,
+    library: DepthLibrary,
+    *,
+    patient_position: str = "HFS",
+    tables: StepTables | None = None,
 ) -> FieldPencils:
     """Make a field ready to be folded.
 
@@ -52,6 +56,8 @@ def field_pencils(
         Depth curves in water for the field's range steps.
     patient_position : str
         How the patient lies.
+    tables : StepTables, optional
+        The library as `dosekit.maps.tables.step_tables` gives it, when that is known already.
 
     Returns
     -------
@@ -71,7 +77,7 @@ def field_pencils(
     from numba import get_num_threads
 
     frame = field.frame(patient_position)
-    tables = step_tables(library, field.beam)
+    tables = step_tables(library, field.beam) if tables is None else tables
     optics = [field.beam.axis(axis) for axis in range(2)]
     smallest = min(float(np.hypot(sigma, np.sqrt(tables.surface_variance_mm2.min()))) for sigma, _, _ in optics)
     planes = plane_lattice(frame, matter, spot_sigma_mm=smallest)
@@ -277,26 +283,35 @@ def _air_variance(optics: tuple[float, float, float], distance_mm: NDArray[np.fl
 
 def _widest(rays: RayTrace, planes: Planes, tables: StepTables, ahead: float, reference: NDArray[np.float64]) -> float:
     """Return the largest scatter variance behind the surface, from every third ray, with room for the others."""
-    from dosekit.maps import kernels_steps
+    wet = rays.wet_mm[:, ::3, ::3].reshape(len(planes.w_mm), -1)
+    scatter = rays.scatter[:, ::3, ::3].reshape(wet.shape)
+    slant = rays.slant[::3, ::3].reshape(-1, 1)
+    counts = tables.narrow[:, 0] > _SIGNIFICANT * tables.narrow[:, 0].max(axis=0)
+    counts[:-1] |= counts[1:]  # between a row and the next
+    deepest = float(np.flatnonzero(counts.any(axis=1)).max(initial=0)) + 1.5
+    a0, a1, a2 = (np.tile(moment, (wet.shape[1], 1)) for moment in tables.start)
+    widest, before = 0.0, np.zeros(wet.shape[1])
+    for j in range(len(wet)):
+        length = slant * (ahead if j == 0 else planes.w_mm[j] - planes.w_mm[j - 1])
+        row, part = _row_and_part(0.5 * (before + wet[j]) / tables.bin_mm, len(counts))
+        power = (1.0 - part) * tables.power[row] + part * tables.power[row + 1]
+        power *= scatter[j][:, None] if j > 0 else 0.0
+        a2 += length * (2.0 * a1 + length * (a0 + power * length / 3.0))
+        a1 += length * (a0 + 0.5 * power * length)
+        a0 += power * length
+        before = wet[j]
+        row, _ = _row_and_part(before / tables.bin_mm, len(counts))
+        widest = max(widest, float((a2 - reference)[counts[row]].max(initial=0.0)))
+        if float(before.min()) > deepest * tables.bin_mm:
+            break
+    return 1.1 * widest + 0.01
 
-    counts = np.ascontiguousarray(tables.narrow[:, 0] > _SIGNIFICANT * tables.narrow[:, 0].max(axis=0))
-    width = np.zeros(len(rays.v_mm[::3]))
-    shared = (
-        np.ascontiguousarray(rays.wet_mm[:, ::3, ::3]),
-        np.ascontiguousarray(rays.scatter[:, ::3, ::3]),
-        np.ascontiguousarray(rays.slant[::3, ::3]),
-        planes.w_mm,
-        1.0 / tables.bin_mm,
-        tables.power,
-        counts.astype(np.float64),
-        tables.start,
-        ahead,
-        reference,
-        width,
-    )
-    with Threads() as threads:
-        threads.run(kernels_steps.widest_spread, shared, len(width))
-    return 1.1 * float(width.max()) + 0.01
+
+def _row_and_part(place: NDArray[np.float64], rows: int) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """Return the table row below depths (in rows from the surface), and the share of the next as a column."""
+    from_first = np.clip(place - 0.5, 0.0, rows - 1.0)
+    row = np.minimum(from_first.astype(np.int64), rows - 2)
+    return row, (from_first - row)[:, None]
 
 
 def _widened(
