@@ -50,7 +50,7 @@ def deposit_straight(  # type: ignore[no-untyped-def]
     run_first,
     run_column,
     run_count,
-    shape,
+    run_place,
     flat,
     stride,
     count,
@@ -72,10 +72,10 @@ def deposit_straight(  # type: ignore[no-untyped-def]
     """
     parts, width = rows.size, share.shape[2]
     nodes, line = np.empty((count[1], count[2] * parts)), np.empty(count[2] * parts)
-    values = np.empty(shape[2])
+    values = np.empty(first.shape[1])
     layer = -1
     for n in range(begin, end):
-        x, y, z = run_first[n] % shape[2], (run_first[n] // shape[2]) % shape[1], run_first[n] // (shape[2] * shape[1])
+        x, y, z = run_place[n, 0], run_place[n, 1], run_place[n, 2]
         if z != layer:
             _layer(flat, stride, count, first[0, z], share[0, z], parts, nodes)
             layer = z

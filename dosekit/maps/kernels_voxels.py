@@ -76,7 +76,7 @@ def _read_coarse(coarse, j, lower, upper, place_u, place_v, value):  # type: ign
 
 @njit(nogil=True, error_model="numpy", cache=True)
 def deposit(  # type: ignore[no-untyped-def]
-    first, column, count, shape, start, turn, inverse_source, sub, planes, nodes, fine_lattice, fine, fine_lit,
+    first, column, count, place_of_run, start, turn, inverse_source, sub, planes, nodes, fine_lattice, fine, fine_lit,
     coarse_lattice, coarse, coarse_lit, index, rsp, rows, factor, out, begin, end,
 ):  # fmt: skip
     """Add maps to voxels: ``out[rows[target], column] += factor[row, material] * mean of the map in the voxel``.
@@ -87,7 +87,7 @@ def deposit(  # type: ignore[no-untyped-def]
     value = np.empty(6)  # all targets; written out so that loops over them become vectors
     weights_u, weights_v = np.empty(3), np.empty(3)
     for n in range(begin, end):
-        ix, iy, iz = first[n] % shape[2], (first[n] // shape[2]) % shape[1], first[n] // (shape[2] * shape[1])
+        ix, iy, iz = place_of_run[n, 0], place_of_run[n, 1], place_of_run[n, 2]
         for m in range(count[n]):
             some = False
             for t in range(6):
@@ -156,7 +156,7 @@ def _add_coarse(coarse, j, part, place_u, place_v, value):  # type: ignore[no-un
 
 @njit(nogil=True, error_model="numpy", cache=True)
 def deposit_transposed(  # type: ignore[no-untyped-def]
-    slabs, first, column, count, shape, start, turn, inverse_source, sub, planes, nodes, fine_lattice, fine,
+    slabs, first, column, count, place_of_run, start, turn, inverse_source, sub, planes, nodes, fine_lattice, fine,
     coarse_lattice, coarse, index, rsp, rows, factor, values, colour, begin, end,
 ):  # fmt: skip
     """Transpose of `deposit`: add voxels to the maps.
@@ -169,7 +169,7 @@ def deposit_transposed(  # type: ignore[no-untyped-def]
     weights_u, weights_v = np.empty(3), np.empty(3)
     for half in range(begin, end):
         for n in range(slabs[2 * half + colour], slabs[2 * half + colour + 1]):
-            ix, iy, iz = first[n] % shape[2], (first[n] // shape[2]) % shape[1], first[n] // (shape[2] * shape[1])
+            ix, iy, iz = place_of_run[n, 0], place_of_run[n, 1], place_of_run[n, 2]
             for m in range(count[n]):
                 matter, strength = index[first[n] + m], rsp[first[n] + m]
                 some = False

@@ -259,8 +259,7 @@ class FieldPencils:
                 for lattice, array, wanted in ((self.fine, fine, core), (self.coarse, coarse, rows)):
                     reading = straight_reading(self.matter, self.planes, self.fine, lattice, array)
                     shared: tuple[Any, ...] = (
-                        runs.first, runs.column, runs.count, np.array(self.matter.shape), array.reshape(-1), *reading,
-                        *self._matter(), wanted, factor, out,
+                        *self._of(runs), array.reshape(-1), *reading, *self._matter(), wanted, factor, out,
                     )  # fmt: skip
                     threads.run(kernels_straight.deposit_straight, shared, len(runs.first))
             return
@@ -268,7 +267,7 @@ class FieldPencils:
 
         lit = [np.array([plane.any() for plane in maps]) for maps in (fine, coarse)]
         shared = (
-            runs.first, runs.column, runs.count, *places_of_points(self.matter, self.planes, self.fine),
+            *self._of(runs), *places_of_points(self.matter, self.planes, self.fine),
             _corner(self.fine), fine, lit[0], _corner(self.coarse), coarse, lit[1], *self._matter(), rows, factor, out,
         )  # fmt: skip
         with Threads() as threads:
@@ -303,7 +302,7 @@ class FieldPencils:
         fine, coarse = self._empty_maps()
         slabs = slabs_apart(runs, self.matter, self.planes, self.fine, self.coarse)
         shared = (
-            slabs, runs.first, runs.column, runs.count, *places_of_points(self.matter, self.planes, self.fine),
+            slabs, *self._of(runs), *places_of_points(self.matter, self.planes, self.fine),
             _corner(self.fine), fine, _corner(self.coarse), coarse, *self._matter(), rows, factor, values,
         )  # fmt: skip
         with Threads() as threads:
@@ -338,6 +337,10 @@ class FieldPencils:
         if isinstance(voxels, Runs):
             return voxels
         return Runs.of_voxels(voxels, voxels if columns is None else columns, self.matter.shape)
+
+    def _of(self, runs: Runs) -> tuple[NDArray[np.int64], ...]:
+        """Return runs as the kernels take them."""
+        return runs.first, runs.column, runs.count, runs.places(self.matter.shape)
 
     def _matter(self) -> tuple[NDArray[Any], NDArray[Any]]:
         """Return material and stopping power of each voxel, flat."""

@@ -37,6 +37,22 @@ class Runs:
     column: NDArray[np.int64]
     count: NDArray[np.int64]
 
+    def places(self, shape: tuple[int, int, int]) -> NDArray[np.int64]:
+        """Return the index (x, y, z) of the first voxel of each run.
+
+        Parameters
+        ----------
+        shape : tuple of int
+            Voxels of the volume along z, y and x.
+
+        Returns
+        -------
+        ndarray
+            Shape (runs, 3).
+        """
+        _, ny, nx = shape
+        return np.stack([self.first % nx, (self.first // nx) % ny, self.first // (nx * ny)], axis=1)
+
     @staticmethod
     def of_box(low: NDArray[np.int64], high: NDArray[np.int64], shape: tuple[int, int, int]) -> Runs:
         """Return the rows of a box; their columns are their flat indices.
@@ -142,7 +158,7 @@ def places_of_points(matter: Matter, planes: Planes, fine: Lattice) -> tuple[Any
     Returns
     -------
     tuple
-        Shape; beam position (mm) of index 0, 0, 0 and the matrix from index units to it; one over the source distance;
+        Beam position (mm) of index 0, 0, 0 and the matrix from index units to it; one over the source distance;
         points along x, y and z; first plane and planes per mm; nodes that the spline reads each way.
     """
     frame = planes.frame
@@ -153,7 +169,6 @@ def places_of_points(matter: Matter, planes: Planes, fine: Lattice) -> tuple[Any
         along = int(np.argmax(np.abs(frame.rotation[2])))
         sub[along] = max(1, round(float(matter.spacing_mm[along]) / step))
     return (
-        np.array(matter.shape),
         frame.rotation @ (matter.origin_mm - np.array(frame.isocentre_mm)),
         np.ascontiguousarray(frame.rotation * matter.spacing_mm),
         0.0 if frame.source_distance_mm is None else 1.0 / frame.source_distance_mm,

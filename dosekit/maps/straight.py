@@ -58,7 +58,7 @@ def straight_reading(
     stride, count, first, share : ndarray
         See :func:`dosekit.maps.kernels_straight.deposit_straight`.
     """
-    _, start, turn, _, sub, (first_plane, per_mm), nodes = places_of_points(matter, planes, fine)
+    start, turn, _, sub, (first_plane, per_mm), nodes = places_of_points(matter, planes, fine)
     matrices = []
     stride, count = np.zeros(3, dtype=np.int64), np.zeros(3, dtype=np.int64)
     for axis in range(3):  # z, y, x
