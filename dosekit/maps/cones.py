@@ -19,7 +19,17 @@ from numpy.typing import NDArray
 
 from dosekit.errors import InputError
 from dosekit.maps.cones_directions import direction_set
-from dosekit.maps.cones_layouts import LAST, add_turned, held_box, own, padded, padding, turn_last, unpadded
+from dosekit.maps.cones_layouts import (
+    LAST,
+    add_turned,
+    held_box,
+    own,
+    padded,
+    padding,
+    source_ranges,
+    turn_last,
+    unpadded,
+)
 from dosekit.maps.cones_threads import Threads
 
 __all__ = ["FAINT", "WIDENING_MM", "Cones"]
@@ -239,7 +249,7 @@ class Cones:
         ndarray [z, y, x]
             Energy left in each voxel, MeV. What is missing from the sum has left the volume.
         """
-        from dosekit.maps.kernels_stars import source_ranges, sweep
+        from dosekit.maps.kernels_stars import sweep
 
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         by_stops = sources_mev is None
@@ -309,7 +319,7 @@ class Cones:
         ndarray [z, y, x] or [m, z, y, x]
             What a stop in each voxel (or a unit of energy in each mode) counts.
         """
-        from dosekit.maps.kernels_stars import source_ranges, sweep_transposed
+        from dosekit.maps.kernels_stars import sweep_transposed
 
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         by_mode = energies_mev is None

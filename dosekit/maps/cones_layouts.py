@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from dosekit.maps.cones_threads import Threads
 
-__all__ = ["LAST", "add_turned", "held_box", "own", "padded", "padding", "turn_last", "unpadded"]
+__all__ = ["LAST", "add_turned", "held_box", "own", "padded", "padding", "source_ranges", "turn_last", "unpadded"]
 
 LAST = 2
 _PAD = 3
@@ -35,6 +35,16 @@ def unpadded(flat: NDArray[Any], like: NDArray[Any], order: tuple[int, int, int]
     nk, nj, ni = (like.shape[axis] for axis in order)
     inner = flat.reshape(nk, nj + 2 * _PAD, ni + 2 * _PAD)[:, _PAD:-_PAD, _PAD:-_PAD]
     return inner.transpose(np.argsort(order))
+
+
+def source_ranges(values: NDArray[Any]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Return the first and one past the last non-zero element of every row; length and 0 where there is none."""
+    size = values.shape[-1]
+    held = values != 0.0
+    empty = ~held.any(axis=-1)
+    first, last = held.argmax(axis=-1), size - held[..., ::-1].argmax(axis=-1)
+    first[empty], last[empty] = size, 0
+    return first, last
 
 
 def held_box(first: NDArray[Any], last: NDArray[Any]) -> tuple[slice, slice, slice]:

@@ -16,23 +16,7 @@ from numba import njit
 
 _C3, _C4, _C5, _C6 = 1.0 / 6.0, 1.0 / 24.0, 1.0 / 120.0, 1.0 / 720.0
 
-__all__ = ["source_ranges", "sweep", "sweep_transposed", "sweep_widening", "sweep_widening_transposed"]
-
-
-@njit(cache=True, error_model="numpy")
-def source_ranges(values):  # type: ignore[no-untyped-def]
-    """Return the first and one past the last non-zero element of every row."""
-    nk, nj, ni = values.shape
-    first = np.full((nk, nj), ni, dtype=np.int64)
-    last = np.zeros((nk, nj), dtype=np.int64)
-    for k in range(nk):
-        for j in range(nj):
-            for i in range(ni):
-                if values[k, j, i] != 0.0:
-                    if first[k, j] == ni:
-                        first[k, j] = i
-                    last[k, j] = i + 1
-    return first, last
+__all__ = ["sweep", "sweep_transposed", "sweep_widening", "sweep_widening_transposed"]
 
 
 @njit(cache=True, error_model="numpy")

@@ -82,9 +82,9 @@ class Blocks:
         z, y, x = self.shape
         return result[:z, :y, :x]
 
-    def averaged(self, values: NDArray[Any]) -> NDArray[np.float64]:
+    def averaged(self, values: NDArray[Any]) -> NDArray[np.float32]:
         """Return averages over whole blocks (what a block at the edge lacks counts as empty)."""
-        return self.summed(values) / float(np.prod(self.factors))
+        return (self.summed(values) / float(np.prod(self.factors))).astype(np.float32)
 
     def spread(self, energy: NDArray[Any]) -> NDArray[np.float64]:
         """Return energy per voxel from energy per block, smooth in dose and exact in every block."""
@@ -93,7 +93,9 @@ class Blocks:
         energy = np.ascontiguousarray(energy, dtype=np.float64)
         out = np.empty(self.shape)
         with Threads() as pool:
-            arguments = (energy, energy / self._block_mass, self._block_mass, self.mass, *self.factors, out)
+            low, part = self._between
+            dose = energy / self._block_mass
+            arguments = (energy, dose, self._block_mass, self.mass, *self.factors, low, part, out)
             pool.run(spread_blocks, arguments, self.coarse_shape[0])
         return out
 
@@ -118,16 +120,24 @@ class Blocks:
         return np.maximum(self.summed(self.mass), 1e-12)
 
     @cached_property
+    def _between(self) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+        """Return for the voxels of each axis (z, y, x) the block centre before them and the weight of the next."""
+        low = np.zeros((3, max(self.shape)), dtype=np.int64)
+        part = np.zeros(low.shape)
+        for axis, (size, factor, blocks) in enumerate(zip(self.shape, self.factors, self.coarse_shape, strict=True)):
+            place = np.clip((np.arange(size) + 0.5) / factor - 0.5, 0.0, blocks - 1.0)
+            low[axis, :size] = np.minimum(place.astype(int), max(blocks - 2, 0))
+            part[axis, :size] = place - low[axis, :size]
+        return low, part
+
+    @cached_property
     def _matrices(self) -> list[NDArray[np.float64]]:
         """Linear interpolation from block centres to voxel centres, one matrix per axis."""
         matrices = []
-        for size, factor, blocks in zip(self.shape, self.factors, self.coarse_shape, strict=True):
-            place = np.clip((np.arange(size) + 0.5) / factor - 0.5, 0.0, blocks - 1.0)
-            index = np.minimum(place.astype(int), max(blocks - 2, 0))
-            part = place - index
+        for low, part, size, blocks in zip(*self._between, self.shape, self.coarse_shape, strict=True):
             matrix = np.zeros((size, blocks))
-            matrix[np.arange(size), index] += 1.0 - part
-            matrix[np.arange(size), np.minimum(index + 1, blocks - 1)] += part
+            matrix[np.arange(size), low[:size]] += 1.0 - part[:size]
+            matrix[np.arange(size), np.minimum(low[:size] + 1, blocks - 1)] += part[:size]
             matrices.append(matrix)
         return matrices
 
