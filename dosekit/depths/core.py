@@ -29,7 +29,7 @@ from dosekit.beams.reactions import CHANNELS, ENERGY_GRID_MEV, reactions
 from dosekit.beams.scattering import scattering_power_rad2_mm
 from dosekit.beams.straggling import mean_range_excess_mm, range_shape, range_sigma_mm, range_variance_mm2
 
-__all__ = ["Core", "solve_core"]
+__all__ = ["Core", "bin_edges", "solve_core"]
 
 _SPACING = 0.2
 _LOWEST_SIGMA = -9.0
@@ -126,7 +126,7 @@ def solve_core(
     Core
         The result.
     """
-    edges, layer = _edges(layers, bin_mm)
+    edges, layer = bin_edges(layers, bin_mm)
     mean_energy = float(kinetic_energy_mev(species, momentum))
     first = range_table(species, layers[0][0])
     front, final, weight = _classes(species, momentum, spread, layers[0][0], mean_energy, first)
@@ -207,8 +207,25 @@ def solve_core(
     )  # fmt: skip
 
 
-def _edges(layers: tuple[tuple[Material, float], ...], bin_mm: float) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
-    """Return bin edges that hold all multiples of the bin and all boundaries, and the layer of each bin."""
+def bin_edges(
+    layers: tuple[tuple[Material, float], ...], bin_mm: float
+) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    """Return bin edges that hold all multiples of the bin and all boundaries, and the layer of each bin.
+
+    Parameters
+    ----------
+    layers : tuple of (Material, float)
+        Materials and thicknesses, mm.
+    bin_mm : float
+        Largest bin, mm.
+
+    Returns
+    -------
+    edges_mm : ndarray, shape (bins + 1,)
+        Edges, mm.
+    layer : ndarray of int, shape (bins,)
+        Layer of each bin.
+    """
     borders = np.concatenate([[0.0], np.cumsum([thickness for _, thickness in layers])])
     regular = bin_mm * np.arange(int(np.ceil(borders[-1] / bin_mm - 1e-9)) + 1)
     regular = regular[regular < borders[-1] + 1e-9]
