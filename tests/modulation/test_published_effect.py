@@ -41,14 +41,14 @@ def mean_rbe(interval_mm, model, low, high):
 
 OF_LET = pytest.mark.xfail(
     strict=True,
-    reason="measured 1.20 to 1.25: averaged over its LET spectrum the dose of star neutrons has a factor of 1.4, of "
+    reason="measured 1.21 to 1.26: averaged over its LET spectrum the dose of star neutrons has a factor of 1.5, of "
     "light products 1.4, of helium and recoils 2.7 at low dose (recoils of 740 keV/um waste theirs), for alpha/beta 10 "
     "Gy and 2 Gy a fraction; the source names neither fraction nor reference photons",
 )
 BY_FACTORS = pytest.mark.xfail(
     strict=True,
     reason="measured 1.14: constant factors of 1.5 for products in flight (10 % of the plateau dose) and 2 for star "
-    "neutrons (7 %); averaged over their LET spectra both are 1.4 at low dose",
+    "neutrons (7 %); averaged over their LET spectra they are 1.4 and 1.5 at low dose",
 )
 
 
@@ -98,9 +98,9 @@ def test_effect_rises_from_plateau_to_peak(interval_mm):
 
 @pytest.mark.xfail(
     strict=True,
-    reason="measured 2.40: helium and recoils make 22 % of the effect with an enhancement of 1.53, light products and "
-    "neutrons 30 % with 2.7; even without any enhancement of the heavy ones 2.06 would be left, 1.7 needs 38 % of the "
-    "effect free of it",
+    reason="measured 2.37: helium and recoils of stars make 21 % of the effect with an enhancement of 1.53, light "
+    "products and neutrons 30 % with 2.6; without any enhancement of the former 2.0 would be left, 1.7 needs 38 % of "
+    "the effect free of it",
 )
 def test_oxygen_enhancement_in_the_peak(evidence):
     steps = field(INTERVALS[1])
