@@ -52,6 +52,7 @@ def invented_library(beam, shift_mm, *, tail_mm=60.0, straggling_mm=4.0):
         extra_sigma_mm=extra,
         kinetic_energy_mev=np.maximum(table.energy_mev(np.maximum(left, 0.5)), 0.3),
         let={},
+        unequal={},
     )
 
 

@@ -33,6 +33,7 @@ from numpy.typing import ArrayLike, NDArray
 from dosekit.basis.materials import Material, element, material
 from dosekit.basis.particles import Particle, particle
 from dosekit.basis.tables import read_table
+from dosekit.beams.elastic import elastic_laws, elastic_mean_cosine
 from dosekit.beams.emissions import PRODUCT_SPECIES, inflight_table, nearest_row, products_of
 from dosekit.errors import UnknownNameError
 
@@ -62,10 +63,7 @@ ENERGY_GRID_MEV: NDArray[np.float64] = np.array(
 
 _PION_REST_MEV = 139.57039
 _PI0_REST_MEV = 134.9768
-_HBAR_C_MEV_FM = 197.327
 _PROTON_ELASTIC_SHARE = 0.45
-_B0_FM = -0.061 * 1.414  # s wave, isoscalar with second order, m_pi^-1 = 1.414 fm
-_C0_FM3 = 0.21 * 1.414**3  # p wave, isoscalar
 
 
 @dataclass(frozen=True)
@@ -92,6 +90,8 @@ class Reactions:
         Energy that goes into binding per reaction, MeV (negative where the tables make a little too much).
     elastic_cosine : ndarray
         Mean cosine of elastic scattering.
+    elastic_laws : tuple of (ndarray, ndarray)
+        Laws of elastic scattering exp(kappa cos): probability per mm and kappa of each.
     elastic_loss_mev : ndarray
         Mean energy given to the nucleus in elastic scattering, MeV.
     struck_hydrogen_per_mm : ndarray
@@ -109,6 +109,7 @@ class Reactions:
     mean_cosine: dict[str, NDArray[np.float64]] = field(repr=False)
     binding_mev: NDArray[np.float64] = field(repr=False)
     elastic_cosine: NDArray[np.float64] = field(repr=False)
+    elastic_laws: tuple[tuple[NDArray[np.float64], NDArray[np.float64]], ...] = field(repr=False)
     elastic_loss_mev: NDArray[np.float64] = field(repr=False)
     struck_hydrogen_per_mm: NDArray[np.float64] = field(repr=False)
 
@@ -260,62 +261,6 @@ def element_cross_sections_mb(
     return result
 
 
-def elastic_mean_cosine(
-    symbol: str, projectile: str, kinetic_energy_mev: ArrayLike, *, yields: str = "evaluated"
-) -> NDArray[np.float64]:
-    """Return the mean cosine of elastic scattering on a nucleus.
-
-    Impulse approximation for pions on nuclei, |b0 + c0 k^2 cos|^2 exp(kappa cos), with the isoscalar s- and p-wave
-    parameters b0 = -0.061 / m_pi and c0 = 0.21 / m_pi^3 of T. Ericson & T.E.O. Ericson, Ann. Phys. 36 (1966) 323
-    and K. Stricker, H. McManus & J.A. Carr, Phys. Rev. C 19 (1979) 929 (from memory), and the form factor exp(-q^2
-    r^2 / 3), so kappa = 2 k^2 r^2 / 3 with the rms radius r = 0.82 A^(1/3) + 0.58 fm (L.R.B. Elton, Nuclear Sizes
-    (1961)). At 20 MeV the waves nearly cancel ahead and pions come backwards; over 50 MeV they go ahead. Hydrogen:
-    isotropic in the centre of mass, turned forward in the laboratory by the recoil. Protons, and the ``"cascade"`` set,
-    which stands for codes with one diffraction law for all hadrons: d sigma/dt ~ exp(b t) with the slope that the
-    optical theorem asks for, b = sigma_total^2 / (16 pi sigma_elastic), from the cross sections in use; kappa = 2 b
-    k^2.
-
-    Parameters
-    ----------
-    symbol : str
-        Element.
-    projectile : str
-        Projectile.
-    kinetic_energy_mev : array_like
-        Kinetic energy, MeV.
-    yields : {"evaluated", "cascade"}
-        Yield set.
-
-    Returns
-    -------
-    ndarray
-        Mean cosine, -1 to 1.
-    """
-    moving = particle(projectile)
-    energy = np.asarray(kinetic_energy_mev, dtype=float)
-    momentum = np.sqrt(energy * (energy + 2.0 * moving.mass_mev))
-    if symbol == "H":
-        return np.asarray((2.0 / 3.0) * np.minimum((energy + moving.mass_mev) / 938.272, 1.0))
-    wave = momentum / _HBAR_C_MEV_FM
-    if yields == "cascade" or not moving.name.startswith("pi"):
-        sections = element_cross_sections_mb(moving.name, symbol, energy, yields=yields)
-        elastic = np.maximum(sections["elastic"], 1e-9)
-        total = elastic + sections["absorption"] + sections["inelastic"] + sections["charge_exchange"]
-        slope = 0.1 * total**2 / (16.0 * np.pi * elastic)
-        return np.asarray(_cosine_of(np.minimum(2.0 * slope * wave**2, 300.0)))
-    radius = 0.82 * element(symbol).atomic_weight ** (1.0 / 3.0) + 0.58
-    kappa = 2.0 * wave**2 * radius**2 / 3.0
-    mu = np.linspace(-1.0, 1.0, 401)
-    law = (_B0_FM + _C0_FM3 * wave[..., None] ** 2 * mu) ** 2 * np.exp(kappa[..., None] * (mu - 1.0))
-    return np.asarray(np.sum(law * mu, axis=-1) / np.sum(law, axis=-1))
-
-
-def _cosine_of(kappa: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return coth(k) - 1/k, the mean cosine of exp(k cos)."""
-    safe = np.maximum(np.abs(kappa), 1e-3)
-    return np.asarray(np.sign(kappa) * (1.0 / np.tanh(safe) - 1.0 / safe))
-
-
 def _barashenkov(
     symbol: str, row: str, energy: NDArray[np.float64], inelastic: NDArray[np.float64], elastic: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -374,6 +319,7 @@ def _reactions(projectile: str, stuff: Material, yields: str) -> Reactions:
     forward = {species: np.zeros(len(grid)) for species in PRODUCT_SPECIES}
     elastic_cosine = np.zeros(len(grid))
     elastic_loss = np.zeros(len(grid))
+    laws = []
     gone = np.zeros(len(grid))
     struck = np.zeros(len(grid))
     mass = particle(projectile).mass_mev
@@ -398,6 +344,8 @@ def _reactions(projectile: str, stuff: Material, yields: str) -> Reactions:
         bounce = atoms_per_mm * sections["elastic"]
         cosine = elastic_mean_cosine(symbol, projectile, grid, yields=yields)
         elastic_cosine += bounce * cosine
+        for share, kappa in elastic_laws(symbol, projectile, grid, yields=yields):
+            laws.append((bounce * share, kappa))
         target = element(symbol).atomic_weight * 931.494
         if symbol == "H":
             fraction = 2.0 * mass * target * (1.0 + grid / (2.0 * mass)) / ((mass + target) ** 2 + 2.0 * target * grid)
@@ -419,5 +367,5 @@ def _reactions(projectile: str, stuff: Material, yields: str) -> Reactions:
     bounces = np.where(per_mm["elastic"] > 0.0, per_mm["elastic"], 1.0)
     return Reactions(
         projectile, stuff, yields, per_mm, number, result_energy, result_rms, result_cosine, binding,
-        elastic_cosine / bounces, elastic_loss / bounces, struck,
+        elastic_cosine / bounces, tuple(laws), elastic_loss / bounces, struck,
     )  # fmt: skip

@@ -116,9 +116,9 @@ def march(  # type: ignore[no-untyped-def]
     (materials, nodes, directions, directions), turn_reemit likewise for each class; turn (nodes, directions,
     directions) angular diffusion per step or of length 0; radiated (nodes) share of the loss that is bremsstrahlung.
     Sideways displacement (variance of one axis since emission) is carried along as a sum over particles; sideways
-    (cells) receives it times the deposit; within (thresholds, 3, cells) holds deposit, stops and sideways of
-    directions over each threshold of `ahead`. Scores: deposit, let_weighted, stops,
-    counts (3, cells) of events, reactions and decays (cells, groups), forward (2, cells) sum of cosine times
+    (cells) receives it times the deposit; within (thresholds, 4, cells) holds deposit, stops, sideways and
+    the same with the squared variance, of directions over each threshold of `ahead`. Scores: deposit, let_weighted,
+    stops, counts (3, cells) of events, reactions and decays (cells, groups), forward (2, cells) sum of cosine times
     events, escaped (4): energy and number through the front and the back, bremsstrahlung (cells, directions).
     Returns the energy that elastic scattering gave to nuclei, by cell.
     """
@@ -224,6 +224,8 @@ def march(  # type: ignore[no-untyped-def]
                         within[which, 0, second] += given * there
                         within[which, 2, first] += given * per_particle * here
                         within[which, 2, second] += given * per_particle * there
+                        within[which, 3, first] += given * per_particle * per_particle * here
+                        within[which, 3, second] += given * per_particle * per_particle * there
                 if brems > 0.0:
                     bremsstrahlung[first, j] += n * loss * brems * here
                     bremsstrahlung[second, j] += n * loss * brems * there

@@ -90,6 +90,8 @@ class DepthLibrary:
         Mean kinetic energy of the core, MeV.
     let : dict of str to ndarray, shape (K, N)
         Dose-averaged LET of the energy quantities, keV/um.
+    unequal : dict of str to ndarray, shape (K, N)
+        Mean squared extra variance over the square of its mean: how unequal displacements are; 1 if all are the same.
     """
 
     beam: Beam
@@ -104,6 +106,7 @@ class DepthLibrary:
     extra_sigma_mm: dict[str, NDArray[np.float64]] = field(repr=False)
     kinetic_energy_mev: NDArray[np.float64] = field(repr=False)
     let: dict[str, NDArray[np.float64]] = field(repr=False)
+    unequal: dict[str, NDArray[np.float64]] = field(repr=False, default_factory=dict)
 
     def depth_dose(
         self, components: bool = True, *, star_scale: float = 1.0, width_mm: float | None = 600.0
@@ -297,6 +300,7 @@ def _by_shifter(beam: Beam, residual: NDArray[np.float64], bins: int, bin_mm: fl
         beam, yields, "shifter", residual, shift, np.full(len(residual), beam.momentum_mev_c), bin_mm, centres,
         {name: moved(name) for name in QUANTITIES}, {name: look(values) for name, values in parts.sigma.items()},
         look(parts.energy), {name: look(values) for name, values in parts.let.items()},
+        {name: look(values) for name, values in parts.unequal.items()},
     )  # fmt: skip
 
 
@@ -322,6 +326,7 @@ def _by_momentum(beam: Beam, residual: NDArray[np.float64], bins: int, bin_mm: f
         {name: np.stack([row.sigma[name][keep] for row in rows]) for name in rows[0].sigma},
         np.stack([row.energy[keep] for row in rows]),
         {name: np.stack([row.let[name][keep] for row in rows]) for name in rows[0].let},
+        {name: np.stack([row.unequal[name][keep] for row in rows]) for name in rows[0].unequal},
     )  # fmt: skip
 
 
@@ -332,6 +337,7 @@ class _Parts:
     amount: dict[str, NDArray[np.float64]]
     let: dict[str, NDArray[np.float64]]
     sigma: dict[str, NDArray[np.float64]]
+    unequal: dict[str, NDArray[np.float64]]
     energy: NDArray[np.float64]
 
 
@@ -369,7 +375,7 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
         for name, fraction in beam.contaminant_fractions.items():
             if not name.startswith(first) or fraction <= 0.0:
                 continue
-            extra: Solution = solve(name, momentum, **settings)  # type: ignore[arg-type]
+            extra: Solution = solve(name, momentum, admixture=True, **settings)  # type: ignore[arg-type]
             here = fraction * np.sum(list(extra.deposit.values()), axis=0)
             amount[target] = amount[target] + here
             weighted = weighted + fraction * np.sum(
@@ -379,12 +385,13 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
         safe = np.where(amount[target] > 1e-15, amount[target], 1.0)
         let[target] = weighted / safe
         sigma[target] = np.sqrt(variance / safe)
-    for name, (given, stopped, width) in main.classes.items():
-        amount[name], amount[f"{name}_stops"], sigma[name] = given, stopped, width
+    unequal = {}
+    for name, (given, stopped, width, ratio) in main.classes.items():
+        amount[name], amount[f"{name}_stops"], sigma[name], unequal[name] = given, stopped, width, ratio
     amount["core_stops"], amount["scattered_stops"] = main.stops["core"], main.stops["scattered"]
     amount["reactions"] = main.channels["absorption"] + main.channels["inelastic"] + main.channels["charge_exchange"]
     mean = 0.5 * (main.core.mean_energy[1:] + main.core.mean_energy[:-1])
-    return _Parts(amount, let, sigma, mean)
+    return _Parts(amount, let, sigma, unequal, mean)
 
 
 def _core_variance(species: str, momentum: float, depth: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -36,8 +36,8 @@ __all__ = [
     "node_tables",
 ]
 
-AHEAD_COSINES = np.array([0.9, 0.5])
-"""Directions over these cosines count as near the beam and oblique to it."""
+AHEAD_COSINES = np.array([0.9, 0.5, -2.0])
+"""Directions over these cosines count as near the beam, oblique to it, and all."""
 
 _NO_EVENTS = np.zeros((0, 0))
 _ANCHORS_MEV = (10.0, 50.0, 100.0, 200.0)
@@ -58,7 +58,7 @@ class Carried:
         self.stops = np.zeros(cells)
         self.escaped = np.zeros(4)
         self.sideways = np.zeros(cells)
-        self.ahead = np.zeros((len(AHEAD_COSINES), 3, cells))
+        self.ahead = np.zeros((len(AHEAD_COSINES), 4, cells))
 
     def add(self, other: Carried) -> None:
         """Add the scores of another population.

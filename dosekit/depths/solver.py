@@ -21,7 +21,7 @@ from dosekit.beams.electrons import electron_stopping_powers
 from dosekit.beams.reactions import CHANNELS, reactions
 from dosekit.depths.angles import COSINES
 from dosekit.depths.coarse import CoarseGrid, coarse_grid, regrid
-from dosekit.depths.core import Core, solve_core
+from dosekit.depths.core import Core, bin_edges, solve_core
 from dosekit.depths.deltas import carry_deltas
 from dosekit.depths.kernels import gather_products, march, score_events
 from dosekit.depths.leptons import carry_electrons, decay_muons, michel_electrons
@@ -41,7 +41,7 @@ _MUON_REST = 105.6583755
 _ELECTRON_REST = 0.51099895
 _NEUTRAL_STEPS = 2.0
 """Cell of neutral products, which vary slowly, in steps of residual range."""
-_DECAY_STEPS = {"pi-": 1.0, "pi+": 0.5, "mu-": 0.5, "mu+": 0.5, "proton": 2.0}
+_DECAY_STEPS = {"pi-": 2.0, "pi+": 0.5, "mu-": 0.5, "mu+": 0.5, "proton": 2.0}
 """Cell of decays in the same unit; electrons from a thin layer of stops have a sharp maximum there."""
 _LEAST_DECAY_STEP_G_CM2 = 0.1
 """Electrons go 20 cm, however short the range of the beam is."""
@@ -75,9 +75,10 @@ class Solution:
     extra_sigma_mm : dict of str to ndarray, shape (bins,)
         Standard deviation of one transverse axis since the particle left the beam, mm: scattered, in_flight_charged,
         decay.
-    classes : dict of str to (deposit, stops, sigma)
-        Scattered particles in two classes of direction, ``scattered_near`` (cosine over 0.9) and ``scattered_wide``:
-        MeV and number per bin, and standard deviation as above, mm. They sum to ``scattered``.
+    classes : dict of str to (deposit, stops, sigma, unequal)
+        Scattered particles in three classes of direction, ``scattered_near`` (cosine over 0.9), ``scattered_oblique``
+        (0.5 to 0.9) and ``scattered_wide``: MeV and number per bin, standard deviation as above, mm, and the mean
+        squared variance over its squared mean. The first two sum to ``scattered``.
     ledger : dict of str to float
         Energy, MeV: in, escaped, neutrino, binding, electron_rest and, for negative pions, star (rest energy given to
         captures).
@@ -93,7 +94,7 @@ class Solution:
     decays_at_rest: NDArray[np.float64] = field(repr=False)
     ledger: dict[str, float] = field(repr=False)
     extra_sigma_mm: dict[str, NDArray[np.float64]] = field(repr=False)
-    classes: dict[str, tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]] = field(repr=False)
+    classes: dict[str, tuple[NDArray[np.float64], ...]] = field(repr=False)
 
 
 def solve(
@@ -107,6 +108,7 @@ def solve(
     nuclear: bool = True,
     decays: bool = True,
     width_mm: float | None = None,
+    admixture: bool = False,
 ) -> Solution:
     """Follow one species through a stack.
 
@@ -128,13 +130,17 @@ def solve(
         Whether reactions and decay happen.
     width_mm : float, optional
         Width of the square over which the energy of neutrons and photons is summed, mm.
+    admixture : bool
+        Whether this is a small part of a beam, for which wider cells of decays are enough.
 
     Returns
     -------
     Solution
         The result; the most recent ones are kept.
     """
-    return _solve(species, float(momentum), float(spread), layers, float(bin_mm), yields, nuclear, decays, width_mm)
+    return _solve(
+        species, float(momentum), float(spread), layers, float(bin_mm), yields, nuclear, decays, width_mm, admixture
+    )
 
 
 @lru_cache(maxsize=24)
@@ -148,10 +154,11 @@ def _solve(
     nuclear: bool,
     decays: bool,
     width_mm: float | None,
+    admixture: bool,
 ) -> Solution:
     """Put the parts together."""
     if species in ("e-", "e+"):
-        return _electrons(species, momentum, spread, layers, bin_mm, yields)
+        return _electrons(species, momentum, spread, layers, bin_mm)
     core = solve_core(
         species, momentum, spread=spread, layers=layers, bin_mm=bin_mm, yields=yields, nuclear=nuclear, decays=decays
     )
@@ -168,7 +175,10 @@ def _solve(
     reacted = scattered.core_reactions + scattered.later_reactions
     steps = (
         _NEUTRAL_STEPS * grid.step_mm,
-        max(_DECAY_STEPS[species] * grid.step_mm, _LEAST_DECAY_STEP_G_CM2 * 10.0 / grid.reference.density_g_cm3),
+        max(
+            (max(_DECAY_STEPS[species], 1.0) if admixture else _DECAY_STEPS[species]) * grid.step_mm,
+            _LEAST_DECAY_STEP_G_CM2 * 10.0 / grid.reference.density_g_cm3,
+        ),
     )
     wide, close = (
         coarse_grid(species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer, step_mm=step)
@@ -239,21 +249,19 @@ def _solve(
     )  # fmt: skip
 
 
-def _classes(
-    part: Carried, grid: CoarseGrid
-) -> dict[str, tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]]:
+def _classes(part: Carried, grid: CoarseGrid) -> dict[str, tuple[NDArray[np.float64], ...]]:
     """Split scattered particles by direction: near the beam, oblique to it, and wide."""
-    given, stopped = grid.to_bins(part.deposit), grid.to_bins(part.stops)
-    rows = [*part.ahead, np.stack([part.deposit, part.stops, part.sideways])]
-    left_given, left_stopped, before = given, stopped, np.zeros_like(rows[0])
+    left_given, left_stopped, before = grid.to_bins(part.deposit), grid.to_bins(part.stops), np.zeros((4, grid.cells))
     result = {}
-    for name, row in zip(("scattered_near", "scattered_oblique", "scattered_wide"), rows, strict=True):
+    for name, row in zip(("scattered_near", "scattered_oblique", "scattered_wide"), part.ahead, strict=True):
         own = row - before
         here = np.clip(grid.to_bins(own[0]), 0.0, left_given), np.clip(grid.to_bins(own[1]), 0.0, left_stopped)
         if name == "scattered_wide":
             here = left_given, left_stopped
         left_given, left_stopped, before = left_given - here[0], left_stopped - here[1], row
-        result[name] = (*here, _spread(own[2], own[0], grid))
+        width = _spread(own[2], own[0], grid)
+        unequal = _spread(own[3], own[0], grid) / np.maximum(width**2, 1e-12)  # both are roots
+        result[name] = (*here, width, np.where(width > 0.0, unequal**2, 1.0))
     return result
 
 
@@ -446,24 +454,13 @@ def _electrons(
     spread: float,
     layers: tuple[tuple[Material, float], ...],
     bin_mm: float,
-    yields: str,
 ) -> Solution:
     """Follow an electron beam: no unscattered part, only the coarse transport."""
-    silent = solve_core(
-        "mu-",
-        momentum,
-        spread=0.0,
-        layers=layers,
-        bin_mm=bin_mm,
-        yields=yields,
-        nuclear=False,
-        decays=False,
-        detour=False,
-    )
+    edges, layer = bin_edges(layers, bin_mm)
     energy = float(kinetic_energy_mev(species, momentum))
-    total_mm = float(silent.edges_mm[-1])
+    total_mm = float(edges[-1])
     step = max(total_mm / 120.0, 1.0)
-    grid = coarse_grid(species, energy, layers=layers, edges_mm=silent.edges_mm, layer=silent.layer, step_mm=step)
+    grid = coarse_grid(species, energy, layers=layers, edges_mm=edges, layer=layer, step_mm=step)
     z = np.linspace(-2.0, 2.0, 9) if spread > 0.0 else np.zeros(1)
     weight = np.exp(-0.5 * z**2)
     energies = kinetic_energy_mev(species, momentum * np.maximum(1.0 + spread * z, 0.05))
@@ -480,11 +477,11 @@ def _electrons(
     )
     run.deposit[0] += first
     run.let_weighted[0] += first * float(np.mean(per_mm))
-    bins = len(silent.layer)
+    bins = len(layer)
     empty = np.zeros(bins)
     mean = float(np.sum(energies * weight) / np.sum(weight))
     core = Core(
-        silent.edges_mm, silent.layer, empty, empty, empty, dict.fromkeys((*CHANNELS, "decay"), empty),
+        edges, layer, empty, empty, empty, dict.fromkeys((*CHANNELS, "decay"), empty),
         np.zeros(bins + 1), np.zeros(bins + 1), np.zeros((1, bins)), np.zeros((1, bins)), np.zeros((3, 1, bins)),
         np.zeros(bins + 1), np.zeros((1, bins + 1)), np.zeros((2, bins + 1)), mean, 0.0,
     )  # fmt: skip

@@ -299,9 +299,12 @@ def _species_table(
                 reemit[n, m] = 2.0 * (1.0 - share)[:, None] * node_spread(part, energy) / _PAIR_CLASSES
                 turn_reemit[n, m] = ring_shares(ahead[:, None, :], COSINES[None, :, None]).mean(axis=2)
                 start_reemit[n, m] = ring_shares(ahead).mean(axis=1)
-            kappa = kappa_of(table.at(table.elastic_cosine, energy))
-            turn_elastic[m] = shares(kappa[:, None], COSINES[None, :])
-            start_elastic[m] = shares(kappa)
+            bounces = sum(table.at(rate, energy) for rate, _ in table.elastic_laws)
+            for rate, steep in table.elastic_laws:
+                kappa = table.at(steep, energy)
+                part = table.at(rate, energy) / np.maximum(bounces, 1e-30)
+                turn_elastic[m] += part[:, None, None] * shares(kappa[:, None], COSINES[None, :])
+                start_elastic[m] += part[:, None] * shares(kappa)
         total = np.sum(rates, axis=1)
         chance[m] = -np.expm1(-total * path)
         parts[m] = rates / np.where(total > 0.0, total, 1.0)[:, None]
@@ -332,7 +335,7 @@ def _slopes(
         kappa = np.clip(factor[:, None] * slope, 1e-3, 400.0)
         found = (weight * (1.0 / np.tanh(kappa) - 1.0 / kappa)).sum(axis=1)
         low, high = np.where(found < mean_cosine, factor, low), np.where(found < mean_cosine, high, factor)
-    return np.minimum(0.5 * (low + high)[:, None] * slope, 400.0)
+    return np.asarray(np.minimum(0.5 * (low + high)[:, None] * slope, 400.0))
 
 
 def _pair(energy_mev: NDArray[np.float64], which: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:

@@ -5,10 +5,11 @@ one ladder of widths: a variance between two rungs is divided between them so th
 sum of Gaussians). Below the lowest rung the core itself is the next one, where there is a core: what has hardly left
 the beam yet stays with it, since the lattice of the broad parts is too coarse for less.
 
-A particle that left the beam at a distance s under a slope is displaced by their product. If the slopes are much the
-same, s is even between nothing and its largest value, and so is the displacement (law ``even``); if they come from all
-directions as well, many are still near and a few are far, and the displacement goes as the size of a normal number (law
-``normal``), which makes the radial integral fall as exp(-r / sigma). Eight equal shares stand for either.
+Displacements of a contribution may be unequal: a particle that left the beam at a distance s under a slope is
+displaced by their product, and both vary. If its squared displacement goes as u^q, with u even between nothing and one
+(q = 2 for events spread evenly along a path), Gaussians with variances as u^p come nearest that have the same mean
+square and mean logarithm of the radius: since a Gaussian is not a ring, q - ln(1 + q) = p - ln(1 + p) + 0.577, and
+p = 0 where this leaves nothing. Eight equal shares stand for them.
 """
 
 from __future__ import annotations
@@ -17,16 +18,12 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtri
 
 __all__ = ["Contribution", "divide"]
 
 _MIDDLES = (np.arange(8) + 0.5) / 8.0
-_SQUARES = {
-    "single": np.ones(1),
-    "even": _MIDDLES**2 / np.mean(_MIDDLES**2),
-    "normal": ndtri(0.5 + 0.5 * _MIDDLES) ** 2 / np.mean(ndtri(0.5 + 0.5 * _MIDDLES) ** 2),
-}
+_POWERS = np.linspace(0.0, 12.0, 121)
+_EULER = 0.5772156649015329
 _MOST_WIDTHS = 7
 _WIDTH_RATIO = 2.0
 _SIGNIFICANT = 1e-4
@@ -48,15 +45,16 @@ class Contribution:
         Variance that it has as a member of the beam, shape (K, N), mm2.
     extra : ndarray
         Variance that comes on top, shape (K, N), mm2.
-    law : {"single", "even", "normal"}
-        How the extra sigma is distributed.
+    unequal : ndarray or float
+        Mean fourth power of the extra displacement over the square of its mean square, shape (K, N); 1 if all are the
+        same.
     """
 
     target: int
     quantity: NDArray[np.float64]
     variance: NDArray[np.float64]
     extra: NDArray[np.float64]
-    law: str = "single"
+    unequal: NDArray[np.float64] | float = 1.0
 
     def variances(self) -> list[NDArray[np.float64]]:
         """Return the variance of each of its equal shares, mm2.
@@ -66,8 +64,15 @@ class Contribution:
         list of ndarray
             From the least to the largest.
         """
-        sizes = _SQUARES[self.law if self.extra.any() else "single"]
-        return [np.maximum(self.variance, 0.0) + size * self.extra for size in sizes]
+        variance = np.maximum(self.variance, 0.0)
+        more = np.maximum(self.unequal + 0.0 * self.extra, 1.0) - 1.0
+        rings = more + np.sqrt(more * (more + 1.0))  # <u^2q> / <u^q>^2 = (q + 1)^2 / (2 q + 1)
+        left = rings - np.log1p(rings) - _EULER
+        if not (self.extra.any() and np.any(left > 0.0)):
+            return [variance + self.extra]
+        power = np.interp(left, _POWERS - np.log1p(_POWERS), _POWERS)
+        sizes = np.stack([middle**power for middle in _MIDDLES])
+        return list(variance + sizes / sizes.mean(axis=0) * self.extra)
 
 
 def divide(

@@ -50,8 +50,7 @@ BROAD_TARGETS: dict[str, str] = {
 """Quantities of the library that are spread by fixed widths, and where they go. A library that divides its scattered
 particles into near, oblique and wide ones has their sum as well, which is then left out."""
 
-_LIKE_NORMAL = ("scattered", "scattered_stops", "in_flight_charged")  # from all directions
-_EVENLY = tuple(f"scattered_{name}" for name in ("near", "oblique", "wide"))
+_UNEQUAL = {"scattered": 3.3, "scattered_stops": 3.3, "in_flight_charged": 3.3}  # events and slopes of all kinds
 _NARROW_TARGETS = ("primary", "stops")
 _NARROWEST_OF_SPOT = 0.96  # makes the variance that the coarse lattice adds no larger than that of the lowest rung
 _NARROWEST_MM = 4.62
@@ -284,8 +283,8 @@ def _wider(library: DepthLibrary, in_water: NDArray[np.float64]) -> list[Contrib
             continue
         extra = np.asarray(widths.get(key, widths.get(key.removesuffix("_stops"), nothing)), dtype=np.float64)
         quantity = _clean(library.quantities.get(key, nothing))
-        law = "normal" if key in _LIKE_NORMAL else "even" if key.removesuffix("_stops") in _EVENLY else "single"
-        result.append(Contribution(TARGETS.index(target), quantity, in_water, np.nan_to_num(extra) ** 2, law=law))
+        unequal = library.unequal.get(key.removesuffix("_stops"), _UNEQUAL.get(key, 1.0))
+        result.append(Contribution(TARGETS.index(target), quantity, in_water, np.nan_to_num(extra) ** 2, unequal))
     return result
 
 
