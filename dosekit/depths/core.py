@@ -23,11 +23,11 @@ from scipy.special import ndtri
 
 from dosekit.basis.materials import Material
 from dosekit.basis.particles import kinetic_energy_mev
-from dosekit.beams.decay import decay_per_mm
 from dosekit.beams.ranges import RangeTable, range_table
-from dosekit.beams.reactions import CHANNELS, ENERGY_GRID_MEV, reactions
+from dosekit.beams.reactions import CHANNELS
 from dosekit.beams.scattering import scattering_power_rad2_mm
 from dosekit.beams.straggling import mean_range_excess_mm, range_shape, range_sigma_mm, range_variance_mm2
+from dosekit.depths.lookup import Lookup, middle_of
 
 __all__ = ["Core", "bin_edges", "solve_core"]
 
@@ -132,7 +132,7 @@ def solve_core(
     front, final, weight = _classes(species, momentum, spread, layers[0][0], mean_energy, first)
     sd_first = float(_deviation(front, weight))
     sd_last = float(_deviation(final, weight))
-    shape = (final - front - np.sum(weight * (_middle(final) - _middle(front)))) / max(sd_last - sd_first, 1e-12)
+    shape = (final - front - np.sum(weight * (middle_of(final) - middle_of(front)))) / max(sd_last - sd_first, 1e-12)
 
     bins, classes = len(layer), len(weight)
     deposit, let_weighted, stops = np.zeros(bins), np.zeros(bins), np.zeros(bins)
@@ -166,7 +166,7 @@ def solve_core(
         total_variance = max(float(range_variance_mm2(species, stuff, walk)), 1e-12)
         excess = mean_range_excess_mm(species, stuff, walk) * grown / total_variance if walk > 0.1 else 0.0 * grown
         now = ranges[:, None] - path[None, :] + shape[:, None] * (deviation - sd)[None, :] + excess[None, :]
-        lookup = _Lookup(species, table, float(np.max(now)) + 1.0, yields, nuclear=nuclear, decays=decays)
+        lookup = Lookup(species, table, float(np.max(now)) + 1.0, yields, nuclear=nuclear, decays=decays)
         result = lookup.bins(now, survival)
         keep = slice(first_bin, first_bin + len(inside))
         w = weight[:, None]
@@ -235,14 +235,9 @@ def bin_edges(
     return edges, np.clip(np.searchsorted(borders, middle) - 1, 0, len(layers) - 1)
 
 
-def _middle(edges: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return class centres."""
-    return 0.5 * (edges[1:] + edges[:-1])
-
-
 def _deviation(edges: NDArray[np.float64], weight: NDArray[np.float64]) -> float:
     """Return the standard deviation of a piecewise even density."""
-    centre = _middle(edges)
+    centre = middle_of(edges)
     mean = float(np.sum(weight * centre))
     return float(np.sqrt(np.sum(weight * ((centre - mean) ** 2 + np.diff(edges) ** 2 / 12.0))))
 
@@ -306,7 +301,7 @@ def _trajectory(
     """
     total = float(table.range_mm(energy))
     nodes = total * (1.0 - (1.0 - np.linspace(0.0, 1.0, 301)) ** 2)
-    middle = _middle(nodes)
+    middle = middle_of(nodes)
     t_middle = np.maximum(table.energy_mev(total - middle), 1e-3)
     power = scattering_power_rad2_mm(species, table.material, t_middle, start_energy_mev=start_energy)
     angles = angle + np.concatenate([[0.0], np.cumsum(power * np.diff(nodes))])
@@ -314,109 +309,11 @@ def _trajectory(
     if not detour or total <= 0.0:
         path = z.copy()
     else:
-        inner = np.concatenate([[0.0], np.cumsum(_middle(np.minimum(angles, 1.0)) ** 2 * np.diff(nodes))])
-        spread = np.concatenate([[0.0], np.cumsum(2.0 * _middle(inner) * np.diff(nodes))])
-        shrink = np.exp(-np.minimum(_middle(angles), 1.0))
+        inner = np.concatenate([[0.0], np.cumsum(middle_of(np.minimum(angles, 1.0)) ** 2 * np.diff(nodes))])
+        spread = np.concatenate([[0.0], np.cumsum(2.0 * middle_of(inner) * np.diff(nodes))])
+        shrink = np.exp(-np.minimum(middle_of(angles), 1.0))
         depth = np.concatenate([[0.0], np.cumsum(shrink * np.diff(nodes))])
         path = np.interp(z, depth, nodes)
         path = np.where(z > depth[-1], total + (z - depth[-1]), path)
     left = float(table.energy_mev(total - path[-1]))
     return path, np.interp(path, nodes, angles), left, np.interp(path, nodes, spread)
-
-
-@dataclass(frozen=True)
-class _Bins:
-    """What happens to classes in bins."""
-
-    deposit: NDArray[np.float64]
-    let_weighted: NDArray[np.float64]
-    stops: NDArray[np.float64]
-    events: NDArray[np.float64]
-    event_energy: NDArray[np.float64]
-    shares: NDArray[np.float64]
-    alive: NDArray[np.float64]
-    flux: NDArray[np.float64]
-    survival_end: NDArray[np.float64]
-
-
-class _Lookup:
-    """Functions of residual range in one material, on an even grid."""
-
-    def __init__(
-        self, species: str, table: RangeTable, top_mm: float, yields: str, *, nuclear: bool, decays: bool
-    ) -> None:
-        self.step = max(min(0.05, top_mm / 400.0), top_mm / 6000.0)
-        self.grid = self.step * np.arange(int(top_mm / self.step) + 3)
-        self.energy = table.energy_mev(self.grid)
-        middle = _middle(self.energy)
-        mass = table.particle.mass_mev
-        # integral of T over r; T ~ r^0.57 in the first cells is integrated on the spline's own points
-        self.integral = np.concatenate([[0.0], np.cumsum(middle) * self.step])
-        energy = np.maximum(self.energy, 0.02 * mass / 938.3)
-        self.let = table.stopping_mev_mm(energy)
-        rates = np.zeros((6, len(self.grid)))
-        if nuclear:
-            reaction = reactions(species, table.material, yields=yields)
-            for index, channel in enumerate(CHANNELS):
-                rates[index] = np.interp(energy, ENERGY_GRID_MEV, reaction.per_mm[channel])
-            rates[5] = np.interp(energy, ENERGY_GRID_MEV, reaction.struck_hydrogen_per_mm)
-        if decays:
-            rates[4] = decay_per_mm(species, np.maximum(energy, 0.05))
-        self.rates = rates
-        total = np.sum(rates, axis=0)
-        self.shares = rates / np.where(total > 0.0, total, 1.0)
-        self.depth = np.concatenate([[0.0], np.cumsum(_middle(total)) * self.step])
-        # integral of LET over energy for the energy-weighted LET, d(int S dT)
-        self.let_energy = np.concatenate([[0.0], np.cumsum(_middle(self.let) * np.diff(self.energy))])
-        self.let_integral = np.concatenate([[0.0], np.cumsum(_middle(self.let_energy)) * self.step])
-
-    def _at(self, values: NDArray[np.float64], r: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Interpolate linearly on the even grid, constant outside."""
-        place = np.clip(r / self.step, 0.0, len(self.grid) - 1.001)
-        low = place.astype(np.int64)
-        part = place - low
-        lower = values[low]
-        return np.asarray(lower + part * (values[low + 1] - lower))
-
-    def _integral_at(
-        self, values: NDArray[np.float64], running: NDArray[np.float64], r: NDArray[np.float64]
-    ) -> NDArray[np.float64]:
-        """Return the integral from 0 to r of a function that is linear between grid points."""
-        place = np.clip(r / self.step, 0.0, len(self.grid) - 1.001)
-        low = place.astype(np.int64)
-        part = place - low
-        lower = values[low]
-        return np.asarray(running[low] + self.step * part * (lower + 0.5 * part * (values[low + 1] - lower)))
-
-    def energies(self, ranges: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Return energies at residual ranges; 0 where nothing is left."""
-        return self._at(self.energy, np.maximum(ranges, 0.0))
-
-    def bins(self, edges: NDArray[np.float64], survival: NDArray[np.float64]) -> _Bins:
-        """Return what classes with these edges (classes + 1, depths) do between the depths."""
-        upper, lower = edges[1:], edges[:-1]
-        width = np.maximum(upper - lower, 1e-9)
-        thin = width < 1e-6
-        above = np.maximum(edges, 0.0)
-        centre = np.maximum(0.5 * (upper + lower), 0.0)
-        integral = self._integral_at(self.energy, self.integral, above)
-        mean = np.where(thin, self._at(self.energy, centre), (integral[1:] - integral[:-1]) / width)
-        fraction = np.where(thin, (upper > 0.0).astype(float), np.clip(upper / width, 0.0, 1.0))
-        depth = self._at(self.depth, np.maximum(0.5 * (np.maximum(lower, 0.0) + np.maximum(upper, 0.0)), 0.0))
-        alive = survival[:, None] * np.exp(np.minimum(depth - depth[:, :1], 0.0))
-        flux = alive * mean
-        w_mid = 0.5 * (alive[:, 1:] + alive[:, :-1])
-        t_mid = 0.5 * (mean[:, 1:] + mean[:, :-1])
-        f_mid = 0.5 * (fraction[:, 1:] + fraction[:, :-1])
-        gone = np.maximum(alive[:, :-1] - alive[:, 1:], 0.0)
-        deposit = w_mid * (mean[:, :-1] - mean[:, 1:])
-        stops = w_mid * (fraction[:, :-1] - fraction[:, 1:])
-        events = gone * f_mid
-        energy = np.where(f_mid > 1e-12, t_mid / np.where(f_mid > 1e-12, f_mid, 1.0), 0.0)
-        r_mid = 0.5 * (centre[:, 1:] + centre[:, :-1])
-        shares = np.stack([self._at(row, r_mid) for row in self.shares])
-        # LET averaged over the energy given in the bin: mean over the class of int S dT
-        spread = self._integral_at(self.let_energy, self.let_integral, above)
-        level = np.where(thin, self._at(self.let_energy, centre), (spread[1:] - spread[:-1]) / width)
-        let_weighted = w_mid * (level[:, :-1] - level[:, 1:])
-        return _Bins(deposit, let_weighted, stops, events, energy, shares, alive * fraction, flux, alive[:, -1])

@@ -252,7 +252,7 @@ def _solve(
 def _classes(part: Carried, grid: CoarseGrid) -> dict[str, tuple[NDArray[np.float64], ...]]:
     """Split scattered particles by direction: near the beam, oblique to it, and wide."""
     left_given, left_stopped, before = grid.to_bins(part.deposit), grid.to_bins(part.stops), np.zeros((4, grid.cells))
-    result = {}
+    result: dict[str, tuple[NDArray[np.float64], ...]] = {}
     for name, row in zip(("scattered_near", "scattered_oblique", "scattered_wide"), part.ahead, strict=True):
         own = row - before
         here = np.clip(grid.to_bins(own[0]), 0.0, left_given), np.clip(grid.to_bins(own[1]), 0.0, left_stopped)
