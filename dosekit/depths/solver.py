@@ -16,28 +16,22 @@ from numpy.typing import NDArray
 
 from dosekit.basis.materials import Material
 from dosekit.basis.particles import kinetic_energy_mev, particle
-from dosekit.beams.decay import MICHEL_MEAN_ENERGY_MEV, MUON_ENERGY_AT_REST_MEV
+from dosekit.beams.decay import MUON_ENERGY_AT_REST_MEV
 from dosekit.beams.electrons import electron_stopping_powers
 from dosekit.beams.reactions import CHANNELS, reactions
 from dosekit.depths.angles import COSINES
 from dosekit.depths.coarse import CoarseGrid, coarse_grid, regrid
 from dosekit.depths.core import Core, bin_edges, solve_core
+from dosekit.depths.decays import follow_decays
 from dosekit.depths.deltas import carry_deltas
-from dosekit.depths.kernels import gather_products, march, score_events
-from dosekit.depths.leptons import carry_electrons, decay_muons, michel_electrons
-from dosekit.depths.muons import muon_capture_products
-from dosekit.depths.products import (
-    AHEAD_COSINES,
-    Carried,
-    charged_products,
-    neutral_products,
-)
-from dosekit.depths.tables import GROUP_ENERGY_MEV, SpeciesTable, node_spread, species_table
+from dosekit.depths.leptons import carry_electrons
+from dosekit.depths.products import Carried, charged_products, neutral_products
+from dosekit.depths.scattered import Scattered, add_later, classes_of, width_of
+from dosekit.depths.tables import GROUP_ENERGY_MEV
 
 __all__ = ["Solution", "solve"]
 
 _PION_REST = 139.57039
-_MUON_REST = 105.6583755
 _ELECTRON_REST = 0.51099895
 _NEUTRAL_STEPS = 2.0
 """Cell of neutral products, which vary slowly, in steps of residual range."""
@@ -45,8 +39,6 @@ _DECAY_STEPS = {"pi-": 2.0, "pi+": 0.5, "mu-": 0.5, "mu+": 0.5, "proton": 2.0}
 """Cell of decays in the same unit; electrons from a thin layer of stops have a sharp maximum there."""
 _LEAST_DECAY_STEP_G_CM2 = 0.1
 """Electrons go 20 cm, however short the range of the beam is."""
-_NO_BREMSSTRAHLUNG = ("cascade",)
-"""Yield sets whose results list no bremsstrahlung among their processes, and show no photons far from decays."""
 
 
 @dataclass(frozen=True)
@@ -165,7 +157,7 @@ def _solve(
     energy = float(kinetic_energy_mev(species, momentum))
     grid = coarse_grid(species, energy, layers=layers, edges_mm=core.edges_mm, layer=core.layer)
     top = float(np.max(core.event_energy, initial=energy))
-    scattered = _Scattered(species, core, grid, top, yields, nuclear=nuclear, decays=decays)
+    scattered = Scattered(species, core, grid, top, yields, nuclear=nuclear, decays=decays)
     parts: dict[str, Carried] = {"scattered": scattered.carried}
     charged = charged_products(species, scattered.core_reactions, grid, yields=yields)
     charged.add(charged_products(species, scattered.later_reactions, grid, yields=yields, isotropic=True))
@@ -185,7 +177,7 @@ def _solve(
         for step in steps
     )
     neutral, emitted = neutral_products(species, regrid(reacted, grid, wide), wide, yields=yields, width_mm=width_mm)
-    decayed, rest = _decays(species, core, grid, close, scattered, yields, width_mm)
+    decayed, rest = follow_decays(species, core, grid, close, scattered, yields, width_mm)
 
     to_bins = grid.to_bins
     built_up = carry_deltas(
@@ -211,7 +203,7 @@ def _solve(
     let = {name: weighted[name] / np.where(deposit[name] > 1e-15, deposit[name], 1.0) for name in deposit}
     let["core"] = core.let_weighted / np.where(core.deposit > 1e-15, core.deposit, 1.0)
     channels = {name: core.channels[name].copy() for name in (*CHANNELS, "decay")}
-    _add_later(channels, scattered, grid, species, yields)
+    add_later(channels, scattered, grid, species, yields)
 
     rest_energy = particle(species).mass_mev if species != "proton" else 0.0
     stars = float(np.sum(core.stops) + np.sum(stopped["scattered"])) * _PION_REST if species == "pi-" else 0.0
@@ -244,179 +236,9 @@ def _solve(
     return Solution(
         species, core, grid, deposit, let, stopped, channels,
         close.to_bins(rest.at_rest), ledger,
-        {"decay": _width(decayed, close), **{name: _width(part, grid) for name, part in parts.items()}},
-        _classes(scattered.carried, grid),
+        {"decay": width_of(decayed, close), **{name: width_of(part, grid) for name, part in parts.items()}},
+        classes_of(scattered.carried, grid),
     )  # fmt: skip
-
-
-def _classes(part: Carried, grid: CoarseGrid) -> dict[str, tuple[NDArray[np.float64], ...]]:
-    """Split scattered particles by direction: near the beam, oblique to it, and wide."""
-    left_given, left_stopped, before = grid.to_bins(part.deposit), grid.to_bins(part.stops), np.zeros((4, grid.cells))
-    result: dict[str, tuple[NDArray[np.float64], ...]] = {}
-    for name, row in zip(("scattered_near", "scattered_oblique", "scattered_wide"), part.ahead, strict=True):
-        own = row - before
-        here = np.clip(grid.to_bins(own[0]), 0.0, left_given), np.clip(grid.to_bins(own[1]), 0.0, left_stopped)
-        if name == "scattered_wide":
-            here = left_given, left_stopped
-        left_given, left_stopped, before = left_given - here[0], left_stopped - here[1], row
-        width = _spread(own[2], own[0], grid)
-        unequal = _spread(own[3], own[0], grid) / np.maximum(width**2, 1e-12)  # both are roots
-        result[name] = (*here, width, np.where(width > 0.0, unequal**2, 1.0))
-    return result
-
-
-def _width(part: Carried, grid: CoarseGrid) -> NDArray[np.float64]:
-    """Return the standard deviation of one transverse axis in fine bins, mm."""
-    return _spread(part.sideways, part.deposit, grid)
-
-
-def _spread(sideways: NDArray[np.float64], deposit: NDArray[np.float64], grid: CoarseGrid) -> NDArray[np.float64]:
-    """Return the root of the mean variance in fine bins, mm; cells without deposit take their neighbours'."""
-    variance = sideways / np.where(deposit > 1e-15, deposit, 1.0)
-    known = np.flatnonzero(deposit > 1e-9 * max(float(np.max(deposit)), 1e-300))
-    if len(known) == 0:
-        return np.zeros(len(grid.place_of_edge) - 1)
-    middle = 0.5 * (grid.place_of_edge[1:] + grid.place_of_edge[:-1]) - 0.5
-    return np.asarray(np.sqrt(np.maximum(np.interp(middle, known, variance[known]), 0.0)))
-
-
-class _Scattered:
-    """Beam particles after their first nuclear scattering, all generations."""
-
-    def __init__(
-        self, species: str, core: Core, grid: CoarseGrid, top: float, yields: str, *, nuclear: bool, decays: bool
-    ) -> None:
-        groups = len(GROUP_ENERGY_MEV)
-        from dosekit.beams.ranges import range_table
-
-        reach = float(range_table(species, grid.reference).range_mm(top))
-        nodes = 8 * (int(np.ceil(reach / grid.step_mm / 8.0)) + 1)
-        table = species_table(
-            species,
-            grid.reference,
-            grid.materials,
-            step_mm=grid.step_mm,
-            nodes=nodes,
-            yields=yields,
-            nuclear=nuclear,
-            decays=decays,
-        )
-        by_node = np.zeros((2, grid.cells, nodes))
-        by_group = np.zeros((2, grid.cells, groups))
-        score_events(
-            core.events,
-            core.event_energy,
-            grid.cell_of_bin,
-            core.event_parts,
-            table.energy,
-            GROUP_ENERGY_MEV,
-            by_node,
-            by_group,
-        )
-        source = np.zeros((nodes, grid.cells, len(COSINES)))
-        self.recoil = np.zeros(grid.cells)
-        self.carried = Carried(grid.cells)
-        self.core_reactions, self.core_decays = by_group[0], by_group[1]
-        self.later_reactions, self.later_decays = np.zeros((grid.cells, groups)), np.zeros((grid.cells, groups))
-        self.counts = np.zeros((3, grid.cells))
-        self.forward = np.zeros((2, grid.cells))
-        if nuclear and np.any(by_node > 0.0):
-            scattered = np.stack([node_spread(row[:, None], table.energy) for row in table.elastic_to])
-            gather_products(by_node[0], grid.stuff, scattered, table.start_elastic, source)
-            for spread, angular in zip(table.reemit, table.start_reemit, strict=True):
-                gather_products(by_node[1], grid.stuff, spread, angular, source)
-            loss = table.energy[None, :] - table.elastic_to
-            self.recoil += np.sum(by_node[0] * loss[grid.stuff], axis=1)
-            self.recoil += self._run(table, grid, source)
-
-    def _run(self, table: SpeciesTable, grid: CoarseGrid, source: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Carry all generations."""
-        result: NDArray[np.float64] = march(
-            source, COSINES, grid.step_mm, table.energy, table.let, grid.stuff, table.chance, table.parts,
-            table.elastic_to, table.reemit, table.turn_elastic, table.turn_reemit, np.zeros((0, 0, 0)), np.zeros(0),
-            table.group_low, table.group_weight, self.carried.deposit, self.carried.let_weighted,
-            self.carried.stops, self.counts, self.later_reactions, self.later_decays, self.forward,
-            self.carried.escaped, np.zeros((0, 0)), self.carried.sideways,
-            AHEAD_COSINES, self.carried.ahead,
-        )  # fmt: skip
-        return result
-
-
-@dataclass
-class _Rest:
-    """What happens to particles at rest and to neutrinos, by cell and in sum."""
-
-    at_rest: NDArray[np.float64]
-    capture: dict[str, tuple[NDArray[np.float64], float]]
-    neutrino: float = 0.0
-    escaped: float = 0.0
-    binding: float = 0.0
-    electron_rest: float = 0.0
-
-
-def _decays(
-    species: str,
-    core: Core,
-    fine: CoarseGrid,
-    grid: CoarseGrid,
-    scattered: _Scattered,
-    yields: str,
-    width_mm: float | None,
-) -> tuple[Carried, _Rest]:
-    """Follow muons and electrons from decays in flight and at rest."""
-    total = Carried(grid.cells)
-    rest = _Rest(np.zeros(grid.cells), {})
-    if species == "proton":
-        return total, rest
-    positive = species in ("pi+", "mu+")
-    muon = "mu+" if positive else "mu-"
-    stopped = grid.to_cells(core.stops) + regrid(scattered.carried.stops, fine, grid)
-    first, later = (regrid(rows, fine, grid) for rows in (scattered.core_decays, scattered.later_decays))
-    muons = np.zeros(grid.cells)
-    electrons = np.zeros(grid.cells)
-    if species in ("pi-", "pi+"):
-        for decays, isotropic in ((first, False), (later, True)):
-            flown = decay_muons(muon, decays, grid, isotropic=isotropic)
-            total.add(flown)
-            muons += flown.stops
-            count = np.sum(decays, axis=0)
-            pion = float(np.sum(count * (GROUP_ENERGY_MEV + _PION_REST)))
-            gone = float(flown.escaped[0] + flown.escaped[2] + (flown.escaped[1] + flown.escaped[3]) * _MUON_REST)
-            rest.escaped += gone
-            rest.neutrino += pion * (1.0 - (MUON_ENERGY_AT_REST_MEV + _MUON_REST) / _PION_REST)
-        if positive:
-            rest.at_rest = stopped.copy()
-            rest.neutrino += float(np.sum(stopped)) * (_PION_REST - MUON_ENERGY_AT_REST_MEV - _MUON_REST)
-            muons += stopped
-    else:
-        muons += stopped
-        # muons that decay in flight: their electron starts where they are, boost neglected
-        flying = np.sum(first + later, axis=1)
-        count = np.sum(first + later, axis=0)
-        rest.neutrino += float(np.sum(count * GROUP_ENERGY_MEV))
-        electrons += flying
-    caught = np.zeros(grid.cells)
-    if not positive:
-        products = muon_capture_products(muons, grid, yields=yields, width_mm=width_mm)
-        caught = products.caught
-        rest.capture.update(products.deposit)
-        rest.neutrino += products.neutrino
-        rest.escaped += products.escaped
-        rest.binding += products.binding
-    electrons += muons - caught
-    if not species.startswith("pi"):
-        rest.at_rest = muons - caught
-    run, photons = michel_electrons(
-        electrons, grid, positron=positive, radiates=yields not in _NO_BREMSSTRAHLUNG, width_mm=width_mm
-    )
-    total.add(run)
-    gone_number = float(run.escaped[1] + run.escaped[3])
-    number = float(np.sum(electrons))
-    rest.escaped += photons + float(run.escaped[0] + run.escaped[2]) + gone_number * _ELECTRON_REST
-    # an electron keeps its rest energy; a positron gives its own and that of an electron of the medium to photons
-    rest.electron_rest += (number - gone_number) * (-_ELECTRON_REST if positive else _ELECTRON_REST)
-    rest.neutrino += number * (_MUON_REST - MICHEL_MEAN_ENERGY_MEV - _ELECTRON_REST)
-    return total, rest
 
 
 def _binding(species: str, reacted: NDArray[np.float64], grid: CoarseGrid, yields: str) -> float:
@@ -427,25 +249,6 @@ def _binding(species: str, reacted: NDArray[np.float64], grid: CoarseGrid, yield
         here = np.sum(reacted[grid.stuff == index], axis=0)
         total += float(np.sum(here * table.at(table.reaction_share * table.binding_mev, GROUP_ENERGY_MEV)))
     return total
-
-
-def _add_later(
-    channels: dict[str, NDArray[np.float64]], scattered: _Scattered, grid: CoarseGrid, species: str, yields: str
-) -> None:
-    """Add events of scattered particles, split by channel at their energy groups."""
-    channels["elastic"] += grid.to_bins(scattered.counts[0])
-    channels["decay"] += grid.to_bins(scattered.counts[2])
-    split = {name: np.zeros(grid.cells) for name in CHANNELS}
-    for index, stuff in enumerate(grid.materials):
-        table = reactions(species, stuff, yields=yields)
-        rows = {name: table.at(table.per_mm[name], GROUP_ENERGY_MEV) for name in CHANNELS[:3]}
-        rows["elastic"] = table.at(table.struck_hydrogen_per_mm, GROUP_ENERGY_MEV)
-        total = np.maximum(sum(rows.values()), 1e-30)
-        here = grid.stuff == index
-        for name, row in rows.items():
-            split[name][here] = scattered.later_reactions[here] @ (row / total)
-    for name, values in split.items():
-        channels[name] += grid.to_bins(values)
 
 
 def _electrons(
@@ -501,6 +304,6 @@ def _electrons(
         deposit[name], let[name] = empty, empty
     return Solution(
         species, core, grid, deposit, let, {"core": empty, "scattered": grid.to_bins(run.stops)},
-        dict.fromkeys((*CHANNELS, "decay"), empty), empty, ledger, {"scattered": _width(run, grid)},
-        _classes(run, grid),
+        dict.fromkeys((*CHANNELS, "decay"), empty), empty, ledger, {"scattered": width_of(run, grid)},
+        classes_of(run, grid),
     )  # fmt: skip
