@@ -56,35 +56,34 @@ def _row(wet, inverse_bin, last):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, error_model="numpy")
-def _advance(moments, length, scatter, part, power, power_above, steps):  # type: ignore[no-untyped-def]
+def _advance(state, r, c, length, scatter, core, i, f, steps):  # type: ignore[no-untyped-def]
     """Carry the Fermi-Eyges moments of the steps of one ray along a length (Eyges 1948)."""
-    a0, a1, a2 = moments[0], moments[1], moments[2]
     for k in range(steps):
-        t = scatter * ((1.0 - part) * power[k] + part * power_above[k])
-        a2[k] += length * (2.0 * a1[k] + length * (a0[k] + t * length / 3.0))
-        a1[k] += length * (a0[k] + 0.5 * t * length)
-        a0[k] += t * length
+        t = scatter * ((1.0 - f) * core[i, 0, k] + f * core[i + 1, 0, k])
+        a0, a1 = state[r, c, 0, k], state[r, c, 1, k]
+        state[r, c, 2, k] += length * (2.0 * a1 + length * (a0 + t * length / 3.0))
+        state[r, c, 1, k] = a1 + length * (a0 + 0.5 * t * length)
+        state[r, c, 0, k] = a0 + t * length
 
 
 @njit(nogil=True, error_model="numpy")
-def _core(core, i, f, reference, growth, a2, squared_rungs, rungs, energy, stops, rung, upper, steps):  # type: ignore[no-untyped-def]
+def _core(core, i, f, reference, growth, state, r, c, squared_rungs, rungs, found, steps):  # type: ignore[no-untyped-def]
     """Look up what each step of one ray leaves: energy and stops per particle, its rung and the share of the next.
 
     ``core[row, 4, K]`` holds scattering power, survivors, energy and stops. `squared_rungs` turns a variance into
-    squared rungs of the ladder; a variance between two rungs is shared so that it is exact.
+    squared rungs of the ladder; a variance between two rungs is shared so that it is exact. ``found[4, K]`` becomes
+    energy, stops, rung and share.
     """
-    left, left_above = core[i, 1], core[i + 1, 1]
-    given, given_above = core[i, 2], core[i + 1, 2]
-    stopped, stopped_above = core[i, 3], core[i + 1, 3]
     highest = rungs - 2.0
     for k in range(steps):
-        energy[k] = (1.0 - f) * given[k] + f * given_above[k]
-        stops[k] = (1.0 - f) * stopped[k] + f * stopped_above[k]
-        survivors = (1.0 - f) * left[k] + f * left_above[k]
-        squared = max((a2[k] - reference[k] * growth) * survivors * squared_rungs, 0.0)
+        found[0, k] = (1.0 - f) * core[i, 2, k] + f * core[i + 1, 2, k]
+        found[1, k] = (1.0 - f) * core[i, 3, k] + f * core[i + 1, 3, k]
+    for k in range(steps):
+        survivors = (1.0 - f) * core[i, 1, k] + f * core[i + 1, 1, k]
+        squared = max((state[r, c, 2, k] - reference[k] * growth) * survivors * squared_rungs, 0.0)
         g = min(np.floor(np.sqrt(squared)), highest)
-        rung[k] = g
-        upper[k] = min((squared - g * g) / (2.0 * g + 1.0), 1.0)
+        found[2, k] = g
+        found[3, k] = min((squared - g * g) / (2.0 * g + 1.0), 1.0)
 
 
 @njit(nogil=True, error_model="numpy", cache=True)
@@ -104,7 +103,7 @@ def follow_rows(  # type: ignore[no-untyped-def]
     parts = broad.shape[2]
     columns = wet.shape[2]
     lit, total = np.empty(columns, dtype=np.uint8), np.empty(parts)
-    energy, stops, rung, upper = np.empty(steps), np.empty(steps), np.empty(steps), np.empty(steps)
+    found = np.empty((4, steps))
     for r in range(begin, end):
         for c in range(columns):
             lit[c] = 0
@@ -126,37 +125,45 @@ def follow_rows(  # type: ignore[no-untyped-def]
                     continue
                 depth = wet[j, r, c]
                 before = wet[j - 1, r, c] if j > 0 else 0.0
-                number, moments = fluence[r, c], state[r, c]
                 i, f = _row(0.5 * (before + depth), inverse_bin, last)
                 scatter = local[j, r, c] if j > 0 else 0.0
-                _advance(moments, gaps[j] * slant[r, c], scatter, f, core[i, 0], core[i + 1, 0], alive[i])
+                _advance(state, r, c, gaps[j] * slant[r, c], scatter, core, i, f, alive[i])
                 i, f = _row(depth, inverse_bin, last)
-                _core(
-                    core, i, f, reference, growth[j], moments[2], squared_rungs, rungs, energy, stops, rung, upper,
-                    alive[i],
-                )  # fmt: skip
-                for k in range(alive[i]):
-                    e, s = energy[k] * number[k] * slant[r, c], stops[k] * number[k] * slant[r, c]
-                    if e == 0.0 and s == 0.0:
-                        continue
-                    g = int(rung[k])
-                    flags[g] = 1
-                    flags[g + 1] = 1
-                    rows[g, 2 * c] += (1.0 - upper[k]) * e
-                    rows[g, 2 * c + 1] += (1.0 - upper[k]) * s
-                    rows[g + 1, 2 * c] += upper[k] * e
-                    rows[g + 1, 2 * c + 1] += upper[k] * s
+                _core(core, i, f, reference, growth[j], state, r, c, squared_rungs, rungs, found, alive[i])
+                # neighbouring steps mostly share a rung: add up before storing
+                at = -1
+                low_e, low_s, high_e, high_s = 0.0, 0.0, 0.0, 0.0
+                for k in range(alive[i] + 1):
+                    g = int(found[2, k]) if k < alive[i] else -1
+                    if g != at:
+                        if low_e != 0.0 or low_s != 0.0 or high_e != 0.0 or high_s != 0.0:
+                            flags[at] = 1
+                            flags[at + 1] = 1
+                            rows[at, 2 * c] += low_e
+                            rows[at, 2 * c + 1] += low_s
+                            rows[at + 1, 2 * c] += high_e
+                            rows[at + 1, 2 * c + 1] += high_s
+                        at = g
+                        low_e, low_s, high_e, high_s = 0.0, 0.0, 0.0, 0.0
+                    if k < alive[i]:
+                        number = fluence[r, c, k] * slant[r, c]
+                        e, s, upper = found[0, k] * number, found[1, k] * number, found[3, k]
+                        low_e += (1.0 - upper) * e
+                        low_s += (1.0 - upper) * s
+                        high_e += upper * e
+                        high_s += upper * s
                 n = min(int(depth * inverse_bin * 4.0), broad.shape[0] - 1)
-                table, some = broad[n], parts_at[n]
+                some = parts_at[n]
                 for b in range(some):
                     total[b] = 0.0
-                for k in range(0, steps, 4):  # four at a time; those beyond the last count nothing
-                    k1, k2, k3 = min(k + 1, steps - 1), min(k + 2, steps - 1), min(k + 3, steps - 1)
-                    n0, n1 = number[k], (number[k1] if k + 1 < steps else 0.0)
-                    n2, n3 = (number[k2] if k + 2 < steps else 0.0), (number[k3] if k + 3 < steps else 0.0)
-                    t0, t1, t2, t3 = table[k], table[k1], table[k2], table[k3]
+                for k in range(0, steps - 3, 4):  # four at a time
+                    n0, n1, n2, n3 = fluence[r, c, k], fluence[r, c, k + 1], fluence[r, c, k + 2], fluence[r, c, k + 3]
                     for b in range(some):
-                        total[b] += n0 * t0[b] + n1 * t1[b] + n2 * t2[b] + n3 * t3[b]
+                        near = n0 * broad[n, k, b] + n1 * broad[n, k + 1, b]
+                        total[b] += near + (n2 * broad[n, k + 2, b] + n3 * broad[n, k + 3, b])
+                for k in range(steps - steps % 4, steps):
+                    for b in range(some):
+                        total[b] += fluence[r, c, k] * broad[n, k, b]
                 near, n = slant[r, c] * (1.0 - share_u[c]), column[c] - column[0]
                 far = slant[r, c] * share_u[c]
                 for b in range(some):
@@ -178,8 +185,8 @@ def read_rows(  # type: ignore[no-untyped-def]
     last = core.shape[0] - 1
     rungs = source.shape[2]
     parts = broad.shape[1]
-    energy, stops, rung, upper = np.empty(steps), np.empty(steps), np.empty(steps), np.empty(steps)
-    value, total = np.empty(steps), np.zeros(parts + 4)
+    found = np.empty((4, steps))
+    value, total = np.empty(steps), np.zeros(parts)
     for r in range(begin, end):
         line, share = row[r] - row[0], share_v[r]
         for j in range(first_plane, last_plane):
@@ -188,35 +195,34 @@ def read_rows(  # type: ignore[no-untyped-def]
             for c in range(wet.shape[2]):
                 depth = wet[j, r, c]
                 before = wet[j - 1, r, c] if j > 0 else 0.0
-                moments = state[r, c]
                 i, f = _row(0.5 * (before + depth), inverse_bin, last)
                 scatter = local[j, r, c] if j > 0 else 0.0
-                _advance(moments, gaps[j] * slant[r, c], scatter, f, core[i, 0], core[i + 1, 0], alive[i])
+                _advance(state, r, c, gaps[j] * slant[r, c], scatter, core, i, f, alive[i])
                 i, f = _row(depth, inverse_bin, last)
-                _core(
-                    core, i, f, reference, growth[j], moments[2], squared_rungs, rungs, energy, stops, rung, upper,
-                    alive[i],
-                )  # fmt: skip
+                _core(core, i, f, reference, growth[j], state, r, c, squared_rungs, rungs, found, alive[i])
                 u, m = share_u[c], column[c] - column[0]
                 for b in range(parts):
                     one = (1.0 - u) * near[b, m] + u * near[b, m + 1]
                     other = (1.0 - u) * far[b, m] + u * far[b, m + 1]
                     total[b] = (1.0 - share) * one + share * other
-                table = broad[min(int(depth * inverse_bin * 4.0), broad.shape[0] - 1)]
+                n = min(int(depth * inverse_bin * 4.0), broad.shape[0] - 1)
                 for k in range(steps):
                     value[k] = 0.0
-                for b in range(0, parts, 4):
+                for b in range(0, parts - 3, 4):
                     f0, f1, f2, f3 = total[b], total[b + 1], total[b + 2], total[b + 3]
-                    t0, t1 = table[b], table[min(b + 1, parts - 1)]
-                    t2, t3 = table[min(b + 2, parts - 1)], table[min(b + 3, parts - 1)]
                     for k in range(steps):
-                        value[k] += f0 * t0[k] + f1 * t1[k] + f2 * t2[k] + f3 * t3[k]
+                        first = f0 * broad[n, b, k] + f1 * broad[n, b + 1, k]
+                        value[k] += first + (f2 * broad[n, b + 2, k] + f3 * broad[n, b + 3, k])
+                for b in range(parts - parts % 4, parts):
+                    for k in range(steps):
+                        value[k] += total[b] * broad[n, b, k]
                 for k in range(alive[i]):
-                    if energy[k] == 0.0 and stops[k] == 0.0:
+                    energy, stops, upper = found[0, k], found[1, k], found[3, k]
+                    if energy == 0.0 and stops == 0.0:
                         continue
-                    g = int(rung[k])
-                    below = energy[k] * rows[g, 2 * c] + stops[k] * rows[g, 2 * c + 1]
-                    above = energy[k] * rows[g + 1, 2 * c] + stops[k] * rows[g + 1, 2 * c + 1]
-                    value[k] += (1.0 - upper[k]) * below + upper[k] * above
+                    g = int(found[2, k])
+                    below = energy * rows[g, 2 * c] + stops * rows[g, 2 * c + 1]
+                    above = energy * rows[g + 1, 2 * c] + stops * rows[g + 1, 2 * c + 1]
+                    value[k] += (1.0 - upper) * below + upper * above
                 for k in range(steps):
                     fluence[r, c, k] += value[k] * slant[r, c]

@@ -70,22 +70,24 @@ def straight_reading(
         stride[axis] = int(np.prod(array.shape[along + 1 :]))
         count[axis] = array.shape[along]
         if b == 2:
-            lit = np.array([plane.any() for plane in array])
-            matrix = _linear((position - first_plane) * per_mm, len(lit))
-            matrix[~(matrix[:, lit] > 0.0).any(axis=1)] = 0.0  # nothing to read there
+            matrix = _linear((position - first_plane) * per_mm, count[axis])
+            if lattice is fine:  # the core ends somewhere
+                lit = array.max(axis=(1, 2, 3)) > array.min(axis=(1, 2, 3))
+                matrix[~(matrix[:, lit] > 0.0).any(axis=1)] = 0.0
         else:
             place = (position - (lattice.u_mm, lattice.v_mm)[b][0]) / lattice.spacing_mm
             matrix = _spline(place, count[axis], nodes) if lattice is fine else _linear(place, count[axis])
         matrices.append(matrix)
     widest = max(_width(matrix) for matrix in matrices)
     first = np.zeros((3, max(matter.shape)), dtype=np.int64)
-    share = np.zeros((*first.shape, widest))
+    share = np.zeros((3, widest, first.shape[1]))
     for axis, matrix in enumerate(matrices):
         begin = (matrix != 0.0).argmax(axis=1)
         places = begin[:, None] + np.arange(widest)
         first[axis, : len(begin)] = begin
         inside = np.minimum(places, count[axis] - 1)
-        share[axis, : len(begin)] = np.where(places < count[axis], np.take_along_axis(matrix, inside, axis=1), 0.0)
+        shares = np.where(places < count[axis], np.take_along_axis(matrix, inside, axis=1), 0.0)
+        share[axis, :, : len(begin)] = shares.T
     return stride, count, first, share
 
 
