@@ -71,7 +71,7 @@ class Contribution:
         if not (self.extra.any() and np.any(left > 0.0)):
             return [variance + self.extra]
         power = np.interp(left, _POWERS - np.log1p(_POWERS), _POWERS)
-        sizes = np.stack([middle**power for middle in _MIDDLES])
+        sizes = np.exp(power * np.log(_MIDDLES)[:, None, None])
         return list(variance + sizes / sizes.mean(axis=0) * self.extra)
 
 
@@ -110,10 +110,10 @@ def divide(
     total = sum(one.quantity for one in contributions)
     most = float(np.max(total))
     low, high = np.inf, 0.0
-    for one in contributions:
+    variances = [one.variances() for one in contributions]
+    for one, each in zip(contributions, variances, strict=True):
         counts = one.quantity > _SIGNIFICANT * most
         if counts.any():
-            each = one.variances()
             low = min(low, float(each[0][counts].min()))
             high = max(high, float(each[-1][counts].max()))
     high = max(float(np.sqrt(high)), _SMALLEST_MM)
@@ -125,11 +125,12 @@ def divide(
     sigma = np.linspace(np.sqrt(low), np.sqrt(high), number) ** 2
     squares = sigma**2
     values = np.zeros((number, *core_mm2.shape))
+    flat, every = values.reshape(-1), np.arange(core_mm2.size)
+    gaps = np.diff(squares)
     kept = np.zeros(core_mm2.shape)
     with_core = core_mm2 < squares[0]
     below = np.where(with_core, core_mm2, 0.0)
-    for one in contributions:
-        each = one.variances()
+    for one, each in zip(contributions, variances, strict=True):
         share = one.quantity / len(each)
         for variance in each:
             inside = with_core & (variance < squares[0])
@@ -140,7 +141,8 @@ def divide(
             if number == 1:
                 values[0] += goes
                 continue
-            upper = goes * np.clip((variance - squares[rung]) / (squares[rung + 1] - squares[rung]), 0.0, 1.0)
-            for n in range(number):
-                values[n] += np.where(rung == n, goes - upper, 0.0) + np.where(rung + 1 == n, upper, 0.0)
+            upper = goes * np.clip((variance - squares[rung]) / gaps[rung], 0.0, 1.0)
+            place = rung.ravel() * goes.size + every
+            flat[place] += (goes - upper).ravel()  # every place is met once
+            flat[place + goes.size] += upper.ravel()
     return sigma, values, kept
