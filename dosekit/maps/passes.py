@@ -12,10 +12,10 @@ from one ray to another lose energy by what lies where they arrive, so the voxel
 plane of one material this keeps the energy exactly, beside an edge it keeps the particles.
 
 All steps of a ray are added up before anything is spread, and all rays of one width are spread together. With R rays
-in n rows, J planes, K steps, P broad parts, G widths that reach h nodes each way, N fine nodes in r rows and V voxels,
+in n rows, J planes, K steps, P broad parts, G widths that reach h nodes each way, a lattice of c columns and V voxels,
 a fold costs about
 
-    J [ R K (P + 20) + 2 G (2h + 1) (R + n sqrt(N)) ] + 60 V        multiply-adds
+    J [ R K (P + 25) + 2 G (2h + 1) c (n + R / c) ] + 30 V        multiply-adds
 
 whatever the number of spots.
 """
