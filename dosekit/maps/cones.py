@@ -26,6 +26,7 @@ from dosekit.maps.cones_layouts import (
     own,
     padded,
     padding,
+    read,
     source_ranges,
     turn_last,
     unpadded,
@@ -226,6 +227,7 @@ class Cones:
         material: NDArray[Any] | None = None,
         energies_mev: NDArray[np.float64] | None = None,
         sources_mev: NDArray[np.float64] | None = None,
+        total: NDArray[np.float64] | None = None,
     ) -> NDArray[np.float64]:
         """Carry energy from where it is emitted to where it stays.
 
@@ -243,11 +245,13 @@ class Cones:
             Energy per stop in each mode; may be negative, as long as the kernel is not.
         sources_mev : ndarray [m, z, y, x], optional
             Energy emitted per voxel in each mode, instead of the three above.
+        total : ndarray [z, y, x], optional
+            Where to add the result.
 
         Returns
         -------
         ndarray [z, y, x]
-            Energy left in each voxel, MeV. What is missing from the sum has left the volume.
+            Energy left in each voxel, MeV (``total`` if given). What is missing from the sum has left the volume.
         """
         from dosekit.maps.kernels_stars import sweep
 
@@ -258,17 +262,17 @@ class Cones:
             assert material is not None
             assert energies_mev is not None
             table = np.ascontiguousarray(energies_mev, dtype=float)
-            shining, kinds = own(stops, float), own(material)
+            shining, kinds = own(stops, float), read(material)
             brightest = np.abs(table).max(axis=0) * max(float(shining.max()), -float(shining.min()))
             sources = np.empty((0, 1, 1, 1))
         else:
-            table, kinds = np.zeros((1, 1)), np.zeros((1, 1, 1), np.uint16)
+            table, kinds = np.zeros((1, 1)), read(np.zeros((1, 1, 1), np.uint16))
             sources = own(sources_mev, float)
             shining = np.abs(sources).sum(axis=0)
             brightest = np.abs(sources).reshape(len(rates), -1).max(axis=1)
         ranges = source_ranges(shining)
         held = held_box(*ranges)
-        total = np.zeros(scale.shape)
+        total = np.zeros(scale.shape) if total is None else total
         with Threads() as pool:
             for axis, lines in enumerate(self.lines()):
                 if not lines:
@@ -279,7 +283,7 @@ class Cones:
                     emitted = turn_last(pool, shining, axis, box=held)
                     first, last = source_ranges(emitted)
                     if by_stops:
-                        index = turn_last(pool, kinds, axis, box=held)
+                        index = read(turn_last(pool, kinds, axis, box=held))
                     else:
                         modes = np.stack([turn_last(pool, mode, axis, box=held) for mode in sources])
                 if not by_stops:
@@ -302,6 +306,7 @@ class Cones:
         *,
         material: NDArray[Any] | None = None,
         energies_mev: NDArray[np.float64] | None = None,
+        total: NDArray[np.float64] | None = None,
     ) -> NDArray[np.float64]:
         """Apply the exact transpose of `carry`.
 
@@ -313,6 +318,8 @@ class Cones:
             What a unit of energy in each voxel counts.
         material, energies_mev : ndarray, optional
             As in `carry`; without them the result is per mode.
+        total : ndarray, optional
+            Where to add the result.
 
         Returns
         -------
@@ -323,7 +330,8 @@ class Cones:
 
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         by_mode = energies_mev is None
-        total = np.zeros((len(rates), *scale.shape)) if by_mode else np.zeros(scale.shape)
+        if total is None:
+            total = np.zeros((len(rates), *scale.shape)) if by_mode else np.zeros(scale.shape)
         table = np.zeros((1, len(rates))) if energies_mev is None else np.ascontiguousarray(energies_mev, dtype=float)
         with Threads() as pool:
             for axis, lines in enumerate(self.lines()):
@@ -331,7 +339,9 @@ class Cones:
                     continue
                 turned, asked = turn_last(pool, scale, axis), turn_last(pool, wanted, axis, float)
                 first, last = source_ranges(asked)
-                index = np.zeros((1, 1, 1), np.uint16) if by_mode else turn_last(pool, np.asarray(material), axis)
+                index = read(
+                    np.zeros((1, 1, 1), np.uint16) if by_mode else turn_last(pool, read(material), axis, np.uint16)
+                )
                 goal = np.zeros((*total.shape[:-3], *turned.shape)) if axis == LAST else total
                 out, out_modes = (np.zeros((1, 1, 1)), goal) if by_mode else (goal, np.zeros((1, 1, 1, 1)))
                 for line in lines:

@@ -13,7 +13,18 @@ from numpy.typing import NDArray
 
 from dosekit.maps.cones_threads import Threads
 
-__all__ = ["LAST", "add_turned", "held_box", "own", "padded", "padding", "source_ranges", "turn_last", "unpadded"]
+__all__ = [
+    "LAST",
+    "add_turned",
+    "held_box",
+    "own",
+    "padded",
+    "padding",
+    "read",
+    "source_ranges",
+    "turn_last",
+    "unpadded",
+]
 
 LAST = 2
 _PAD = 3
@@ -64,7 +75,7 @@ def turn_last(
     Outside a box, if there is one, the turned array is 0.
     """
     if axis != LAST:
-        return own(array, dtype)
+        return array if array.dtype == np.uint16 else own(array, dtype)
     nz, ny, nx = array.shape
     if box is None:
         turned = np.empty((nx, nz, ny), dtype or array.dtype)
@@ -91,3 +102,11 @@ def add_turned(turned: NDArray[Any], total: NDArray[Any], begin: int, end: int) 
 def own(array: NDArray[Any], dtype: Any = None) -> NDArray[Any]:
     """Return a contiguous, writable array, so that kernels meet one type and are compiled once."""
     return np.require(array, dtype, ["C", "W"])
+
+
+def read(array: NDArray[Any] | None) -> NDArray[np.uint16]:
+    """Return an index that is only read, as one type and without a copy if it is one already."""
+    assert array is not None
+    view = np.ascontiguousarray(array, dtype=np.uint16).view()
+    view.setflags(write=False)
+    return view

@@ -24,6 +24,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dosekit.basis.components import STAR_COMPONENTS
+from dosekit.beams.stopping import relative_stopping_power
 from dosekit.capture.exponentials import RATES_PER_MM, ConeKernel, material_kernel, neutron_scale
 from dosekit.capture.stars import star_energy_mev
 from dosekit.errors import GridError, InputError, UnknownNameError
@@ -32,7 +33,7 @@ from dosekit.maps.stars_modes import Travel
 if TYPE_CHECKING:
     from dosekit.grids.voxels import VoxelGrid
 
-__all__ = ["DIRECTIONS", "carry_stars", "carry_stars_transposed", "star_balance", "star_scales"]
+__all__ = ["DIRECTIONS", "carry_stars", "carry_stars_transposed", "scale_per_density", "star_balance", "star_scales"]
 
 DIRECTIONS: dict[str, int] = {"star_light": 110, "star_neutron": 194, "star_photon": 110}
 """Directions for each component that travels; see docs/explanation/star_transport.md for the study."""
@@ -90,15 +91,15 @@ def carry_stars(
         kernels = [material_kernel(component, yields, medium) for medium in grid.materials]
         factor = star_scale if component in _CHARGED else 1.0
         local = np.array([kernel.local_mev for kernel in kernels]) * factor
-        energy = np.zeros(grid.shape)
-        for k, here in enumerate(stops):
-            if here.any():
-                energy[k] = here * local[grid.material_index[k]]
         if RATES_PER_MM[component] and stops.any():
-            table = _table(kernels) * factor
             count = (directions or DIRECTIONS).get(component, DIRECTIONS[component])
-            travel = Travel(component, grid, star_scales(grid, component), count, block_mm)
-            energy += travel.carry(stops, grid.material_index, table)
+            travel = Travel(component, grid, scale_per_density(grid, component), count, block_mm)
+            energy = travel.carry(stops, grid.material_index, _table(kernels) * factor)
+        else:
+            energy = np.zeros(grid.shape)
+        for k, here in enumerate(stops if local.any() else ()):
+            if here.any():
+                energy[k] += here * local[grid.material_index[k]]
         result[component] = energy
     return result
 
@@ -139,13 +140,15 @@ def carry_stars_transposed(
             continue
         kernels = [material_kernel(component, yields, medium) for medium in grid.materials]
         factor = star_scale if component in _CHARGED else 1.0
-        total += value * (np.array([kernel.local_mev for kernel in kernels]) * factor)[grid.material_index]
+        local = np.array([kernel.local_mev for kernel in kernels]) * factor
+        for k, here in enumerate(value if local.any() else ()):
+            total[k] += here * local[grid.material_index[k]]
         if not RATES_PER_MM[component]:
             continue
         table = _table(kernels) * factor
         count = (directions or DIRECTIONS).get(component, DIRECTIONS[component])
-        travel = Travel(component, grid, star_scales(grid, component), count, block_mm)
-        total += travel.gather(value, grid.material_index, table)
+        travel = Travel(component, grid, scale_per_density(grid, component), count, block_mm)
+        travel.gather(value, grid.material_index, table, total)
     return total
 
 
@@ -165,13 +168,7 @@ def star_scales(grid: VoxelGrid, component: str) -> NDArray[np.float32]:
         Relative stopping power (of a 20 MeV proton) for light products, density times `neutron_scale` for neutrons,
         relative electron density for photons.
     """
-    if component in _CHARGED:
-        return grid.relative_stopping_power("proton", 20.0)
-    if component == "star_neutron":
-        per_density = [neutron_scale(medium) for medium in grid.materials]
-    else:
-        per_density = [medium.relative_electron_density / medium.density_g_cm3 for medium in grid.materials]
-    return np.asarray(per_density, dtype=np.float32)[grid.material_index] * grid.density_g_cm3
+    return scale_per_density(grid, component).astype(np.float32)[grid.material_index] * grid.density_g_cm3
 
 
 def star_balance(
@@ -244,6 +241,33 @@ def _checked(stops_per_voxel: NDArray[Any], grid: VoxelGrid) -> NDArray[np.float
     if not np.isfinite(float(stops.sum())) or lowest < 0.0:
         raise InputError("stops that are negative or not finite", allowed="0 or more in every voxel")
     return stops
+
+
+def scale_per_density(grid: VoxelGrid, component: str) -> NDArray[np.float64]:
+    """Return scaled distance per mm of path for each material at 1 g/cm3.
+
+    Parameters
+    ----------
+    grid : VoxelGrid
+        The volume.
+    component : str
+        Star component.
+
+    Returns
+    -------
+    ndarray, shape (n,)
+        See `star_scales`.
+    """
+    if component in _CHARGED:
+        return np.array(
+            [
+                relative_stopping_power(medium, "proton", kinetic_energy_mev=20.0) / medium.density_g_cm3
+                for medium in grid.materials
+            ]
+        )
+    if component == "star_neutron":
+        return np.array([neutron_scale(medium) for medium in grid.materials])
+    return np.array([medium.relative_electron_density / medium.density_g_cm3 for medium in grid.materials])
 
 
 def _table(kernels: list[ConeKernel]) -> NDArray[np.float64]:

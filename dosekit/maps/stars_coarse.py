@@ -15,9 +15,12 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from dosekit.maps.cones_layouts import read
 from dosekit.maps.cones_threads import Threads
 
 __all__ = ["Blocks", "block_factors"]
+
+_ALIKE = np.zeros((0, 0, 0), np.uint16)
 
 
 def block_factors(spacing_mm: tuple[float, float, float], target_mm: float) -> tuple[int, int, int]:
@@ -70,21 +73,8 @@ class Blocks:
 
     def summed(self, values: NDArray[Any]) -> NDArray[np.float64]:
         """Return the sums over blocks of an array [z, y, x]."""
-        total: NDArray[np.float64] = self.sources(values, np.zeros((0, 0, 0), np.uint16), np.ones((1, 1)))[0]
+        total: NDArray[np.float64] = self.sources(values, _ALIKE, np.ones((1, 1)))[0]
         return total
-
-    def repeated(self, blocks: NDArray[Any]) -> NDArray[Any]:
-        """Return block values at every voxel: the transpose of `summed`."""
-        result = blocks
-        for axis, factor in enumerate(self.factors):
-            if factor > 1:
-                result = np.repeat(result, factor, axis=axis)
-        z, y, x = self.shape
-        return result[:z, :y, :x]
-
-    def averaged(self, values: NDArray[Any]) -> NDArray[np.float32]:
-        """Return averages over whole blocks (what a block at the edge lacks counts as empty)."""
-        return (self.summed(values) / float(np.prod(self.factors))).astype(np.float32)
 
     def spread(self, energy: NDArray[Any]) -> NDArray[np.float64]:
         """Return energy per voxel from energy per block, smooth in dose and exact in every block."""
@@ -107,12 +97,23 @@ class Blocks:
             pool.run(_planes, arguments, self.coarse_shape[0])
         return out
 
+    def sources_transposed(
+        self, per_mode: NDArray[Any], material: NDArray[Any], table: NDArray[np.float64], total: NDArray[np.float64]
+    ) -> None:
+        """Add to ``total`` what a stop in each voxel counts: the transpose of `sources`."""
+        with Threads() as pool:
+            pool.run(_worth_of_planes, (per_mode, material, table.T, self.factors, total), self.shape[0])
+
     def spread_transposed(self, wanted: NDArray[Any]) -> NDArray[np.float64]:
         """Apply the transpose of `spread`."""
-        weighted = np.asarray(wanted, dtype=np.float64) * self.mass
-        per_block = self.summed(weighted) / self._block_mass
-        rest = weighted - self.repeated(per_block) * self.mass
-        return per_block + self._interpolated_transposed(rest) / self._block_mass
+        weighted = np.zeros(self.coarse_shape)
+        with Threads() as pool:
+            pool.run(_weigh, (wanted, self.mass, self.factors, weighted), self.coarse_shape[0])
+            per_block = weighted / self._block_mass
+            z, y, x = self._matrices
+            planes = np.empty((self.shape[0], *self.coarse_shape[1:]))
+            pool.run(_gather_planes, (wanted, self.mass, per_block, self.factors, y, x, planes), self.shape[0])
+        return np.asarray(per_block + np.tensordot(z.T, planes, axes=(1, 0)) / self._block_mass)
 
     @cached_property
     def _block_mass(self) -> NDArray[np.float64]:
@@ -141,13 +142,6 @@ class Blocks:
             matrices.append(matrix)
         return matrices
 
-    def _interpolated_transposed(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Apply the transpose of linear interpolation along the three axes."""
-        z, y, x = self._matrices
-        step = np.matmul(values, x)
-        step = np.matmul(y.T, step)
-        return np.asarray(np.tensordot(z.T, step, axes=(1, 0)))
-
 
 def _planes(
     stops: NDArray[Any],
@@ -165,6 +159,59 @@ def _planes(
         part = slice(block * factors[0], (block + 1) * factors[0])
         values = np.require(stops[part], np.float64, ["C", "W"])
         if values.any():
-            block_sources(
-                values, np.require(material[part], np.uint16, ["C", "W"]), table, *factors, out, block, block + 1
-            )
+            block_sources(values, read(material[part]), table, *factors, out, block, block + 1)
+
+
+def _repeated(plane: NDArray[Any], factors: tuple[int, int, int], shape: tuple[int, ...]) -> NDArray[Any]:
+    """Return a plane of blocks at the voxels of one plane."""
+    _, fy, fx = factors
+    return np.repeat(np.repeat(plane, fy, axis=-2), fx, axis=-1)[..., : shape[0], : shape[1]]
+
+
+def _worth_of_planes(
+    per_mode: NDArray[Any],
+    material: NDArray[Any],
+    by_mode: NDArray[Any],
+    factors: tuple[int, int, int],
+    total: NDArray[np.float64],
+    begin: int,
+    end: int,
+) -> None:
+    """Add what stops count, plane by plane."""
+    for z in range(begin, end):
+        for values, energies in zip(per_mode[:, z // factors[0]], by_mode, strict=True):
+            total[z] += _repeated(values, factors, total[z].shape) * energies[material[z]]
+
+
+def _weigh(
+    wanted: NDArray[Any],
+    mass: NDArray[Any],
+    factors: tuple[int, int, int],
+    weighted: NDArray[np.float64],
+    begin: int,
+    end: int,
+) -> None:
+    """Sum wanted times mass over some planes of blocks."""
+    fz, fy, fx = factors
+    for block in range(begin, min(end, len(weighted))):
+        part = slice(block * fz, (block + 1) * fz)
+        plane = np.einsum("zyx,zyx->yx", wanted[part], mass[part], dtype=np.float64)
+        rows = np.add.reduceat(plane, np.arange(0, plane.shape[0], fy), axis=0)
+        weighted[block] = np.add.reduceat(rows, np.arange(0, plane.shape[1], fx), axis=1)
+
+
+def _gather_planes(
+    wanted: NDArray[Any],
+    mass: NDArray[Any],
+    per_block: NDArray[np.float64],
+    factors: tuple[int, int, int],
+    along_y: NDArray[np.float64],
+    along_x: NDArray[np.float64],
+    planes: NDArray[np.float64],
+    begin: int,
+    end: int,
+) -> None:
+    """Apply the transpose of interpolation within some planes, to what blocks do not explain."""
+    for z in range(begin, end):
+        rest = (wanted[z] - _repeated(per_block[z // factors[0]], factors, wanted[z].shape)) * mass[z]
+        planes[z] = along_y.T @ (rest @ along_x)

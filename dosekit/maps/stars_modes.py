@@ -41,8 +41,8 @@ class Travel:
         Star component.
     grid : VoxelGrid
         The volume.
-    scale : ndarray [z, y, x]
-        Scaled distance per mm of path.
+    scale_per_density : ndarray, shape (n,)
+        Scaled distance per mm of path for each material at 1 g/cm3.
     directions : int
         Number of directions.
     block_mm : float
@@ -53,7 +53,7 @@ class Travel:
 
     component: str
     grid: VoxelGrid
-    scale: NDArray[Any]
+    scale_per_density: NDArray[np.float64]
     directions: int
     block_mm: float
     bias: Callable[[NDArray[np.float64]], NDArray[np.float64]] | None = None
@@ -78,32 +78,32 @@ class Travel:
             MeV.
         """
         total: NDArray[np.float64] | None = None
-        for modes, factors, widening, count in self._parts():
+        for modes, factors, widening, count in self._parts():  # blocks come first, so that voxels add to them
             rates, energies = np.array(RATES_PER_MM[self.component])[modes], table[:, modes]
             if factors == (1, 1, 1) and not widening:
                 cones = Cones(self.grid.spacing_mm, count, self.bias)
-                left = cones.carry(self.scale, rates, stops=stops, material=material, energies_mev=energies)
-            else:
-                blocks = Blocks(self.grid.shape, factors, self.grid.density_g_cm3)
-                sources = blocks.sources(stops, material, energies)
-                cones = Cones(_coarse_spacing(self.grid, factors), count, self.bias)
-                scale = blocks.averaged(self.scale)
-                held = (
-                    cones.carry_widening(scale, rates, sources)
-                    if widening
-                    else cones.carry(scale, rates, sources_mev=sources)
+                total = cones.carry(
+                    self._scale(), rates, stops=stops, material=material, energies_mev=energies, total=total
                 )
-                left = blocks.spread(held)
-            if total is None:
-                total = left
+                continue
+            blocks = Blocks(self.grid.shape, factors, self.grid.density_g_cm3)
+            sources = blocks.sources(stops, material, energies)
+            cones = Cones(_coarse_spacing(self.grid, factors), count, self.bias)
+            scale = self._block_scale(blocks)
+            if widening:
+                total = blocks.spread(cones.carry_widening(scale, rates, sources))
             else:
-                total += left
+                total = blocks.spread(cones.carry(scale, rates, sources_mev=sources))
         assert total is not None
         return total
 
     def gather(
-        self, wanted: NDArray[np.float64], material: NDArray[Any], table: NDArray[np.float64]
-    ) -> NDArray[np.float64]:
+        self,
+        wanted: NDArray[np.float64],
+        material: NDArray[Any],
+        table: NDArray[np.float64],
+        total: NDArray[np.float64],
+    ) -> None:
         """Apply the exact transpose of `carry`.
 
         Parameters
@@ -112,26 +112,33 @@ class Travel:
             What 1 MeV in each voxel counts.
         material, table
             As in `carry`.
-
-        Returns
-        -------
-        ndarray [z, y, x]
-            What a stop in each voxel counts.
+        total : ndarray [z, y, x]
+            What a stop in each voxel counts is added here.
         """
-        total = np.zeros(self.grid.shape)
         for modes, factors, widening, count in self._parts():
             rates, energies = np.array(RATES_PER_MM[self.component])[modes], table[:, modes]
             if factors == (1, 1, 1) and not widening:
                 cones = Cones(self.grid.spacing_mm, count, self.bias)
-                total += cones.gather(self.scale, rates, wanted, material=material, energies_mev=energies)
+                cones.gather(self._scale(), rates, wanted, material=material, energies_mev=energies, total=total)
                 continue
             blocks = Blocks(self.grid.shape, factors, self.grid.density_g_cm3)
             cones = Cones(_coarse_spacing(self.grid, factors), count, self.bias)
-            scale, asked = blocks.averaged(self.scale), blocks.spread_transposed(wanted)
+            scale, asked = self._block_scale(blocks), blocks.spread_transposed(wanted)
             per_mode = cones.gather_widening(scale, rates, asked) if widening else cones.gather(scale, rates, asked)
-            for mode in range(len(rates)):
-                total += blocks.repeated(per_mode[mode]) * energies[:, mode][material]
-        return total
+            blocks.sources_transposed(per_mode, material, energies, total)
+
+    def _scale(self) -> NDArray[np.float32]:
+        """Return scaled distance per mm of path in each voxel."""
+        scale = self.scale_per_density.astype(np.float32)[self.grid.material_index]
+        scale *= self.grid.density_g_cm3
+        return scale
+
+    def _block_scale(self, blocks: Blocks) -> NDArray[np.float32]:
+        """Return scaled distance per mm of path, averaged over blocks."""
+        per_density = self.scale_per_density.astype(np.float32).astype(np.float64)
+        summed = blocks.sources(self.grid.density_g_cm3, self.grid.material_index, per_density[:, None])[0]
+        averaged: NDArray[np.float32] = (summed / float(np.prod(blocks.factors))).astype(np.float32)
+        return averaged
 
     def _parts(self) -> list[tuple[slice, tuple[int, int, int], bool, int]]:
         """Return modes, voxels per block, whether directions widen, and their number."""

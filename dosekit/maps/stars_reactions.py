@@ -19,7 +19,7 @@ from scipy.optimize import brentq
 
 from dosekit.capture.exponentials import ConeKernel, cone_kernel, proton_kernel
 from dosekit.errors import GridError, InputError, UnknownNameError
-from dosekit.maps.stars import BLOCK_MM, DIRECTIONS, star_scales
+from dosekit.maps.stars import BLOCK_MM, DIRECTIONS, scale_per_density
 from dosekit.maps.stars_modes import Travel
 
 if TYPE_CHECKING:
@@ -122,7 +122,7 @@ def carry_reactions(
     share = kernel.energies_mev / kernel.energy_mev
     local = kernel.local_mev / kernel.energy_mev * energy
     bias = forward_bias(beam_direction, mean_cosine)
-    travel = Travel(component, grid, star_scales(grid, component), DIRECTIONS[component], block_mm, bias)
+    travel = Travel(component, grid, scale_per_density(grid, component), DIRECTIONS[component], block_mm, bias)
     return local + travel.carry(energy, np.zeros(grid.shape, dtype=np.uint16), share[None, :])
 
 

@@ -163,11 +163,11 @@ def test_blocks_keep_energy_and_transpose(rng):
     np.testing.assert_allclose(blocks.summed(spread), energy, rtol=1e-12)
     wanted = rng.normal(size=shape)
     assert (spread * wanted).sum() == pytest.approx((energy * blocks.spread_transposed(wanted)).sum(), rel=1e-10)
-    values = rng.normal(size=shape)
-    per_block = rng.normal(size=blocks.coarse_shape)
-    assert (blocks.summed(values) * per_block).sum() == pytest.approx(
-        (values * blocks.repeated(per_block)).sum(), rel=1e-10
-    )
+    stops, per_mode = rng.normal(size=shape), rng.normal(size=(2, *blocks.coarse_shape))
+    material, table = rng.integers(0, 3, shape).astype(np.uint16), rng.normal(size=(3, 2))
+    worth = np.zeros(shape)
+    blocks.sources_transposed(per_mode, material, table, worth)
+    assert (blocks.sources(stops, material, table) * per_mode).sum() == pytest.approx((stops * worth).sum(), rel=1e-10)
 
 
 def test_block_factors_never_vanish():
