@@ -15,7 +15,7 @@ All steps of a ray are added up before anything is spread, and all rays of one w
 in n rows, J planes, K steps, P broad parts, G widths that reach h nodes each way, a lattice of c columns and V voxels,
 a fold costs about
 
-    J [ R K (P + 25) + 2 G (2h + 1) c (n + R / c) ] + 30 V        multiply-adds
+    J [ R K (P + 25) + 4 G (2h + 1) n c ] + 30 V        multiply-adds
 
 whatever the number of spots.
 """
