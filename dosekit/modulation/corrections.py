@@ -9,8 +9,9 @@ with the exact dose ``e``, and keeps the outcome only if the exact cost falls; o
 far.  Only one exact dose, and no exact slope, is needed in a round.  A fixed point meets the goals with the
 exact dose as well as the stand-in's slopes allow.  Each search with the stand-in ends at a quarter of `enough`.
 
-With errors to stand, every scenario has a stand-in and an exact dose of its own, is corrected by its own lack, and
-the cost is the joined one of `dosekit.modulation.costs`.
+With errors to stand, every scenario has a stand-in and an exact dose of its own, and the cost is the joined one of
+`dosekit.modulation.costs`.  The first judgement takes the lack of the nominal scenario for that of all; from then on
+each is judged and corrected by its own.
 
 Stopping rules: exact cost at or below `enough`; it falls by less than `least_gain`; number of rounds; no
 lower cost after four halvings.
@@ -147,7 +148,8 @@ def find_weights_corrected(
     Returns
     -------
     FoundWeights
-        Best weights; history (of the joined cost), parts and dose (nominal) are those of the exact response.
+        Best weights; history (of the joined cost), parts and dose (nominal) are those of the exact response. With
+        scenarios the first cost of the history rests on what the nominal one lacks.
     """
     exacts = [exact, *(pair[0] for pair in scenarios)]
     quicks = [quick, *(pair[1] for pair in scenarios)]
@@ -170,19 +172,24 @@ def find_weights_corrected(
 
     evaluations = 0
 
-    def judge(weights: NDArray[np.float64]) -> tuple[list[NDArray[np.float64]], float, dict[str, float]]:
+    def judge(
+        weights: NDArray[np.float64], *, first: bool = False
+    ) -> tuple[list[NDArray[np.float64]], float, dict[str, float]]:
         nonlocal evaluations
         evaluations += 1
-        doses = [one.dose(weights)[0] for one in exacts]
+        doses = [one.dose(weights)[0] for one in (exacts[:1] if first else exacts)]
+        lack = doses[0] - quick.dose(weights)[0] if len(doses) < len(quicks) else 0.0
+        doses += [one.dose(weights)[0] + lack for one in quicks[len(doses) :]]
         costs = [goal_costs(goals, dose, scale_gy=scale_gy)[:2] for dose in doses]
         return doses, joined_costs(np.array([cost for cost, _ in costs]), robust)[0], costs[0][1]
 
     best = search(quicks, start)
-    doses, cost, parts = judge(best)
+    doses, cost, parts = judge(best, first=True)
+    supposed = len(exacts) > 1
     history, parts_history = [cost], {name: [value] for name, value in parts.items()}
     reason = f"{rounds} rounds"
     for number in range(1, rounds + 1):
-        if cost <= enough:
+        if cost <= enough and not supposed:
             break
         aimed = search(
             [CorrectedResponse(one, dose - one.dose(best)[0]) for dose, one in zip(doses, quicks, strict=True)], best
@@ -191,21 +198,22 @@ def find_weights_corrected(
         for _ in range(_HALVINGS + 1):
             trial = best + part * (aimed - best)
             after = judge(trial)
-            if after[1] < cost:
+            if after[1] < cost or supposed:
                 found = (trial, *after)
                 break
             part *= 0.5
         if found is None:
             reason = f"no lower cost after {_HALVINGS} halvings"
             break
-        before = cost
+        before, known = cost, not supposed
+        supposed = False
         best, doses, cost, parts = found
         history.append(cost)
         for name, value in parts.items():
             parts_history[name].append(value)
         if progress is not None:
             progress(number, cost)
-        if cost > enough and before - cost < least_gain * before:
+        if cost > enough and known and before - cost < least_gain * before:
             reason = f"exact cost falls by less than {100 * least_gain:g} %"
             break
     if cost <= enough:
