@@ -57,6 +57,11 @@ _COMPONENT_OF = {
     "contaminant_electron": "contaminant_electron",
 }
 _NEUTRAL_SIGMA_MM = 100.0
+"""Of the energy that neutrons of 50 to 120 MeV and photons of pi0 leave within 300 mm of where they start, one axis: 99
+to 116 mm (:mod:`dosekit.capture.profiles`, water)."""
+_NEUTRAL_UNEQUAL = 2.16
+"""It is even in radius to 300 mm, 1.8 for <r^4>/<r^2>^2, times 1.2 for <sin^4>/<sin^2>^2 of all directions (neutrons;
+photons of pi0, which build up before they fade, 1.8)."""
 _WIDTH_MM = 600.0
 
 
@@ -385,7 +390,7 @@ def _parts(beam: Beam, momentum: float, bins: int, bin_mm: float, yields: str) -
         safe = np.where(amount[target] > 1e-15, amount[target], 1.0)
         let[target] = weighted / safe
         sigma[target] = np.sqrt(variance / safe)
-    unequal = {}
+    unequal = {"in_flight_neutral": np.full(bins, _NEUTRAL_UNEQUAL)}
     for name, (given, stopped, width, ratio) in main.classes.items():
         amount[name], amount[f"{name}_stops"], sigma[name], unequal[name] = given, stopped, width, ratio
     amount["core_stops"], amount["scattered_stops"] = main.stops["core"], main.stops["scattered"]

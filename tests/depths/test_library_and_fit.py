@@ -213,3 +213,26 @@ def test_scattered_particles_in_three_classes(beam):
     middle = slice(30, 60)  # behind it those that left sideways have stopped near where they left
     assert np.all(sigma["scattered_near"][0, middle] < sigma["scattered"][0, middle])
     assert np.all(sigma["scattered_near"][0, middle] < sigma["scattered_oblique"][0, middle])
+
+
+def test_spread_of_neutral_products_is_that_of_point_kernels():
+    """Sigma and inequality of what fast neutrons and photons of pi0 leave within 300 mm of a point in water."""
+    from dosekit.basis.materials import material
+    from dosekit.capture.neutrons import EDGES_MM, NODE_ENERGIES_MEV
+    from dosekit.capture.photons import NODE_PHOTON_MEV
+    from dosekit.capture.profiles import neutron_response, photon_response
+
+    library = depth_library(dk.Beam("pi-", momentum_mev_c=150), [100.0])
+    ours = (library.extra_sigma_mm["in_flight_neutral"][0, 50], library.unequal["in_flight_neutral"][0, 50])
+    inner, outer = EDGES_MM[:-1], EDGES_MM[1:]
+    within = outer <= 300.0
+    square = 0.6 * ((outer**5 - inner**5) / (outer**3 - inner**3))[within]
+    for response, energies, bar in (
+        (neutron_response, NODE_ENERGIES_MEV, 0.1),
+        (photon_response, NODE_PHOTON_MEV, 0.3),
+    ):
+        rows = response(material("water"))[:, : len(outer)][:, within]
+        for row in rows[(energies >= 40.0) & (energies <= 120.0)]:
+            mean = float(row @ square / row.sum())
+            assert float(ours[0]) == pytest.approx(np.sqrt(mean / 3.0), rel=bar)
+            assert float(ours[1]) == pytest.approx(1.2 * float(row @ square**2 / row.sum()) / mean**2, rel=bar)
