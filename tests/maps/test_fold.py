@@ -61,6 +61,25 @@ def test_adjoint_identity(case):
     assert forward @ y == pytest.approx(x @ back, rel=1e-6)
 
 
+@pytest.mark.parametrize("gantry", [0.0, 33.0])
+def test_operator_has_the_same_bits_for_any_number_of_threads(mixed, rng, gantry):
+    """There and back, stars included, for fields along the axes and others."""
+    import numba
+
+    operator = FoldOperator(field(gantry=gantry), mixed, libraries=LIBRARIES)
+    x, y = rng.uniform(0, 1, operator.shape[1]), rng.uniform(0, 1, operator.shape[0])
+    most = numba.get_num_threads()
+    results = []
+    try:
+        for threads in {1, most}:
+            numba.set_num_threads(threads)
+            results.append((operator.matvec(x), operator.rmatvec(y)))
+    finally:
+        numba.set_num_threads(most)
+    for other in results[1:]:
+        assert all(np.array_equal(a, b) for a, b in zip(results[0], other, strict=True))
+
+
 def test_influence_matrix_is_the_operator(mixed, rng):
     operator = FoldOperator(field(), mixed, libraries=LIBRARIES, factors={"primary": 1.0, "in_flight": 2.0})
     matrix = operator.influence_matrix()
