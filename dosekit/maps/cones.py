@@ -339,6 +339,7 @@ class Cones:
                     continue
                 turned, asked = turn_last(pool, scale, axis), turn_last(pool, wanted, axis, float)
                 first, last = source_ranges(asked)
+                faint = FAINT * max(float(asked.max()), -float(asked.min()))
                 index = read(
                     np.zeros((1, 1, 1), np.uint16) if by_mode else turn_last(pool, read(material), axis, np.uint16)
                 )
@@ -346,7 +347,7 @@ class Cones:
                 out, out_modes = (np.zeros((1, 1, 1)), goal) if by_mode else (goal, np.zeros((1, 1, 1, 1)))
                 for line in lines:
                     common = (asked, index, table, by_mode, turned, rates, line.slope_j, line.slope_i, line.down)
-                    rest = (line.step_mm, line.weight, first, last, axis == 1, out, out_modes)
+                    rest = (line.step_mm, line.weight, first, last, faint, axis == 1, out, out_modes)
                     pool.run(sweep_transposed, (*common, *rest), _rows(line, scale.shape, axis))
                 if axis == LAST:
                     for turned_back, part in zip(goal, total, strict=True) if by_mode else ((goal, total),):

@@ -116,10 +116,10 @@ def sweep(  # type: ignore[no-untyped-def]
             begin = max(start, offset)
             end = min(stop, offset + ni)
             count = end - begin
-            if count <= 0:
+            shining = last[k, j] > 0
+            if count <= 0 or not (shining or alive.any()):
                 continue
             i0 = begin - offset
-            shining = last[k, j] > 0
             thick = scale[k, j, i0 : i0 + count]
             given = left[:count]
             bright = emitted[:count]
@@ -154,6 +154,9 @@ def sweep(  # type: ignore[no-untyped-def]
             target = out[k, j, i0 : i0 + count]
             for q in range(count):
                 target[q] += given[q]
+            if not alive.any():
+                start = width
+                stop = 0
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -171,6 +174,7 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
     weight,
     first,
     last,
+    faint,
     swapped,
     out,
     out_modes,
@@ -180,7 +184,7 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
     """Carry values back along one direction: the exact transpose of `sweep`.
 
     ``wanted`` is what each voxel's energy counts. The result per stop is added to ``out`` (through ``energies``),
-    or per mode to ``out_modes`` if ``by_mode``.
+    or per mode to ``out_modes`` if ``by_mode``. Where a mode has fallen below ``faint`` on the ray row, it counts as 0.
     """
     nk, nj, ni = scale.shape
     if swapped:
@@ -198,6 +202,7 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
         value = np.empty(ni)
         start = width
         stop = 0
+        alive = np.zeros(modes, dtype=np.bool_)
         for turn in range(nk):
             plane = turn if down else nk - 1 - turn
             across = row - high_j + int(np.rint(slope_j * (plane - middle)))
@@ -211,15 +216,28 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
             begin = max(start, offset)
             end = min(stop, offset + ni)
             count = end - begin
-            if count <= 0:
+            shining = last[k, j] > 0
+            if count <= 0 or not (shining or alive.any()):
                 continue
             i0 = begin - offset
             thick = scale[k, j, i0 : i0 + count]
             asked = wanted[k, j, i0 : i0 + count]
             worth = value[:count]
             for m in range(modes):
+                if not (shining or alive[m]):
+                    continue
                 b = rates[m] * step_mm
-                _step_back(thick, b, state[m, begin:end], asked, weight, worth)
+                here = state[m, begin:end]
+                _step_back(thick, b, here, asked, weight, worth)
+                if shining:
+                    alive[m] = True
+                elif turn % 8 == 0:
+                    most = 0.0
+                    for q in range(count):
+                        most = max(most, abs(here[q]))
+                    if most < faint:
+                        state[m, :] = 0.0
+                        alive[m] = False
                 if by_mode:
                     goal = out_modes[m, k, j, i0 : i0 + count]
                     for q in range(count):
@@ -229,6 +247,9 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
                     kind = material[k, j, i0 : i0 + count]
                     for q in range(count):
                         goal[q] += worth[q] * energies[kind[q], m]
+            if not alive.any():
+                start = width
+                stop = 0
 
 
 @njit(cache=True, error_model="numpy")
