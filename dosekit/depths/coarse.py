@@ -12,12 +12,11 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.interpolate import PchipInterpolator
 
 from dosekit.basis.materials import Material, material
 from dosekit.beams.ranges import range_table
 
-__all__ = ["CoarseGrid", "coarse_grid", "regrid"]
+__all__ = ["CoarseGrid", "coarse_grid", "monotone_slopes", "regrid"]
 
 _STEPS_MM = (0.25, 0.5, 0.75, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 8.0, 10.0, 15.0, 20.0, 30.0)
 
@@ -75,8 +74,13 @@ class CoarseGrid:
         """
         if not np.any(values):
             return np.zeros(len(self.place_of_edge) - 1)
+        low = np.minimum(self.place_of_edge.astype(np.int64), self.cells - 1)
+        t = self.place_of_edge - low
         total = np.concatenate([[0.0], np.cumsum(values)])
-        running = PchipInterpolator(self.nodes, total)(self.place_of_edge)
+        slope = monotone_slopes(values)
+        running = total[low] + t * (
+            values[low] * t * (3.0 - 2.0 * t) + slope[low] * (1.0 - t) ** 2 - slope[low + 1] * t * (1.0 - t)
+        )
         return np.asarray(np.diff(running))
 
     def to_cells(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -94,6 +98,34 @@ class CoarseGrid:
         """
         running = np.concatenate([[0.0], np.cumsum(values)])
         return np.asarray(np.diff(np.interp(self.nodes, self.place_of_edge, running)))
+
+
+def monotone_slopes(values: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return slopes at the edges of cells for a monotone cubic through the running sum.
+
+    Parameters
+    ----------
+    values : ndarray, shape (cells,)
+        Amounts per cell of length 1, which are the slopes of chords.
+
+    Returns
+    -------
+    ndarray, shape (cells + 1,)
+        Slopes; harmonic mean of neighbours, 0 where they differ in sign (F.N. Fritsch & J. Butland, SIAM J. Sci. Stat.
+        Comput. 5 (1984) 300), a limited three-point formula at the ends.
+    """
+    before, after = values[:-1], values[1:]
+    product = before * after
+    inner = np.where(product > 0.0, 2.0 * product / np.where(product > 0.0, before + after, 1.0), 0.0)
+    ends = []
+    for first, second in ((values[0], values[1]), (values[-1], values[-2])):
+        slope = 1.5 * first - 0.5 * second
+        if slope * first <= 0.0:
+            slope = 0.0
+        elif first * second <= 0.0 and abs(slope) > 3.0 * abs(first):
+            slope = 3.0 * first
+        ends.append(slope)
+    return np.concatenate([[ends[0]], inner, [ends[1]]])
 
 
 def regrid(values: NDArray[np.float64], old: CoarseGrid, new: CoarseGrid) -> NDArray[np.float64]:

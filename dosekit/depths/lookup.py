@@ -107,12 +107,11 @@ class Lookup:
         self.let_integral = np.concatenate([[0.0], np.cumsum(middle_of(self.let_energy)) * self.step])
 
     def _at(self, values: NDArray[np.float64], r: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Interpolate linearly on the even grid, constant outside."""
+        """Interpolate linearly along the last axis of values on the even grid, constant outside."""
         place = np.clip(r / self.step, 0.0, len(self.grid) - 1.001)
         low = place.astype(np.int64)
-        part = place - low
-        lower = values[low]
-        return np.asarray(lower + part * (values[low + 1] - lower))
+        lower = values[..., low]
+        return np.asarray(lower + (place - low) * (values[..., low + 1] - lower))
 
     def _integral_at(
         self, values: NDArray[np.float64], running: NDArray[np.float64], r: NDArray[np.float64]
@@ -174,7 +173,7 @@ class Lookup:
         events = gone * f_mid
         energy = np.where(f_mid > 1e-12, t_mid / np.where(f_mid > 1e-12, f_mid, 1.0), 0.0)
         r_mid = 0.5 * (centre[:, 1:] + centre[:, :-1])
-        shares = np.stack([self._at(row, r_mid) for row in self.shares])
+        shares = self._at(self.shares, r_mid)
         # LET averaged over the energy given in the bin: mean over the class of int S dT
         spread = self._integral_at(self.let_energy, self.let_integral, above)
         level = np.where(thin, self._at(self.let_energy, centre), (spread[1:] - spread[:-1]) / width)

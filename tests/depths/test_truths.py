@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from scipy.interpolate import PchipInterpolator
 
 import dosekit as dk
 from dosekit.basis.components import COMPONENTS
 from dosekit.depths.angles import COSINES, WEIGHTS, diffusion_matrices, kappa_of, shares
 from dosekit.depths.broad import convolve_planes, plane_from_shells
+from dosekit.depths.coarse import coarse_grid
 from dosekit.depths.core import solve_core
 from dosekit.depths.leptons import annihilation_cm2_g
 from dosekit.depths.muons import muon_capture_share
@@ -335,3 +337,15 @@ def test_let_of_stars_follows_their_spectra():
         assert 5.0 < let["star_light"] < 30.0
         assert 60.0 < let["star_heavy"] < 300.0
         assert let["star_photon"] < let["star_neutron"] < let["star_heavy"]
+
+
+def test_cells_come_back_through_a_monotone_cubic(rng):
+    """As scipy's, on cells of length 1; what lies beyond the stack is left out."""
+    water = dk.material("water")
+    edges = np.linspace(0.0, 47.3, 70)
+    grid = coarse_grid("proton", 60.0, layers=((water, 47.3),), edges_mm=edges, layer=np.zeros(69, int), step_mm=2.0)
+    assert grid.cells == 24
+    for values in (rng.random(24), rng.normal(size=24), np.r_[np.zeros(10), 1.0, 0.2, np.zeros(12)]):
+        total = np.concatenate([[0.0], np.cumsum(values)])
+        theirs = np.diff(PchipInterpolator(np.arange(25.0), total)(edges / 2.0))
+        np.testing.assert_allclose(grid.to_bins(values), theirs, rtol=1e-10, atol=1e-13)
