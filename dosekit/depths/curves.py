@@ -6,6 +6,7 @@ One call for every beam and medium. The result is an :class:`xarray.Dataset`; th
 from __future__ import annotations
 
 import math
+import warnings
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -17,16 +18,21 @@ from dosekit.beams.beam import Beam
 from dosekit.beams.ranges import range_table
 from dosekit.beams.reactions import CHANNELS, YIELDS
 from dosekit.caution import CAUTION
-from dosekit.depths.layers import Layers, as_layers
+from dosekit.depths.layers import LONGEST_MM, Layers, as_layers
 from dosekit.depths.quality import star_let_kev_um
 from dosekit.depths.solver import Solution, solve
 from dosekit.depths.stars import star_deposits, star_ledger
-from dosekit.errors import BeamError, InputError, SizeError, UnknownNameError
+from dosekit.errors import BeamError, InputError, SizeError, UnknownNameError, ValidityWarning
 
 if TYPE_CHECKING:
     import xarray as xr
 
-__all__ = ["check_star_scale", "depth_curve"]
+__all__ = ["VALID_TO_MEV", "check_star_scale", "depth_curve", "warn_of_energy"]
+
+VALID_TO_MEV = {
+    "pi-": 150.0, "pi+": 150.0, "proton": 250.0, "mu-": 400.0, "mu+": 400.0, "e-": 200.0, "e+": 200.0,
+}  # fmt: skip
+"""Kinetic energy up to which a beam is inside the validity of the tables, MeV."""
 
 _MOST_BINS = 20000
 
@@ -86,6 +92,11 @@ def depth_curve(
     UnknownNameError
         If the yield set or material is not known.
 
+    Warns
+    -----
+    ValidityWarning
+        If the beam is faster than what its reactions are made for (`VALID_TO_MEV`).
+
     Examples
     --------
     >>> curve = depth_curve(Beam("pi-", momentum_mev_c=120), "water", bin_mm=2.0)
@@ -98,6 +109,7 @@ def depth_curve(
     if yields not in YIELDS:
         raise UnknownNameError("yield set", yields, YIELDS)
     check_star_scale(star_scale)
+    warn_of_energy(beam)
     settings: dict[str, Any] = {
         "layers": layers,
         "bin_mm": bin_width,
@@ -228,6 +240,29 @@ def depth_curve(
     )
 
 
+def warn_of_energy(beam: Beam) -> None:
+    """Warn of a beam that is faster than what its physics here is made for.
+
+    Parameters
+    ----------
+    beam : Beam
+        The beam.
+
+    Warns
+    -----
+    ValidityWarning
+        If it is.
+    """
+    limit = VALID_TO_MEV[beam.particle]
+    if beam.kinetic_energy_mev > limit:
+        warnings.warn(
+            f"{beam.particle} of {beam.kinetic_energy_mev:.0f} MeV: reactions, decays and radiation are made for up to "
+            f"{limit:g} MeV; beyond, cross sections and products are taken as constant",
+            ValidityWarning,
+            stacklevel=3,
+        )
+
+
 def check_star_scale(star_scale: float) -> None:
     """Refuse a star scale that is not a number from 0 to 3.
 
@@ -290,6 +325,12 @@ def _layout(
             slow = range_table(beam.particle, stuff)
             reach = float(slow.range_mm(beam.kinetic_energy_mev))
             total = bin_width * math.ceil((1.3 * reach + 50.0 / min(stuff.density_g_cm3, 2.0)) / bin_width)
+            if total > LONGEST_MM:
+                raise SizeError(
+                    f"{beam.particle} that go {reach / 1000.0:.3g} m in {stuff.name}",
+                    allowed=f"a depth of up to {LONGEST_MM / 1000.0:g} m",
+                    remedy="say depth_mm",
+                )
     else:
         total = _finite(depth_mm, "depth")
     if total <= 0.0:

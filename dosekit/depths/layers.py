@@ -12,7 +12,10 @@ from dataclasses import dataclass
 from dosekit.basis.materials import Material, material
 from dosekit.errors import InputError
 
-__all__ = ["Layers", "as_layers"]
+__all__ = ["LONGEST_MM", "Layers", "as_layers"]
+
+LONGEST_MM = 1e4
+"""Thickest slab, mm."""
 
 
 @dataclass(frozen=True)
@@ -45,8 +48,10 @@ class Layers:
                 thickness = float(thickness)
             except (TypeError, ValueError):
                 raise InputError(f"layer {entry!r}", allowed="pairs of material and thickness in mm") from None
-            if not (math.isfinite(thickness) and 0.0 < thickness <= 1e4):
-                raise InputError(f"layer thickness of {thickness} mm", allowed="more than 0, at most 10000 mm")
+            if not (math.isfinite(thickness) and 0.0 < thickness <= LONGEST_MM):
+                raise InputError(
+                    f"layer thickness of {thickness} mm", allowed=f"more than 0, at most {LONGEST_MM:.0f} mm"
+                )
             clean.append((material(name), thickness))
         if not clean:
             raise InputError("a stack without layers", allowed="at least one layer")

@@ -24,7 +24,7 @@ from dosekit.beams.reactions import YIELDS
 from dosekit.beams.scattering import fermi_eyges_moments
 from dosekit.beams.stopping import relative_stopping_power
 from dosekit.beams.straggling import mean_range_excess_mm
-from dosekit.depths.curves import check_star_scale
+from dosekit.depths.curves import check_star_scale, warn_of_energy
 from dosekit.depths.quality import star_let_kev_um
 from dosekit.depths.solver import Solution, solve
 from dosekit.depths.stars import star_deposits
@@ -243,6 +243,11 @@ def depth_library(
     ReachError
         If the beam is too short for a residual range.
 
+    Warns
+    -----
+    ValidityWarning
+        If the beam is faster than what its reactions are made for.
+
     Examples
     --------
     >>> library = depth_library(Beam("pi-", momentum_mev_c=150), [100.0, 120.0])
@@ -253,6 +258,7 @@ def depth_library(
         raise UnknownNameError("library mode", mode, MODES)
     if yields not in YIELDS:
         raise UnknownNameError("yield set", yields, YIELDS)
+    warn_of_energy(beam)
     residual = np.atleast_1d(np.asarray(residual_ranges_mm, dtype=float))
     if residual.ndim != 1 or len(residual) == 0 or not np.all(np.isfinite(residual)) or np.any(residual <= 1.0):
         raise InputError(

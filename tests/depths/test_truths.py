@@ -13,9 +13,10 @@ from dosekit.depths.broad import convolve_planes, plane_from_shells
 from dosekit.depths.coarse import coarse_grid
 from dosekit.depths.core import solve_core
 from dosekit.depths.leptons import annihilation_cm2_g
+from dosekit.depths.library import depth_library
 from dosekit.depths.muons import muon_capture_share
 from dosekit.depths.tables import beta_samples, node_spread
-from dosekit.errors import BeamError, InputError, SizeError, UnknownNameError
+from dosekit.errors import BeamError, InputError, SizeError, UnknownNameError, ValidityWarning
 
 BEAMS = {
     "pi-": dk.Beam("pi-", momentum_mev_c=150, momentum_sigma=0.02),
@@ -349,3 +350,13 @@ def test_cells_come_back_through_a_monotone_cubic(rng):
         total = np.concatenate([[0.0], np.cumsum(values)])
         theirs = np.diff(PchipInterpolator(np.arange(25.0), total)(edges / 2.0))
         np.testing.assert_allclose(grid.to_bins(values), theirs, rtol=1e-10, atol=1e-13)
+
+
+def test_a_beam_outside_the_tables_is_said():
+    fast = dk.Beam("pi-", momentum_mev_c=300.0)
+    with pytest.warns(ValidityWarning, match="made for up to 150 MeV"):
+        dk.depth_curve(fast, "water", bin_mm=5.0)
+    with pytest.warns(ValidityWarning):
+        depth_library(fast, [200.0], bin_mm=5.0)
+    with pytest.raises(SizeError, match="say depth_mm"):
+        dk.depth_curve(BEAMS["pi-"], "air", bin_mm=50.0)
