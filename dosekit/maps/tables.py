@@ -55,6 +55,7 @@ _NARROW_TARGETS = ("primary", "stops")
 _NARROWEST_OF_SPOT = 0.96  # makes the variance that the coarse lattice adds no larger than that of the lowest rung
 _NARROWEST_MM = 4.62
 _NEGLIGIBLE = 1e-10
+_DETOURS = (-0.2, 3.0)  # where the first order and its continuation end
 _GONE = 1e-3
 _QUADRATURE = 24
 _LOWEST_ENERGY_MEV = 0.5
@@ -132,7 +133,7 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     StepTables
         The tables.
     """
-    from dosekit.beams.moliere import core_variance_share
+    from dosekit.beams.moliere import TAIL_SIGMAS, core_variance_share
     from dosekit.beams.scattering import scattering_power_rad2_mm
 
     depth = np.asarray(library.depth_mm, dtype=np.float64)
@@ -146,10 +147,15 @@ def step_tables(library: DepthLibrary, beam: Beam) -> StepTables:
     in_water = _variance_in_water(power, start, gap_mm=gap, bin_mm=bin_mm)
     survivors = _survivors(beam, energy, start, in_water, gap_mm=gap, depth_mm=depth)
     tail_shares = _tail_shares(library, beam)
-    survivors *= core_variance_share(tail_shares)
+    detour = _detours(core, power, start, in_water, gap_mm=gap, depth_mm=depth)
+    survivors *= core_variance_share(tail_shares) / (1.0 + detour)
     in_water *= survivors
+    squares = np.square(TAIL_SIGMAS)
+    late = np.maximum(detour, 0.0)[..., None]
+    tail_shares = tail_shares * (1.0 + late) / (1.0 + late * squares)
+    tail_squares = squares * (1.0 + late) / (1.0 + late * squares)
     narrow = np.stack([_clean(library.quantities[key]) for key in ("core", "core_stops")], axis=2)
-    contributions = _tails(tail_shares, narrow, in_water)
+    contributions = _tails(tail_shares, tail_squares, narrow, in_water)
     for tail in contributions:
         narrow[..., tail.target] -= tail.quantity
     contributions += _wider(library, in_water)
@@ -248,6 +254,34 @@ def _survivors(
     return np.where(in_water > 0.0, (gained + drift) / np.where(in_water > 0.0, in_water, 1.0), 1.0)
 
 
+def _detours(
+    core: NDArray[np.float64],
+    power: NDArray[np.float64],
+    start: NDArray[np.float64],
+    in_water: NDArray[np.float64],
+    *,
+    gap_mm: float,
+    depth_mm: NDArray[np.float64],
+) -> NDArray[np.float64]:
+    """Return by how much detours narrow the beam at each depth: 1 + this divides the scatter variance, shape (K, N).
+
+    A particle that is far from the axis has run further, by half the squared angle along its path, and leaves what the
+    beam leaves that much deeper. With the slope h = -d ln(core)/dz the particles are weighted by exp(-h detour); since
+    Cov(x^2, theta^2) = 2 Cov(x, theta)^2 of Gaussian angles, the variance of x changes by -h C to first order, with
+    C = int Cov(x, theta(z'))^2 dz' and Cov = A1 + A0 z + int T (z - z'') dz'' up to z'. 1 / (1 + h C / variance) goes
+    on to large h. It is little before the peak, and a third of the width some straggling sigmas behind it.
+    """
+    step = float(depth_mm[1] - depth_mm[0])
+    a0, a1, _ = start
+    m0 = a0[:, None] + np.cumsum(power, axis=1) * step
+    m1 = -(a1 + gap_mm * a0)[:, None] + np.cumsum(power * depth_mm, axis=1) * step
+    p0, p1, p2 = (np.cumsum(product, axis=1) * step for product in (m0 * m0, m0 * m1, m1 * m1))
+    together = np.maximum(depth_mm * (depth_mm * p0 - 2.0 * p1) + p2, 0.0)
+    steep = -np.gradient(np.log(np.maximum(core, _NEGLIGIBLE * core.max(axis=1, keepdims=True))), depth_mm, axis=1)
+    late = steep * together / np.where(in_water > 0.0, in_water, np.inf)
+    return np.asarray(np.clip(late, *_DETOURS))
+
+
 def _tail_shares(library: DepthLibrary, beam: Beam) -> NDArray[np.float64]:
     """Return the shares of the core with one or a few large Coulomb scatterings, shape (K, N, 2)."""
     from dosekit.beams.moliere import tail_shares
@@ -259,16 +293,17 @@ def _tail_shares(library: DepthLibrary, beam: Beam) -> NDArray[np.float64]:
 
 
 def _tails(
-    shares: NDArray[np.float64], narrow: NDArray[np.float64], in_water: NDArray[np.float64]
+    shares: NDArray[np.float64],
+    squares: NDArray[np.float64],
+    narrow: NDArray[np.float64],
+    in_water: NDArray[np.float64],
 ) -> list[Contribution]:
-    """Return the tails of the core."""
-    from dosekit.beams.moliere import TAIL_SIGMAS
-
+    """Return the tails of the core: shares, and variances over that of the core, have shape (K, N, tails)."""
     nothing = np.zeros_like(in_water)
     return [
-        Contribution(target, shares[..., n] * narrow[..., target], width**2 * in_water, nothing)
+        Contribution(target, shares[..., n] * narrow[..., target], squares[..., n] * in_water, nothing)
         for target in range(len(_NARROW_TARGETS))
-        for n, width in enumerate(TAIL_SIGMAS)
+        for n in range(shares.shape[-1])
     ]
 
 
