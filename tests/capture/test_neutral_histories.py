@@ -69,6 +69,25 @@ def test_np_total(energy, barn, bar, evidence):
     assert ours == pytest.approx(barn, rel=bar)
 
 
+@pytest.mark.published
+def test_energy_handed_to_hydrogen(evidence):
+    """First-collision kerma of hydrogen at 14 MeV, Caswell, Coyne and Randolph 1982 (memory): 46 fGy m2, 2 %.
+
+    Half of the energy on average (angles even about 90 degrees in the centre of mass).
+    """
+    per_gram = 6.02214e23 / 1.008
+    ours = 0.5 * 14.0 * float(np_cross_section_barn(14.0)) * 1e-24 * per_gram * 1.602177e-10 * 1e11
+    evidence(
+        what="kerma of hydrogen, 14 MeV neutrons",
+        source="Caswell et al. 1982, memory",
+        value=46.0,
+        ours=ours,
+        unit="fGy m2",
+        bar="2 %",
+    )
+    assert ours == pytest.approx(46.0, rel=0.02)
+
+
 def test_cross_sections_have_sense():
     energy = np.geomspace(0.05, 140.0, 60)
     for symbol in ("H", "C", "N", "O", "Na", "P", "Ca", "Fe", "Zn"):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import numba
 import numpy as np
 import pytest
 import xarray as xr
@@ -90,6 +91,24 @@ def test_the_transpose_is_exact(rng, block_mm):
     back = carry_stars_transposed(wanted, grid, star_scale=1.2, block_mm=block_mm)
     forward = sum(float((carried[name] * wanted[name]).sum()) for name in STAR_COMPONENTS)
     assert forward == pytest.approx(float((back * stops).sum()), rel=1e-9)
+
+
+def test_thread_count_changes_no_bit(rng):
+    """All components, blocks included, forward and back."""
+    grid = mixed(rng, shape=(13, 11, 12))
+    stops, wanted = rng.uniform(size=grid.shape), {name: rng.normal(size=grid.shape) for name in STAR_COMPONENTS}
+    before, results = numba.get_num_threads(), []
+    try:
+        for threads in (1, min(2, numba.config.NUMBA_NUM_THREADS)):
+            numba.set_num_threads(threads)
+            carried = carry_stars(stops, grid)
+            results.append(
+                b"".join(carried[name].tobytes() for name in STAR_COMPONENTS)
+                + carry_stars_transposed(wanted, grid).tobytes()
+            )
+    finally:
+        numba.set_num_threads(before)
+    assert results[0] == results[1]
 
 
 def test_composition_decides_the_star():
