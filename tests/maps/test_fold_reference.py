@@ -15,6 +15,8 @@ from scipy.optimize import least_squares
 from dosekit.basis.constants import GRAY_PER_MEV_PER_GRAM
 from dosekit.basis.materials import material
 from dosekit.beams.beam import Beam
+from dosekit.depths.curves import depth_curve
+from dosekit.depths.layers import Layers
 from dosekit.effects.agreement import gamma_index
 from dosekit.grids.voxels import VoxelGrid
 from dosekit.maps.fields import Field
@@ -221,3 +223,20 @@ def test_xz_gamma(case, part, evidence):
     evidence(what=f"{case}: {part} within 3 % / 3 mm", source="tests/reference", value=1.0, ours=share,
              unit="share", bar="0.95", kind="reference")  # fmt: skip
     assert share >= 0.95
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", ["primary", "star_light"])
+def test_slabs_as_in_one_dimension(name):
+    """Energy summed across the beam in slab_a is that of the depth curve, which knows each material: 1 % of the peak.
+
+    Reactions and decays per water-equivalent length are water's in the fold; this is what that costs.
+    """
+    energy, _ = energy_in("slab_a")
+    ours = energy[name].sum(axis=1) / SPACING
+    lung = material("lung_tissue", density_g_cm3=0.30)
+    stack = [("muscle_skeletal", 50), ("bone_cortical", 20), (lung, 80), ("water", 250)]
+    curve = depth_curve(BEAMS["w170_dp2"], Layers(stack), yields="cascade", bin_mm=SPACING)
+    peak = float(curve["energy"].sum("component").max())
+    wanted = curve["energy"].sel(component=name).to_numpy()[: len(ours)]
+    assert float(np.abs(ours - wanted).max()) < 0.01 * peak
