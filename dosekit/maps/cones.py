@@ -143,13 +143,16 @@ class Cones:
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         total = np.zeros(scale.shape)
         with Threads() as pool:
-            for order, batch in self._batches():
+            for order, batches in self._batches():
                 turned = padded(scale, order)
                 sources = np.stack([padded(mode, order) for mode in sources_mev])
-                out = np.zeros((len(batch), *turned.shape))
-                common = (sources, turned, *padding(scale, order), rates, *self._widening(batch, order))
-                pool.run(sweep_widening, (*common, out), len(batch))
-                summed = sum((line.weight * part for line, part in zip(batch, out, strict=True)), start=0.0 * out[0])
+                out, summed = np.empty((_BATCH, *turned.shape)), np.zeros(turned.shape)
+                for batch in batches:
+                    out[:] = 0.0
+                    common = (sources, turned, *padding(scale, order), rates, *self._widening(batch, order))
+                    pool.run(sweep_widening, (*common, out), len(batch))
+                    for line, part in zip(batch, out, strict=False):
+                        summed += np.multiply(part, line.weight, out=part)
                 total += unpadded(summed, scale, order)
         return total
 
@@ -175,23 +178,27 @@ class Cones:
         rates = np.ascontiguousarray(rates_per_mm, dtype=float)
         total = np.zeros((len(rates), *scale.shape))
         with Threads() as pool:
-            for order, batch in self._batches():
+            for order, batches in self._batches():
                 turned, asked = padded(scale, order), padded(wanted, order)
-                out = np.zeros((len(batch), len(rates), *turned.shape))
-                common = (asked, turned, *padding(scale, order), rates, *self._widening(batch, order))
-                pool.run(sweep_widening_transposed, (*common, out), len(batch))
-                for line, part in zip(batch, out, strict=True):
-                    total += line.weight * np.stack([unpadded(values, scale, order) for values in part])
+                out = np.empty((_BATCH, len(rates), *turned.shape))
+                summed = np.zeros(out.shape[1:])
+                for batch in batches:
+                    out[:] = 0.0
+                    common = (asked, turned, *padding(scale, order), rates, *self._widening(batch, order))
+                    pool.run(sweep_widening_transposed, (*common, out), len(batch))
+                    for line, part in zip(batch, out, strict=False):
+                        summed += np.multiply(part, line.weight, out=part)
+                total += np.stack([unpadded(values, scale, order) for values in summed])
         return total
 
-    def _batches(self) -> list[tuple[tuple[int, int, int], list[_Line]]]:
+    def _batches(self) -> list[tuple[tuple[int, int, int], list[list[_Line]]]]:
         """Return the lines of each main axis in batches of fixed size, so that memory is bounded and sums keep
         their order.
         """
         return [
-            (_AXES[axis], lines[start : start + _BATCH])
+            (_AXES[axis], [lines[start : start + _BATCH] for start in range(0, len(lines), _BATCH)])
             for axis, lines in enumerate(self.lines(widening=True))
-            for start in range(0, len(lines), _BATCH)
+            if lines
         ]
 
     def _widening(self, batch: list[_Line], order: tuple[int, int, int]) -> tuple[NDArray[Any], ...]:
