@@ -151,6 +151,9 @@ def main():
         left.set(xlabel="voxels, million", ylabel="seconds", title="361 spots, 30 steps")
         right.plot([row[1] for row in rows[3:]], [row[2] for row in rows[3:]], "o-")
         right.set(xlabel="spots", ylabel="seconds", title="3.4 million voxels, 30 steps")
+        for axes in (left, right):
+            axes.set_xlim(left=0.0)
+            axes.set_ylim(bottom=0.0)
         figure.savefig(wanted.plot, dpi=150)
 
 
