@@ -147,7 +147,7 @@ def core_variance_share(shares: ArrayLike) -> NDArray[np.float64]:
     Examples
     --------
     >>> float(core_variance_share([0.0, 0.0])), float(core_variance_share([0.05, 0.003]).round(2))
-    (1.0, 0.98)
+    (1.0, 0.99)
     """
     tails = np.asarray(shares, dtype=float)
     squares = np.array([1.0, *TAIL_SIGMAS]) ** 2
