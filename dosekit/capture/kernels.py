@@ -12,12 +12,14 @@ import math
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 __all__ = ["neutron_histories", "photon_histories"]
 
 NEUTRON_MASS_MEV = 939.565
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _uniform(state):  # type: ignore[no-untyped-def]
     """Advance the counter and return a number in (0, 1)."""
     state[0] += np.uint64(0x9E3779B97F4A7C15)
@@ -28,7 +30,7 @@ def _uniform(state):  # type: ignore[no-untyped-def]
     return (float(z >> np.uint64(11)) + 0.5) / 9007199254740992.0
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _turn(direction, mu, phi):  # type: ignore[no-untyped-def]
     """Turn a direction by the cosine mu and the azimuth phi, in place."""
     u, v, w = direction[0], direction[1], direction[2]
@@ -49,7 +51,7 @@ def _turn(direction, mu, phi):  # type: ignore[no-untyped-def]
     direction[2] /= norm
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _score(shells, edges, radius, energy):  # type: ignore[no-untyped-def]
     """Add energy to the shell that holds a radius; the last element takes what lies beyond."""
     last = len(edges) - 1
@@ -66,7 +68,7 @@ def _score(shells, edges, radius, energy):  # type: ignore[no-untyped-def]
     shells[low] += energy
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _lookup(grid_log0, grid_step, values, energy):  # type: ignore[no-untyped-def]
     """Interpolate a table on a logarithmic energy grid."""
     place = (math.log(max(energy, 1e-12)) - grid_log0) / grid_step
@@ -79,7 +81,7 @@ def _lookup(grid_log0, grid_step, values, energy):  # type: ignore[no-untyped-de
     return values[index] * (1.0 - part) + values[index + 1] * part
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _slow_down(shells, edges, place, direction, energy, grid_log0, grid_step, ranges, log_ratio):  # type: ignore[no-untyped-def]
     """Lay the energy of a charged particle along its straight track (ranges in mm on the energy grid)."""
     total = _lookup(grid_log0, grid_step, ranges, energy) * log_ratio
@@ -98,13 +100,13 @@ def _slow_down(shells, edges, place, direction, energy, grid_log0, grid_step, ra
         _score(shells, edges, math.sqrt(x * x + y * y + z * z), energy / steps)
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _gamma2(state, temperature):  # type: ignore[no-untyped-def]
     """Return an energy from E exp(-E / t)."""
     return -temperature * math.log(_uniform(state) * _uniform(state))
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _collide(state, energy, mass_number, q_values, level_mev, pushed, out):  # type: ignore[no-untyped-def]
     """Emit the products of a non-elastic collision.
 
@@ -193,7 +195,7 @@ def _collide(state, energy, mass_number, q_values, level_mev, pushed, out):  # t
     return count, photon
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**KERNEL)
 def neutron_histories(  # type: ignore[no-untyped-def]
     source_energy,
     histories,
@@ -357,7 +359,7 @@ def neutron_histories(  # type: ignore[no-untyped-def]
     return shells, sums
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _lay_electron(shells, edges, place, direction, energy, mev_per_mm):  # type: ignore[no-untyped-def]
     """Lay the energy of an electron along a straight track with constant stopping power."""
     length = energy / mev_per_mm
@@ -370,7 +372,7 @@ def _lay_electron(shells, edges, place, direction, energy, mev_per_mm):  # type:
         _score(shells, edges, math.sqrt(x * x + y * y + z * z), energy / steps)
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**KERNEL)
 def photon_histories(  # type: ignore[no-untyped-def]
     source_energy,
     histories,

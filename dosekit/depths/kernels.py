@@ -13,12 +13,13 @@ import math
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL
 from dosekit.depths.kernels_march import march
 
 __all__ = ["gather_products", "march", "score_events", "stream_photons"]
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**KERNEL)
 def score_events(number, energy, cell, parts, node_energy, group_energy, by_node, by_group):  # type: ignore[no-untyped-def]
     """Sort events of classes (q, i) into cells of depth, energy nodes and energy groups.
 
@@ -54,7 +55,7 @@ def score_events(number, energy, cell, parts, node_energy, group_energy, by_node
                 by_group[which, u, g + 1] += m * v
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**KERNEL)
 def gather_products(events, stuff, spread, angular, out):  # type: ignore[no-untyped-def]
     """Add products of events to the sources of a species.
 
@@ -78,7 +79,7 @@ def gather_products(events, stuff, spread, angular, out):  # type: ignore[no-unt
                     out[k, u, j] += a * angular[m, g, j]
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**KERNEL)
 def stream_photons(source, cosine, attenuation, deposit, escaped):  # type: ignore[no-untyped-def]
     """Carry photon energy along its direction with exponential absorption.
 

@@ -12,17 +12,19 @@ import math
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 __all__ = ["march"]
 
 
-@njit(error_model="numpy")
+@njit(**PART)
 def _share(values, first, second, here, there, amount):  # type: ignore[no-untyped-def]
     """Share an amount between two cells."""
     values[first] += amount * here
     values[second] += amount * there
 
 
-@njit(error_model="numpy")
+@njit(**PART)
 def _enter(source, outside, k, step, cosine, node_energy, escaped, state, left, right):  # type: ignore[no-untyped-def]
     """Take the sources at a node into the moving frames."""
     _, cells, directions = source.shape
@@ -48,7 +50,7 @@ def _enter(source, outside, k, step, cosine, node_energy, escaped, state, left, 
                 right[j] = max(right[j], low + 1)
 
 
-@njit(error_model="numpy")
+@njit(**PART)
 def _walk(  # type: ignore[no-untyped-def]
     k, step, step_mm, cosine, node_energy, let, stuff, chance, parts, brems, group_low, group_weight, state, way,
     aside, left, right, happened, deposit, let_weighted, counts, decays, forward, escaped, bremsstrahlung, sideways,
@@ -130,7 +132,7 @@ def _walk(  # type: ignore[no-untyped-def]
     return any_event
 
 
-@njit(error_model="numpy")
+@njit(**PART)
 def _events(  # type: ignore[no-untyped-def]
     k, source, cosine, node_energy, let, stuff, elastic_to, reemit, turn_elastic, turn_reemit, group_low, group_weight,
     happened, after_elastic, after_reaction, deposit, let_weighted, counts, reactions, forward, recoil,
@@ -189,7 +191,7 @@ def _events(  # type: ignore[no-untyped-def]
                             source[low, u, i] += a * after_reaction[kind, i]
 
 
-@njit(error_model="numpy")
+@njit(**PART)
 def _diffuse(k, step, source, cosine, turn, state, way, aside, left, right, moved, outside):  # type: ignore[no-untyped-def]
     """Turn a part into other directions."""
     nodes, cells, directions = source.shape
@@ -212,15 +214,16 @@ def _diffuse(k, step, source, cosine, turn, state, way, aside, left, right, move
                     a = n * turn[k, j, i]
                     moved[low + 1, i] += a * (1.0 - w)
                     moved[low + 2, i] += a * w
-    outside[0] = moved[cells + 1]
-    outside[1] = moved[0]
+    for i in range(directions):
+        outside[0, i] = moved[cells + 1, i]
+        outside[1, i] = moved[0, i]
     for u in range(cells):
         for i in range(directions):
             if moved[u + 1, i] != 0.0:
                 source[k - 1, u, i] += moved[u + 1, i]
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**KERNEL)
 def march(  # type: ignore[no-untyped-def]
     source,
     cosine,
@@ -279,8 +282,9 @@ def march(  # type: ignore[no-untyped-def]
     outside = np.zeros((2, directions))
     after_elastic = np.zeros(directions)
     after_reaction = np.zeros((reemit.shape[0], directions))
-    left = np.full(directions, width)
-    right = np.full(directions, -1)
+    left, right = np.empty(directions, np.int64), np.empty(directions, np.int64)
+    for j in range(directions):
+        left[j], right[j] = width, -1
     events = chance.shape[1] > 0
     diffuse = turn.shape[0] > 0
     for k in range(nodes - 1, -1, -1):

@@ -12,13 +12,15 @@ import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
+from dosekit.basis.compiling import PART
+
 __all__ = ["search_agreement"]
 
 Doses = NDArray[np.float64]
 Indices = NDArray[np.int64]
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _interpolate(values: Doses, lz: int, ly: int, lx: int, fz: float, fy: float, fx: float) -> float:
     """Interpolate linearly in one cell; an axis of one point is constant."""
     hz = min(lz + 1, values.shape[0] - 1)
@@ -33,7 +35,7 @@ def _interpolate(values: Doses, lz: int, ly: int, lx: int, fz: float, fy: float,
     return float(low * (1.0 - fz) + high * fz)
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _gap(place: float, low: float, high: float) -> float:
     """Distance of a number from an interval."""
     return max(low - place, place - high, 0.0)

@@ -10,13 +10,15 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 __all__ = ["overlap_material", "scan_edges"]
 
 
-@njit(cache=True, error_model="numpy", nogil=True)
+@njit(**KERNEL)
 def overlap_material(
     index: NDArray[np.uint16],
     first: tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]],
@@ -75,7 +77,7 @@ def _beats(tally: NDArray[np.float64], which: int, best: int) -> bool:
     return bool(gain > 1e-12 or (gain > -1e-12 and which < best))
 
 
-@njit(cache=True, error_model="numpy", nogil=True)
+@njit(**KERNEL)
 def scan_edges(
     edges: NDArray[np.float64], rays: int, coverage: NDArray[np.float64], centres: NDArray[np.bool_]
 ) -> None:
@@ -116,7 +118,7 @@ def scan_edges(
                         coverage[row, column] += length / rays
 
 
-@njit(cache=True, error_model="numpy", nogil=True)
+@njit(**PART)
 def _cross(edges: NDArray[np.float64], y: float, crossings: NDArray[np.float64]) -> int:
     """Collect where edges cross a line of constant y, sorted; an edge owns its lower end."""
     count = 0

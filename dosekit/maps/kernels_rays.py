@@ -8,10 +8,12 @@ from __future__ import annotations
 
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 __all__ = ["trace_rays"]
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _between(f, count):  # type: ignore[no-untyped-def]
     """Return the voxel below an index position, the one above, and the share of that; the outer half voxel is flat."""
     f = min(max(f, 0.0), count - 1.0)
@@ -19,7 +21,7 @@ def _between(f, count):  # type: ignore[no-untyped-def]
     return i, min(i + 1, count - 1), f - i
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def trace_rays(rsp, scatter, start, step, length, enter, leave, ends, samples, wet, local, begin, end):  # type: ignore[no-untyped-def]
     """Add up stopping power along each ray, by linear interpolation between voxel centres.
 

@@ -11,10 +11,12 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 __all__ = ["gather_planes", "share_planes", "spread_planes"]
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _along(line, stride, taps, reach, out):  # type: ignore[no-untyped-def]
     """Set out[x] to the sum over t of taps[|t|] line[x + (reach + t) stride]."""
     middle = reach * stride
@@ -30,7 +32,7 @@ def _along(line, stride, taps, reach, out):  # type: ignore[no-untyped-def]
             out[x] += one * (a[x] + b[x]) + other * (c[x] + d[x])
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _across(lines, shift, first, last, centre, taps, out):  # type: ignore[no-untyped-def]
     """Add to out[x] the sum over r from first to last - 1 of taps[|r - centre|] lines[r, x + shift]."""
     for r in range(first, last, 4):
@@ -44,7 +46,7 @@ def _across(lines, shift, first, last, centre, taps, out):  # type: ignore[no-un
             out[x] += f0 * a[x] + f1 * b[x] + f2 * c[x] + f3 * d[x]
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _spread(source, used, taps_u, taps_v, radius, corner, stride, target, total):  # type: ignore[no-untyped-def]
     """Spread the widths of one plane: add to total[target, row, column x stride] from source[v, width, u x stride].
 
@@ -82,7 +84,7 @@ def _spread(source, used, taps_u, taps_v, radius, corner, stride, target, total)
             _across(lines, 0 * low, max(first, centre - reach), min(last, centre + reach + 1), centre, taps_v[g], line)
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _gather(wanted, used, taps_u, taps_v, radius, corner, stride, target, source):  # type: ignore[no-untyped-def]
     """Transpose of `_spread`: source[v, width, u x stride] from wanted[target, row, column x stride]."""
     nv, widths, _ = source.shape
@@ -105,7 +107,7 @@ def _gather(wanted, used, taps_u, taps_v, radius, corner, stride, target, source
             _along(padded, stride, taps_u[g], reach, source[r, g])
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def share_planes(gathered, row, share_v, source, used, begin, end):  # type: ignore[no-untyped-def]
     """Share rows of rays out among coarse rows.
 
@@ -131,7 +133,7 @@ def share_planes(gathered, row, share_v, source, used, begin, end):  # type: ign
                         source[j, n + 1, b, m] += share_v[r] * value
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def spread_planes(  # type: ignore[no-untyped-def]
     source,
     used,
@@ -177,7 +179,7 @@ def spread_planes(  # type: ignore[no-untyped-def]
                     out[j, row, c, part] = total[t, row, c * stride + k] * per_area[j]
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def gather_planes(  # type: ignore[no-untyped-def]
     source,
     used,

@@ -14,12 +14,14 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 _C3, _C4, _C5, _C6 = 1.0 / 6.0, 1.0 / 24.0, 1.0 / 120.0, 1.0 / 720.0
 
 __all__ = ["sweep", "sweep_transposed", "sweep_widening", "sweep_widening_transposed"]
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _step_shining(thick, b, here, bright, given):  # type: ignore[no-untyped-def]
     """Pass one row of voxels that emit."""
     for q in range(len(thick)):
@@ -32,7 +34,7 @@ def _step_shining(thick, b, here, bright, given):  # type: ignore[no-untyped-def
         here[q] = going
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _step_dark(thick, b, here, given):  # type: ignore[no-untyped-def]
     """Pass one row of voxels that emit nothing."""
     for q in range(len(thick)):
@@ -44,7 +46,7 @@ def _step_dark(thick, b, here, given):  # type: ignore[no-untyped-def]
         here[q] = going
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _step_back(thick, b, here, asked, weight, worth):  # type: ignore[no-untyped-def]
     """Pass one row of voxels backwards."""
     for q in range(len(thick)):
@@ -57,7 +59,7 @@ def _step_back(thick, b, here, asked, weight, worth):  # type: ignore[no-untyped
         here[q] = y + (s - y) * passed
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def sweep(  # type: ignore[no-untyped-def]
     stops,
     material,
@@ -159,7 +161,7 @@ def sweep(  # type: ignore[no-untyped-def]
                 stop = 0
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def sweep_transposed(  # type: ignore[no-untyped-def]
     wanted,
     material,
@@ -252,7 +254,7 @@ def sweep_transposed(  # type: ignore[no-untyped-def]
                 stop = 0
 
 
-@njit(cache=True, error_model="numpy")
+@njit(**PART)
 def _moved(old, middle, new, pad, stride, taps_j, start_j, taps_i, start_i):  # type: ignore[no-untyped-def]
     """Move a flat, padded plane sideways by four taps along each lateral axis; what enters the padding is gone."""
     begin, end = pad * stride, len(old) - pad * stride
@@ -277,7 +279,7 @@ def _moved(old, middle, new, pad, stride, taps_j, start_j, taps_i, start_i):  # 
         new[row + stride - pad : row + stride] = 0.0
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def sweep_widening(  # type: ignore[no-untyped-def]
     sources, scale, pad, stride, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, out, line_begin, line_end
 ):
@@ -303,7 +305,7 @@ def sweep_widening(  # type: ignore[no-untyped-def]
             state, moved = moved, state
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def sweep_widening_transposed(  # type: ignore[no-untyped-def]
     wanted, scale, pad, stride, rates, taps_j, start_j, taps_i, start_i, down, steps_mm, out, line_begin, line_end
 ):

@@ -5,10 +5,12 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL
+
 __all__ = ["block_sources", "spread_blocks"]
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def block_sources(stops, material, table, fz, fy, fx, out, begin, end):  # type: ignore[no-untyped-def]
     """Sum stops times their material's energy in each mode over blocks of planes ``begin`` to ``end``.
 
@@ -30,7 +32,7 @@ def block_sources(stops, material, table, fz, fy, fx, out, begin, end):  # type:
                                 out[m, block, y // fy, i] += number * table[kind, m]
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def spread_blocks(  # type: ignore[no-untyped-def]
     energy, dose, block_mass, mass, fz, fy, fx, low, part, out, begin, end
 ):

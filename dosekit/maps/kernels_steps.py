@@ -10,10 +10,12 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 __all__ = ["follow_rows", "lay_spots", "lay_spots_transposed", "read_rows"]
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def lay_spots(weights, first_u, first_v, profile_u, profile_v, fluence, begin, end):  # type: ignore[no-untyped-def]
     """Add the spots' profiles to the rays: fluence[v, u, step] in particles per ray."""
     spots, width_u, steps = profile_u.shape
@@ -29,7 +31,7 @@ def lay_spots(weights, first_u, first_v, profile_u, profile_v, fluence, begin, e
                     fluence[r, c, k] += weights[s, k] * profile_v[s, p, k] * profile_u[s, q, k]
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weights, begin, end):  # type: ignore[no-untyped-def]
     """Transpose of `lay_spots`."""
     _, width_u, steps = profile_u.shape
@@ -43,7 +45,7 @@ def lay_spots_transposed(fluence, first_u, first_v, profile_u, profile_v, weight
                     )
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _row(wet, inverse_bin, last):  # type: ignore[no-untyped-def]
     """Return the table row below a depth and the share of the row above."""
     place = wet * inverse_bin - 0.5
@@ -55,7 +57,7 @@ def _row(wet, inverse_bin, last):  # type: ignore[no-untyped-def]
     return i, place - i
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _advance(state, r, c, length, scatter, core, i, f, steps):  # type: ignore[no-untyped-def]
     """Carry the Fermi-Eyges moments of the steps of one ray along a length (Eyges 1948)."""
     for k in range(steps):
@@ -66,7 +68,7 @@ def _advance(state, r, c, length, scatter, core, i, f, steps):  # type: ignore[n
         state[r, c, 0, k] = a0 + t * length
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _core(core, i, f, reference, growth, state, r, c, squared_rungs, rungs, found, steps):  # type: ignore[no-untyped-def]
     """Look up what each step of one ray leaves: energy and stops per particle, its rung and the share of the next.
 
@@ -86,7 +88,7 @@ def _core(core, i, f, reference, growth, state, r, c, squared_rungs, rungs, foun
         found[3, k] = min((squared - g * g) / (2.0 * g + 1.0), 1.0)
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def follow_rows(  # type: ignore[no-untyped-def]
     fluence, wet, local, slant, gaps, inverse_bin, core, alive, state, reference, growth, squared_rungs, broad,
     parts_at, column, share_u, source, used, gathered, first_plane, last_plane, begin, end,
@@ -171,7 +173,7 @@ def follow_rows(  # type: ignore[no-untyped-def]
                     sums[n + 1, b] += far * total[b]
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def read_rows(  # type: ignore[no-untyped-def]
     wet, local, slant, gaps, inverse_bin, core, alive, state, reference, growth, squared_rungs, broad, column, share_u,
     row, share_v, source, coarse, fluence, first_plane, last_plane, begin, end,

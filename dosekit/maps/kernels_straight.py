@@ -12,10 +12,12 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 __all__ = ["deposit_straight"]
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _row_of_layer(flat, place, stride, count, share_y, first_x, share_x, parts, line, out):  # type: ignore[no-untyped-def]
     """Set out[part, voxel] for a row of voxels in one layer of nodes; `place` is where the first y node lies."""
     for x in range(line.size):
@@ -36,7 +38,7 @@ def _row_of_layer(flat, place, stride, count, share_y, first_x, share_x, parts, 
                 row[m] += share_x[n, m] * line[(first_x[m] + n) * parts + t]
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def deposit_straight(  # type: ignore[no-untyped-def]
     run_first, run_column, run_count, run_place, flat, stride, count, first, share, index, rsp, rows, factor, out,
     begin, end,

@@ -12,10 +12,12 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+from dosekit.basis.compiling import KERNEL, PART
+
 __all__ = ["deposit", "deposit_transposed"]
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _beam_place(x, y, z, start, turn, inverse_source):  # type: ignore[no-untyped-def]
     """Return the fan position u, v (mm) and the position w along the beam (mm) of a point in index units."""
     u = start[0] + turn[0, 0] * x + turn[0, 1] * y + turn[0, 2] * z
@@ -25,7 +27,7 @@ def _beam_place(x, y, z, start, turn, inverse_source):  # type: ignore[no-untype
     return u * shrink, v * shrink, w
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _spline(place, nodes, weights):  # type: ignore[no-untyped-def]
     """Fill the weights of the quadratic B-spline about the nearest node; return the first node that counts.
 
@@ -40,7 +42,7 @@ def _spline(place, nodes, weights):  # type: ignore[no-untyped-def]
     return i - 1
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _read_fine(fine, j, lower, upper, place_u, place_v, nodes, weights_u, weights_v, value):  # type: ignore[no-untyped-def]
     """Add energy and stops of the fine map between planes j and j + 1 to the first two values."""
     k, i = _spline(place_u, nodes, weights_u), _spline(place_v, nodes, weights_v)
@@ -57,7 +59,7 @@ def _read_fine(fine, j, lower, upper, place_u, place_v, nodes, weights_u, weight
     value[1] += stops
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _read_coarse(coarse, j, lower, upper, place_u, place_v, value):  # type: ignore[no-untyped-def]
     """Add every target of the coarse map between planes j and j + 1 to the values."""
     k, i = int(np.floor(place_u)), int(np.floor(place_v))
@@ -74,7 +76,7 @@ def _read_coarse(coarse, j, lower, upper, place_u, place_v, value):  # type: ign
         value[t] += lower * here + upper * there
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def deposit(  # type: ignore[no-untyped-def]
     first, column, count, place_of_run, start, turn, inverse_source, sub, planes, nodes, fine_lattice, fine, fine_lit,
     coarse_lattice, coarse, coarse_lit, index, rsp, rows, factor, out, begin, end,
@@ -123,7 +125,7 @@ def deposit(  # type: ignore[no-untyped-def]
                         out[rows[t], column[n] + m] += (size if size >= 0.0 else -size * strength) * value[t]
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _add_fine(fine, j, lower, upper, place_u, place_v, nodes, weights_u, weights_v, value):  # type: ignore[no-untyped-def]
     """Transpose of `_read_fine`."""
     k, i = _spline(place_u, nodes, weights_u), _spline(place_v, nodes, weights_v)
@@ -139,7 +141,7 @@ def _add_fine(fine, j, lower, upper, place_u, place_v, nodes, weights_u, weights
             there[1] += upper * weight * value[1]
 
 
-@njit(nogil=True, error_model="numpy")
+@njit(**PART)
 def _add_coarse(coarse, j, part, place_u, place_v, value):  # type: ignore[no-untyped-def]
     """Transpose of `_read_coarse` for one plane."""
     k, i = int(np.floor(place_u)), int(np.floor(place_v))
@@ -154,7 +156,7 @@ def _add_coarse(coarse, j, part, place_u, place_v, value):  # type: ignore[no-un
         a11[t] += far * fu * value[t]
 
 
-@njit(nogil=True, error_model="numpy", cache=True)
+@njit(**KERNEL)
 def deposit_transposed(  # type: ignore[no-untyped-def]
     slabs, first, column, count, place_of_run, start, turn, inverse_source, sub, planes, nodes, fine_lattice, fine,
     coarse_lattice, coarse, index, rsp, rows, factor, values, colour, begin, end,

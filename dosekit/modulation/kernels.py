@@ -12,6 +12,8 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
+from dosekit.basis.compiling import KERNEL
+
 __all__ = ["count_entries", "fill_entries", "multiply_rows", "multiply_rows_transposed"]
 
 Real = NDArray[np.float64]
@@ -20,7 +22,7 @@ Small = NDArray[np.int32]
 Places = NDArray[np.int64]
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def count_entries(
     u: Real, v: Real, reach: Real, live: NDArray[np.bool_], spots: Real, out: Places, begin: int, end: int
 ) -> None:
@@ -42,7 +44,7 @@ def count_entries(
         out[row] += steps * near
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def fill_entries(
     u: Real,
     v: Real,
@@ -86,7 +88,7 @@ def fill_entries(
         places[row] = place
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def multiply_rows(values: Thin, columns: Small, starts: Places, vector: Real, out: Real, begin: int, end: int) -> None:
     """Write the product of some rows with a vector."""
     for row in range(begin, end):
@@ -96,7 +98,7 @@ def multiply_rows(values: Thin, columns: Small, starts: Places, vector: Real, ou
         out[row] = total
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(**KERNEL)
 def multiply_rows_transposed(
     values: Thin, columns: Small, starts: Places, blocks: Places, vector: Real, out: Real, begin: int, end: int
 ) -> None:

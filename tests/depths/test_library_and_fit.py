@@ -146,6 +146,7 @@ def test_standard_deviations_are_those_of_repeated_noise(stated, offset, rng):
     assert np.all(spread < 1.5), spread
 
 
+@pytest.mark.filterwarnings("ignore::dosekit.errors.ValidityWarning")  # the search tries momenta beyond the tables
 def test_a_parameter_at_its_limit_is_said():
     beam = dk.Beam("proton", momentum_mev_c=450.0, momentum_sigma=0.01)
     curve = dk.depth_curve(beam, "water", depth_mm=140.0, bin_mm=2.0)
