@@ -193,8 +193,8 @@ def test_offset_in_range_is_that_of_long_steps(case, depth_mm, evidence):
 
     That loses less energy than the way really costs. What is missing at a depth, as range, must be what such steps
     make of our own stopping power; the stopping powers then agree. The bar of 0.06 mm is ours and was set with the
-    figures known (0.19 and 0.17 against 0.22 and 0.23): under the noise of the reference, 0.3 % of the peak for each mm,
-    which is up to 0.1 mm here. This says where part of the offset comes from, not that all of it is explained.
+    figures known (0.19 and 0.17 against 0.22 and 0.23): under the noise of the reference, 0.3 % of the peak for each
+    mm, which is up to 0.1 mm here. This says where part of the offset comes from, not that all of it is explained.
     """
     curve, columns = pair(case)
     ours = curve["energy"].sel(component="primary").to_numpy()[:depth_mm]
